@@ -1,0 +1,1 @@
+"""Files in and out: tables, cards, studies and result folders."""
