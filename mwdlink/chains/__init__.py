@@ -1,0 +1,1 @@
+"""What the melt is: molar-mass distributions and polymer constants."""
