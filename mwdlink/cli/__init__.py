@@ -1,0 +1,1 @@
+"""The command line: one file a command; each parses, makes one call and hands the result on."""

@@ -1,0 +1,43 @@
+"""Options and marks that all tests share."""
+
+from __future__ import annotations
+
+import shutil
+
+import pytest
+
+BROWSERS = ("chromium", "chromium-browser", "google-chrome")
+
+
+def pytest_addoption(parser: pytest.Parser) -> None:
+    parser.addoption("--full", action="store_true", help="run the long tests too")
+
+
+def browser_path() -> str | None:
+    """The first Chromium found on the path."""
+    return next((path for name in BROWSERS if (path := shutil.which(name))), None)
+
+
+def pytest_collection_modifyitems(config: pytest.Config, items: list[pytest.Item]) -> None:
+    full = config.getoption("--full")
+    browser = browser_path()
+    for item in items:
+        if "full" in item.keywords and not full:
+            item.add_marker(pytest.mark.skip(reason="long: runs with --full"))
+        if "browser" in item.keywords and browser is None:
+            item.add_marker(pytest.mark.skip(reason="no Chromium on the path"))
+
+
+@pytest.fixture(scope="session")
+def full(request: pytest.FixtureRequest) -> bool:
+    """True when the long tests were asked for: timings are asserted only then."""
+    return bool(request.config.getoption("--full"))
+
+
+@pytest.fixture(scope="session")
+def browser() -> str:
+    """Path of a Chromium (tests that use it carry the `browser` mark)."""
+    path = browser_path()
+    if path is None:
+        pytest.skip("no Chromium on the path")
+    return path
