@@ -131,7 +131,10 @@ class _Curve:
         sizes = {a.shape for a in columns.values()}
         if len(sizes) == 1 and x.ndim == 1 and np.all(np.isfinite(x)) and x.size > 1:
             step = np.diff(x)
-            if np.any(step < 0) and not np.all(step < 0):
+            if np.all(step < 0):
+                text = f"The rows ran downwards in {what}: turned round."
+                warnings.append(Caution("points_sorted", text))
+            elif np.any(step < 0):
                 text = f"The rows were not in order of {what}: sorted."
                 warnings.append(Caution("points_sorted", text))
             order = np.argsort(x, kind="stable")
@@ -382,7 +385,11 @@ class RelaxationCurve(_Curve):
     warnings: tuple[Caution, ...] = ()
     comments: tuple[str, ...] = ()
 
-    _columns: ClassVar[dict[str, str]] = {"time": "t [s]", "modulus": "G [Pa]", "sigma": "sigma [-]"}
+    _columns: ClassVar[dict[str, str]] = {
+        "time": "t [s]",
+        "modulus": "G [Pa]",
+        "sigma": "sigma [-]",
+    }
     _required: ClassVar[tuple[str, ...]] = ("time", "modulus")
     _sigmas: ClassVar[tuple[str, ...]] = ("sigma",)
 
