@@ -1,0 +1,1 @@
+"""How a melt relaxes: kernels, mixing rule, Rouse part, moduli, spectrum, flow."""
