@@ -1,0 +1,218 @@
+"""A result's record as a summary to read in a terminal, 40 columns wide or more.
+
+It knows no command: names and units are read off the keys of result.json, intervals off the
+uncertain quantities or the parallel `bands`.
+"""
+
+from __future__ import annotations
+
+import math
+import textwrap
+from collections.abc import Iterator, Mapping
+from typing import Any
+
+# what every record has, or what only a machine or the report needs
+_LEFT_OUT = {
+    "schema", "version", "command", "inputs", "labels", "polymer", "model", "seed", "warnings",
+    "bands", "cross_check", "omitted", "settings", "points",
+}  # fmt: skip
+
+_UNITS = (
+    ("_g_per_10min", "g/10 min"),
+    ("_cm3_per_10min", "cm3/10 min"),
+    ("_g_per_mol", "g/mol"),
+    ("_kJ_per_mol", "kJ/mol"),
+    ("_rad_per_s", "rad/s"),
+    ("_dL_per_g", "dL/g"),
+    ("_per_Pa", "1/Pa"),
+    ("_Pa_s", "Pa s"),
+    ("_decades", "decades"),
+    ("_Pa", "Pa"),
+    ("_kg", "kg"),
+    ("_K", "K"),
+    ("_C", "C"),
+    ("_s", "s"),
+)
+
+# these tell the entries of a list apart; the first one that is there becomes the entry's name
+_NAMES = ("name", "quantity", "kernel", "rule", "flag", "after", "load_kg", "M_g_per_mol")
+
+_STATUS = {"lower_bound": "at least", "upper_bound": "at most", "assumed": "assumed, not measured"}
+
+
+def number(x: float, digits: int = 3) -> str:
+    """Three figures, no false precision: 0.0123, 12.3, 12300, 1.23e6."""
+    if x == 0 or not math.isfinite(x):
+        return "0" if x == 0 else "-"
+    exponent = math.floor(math.log10(abs(float(f"{x:.{digits - 1}e}"))))
+    if -3 <= exponent < 5:
+        decimals = max(0, digits - 1 - exponent)
+        return f"{round(x, digits - 1 - exponent):.{decimals}f}"
+    mantissa, _, power = f"{x:.{digits - 1}e}".partition("e")
+    return f"{mantissa}e{int(power)}"
+
+
+def wrapped(text: str, width: int, indent: str = "") -> list[str]:
+    return textwrap.wrap(
+        " ".join(text.split()), max(width, 20), subsequent_indent=indent, break_on_hyphens=False
+    )
+
+
+def summary(answer: str, record: Mapping[str, Any], width: int = 80) -> list[str]:
+    """Lines of the summary: the answer first, then the numbers.
+
+    Parameters
+    ----------
+    answer : str
+        The answer in one sentence.
+    record : mapping
+        Content of result.json.
+    width : int
+        Columns to keep within.
+    """
+    lines = wrapped(answer, width)
+    for key, value in record.items():
+        if key in _LEFT_OUT or value is None or value in ([], {}):
+            continue
+        band = (record.get("bands") or {}).get(key)
+        lines += ["", *_section(key, value, band, width)]
+    return lines
+
+
+def _section(key: str, value: Any, band: Any, width: int) -> list[str]:
+    title = _title(key)
+    if isinstance(value, str):
+        return wrapped(f"{title}: {value}", width, "  ")
+    if isinstance(value, list) and all(isinstance(v, str) for v in value):
+        return [title, *(line for v in value for line in wrapped(f"  - {v}", width, "    "))]
+    rows = list(_rows(key, value, band))
+    single = len(rows) == 1 and not (isinstance(value, (Mapping, list)) and not _uncertain(value))
+    return _aligned(rows, width, "") if single else [title, *_aligned(rows, width, "  ")]
+
+
+Row = tuple[str, str, str]  # what, value with unit, interval and status
+
+
+def _rows(key: str, value: Any, band: Any, prefix: str = "") -> Iterator[Row]:
+    name, unit = _name_and_unit(key)
+    label = f"{prefix}{name}"
+    if _uncertain(value):
+        yield label, _with_unit(value.get("value"), key, unit), _interval(value, key)
+    elif isinstance(value, Mapping):
+        for k, v in value.items():
+            if v is None or v in ([], {}):
+                continue
+            b = band.get(k) if isinstance(band, Mapping) else None
+            yield from _rows(k, v, b, f"{prefix}{_name_and_unit(k)[0]} " if _nested(v) else prefix)
+    elif isinstance(value, list):
+        for i, entry in enumerate(value):
+            b = band[i] if isinstance(band, list) and i < len(band) else None
+            yield from _entry(entry, b, key)
+    elif isinstance(value, bool):
+        yield label, "yes" if value else "no", ""
+    elif isinstance(value, (int, float)):
+        yield label, _with_unit(value, key, unit), _interval(band, key)
+    elif isinstance(value, str):
+        yield label, value, ""
+
+
+def _nested(value: Any) -> bool:
+    return isinstance(value, Mapping) and not _uncertain(value)
+
+
+def _entry(entry: Any, band: Any, key: str) -> Iterator[Row]:
+    """An entry of a list: its name, then what it holds, one row where one will do."""
+    if not isinstance(entry, Mapping) or _uncertain(entry):
+        yield from _rows(key, entry, band)
+        return
+    key_of_name = next((k for k in _NAMES if k in entry), None)
+    head = ""
+    if key_of_name is not None:
+        n, unit = _name_and_unit(key_of_name)
+        head = str(entry[key_of_name])
+        if not isinstance(entry[key_of_name], str):
+            head = f"{number(entry[key_of_name])} {unit}".strip()
+            head = f"{n} {head}" if n == "M" else head
+    rest = {k: v for k, v in entry.items() if k != key_of_name and v is not None}
+    rest = {k: v for k, v in rest.items() if not k.endswith(("_low", "_high"))}
+    plain = {k: v for k, v in rest.items() if not isinstance(v, (Mapping, list)) or _uncertain(v)}
+    if len(plain) > 1 and not any(_uncertain(v) for v in plain.values()):
+        parts = []
+        for k, v in plain.items():
+            for label, text, _ in _rows(k, v, None):
+                parts.append(text if isinstance(v, str) else f"{label} {text}")
+        yield head, ", ".join(parts), ""
+    else:
+        for k, v in plain.items():
+            b = band.get(k) if isinstance(band, Mapping) else None
+            for label, text, between in _rows(k, v, b):
+                yield f"{head} {label}".strip(), text, between
+    for k, v in rest.items():
+        if k not in plain and isinstance(v, Mapping):
+            for label, text, between in _rows(k, v, None, f"{head} {_name_and_unit(k)[0]} "):
+                yield label, text, between
+
+
+def _uncertain(value: Any) -> bool:
+    return isinstance(value, Mapping) and "value" in value and "level" in value
+
+
+def _is_share(key: str) -> bool:
+    return key.rsplit(" ", 1)[-1] in ("fraction", "excess", "detection_limit")
+
+
+def _plain(x: Any, key: str) -> str:
+    if x is None:
+        return "not known"
+    return number(100 * x) if _is_share(key) else number(x)
+
+
+def _with_unit(x: Any, key: str, unit: str) -> str:
+    if x is None:
+        return "not known"
+    if isinstance(x, int) and not _is_share(key):
+        return f"{x} {unit}".strip()
+    return f"{_plain(x, key)} {unit}".strip()
+
+
+def _interval(u: Any, key: str) -> str:
+    if isinstance(u, (list, tuple)) and len(u) == 2:
+        u = {"low": u[0], "high": u[1], "value": None}
+    if not isinstance(u, Mapping):
+        return ""
+    low, high = u.get("low"), u.get("high")
+    text = "" if low is None or high is None else f"{_plain(low, key)} to {_plain(high, key)}"
+    status = _STATUS.get(str(u.get("status")), "")
+    return f"{text} ({status})" if text and status else text or status
+
+
+def _name_and_unit(key: str) -> tuple[str, str]:
+    if _is_share(key):
+        return key.replace("_", " "), "wt%"
+    for ending, unit in _UNITS:
+        if key.endswith(ending) and len(key) > len(ending):
+            return key.removesuffix(ending).replace("_", " "), unit
+    return key.replace("_", " "), ""
+
+
+def _title(key: str) -> str:
+    name = _name_and_unit(key)[0]
+    return name[:1].upper() + name[1:]
+
+
+def _aligned(rows: list[Row], width: int, indent: str) -> list[str]:
+    """Three columns where they fit, else each row's parts below one another."""
+    first = max((len(r[0]) for r in rows), default=0)
+    second = max((len(r[1]) for r in rows if r[2]), default=0)
+    lines = []
+    for what, text, between in rows:
+        line = f"{indent}{what:<{first}}  {text:<{second if between else 0}}"
+        line = f"{line}  {between}".rstrip()
+        if len(line) <= width:
+            lines.append(line)
+            continue
+        lines += wrapped(f"{indent}{what}", width, indent) if what else []
+        lines += [f"{indent}  {part}" for part in wrapped(text, width - len(indent) - 2)]
+        if between:
+            lines += [f"{indent}  {part}" for part in wrapped(between, width - len(indent) - 2)]
+    return lines
