@@ -191,7 +191,7 @@ def parse_card(
                         remedy=f"Add {key}" + (f" in {spec.unit}." if spec.unit else "."),
                     )
                 continue
-            if isinstance(block[key], float) and math.isnan(block[key]):
+            if _is_blank(block[key]):
                 unfilled.append(name)
                 continue
             value = _value(name, spec, block[key], origin)
@@ -254,6 +254,12 @@ def _nearest(word: str, words: list[str]) -> str | None:
     return f"Did you mean {near[0]!r}?" if near else None
 
 
+def _is_blank(raw: Any) -> bool:
+    """nan stands for a number still to be filled in (the template is full of them)."""
+    numbers = raw if isinstance(raw, (list, tuple)) else [raw]
+    return any(isinstance(x, float) and math.isnan(x) for x in numbers)
+
+
 def _standing(
     section: str, key: str, block: Mapping[str, Any], origin: str | None
 ) -> tuple[str, str]:
@@ -280,7 +286,7 @@ def _standing(
 def _value(name: str, spec: Key, raw: Any, origin: str | None) -> Any:
     if spec.form == "text":
         if not isinstance(raw, str) or not raw.strip():
-            raise InputError("must be text.", path=origin, column=name)
+            raise InputError(f"must be text, not {raw!r}.", path=origin, column=name)
         words = WORDS.get(name)
         if words and raw not in words:
             raise InputError(
@@ -313,7 +319,10 @@ def _number(name: str, spec: Key, raw: Any, origin: str | None) -> float:
         raise InputError(
             f"must be a number, not {raw!r}.", path=origin, column=name, remedy=remedy
         )
-    x = float(raw)
+    try:
+        x = float(raw)
+    except OverflowError:  # TOML integers have no limit
+        x = math.inf
     if not math.isfinite(x):
         raise InputError(f"must be a finite number, not {x}.", path=origin, column=name)
     if spec.form in ("celsius", "celsius pair"):

@@ -7,6 +7,7 @@ elsewhere.
 
 from __future__ import annotations
 
+import dataclasses
 import difflib
 import math
 import tomllib
@@ -18,15 +19,19 @@ from types import MappingProxyType
 from typing import Any
 
 from mwdlink.chains.card import SECTIONS, Constant, full_name, parse_card, unit_of
+from mwdlink.chains.card_relations import (
+    check_shift,
+    check_stored_strand,
+    remarks,
+    tau_e_belongs,
+    unusual,
+)
 from mwdlink.chains.melt import POWER_LAW_N, Melt, estimate_equilibration_time
 from mwdlink.chains.shift import GAS_CONSTANT, ZERO_CELSIUS, ShiftLaw
 from mwdlink.errors import Caution, InputError, ModelError
 
 SCATTER_DECADES = 0.10
 """Scatter of a viscosity law whose card does not state it: assumed [decades]."""
-
-STORED_TOLERANCE = 0.03
-"""A stored M_e further than this from 1000 rho R T/G_N is refused [-]."""
 
 SAME_TEMPERATURE_K = 0.1
 """Without a shift law a card serves its own temperature within this [K]."""
@@ -108,10 +113,16 @@ class Polymer:
         where = origin or None
         texts, constants, cautions = parse_card(mapping, where)
         name = texts["name"] or "unnamed"
-        _check_shift(constants, where)
+        check_shift(constants, where)
         draft = cls(name, texts["title"] or name, tuple(constants.items()), texts["note"], origin)
-        cautions = [*draft._notes(), *cautions, *draft._unusual(where)]
-        return cls(name, draft.title, draft.items, draft.note, origin, tuple(cautions))
+        strand = draft.entanglement_molar_mass
+        check_stored_strand(constants, strand, draft.density(), where)
+        cautions = [
+            *remarks(name, draft.note, constants),
+            *cautions,
+            *unusual(name, constants, strand),
+        ]
+        return dataclasses.replace(draft, warnings=tuple(cautions))
 
     @property
     def constants(self) -> Mapping[str, Constant]:
@@ -168,7 +179,8 @@ class Polymer:
     def _equilibration(self) -> tuple[float, bool]:
         """tau_e at the card's own temperature [s], and whether it is estimated."""
         stored = dict(self.items).get("network.equilibration_time_s")
-        if stored is not None and stored.status != "computed" and self._tau_e_fits():
+        belongs = tau_e_belongs(self.constants, self.entanglement_molar_mass)
+        if stored is not None and stored.status != "computed" and belongs:
             return float(stored.value), False
         estimate = estimate_equilibration_time(
             self.get("viscosity.coefficient"),
@@ -177,12 +189,6 @@ class Polymer:
             self.entanglement_molar_mass,
         )
         return estimate, True
-
-    def _tau_e_fits(self) -> bool:
-        came_with = self.get("network.equilibration_time_molar_mass_g_per_mol")
-        if came_with is None:
-            return True
-        return abs(came_with / self.entanglement_molar_mass - 1.0) <= STORED_TOLERANCE
 
     def melt(self, temperature_C: float | None = None) -> Melt:
         """The melt at a temperature.
@@ -205,68 +211,6 @@ class Polymer:
         T = self.temperature_C if temperature_C is None else float(temperature_C)
         return _melt(self, T)
 
-    def _notes(self) -> list[Caution]:
-        notes = []
-        if self.note:
-            notes.append(Caution("card_note", f"{self.name}: {self.note}"))
-        disputed = self.get("network.plateau_modulus_disputed_Pa")
-        if disputed is not None:
-            used = self.get("network.plateau_modulus_Pa")
-            notes.append(
-                Caution(
-                    "plateau_modulus_disputed",
-                    f"{self.name}: the plateau modulus used is {used:.3g} Pa; others report "
-                    f"{disputed[0]:.3g} to {disputed[1]:.3g} Pa. The choice hardly moves Mw, but "
-                    "it moves the weight said to lie below the window.",
-                )
-            )
-        return notes
-
-    def _unusual(self, where: str | None) -> list[Caution]:
-        """Relations between numbers: the impossible refused, the unusual said."""
-        strand = self.entanglement_molar_mass
-        _check_stored(self, strand, where)
-        said: list[str] = []
-        get = self.get
-        critical, law_range = get("viscosity.critical_molar_mass_g_per_mol"), get(
-            "viscosity.range_g_per_mol"
-        )
-        modulus, spread = get("network.plateau_modulus_Pa"), get("network.plateau_modulus_range_Pa")
-        if not 500.0 < strand < 1e5:
-            said.append(f"M_e = {strand:.3g} g/mol lies outside the usual 500 to 1e5")
-        if critical is not None and critical < strand:
-            said.append(f"M_c = {critical:.4g} lies below M_e = {strand:.4g} g/mol")
-        elif critical is not None and critical > 6.0 * strand:
-            said.append(f"M_c = {critical:.4g} is {critical / strand:.2g} times M_e")
-        exponent = get("viscosity.exponent")
-        if not 3.0 <= exponent <= 4.0:
-            said.append(f"the viscosity exponent {exponent:g} lies outside 3 to 4")
-        if law_range is not None and critical is not None and law_range[0] < critical:
-            said.append("the viscosity law's range begins below its critical molar mass")
-        if spread is not None and not spread[0] <= modulus <= spread[1]:
-            said.append("the plateau modulus lies outside its own range")
-        mixing, mixing_range = get("kernel.mixing_exponent"), get("kernel.mixing_exponent_range")
-        if mixing and mixing_range and not mixing_range[0] <= mixing <= mixing_range[1]:
-            said.append("the mixing exponent lies outside its own range")
-        shift = self.shift
-        if shift is not None and shift.range_C is not None:
-            low, high = shift.range_C
-            if not low <= self.temperature_C <= high:
-                said.append("the card's own temperature lies outside its shift law's range")
-        cautions = [
-            Caution("card_unusual", f"{self.name}: {what}. Check the card.") for what in said
-        ]
-        if not self._tau_e_fits():
-            came = get("network.equilibration_time_molar_mass_g_per_mol")
-            cautions.append(
-                Caution(
-                    "equilibration_time_unused",
-                    f"{self.name}: the card's tau_e came with M_e = {came:.4g} g/mol, the card "
-                    f"gives {strand:.4g}: tau_e is estimated from the viscosity law instead.",
-                )
-            )
-        return cautions
-
     def to_dict(self) -> dict[str, Any]:
         """The card as used, in its own shape and JSON types.
 
@@ -277,7 +221,7 @@ class Polymer:
         out: dict[str, Any] = {"name": self.name, "title": self.title}
         if self.note:
             out["note"] = self.note
-        known = {**_defaults(self), **dict(self.items)}
+        known = _in_use(self)
         for section, keys in SECTIONS.items():
             block: dict[str, Any] = {}
             for key in keys:
@@ -299,7 +243,7 @@ class Polymer:
 
     def constants_table(self) -> list[dict[str, Any]]:
         """Rows (key, value, unit, status, source) of every number in use, for showing."""
-        known = {**_defaults(self), **dict(self.items)}
+        known = _in_use(self)
         rows = []
         for section, keys in SECTIONS.items():
             for key in keys:
@@ -320,69 +264,8 @@ class Polymer:
         return rows
 
 
-def _check_shift(constants: dict[str, Constant], where: str | None) -> None:
-    kind = constants.get("shift.kind")
-    if kind is None:
-        return
-    wanted = {
-        "arrhenius": ("shift.energy_kJ_per_mol",),
-        "wlf": ("shift.c1", "shift.c2_K", "shift.reference_C"),
-    }
-    other = {"arrhenius": wanted["wlf"], "wlf": wanted["arrhenius"]}[kind.value]
-    for name in wanted[kind.value]:
-        if name not in constants:
-            raise InputError(
-                f"a shift law of kind {kind.value!r} needs {name.split('.')[1]}.",
-                path=where,
-                column=name,
-                remedy="Add it to [shift], or leave the section out.",
-            )
-    for name in other:
-        if name in constants:
-            raise InputError(
-                f"{name.split('.')[1]} has no meaning in a shift law of kind {kind.value!r}.",
-                path=where,
-                column=name,
-                remedy="Remove it, or change the kind.",
-            )
-    if kind.value == "wlf":
-        end = constants["shift.reference_C"].value - constants["shift.c2_K"].value
-        own = constants["viscosity.temperature_C"].value
-        if own <= end:
-            raise InputError(
-                f"the WLF law ends at {end:g} C, above the viscosity law's {own:g} C.",
-                path=where,
-                column="shift.c2_K",
-                remedy="Check c2_K (in K) and reference_C (in C).",
-            )
-
-
-def _check_stored(polymer: Polymer, strand: float, where: str | None) -> None:
-    stored = polymer.get("network.molar_mass_g_per_mol")
-    if stored is None or abs(stored / strand - 1.0) <= STORED_TOLERANCE:
-        return
-    if abs(stored / (0.8 * strand) - 1.0) <= STORED_TOLERANCE:
-        remedy = (
-            "It is 0.8 of that, the other convention: leave the key out, or give the value of "
-            "1000 rho R T/G_N."
-        )
-    else:
-        remedy = (
-            "Plateau modulus, density and temperature must belong together: correct the one that "
-            "is of another temperature, or leave the key out."
-        )
-    raise InputError(
-        f"the stored entanglement molar mass {stored:g} g/mol is not 1000 rho R T/G_N = "
-        f"{strand:.4g} g/mol at {polymer.temperature_C:g} C (rho {polymer.density():.4g} kg/m3, "
-        f"G_N {polymer.get('network.plateau_modulus_Pa'):.4g} Pa).",
-        path=where,
-        column="network.molar_mass_g_per_mol",
-        remedy=remedy,
-    )
-
-
-def _defaults(polymer: Polymer) -> dict[str, Constant]:
-    """What a card leaves open, and what follows from it."""
+def _in_use(polymer: Polymer) -> dict[str, Constant]:
+    """The card's numbers, what it leaves open, and what follows from it."""
     tau_e, estimated = polymer._equilibration()
     out = {
         "network.molar_mass_g_per_mol": Constant(
@@ -392,8 +275,9 @@ def _defaults(polymer: Polymer) -> dict[str, Constant]:
         ),
         "viscosity.scatter_decades": Constant(SCATTER_DECADES, "assumed", "default"),
         "kernel.power_law_n": Constant(POWER_LAW_N, "assumed", "default"),
+        **dict(polymer.items),
     }
-    if estimated and polymer._tau_e_fits():
+    if estimated:
         out["network.equilibration_time_s"] = Constant(
             tau_e, "computed", "from the viscosity law at 30 entanglements, good to a factor 2"
         )
@@ -411,7 +295,7 @@ def _melt(polymer: Polymer, T: float) -> Melt:
         if abs(T - own) > SAME_TEMPERATURE_K:
             raise ModelError(
                 f"the card {polymer.name!r} has no shift law: its numbers hold at {own:g} C and "
-                f"cannot be taken to {T:g} C. Use --temperature {own:g}, or a card of your own "
+                f"cannot be taken to {T:g} C. Ask for {own:g} C, or write a card of your own "
                 "with a [shift] section."
             )
     else:
@@ -493,8 +377,8 @@ def _suggest(name: str) -> str:
     names = builtin_names()
     if low in _NO_CARD:
         return (
-            f"None ships because {_NO_CARD[low]}. Fill in the template card and give its path "
-            "instead of a name."
+            f"None ships: {_NO_CARD[low]}. For constants of your own, fill in a card (TOML) and "
+            "give its path."
         )
     near = low if low in names else _OTHER_NAMES.get(low)
     if near is None:
