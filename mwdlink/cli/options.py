@@ -16,8 +16,6 @@ from typing import Any, TypeVar
 
 import click
 
-from mwdlink.cli.main import unknown
-
 F = TypeVar("F", bound=Callable[..., Any])
 
 KERNELS = ("exponential", "reptation", "power-law", "fluctuation")
@@ -26,7 +24,8 @@ KERNELS = ("exponential", "reptation", "power-law", "fluctuation")
 def card_names() -> list[str]:
     """Names of the built-in polymer cards, without loading them."""
     cards = resources.files("mwdlink") / "chains" / "cards"
-    return sorted(f.name.removesuffix(".toml") for f in cards.iterdir() if f.name.endswith(".toml"))
+    names = [f.name.removesuffix(".toml") for f in cards.iterdir() if f.name.endswith(".toml")]
+    return sorted(n for n in names if n != "template")
 
 
 class PolymerName(click.ParamType):
@@ -35,11 +34,14 @@ class PolymerName(click.ParamType):
     name = "NAME|CARD.toml"
 
     def convert(self, value: Any, param: Any, ctx: Any) -> str:
-        if value.lower().endswith(".toml") or "/" in value:
-            if not Path(value).is_file():
-                self.fail(f"There is no card {value!r}.", param, ctx)
-        elif value not in card_names():
-            self.fail(unknown("polymer", value, card_names()), param, ctx)
+        if value not in card_names() and not Path(value).is_file():
+            from mwdlink.errors import InputError
+            from mwdlink.files.cards import read_polymer
+
+            try:
+                read_polymer(value)
+            except InputError as error:  # it knows other names of polymers and nearby files
+                self.fail(str(error), param, ctx)
         return str(value)
 
     def shell_complete(self, ctx: Any, param: Any, incomplete: str) -> list[Any]:

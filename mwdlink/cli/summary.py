@@ -52,9 +52,14 @@ def number(x: float, digits: int = 3) -> str:
     return f"{mantissa}e{int(power)}"
 
 
-def wrapped(text: str, width: int, indent: str = "") -> list[str]:
+def wrapped(text: str, width: int, indent: str = "", first: str = "") -> list[str]:
+    """Text in lines of at most `width` columns: the first after `first`, the others indented."""
     return textwrap.wrap(
-        " ".join(text.split()), max(width, 20), subsequent_indent=indent, break_on_hyphens=False
+        " ".join(text.split()),
+        max(width, 20),
+        initial_indent=first,
+        subsequent_indent=indent,
+        break_on_hyphens=False,
     )
 
 
@@ -84,7 +89,7 @@ def _section(key: str, value: Any, band: Any, width: int) -> list[str]:
     if isinstance(value, str):
         return wrapped(f"{title}: {value}", width, "  ")
     if isinstance(value, list) and all(isinstance(v, str) for v in value):
-        return [title, *(line for v in value for line in wrapped(f"  - {v}", width, "    "))]
+        return [title, *(line for v in value for line in wrapped(v, width, "    ", "  - "))]
     rows = list(_rows(key, value, band))
     single = len(rows) == 1 and not (isinstance(value, (Mapping, list)) and not _uncertain(value))
     return _aligned(rows, width, "") if single else [title, *_aligned(rows, width, "  ")]
@@ -211,8 +216,6 @@ def _aligned(rows: list[Row], width: int, indent: str) -> list[str]:
         if len(line) <= width:
             lines.append(line)
             continue
-        lines += wrapped(f"{indent}{what}", width, indent) if what else []
-        lines += [f"{indent}  {part}" for part in wrapped(text, width - len(indent) - 2)]
-        if between:
-            lines += [f"{indent}  {part}" for part in wrapped(between, width - len(indent) - 2)]
+        for part, start in ((what, indent), (text, f"{indent}  "), (between, f"{indent}  ")):
+            lines += wrapped(part, width, start, start)
     return lines
