@@ -1,0 +1,96 @@
+"""How well a continuous spectrum repeats from one noisy sweep to the next.
+
+Run as a script it prints the table of docs/spectrum.md:
+
+    python tests/measurement/reproducibility.py --sweeps 60
+"""
+
+from __future__ import annotations
+
+import argparse
+
+import numpy as np
+
+from mwdlink.chains.distribution import Distribution
+from mwdlink.chains.polymer import builtin
+from mwdlink.measurement.spectrum_fit import fit_spectrum
+from mwdlink.measurement.sweep import Sweep
+from mwdlink.relaxation.melt_response import Relaxation
+from mwdlink.relaxation.mixing import Model
+
+NOISE = 0.03
+
+
+def melts() -> dict[str, Distribution]:
+    """Invented linear polyethylenes: broad ones of several shapes, and a narrow one."""
+    make = Distribution.from_averages
+    return {
+        "log-normal, dispersity 2": make(Mw=1.2e5, dispersity=2.0),
+        "log-normal, dispersity 5": make(Mw=1.0e5, dispersity=5.0),
+        "Schulz-Zimm, dispersity 2": make(Mw=1.2e5, dispersity=2.0, family="schulz-zimm"),
+        "two parts, 3e4 and 2e5": Distribution.blend(
+            [(make(Mw=3e4, dispersity=1.8), 0.5), (make(Mw=2e5, dispersity=1.8), 0.5)]
+        ),
+        "narrow, dispersity 1.1": make(Mw=1.5e5, dispersity=1.1),
+    }
+
+
+def spread(
+    distribution: Distribution,
+    *,
+    decades: tuple[float, float] = (-3.0, 3.0),
+    per_decade: int = 5,
+    sweeps: int = 20,
+    noise: float = NOISE,
+) -> dict[str, float]:
+    """Standard deviation of ln H over noise seeds inside the supported range.
+
+    Counted where H is at least a twentieth of |G*| at omega = 1/tau, that is where it matters for
+    what was measured: in the terminal region H falls faster than any curve can follow.
+    `bias` is the root mean square distance of the mean from the spectrum of the exact curve, taken
+    without noise over two decades more on either side.
+    """
+    omega = np.logspace(*decades, int(round((decades[1] - decades[0]) * per_decade)) + 1)
+    melt = builtin("hdpe").melt(190.0)
+    storage, loss = Relaxation(distribution, melt, Model("power-law")).moduli(omega)
+    wide = np.logspace(decades[0] - 2, decades[1] + 2, omega.size * 3)
+    exact = Relaxation(distribution, melt, Model("power-law")).moduli(wide)
+    truth = fit_spectrum(Sweep(wide, *exact), members=0, noise=2e-4).continuous
+    curves = []
+    for seed in range(sweeps):
+        rng = np.random.default_rng([seed, 7])
+        up = storage * np.exp(noise * rng.standard_normal(omega.size))
+        out = loss * np.exp(noise * rng.standard_normal(omega.size))
+        fit = fit_spectrum(Sweep(omega, up, out), members=0, noise=noise)
+        curves.append(fit.continuous.H)
+    logs = np.log(np.array(curves))
+    tau = fit.continuous.tau
+    size = np.exp(np.interp(-np.log(tau), np.log(omega), np.log(np.hypot(storage, loss))))
+    counted = fit.supported_mask & (np.exp(logs.mean(axis=0)) > 0.05 * size)
+    deviation = logs.std(axis=0, ddof=1)[counted]
+    bias = (logs.mean(axis=0) - np.interp(np.log(tau), np.log(truth.tau), np.log(truth.H)))[counted]
+    return {
+        "median": float(np.median(deviation)),
+        "largest": float(deviation.max()),
+        "rms": float(np.sqrt(np.mean(deviation**2))),
+        "bias": float(np.sqrt(np.mean(bias**2))),
+        "nodes": int(counted.sum()),
+    }
+
+
+def main() -> None:
+    parser = argparse.ArgumentParser(description=__doc__)
+    parser.add_argument("--sweeps", type=int, default=60)
+    sweeps = parser.parse_args().sweeps
+    print("| melt | window [rad/s] | points per decade | median | root mean square | largest | distance from the exact one |")
+    print("|---|---|---|---|---|---|---|")
+    for name, distribution in melts().items():
+        for window, density in (((-3, 3), 5), ((-2, 2), 5), ((-2, 2), 10)):
+            s = spread(distribution, decades=window, per_decade=density, sweeps=sweeps)
+            span = f"1e{window[0]} to 1e{window[1]}"
+            cells = [f"{100 * s[k]:.1f} %" for k in ("median", "rms", "largest", "bias")]
+            print(f"| {name} | {span} | {density} | " + " | ".join(cells) + " |")
+
+
+if __name__ == "__main__":
+    main()
