@@ -51,7 +51,8 @@ def deliver(
     record = record_of(result, inputs, output.labels, polymer=polymer, model=model, seed=seed)
     if output.out is not None:
         with working("Drawing and writing", output):
-            pictures = pictures_of(result)
+            tables = result.tables()
+            pictures = pictures_of(record, tables)
             figures: dict[str, bytes] = {}
             for name, picture in pictures.items():
                 figures[f"{name}.svg"] = picture.svg()
@@ -60,7 +61,7 @@ def deliver(
             write_result(
                 output.out,
                 record,
-                result.tables(),
+                tables,
                 figures,
                 report_of(result, record, pictures),
                 output.replace,
@@ -116,10 +117,11 @@ def provenance(record: Mapping[str, Any]) -> str:
     return f"mwdlink {record['version']} {record['command']} from {sources or 'no file'}"
 
 
-def pictures_of(result: Any) -> dict[str, Any]:
+def pictures_of(record: Mapping[str, Any], tables: Mapping[str, Any]) -> dict[str, Any]:
     """The pictures that belong to a result, by name."""
     figures = importlib.import_module("mwdlink.figures")
-    pictures: dict[str, Any] = figures.pictures_for(result)
+    frames = {name: table for name, table in tables.items() if not isinstance(table, str)}
+    pictures: dict[str, Any] = figures.pictures_of(record["command"], record, frames)
     return pictures
 
 

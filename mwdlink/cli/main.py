@@ -19,18 +19,18 @@ from mwdlink.errors import InputError, ModelError, MwdlinkError, NotConverged
 
 # what each command is for, in the order a newcomer meets them; its code is mwdlink/cli/NAME.py
 COMMANDS = {
-    "demo": "Write an invented example and run the whole job on it.",
-    "predict": "From a distribution to moduli, spectrum, relaxation and flow.",
-    "invert": "From a frequency sweep to the molecular-weight distribution.",
-    "blend": "Predict a blend, or find the fraction that reaches a target.",
-    "blendcheck": "Hold measured blends of known fractions against the rule.",
-    "tail": "GPC and sweep together: weight beyond what the GPC sees.",
-    "datasheet": "Do the numbers on a supplier's sheet hang together?",
-    "master": "From sweeps at several temperatures to one master curve.",
+    # "demo": "Write an invented example and run the whole job on it.",
+    # "predict": "From a distribution to moduli, spectrum, relaxation and flow.",
+    # "invert": "From a frequency sweep to the molecular-weight distribution.",
+    # "blend": "Predict a blend, or find the fraction that reaches a target.",
+    # "blendcheck": "Hold measured blends of known fractions against the rule.",
+    # "tail": "GPC and sweep together: weight beyond what the GPC sees.",
+    # "datasheet": "Do the numbers on a supplier's sheet hang together?",
+    # "master": "From sweeps at several temperatures to one master curve.",
     "spectrum": "From a sweep to its relaxation spectrum, without a chain model.",
-    "rest": "How long to wait after loading a sample.",
-    "calibrate": "A polymer card from samples with both GPC and sweep.",
-    "batch": "Invert many sweeps into one table.",
+    # "rest": "How long to wait after loading a sample.",
+    # "calibrate": "A polymer card from samples with both GPC and sweep.",
+    # "batch": "Invert many sweeps into one table.",
     "polymers": "The built-in polymer cards and where each number is from.",
 }
 
