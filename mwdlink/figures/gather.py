@@ -1,0 +1,571 @@
+"""Which pictures a result has: chosen by its command from the tables and keys it carries.
+
+Only tables and JSON keys are looked at, never the class, so that a result read back from disk
+can be drawn as well. What is absent is left out without a word.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Mapping
+from typing import TYPE_CHECKING, Any
+
+import pandas as pd
+
+from mwdlink.figures import (
+    blend,
+    choices,
+    claims,
+    decay,
+    distribution,
+    flow,
+    master,
+    moduli,
+    spectrum,
+    style,
+    support,
+    trend,
+)
+from mwdlink.figures.columns import Absent, bare, find, numbers
+from mwdlink.figures.picture import Picture
+from mwdlink.figures.words import value_of
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+Tables = Mapping[str, pd.DataFrame]
+Record = Mapping[str, Any]
+MOST_PROPERTIES = 6
+
+
+def _figure(ax: Axes) -> Figure:
+    figure = ax.get_figure(root=True)
+    if figure is None:
+        raise Absent("axes without a figure")
+    return figure  # type: ignore[return-value]
+
+
+class _Shelf:
+    """Collects pictures; a picture whose columns are absent is left out."""
+
+    def __init__(self, record: Record, tables: Tables) -> None:
+        self.record = record
+        self.tables = {str(k): v for k, v in tables.items() if v is not None and len(v)}
+        self.pictures: dict[str, Picture] = {}
+
+    def table(self, name: str) -> pd.DataFrame | None:
+        return self.tables.get(name)
+
+    def add(
+        self,
+        name: str,
+        title: str,
+        data: pd.DataFrame,
+        draw: Callable[[], Axes],
+        describe: Callable[[], str],
+    ) -> None:
+        try:
+            figure = _figure(draw())
+        except Absent:
+            return
+        self.pictures[name] = Picture(name, figure, title, describe(), data)
+
+
+def level_of(record: Record) -> float:
+    """The probability of the result's intervals."""
+
+    def levels(x: Any) -> Iterator[float]:
+        if isinstance(x, Mapping):
+            if "level" in x and "low" in x and isinstance(x["level"], (int, float)):
+                yield float(x["level"])
+            for v in x.values():
+                yield from levels(v)
+        elif isinstance(x, (list, tuple)) and len(x) < 200:
+            for v in x:
+                yield from levels(v)
+
+    return next(levels(record), 0.9)
+
+
+def collect_budgets(record: Record) -> dict[str, dict[str, float]]:
+    """Name to shares of variance of every quantity that carries a budget."""
+    names = {
+        "Mn_g_per_mol": "$M_n$",
+        "Mw_g_per_mol": "$M_w$",
+        "Mz_g_per_mol": "$M_z$",
+        "dispersity": "dispersity",
+        "Mw_within_window_g_per_mol": "$M_w$ in window",
+        "eta0_Pa_s": r"$\eta_0$",
+        "Je0_per_Pa": "$J_e^0$",
+        "time_law_factor": "time law",
+        "fraction": "tail",
+        "excess": "excess",
+    }
+    out: dict[str, dict[str, float]] = {}
+
+    def take(key: str, entry: Any, name: str = "") -> None:
+        if isinstance(entry, Mapping) and entry.get("budget"):
+            shares = {str(k): float(v or 0.0) for k, v in entry["budget"].items()}
+            if sum(shares.values()) > 0:
+                out.setdefault(name or names.get(key, key.replace("_", " ")), shares)
+
+    for group in ("averages", "terminal", "tail", "bands"):
+        entries = record.get(group)
+        if isinstance(entries, Mapping):
+            for key, entry in entries.items():
+                take(key, entry)
+                if group == "bands" and isinstance(entry, Mapping):
+                    for k, v in entry.items():
+                        take(k, v)
+    take("time_law_factor", record.get("time_law_factor"))
+    for entry in record.get("above") or []:
+        mass = value_of(entry.get("M_g_per_mol"))
+        if mass is not None:
+            take("above", entry.get("fraction"), f"above {mass:.3g}")
+    return dict(list(out.items())[:8])
+
+
+def _distribution(shelf: _Shelf) -> None:
+    table = shelf.table("distribution.csv")
+    if table is None:
+        return
+    window, averages = shelf.record.get("window"), shelf.record.get("averages")
+    said = "blend" if shelf.record.get("command") == "blend" else "distribution"
+    shelf.add(
+        "distribution",
+        "Molecular-weight distribution",
+        table,
+        lambda: distribution.plot_distribution(
+            table, window=window, averages=averages, label=said, level=level_of(shelf.record)
+        ),
+        lambda: distribution.describe_distribution(table, window, averages),
+    )
+
+
+def _moduli(shelf: _Shelf, source: str, data: pd.DataFrame | None = None) -> None:
+    table = shelf.table(source)
+    if table is None or find(table, *moduli.FREQUENCY) is None:
+        return
+    if all(v is None for name, _ in moduli.SYMBOLS for v in moduli.columns_of(table, name)):
+        return
+    shelf.add(
+        "moduli",
+        "Storage and loss modulus",
+        table,
+        lambda: moduli.plot_moduli(table, data, level=level_of(shelf.record)),
+        lambda: moduli.describe_moduli(table),
+    )
+
+
+def _fit(shelf: _Shelf) -> None:
+    table = shelf.table("fit.csv")
+    if table is None:
+        return
+    _moduli(shelf, "fit.csv")
+    if find(table, *decay.TIME) is not None:
+        shelf.add(
+            "relaxation",
+            "Relaxation modulus",
+            table,
+            lambda: decay.plot_relaxation(table, level=level_of(shelf.record)),
+            lambda: decay.describe_relaxation(table),
+        )
+    if find(table, *flow.RATE) is not None:
+        shelf.add(
+            "flow",
+            "Flow curve",
+            table,
+            lambda: flow.plot_flow(table, level=level_of(shelf.record)),
+            lambda: flow.describe_flow(table),
+        )
+    if moduli.residual_columns(table):
+        shelf.add(
+            "residuals",
+            "Residuals of the fit",
+            table,
+            lambda: moduli.plot_residuals(table),
+            lambda: moduli.describe_residuals(table),
+        )
+
+
+def _spectrum(shelf: _Shelf) -> None:
+    discrete, continuous = shelf.table("spectrum.csv"), shelf.table("continuous.csv")
+    if discrete is None and continuous is None:
+        return
+    supported = shelf.record.get("supported")
+    span = None
+    if isinstance(supported, Mapping):
+        span = (value_of(supported.get("tau_low_s")), value_of(supported.get("tau_high_s")))
+    parts = [t for t in (discrete, continuous) if t is not None]
+    shelf.add(
+        "spectrum",
+        "Relaxation spectrum",
+        parts[0] if len(parts) == 1 else pd.concat(parts, ignore_index=True),
+        lambda: spectrum.plot_spectrum(
+            discrete, continuous, supported=span, level=level_of(shelf.record)
+        ),
+        lambda: spectrum.describe_spectrum(discrete, span),
+    )
+
+
+def _curves(shelf: _Shelf) -> None:
+    """Moduli, relaxation, flow and spectrum of a prediction."""
+    _moduli(shelf, "sweep.csv")
+    curve = shelf.table("flow.csv")
+    terminal = shelf.record.get("terminal")
+    eta0 = value_of(terminal.get("eta0_Pa_s")) if isinstance(terminal, Mapping) else None
+    if curve is not None:
+        shelf.add(
+            "flow",
+            "Flow curve",
+            curve,
+            lambda: flow.plot_flow(curve, eta0=eta0, level=level_of(shelf.record)),
+            lambda: flow.describe_flow(curve, eta0),
+        )
+    _spectrum(shelf)
+    table = shelf.table("relaxation.csv")
+    if table is not None:
+        shelf.add(
+            "relaxation",
+            "Relaxation modulus",
+            table,
+            lambda: decay.plot_relaxation(table, level=level_of(shelf.record)),
+            lambda: decay.describe_relaxation(table),
+        )
+
+
+def _choices(shelf: _Shelf) -> None:
+    """Kernels, smoothing and budget of an inversion."""
+    kernels = [k for k in shelf.record.get("kernels") or [] if isinstance(k, Mapping)]
+    if any(value_of(k.get("Mw_g_per_mol")) is not None for k in kernels):
+        shelf.add(
+            "kernels",
+            "The answer by each kernel",
+            pd.json_normalize(kernels),
+            lambda: choices.plot_kernels(kernels),
+            lambda: choices.describe_kernels(kernels),
+        )
+    budgets = collect_budgets(shelf.record)
+    if budgets:
+        data = pd.DataFrame.from_dict(budgets, orient="index").rename_axis("quantity").reset_index()
+        shelf.add(
+            "budget",
+            "What the intervals are made of",
+            data.fillna(0.0),
+            lambda: choices.plot_budget(budgets),
+            lambda: choices.describe_budget(budgets),
+        )
+    table = shelf.table("smoothing.csv")
+    if table is not None:
+        fit = shelf.record.get("fit")
+        chosen = value_of(fit.get("smoothing")) if isinstance(fit, Mapping) else None
+        shelf.add(
+            "smoothing",
+            "Choice of the smoothing",
+            table,
+            lambda: choices.plot_smoothing(table, chosen=chosen),
+            lambda: choices.describe_smoothing(table, chosen),
+        )
+
+
+def _predict(shelf: _Shelf) -> None:
+    _distribution(shelf)
+    _curves(shelf)
+    _choices(shelf)
+
+
+def _invert(shelf: _Shelf) -> None:
+    _distribution(shelf)
+    _fit(shelf)
+    _choices(shelf)
+
+
+def _spectrum_command(shelf: _Shelf) -> None:
+    _spectrum(shelf)
+    _fit(shelf)
+
+
+def _master(shelf: _Shelf) -> None:
+    table, shifts = shelf.table("master.csv"), shelf.table("shifts.csv")
+    reference = value_of(shelf.record.get("reference_C"))
+    if table is not None:
+        superposition = shelf.record.get("superposition")
+        shelf.add(
+            "master",
+            "Master curve",
+            table,
+            lambda: master.plot_master(table, reference_C=reference),
+            lambda: master.describe_master(table, superposition),
+        )
+    if shifts is not None:
+        shift = shelf.record.get("shift")
+        shelf.add(
+            "shifts",
+            "Shift factors",
+            shifts,
+            lambda: master.plot_shifts(shifts, reference_C=reference, shift=shift),
+            lambda: master.describe_shifts(shifts, shift),
+        )
+    if table is not None:
+        curves = master.by_temperature(table)
+        shelf.add(
+            "phase-angle",
+            "Phase angle against complex modulus",
+            table,
+            lambda: moduli.plot_phase_angle(curves),
+            lambda: moduli.describe_phase_angle(curves),
+        )
+
+
+def _rest(shelf: _Shelf) -> None:
+    table = shelf.table("rest.csv")
+    if table is not None:
+        rest = shelf.record.get("rest") or []
+        shelf.add(
+            "rest",
+            "Stress left while waiting",
+            table,
+            lambda: decay.plot_rest(table, rest=rest),
+            lambda: decay.describe_rest(rest),
+        )
+
+
+def target_header(table: pd.DataFrame, target: Any) -> str | None:
+    """Header of the column a target speaks of (`viscosity_Pa_s@0.1` is `eta 0.1 [Pa s]`)."""
+    if not isinstance(target, Mapping) or not target.get("quantity"):
+        return None
+    quantity = str(target["quantity"])
+    name, _, at = quantity.partition("@")
+    stems = {
+        "viscosity_Pa_s": ("eta", "viscosity", "|eta*|"),
+        "eta0_Pa_s": ("eta0",),
+        "MFR_g_per_10min": ("MFR",),
+        "tan_delta": ("tan delta", "tan_delta"),
+        "crossover_omega_rad_per_s": ("crossover omega", "omega crossover"),
+    }
+    for stem in stems.get(name, (name,)):
+        spellings = (
+            [stem]
+            if not at
+            else [
+                f"{stem} {at}",
+                f"{stem}_{at}",
+                f"{stem}@{at}",
+                f"{stem} at {at}",
+                f"{stem} at {at} rad/s",
+                f"{stem} {at} rad/s",
+                f"{stem} {at} kg",
+                f"{stem} at {at} kg",
+            ]
+        )
+        found = find(table, *spellings)
+        if found is not None:
+            return found
+    return None
+
+
+def _blend(shelf: _Shelf) -> None:
+    _fractions(shelf)
+    _distribution(shelf)
+    _curves(shelf)
+    _choices(shelf)
+
+
+def _fractions(shelf: _Shelf) -> None:
+    table = shelf.table("fractions.csv")
+    if table is None or blend.fraction_header(table) is None:
+        return
+    target = shelf.record.get("target")
+    aimed = target_header(table, target)
+    headers = blend.property_headers(table)
+    if aimed is not None:
+        headers = [aimed, *[h for h in headers if h != aimed]]
+    asked = shelf.record.get("blend")
+    fractions = asked.get("fractions") if isinstance(asked, Mapping) else None
+    first = None
+    if isinstance(fractions, Mapping) and len(fractions) == 2:
+        first = value_of(next(iter(fractions.values())))
+    elif isinstance(fractions, (list, tuple)) and len(fractions) == 2:
+        first = value_of(fractions[0])
+    for i, header in enumerate(headers[:MOST_PROPERTIES]):
+        name = (
+            "fractions"
+            if i == 0
+            else "fractions-"
+            + "".join(c if c.isalnum() else "-" for c in bare(header).casefold()).strip("-")
+        )
+        wanted = target if header == aimed else None
+        keep = [
+            c
+            for c in table.columns
+            if c == blend.fraction_header(table) or bare(str(c)).startswith(bare(header))
+        ]
+        words = bare(header).replace("_", " ")
+        shelf.add(
+            name,
+            f"{words} against the fraction",
+            table[keep],
+            lambda header=header, wanted=wanted: blend.plot_property(
+                table,
+                header,
+                target=wanted,
+                fraction=first,  # type: ignore[misc]
+                level=level_of(shelf.record),
+            ),
+            lambda header=header, wanted=wanted: blend.describe_property(table, header, wanted),  # type: ignore[misc]
+        )
+
+
+def _blendcheck(shelf: _Shelf) -> None:
+    blends = [
+        b for b in shelf.record.get("blends") or [] if b.get("weighed") and b.get("recovered")
+    ]
+    if blends:
+        shelf.add(
+            "recovered",
+            "Recovered against weighed fractions",
+            pd.json_normalize(blends),
+            lambda: blend.plot_recovered(blends),
+            lambda: blend.describe_recovered(blends),
+        )
+    residuals = shelf.table("residuals.csv")
+    if residuals is not None:
+        shelf.add(
+            "residuals",
+            "Predicted against measured, by decade",
+            residuals,
+            lambda: blend.plot_blend_residuals(residuals),
+            lambda: blend.describe_blend_residuals(residuals),
+        )
+    rules = shelf.record.get("rules") or []
+    if any(value_of(r.get("scatter_decades")) is not None for r in rules):
+        shelf.add(
+            "rules",
+            "Rules ranked",
+            pd.json_normalize(list(rules)),
+            lambda: blend.plot_rules(rules),
+            lambda: blend.describe_rules(rules),
+        )
+
+
+def _tail(shelf: _Shelf) -> None:
+    joint, gpc = shelf.table("distribution.csv"), shelf.table("gpc_only.csv")
+    tail = shelf.record.get("tail")
+    tail = tail if isinstance(tail, Mapping) else {}
+    if joint is not None:
+        shelf.add(
+            "distribution",
+            "The high end of the distribution",
+            joint,
+            lambda: distribution.plot_tail(
+                joint,
+                gpc,
+                beyond=value_of(tail.get("M_g_per_mol")),
+                window=shelf.record.get("window"),
+                gpc_high=value_of(tail.get("gpc_high_g_per_mol")),
+                fraction=tail.get("fraction"),
+                level=level_of(shelf.record),
+            ),
+            lambda: distribution.describe_tail(joint, tail),
+        )
+    _fit(shelf)
+    explanations = shelf.record.get("explanations") or []
+    if explanations:
+        shelf.add(
+            "explanations",
+            "Rival explanations",
+            pd.DataFrame(list(explanations)),
+            lambda: support.plot_explanations(explanations),
+            lambda: support.describe_explanations(explanations),
+        )
+    _choices(shelf)
+
+
+def _datasheet(shelf: _Shelf) -> None:
+    entries = shelf.record.get("claims") or []
+    if entries:
+        table = shelf.table("claims.csv")
+        shelf.add(
+            "claims",
+            "The sheet's claims",
+            pd.json_normalize(list(entries)) if table is None else table,
+            lambda: claims.plot_claims(entries),
+            lambda: claims.describe_claims(entries),
+        )
+
+
+def _calibrate(shelf: _Shelf) -> None:
+    table = shelf.table("residuals.csv")
+    if table is None:
+        return
+    if support.has_pairs(table):
+        shelf.add(
+            "law",
+            "The law through the samples",
+            table,
+            lambda: support.plot_parity(table),
+            lambda: support.describe_parity(table),
+        )
+    if moduli.residual_columns(table):
+        shelf.add(
+            "residuals",
+            "Residuals",
+            table,
+            lambda: moduli.plot_residuals(table),
+            lambda: moduli.describe_residuals(table),
+        )
+
+
+def _batch(shelf: _Shelf) -> None:
+    table = shelf.table("summary.csv")
+    if table is None:
+        return
+    limits = shelf.record.get("control") or shelf.record.get("limits") or {}
+    for name in trend.WANTED:
+        header = find(table, name)
+        if header is None or numbers(table, header) is None:
+            continue
+        own = limits.get(header) or limits.get(name) or (limits if "centre" in limits else None)
+        shelf.add(
+            f"trend-{name.casefold()}",
+            f"{name} over the lots",
+            table,
+            lambda header=header, own=own: trend.plot_trend(table, header, limits=own),  # type: ignore[misc]
+            lambda header=header, own=own: trend.describe_trend(table, header, own),
+        )  # type: ignore[misc]
+
+
+_BY_COMMAND: dict[str, Callable[[_Shelf], None]] = {
+    "predict": _predict,
+    "invert": _invert,
+    "spectrum": _spectrum_command,
+    "master": _master,
+    "rest": _rest,
+    "blend": _blend,
+    "blendcheck": _blendcheck,
+    "tail": _tail,
+    "datasheet": _datasheet,
+    "calibrate": _calibrate,
+    "batch": _batch,
+}
+
+
+def pictures_of(command: str, record: Record, tables: Tables) -> dict[str, Picture]:
+    """The pictures of a command's record and tables, the most important first."""
+    shelf = _Shelf({**record, "command": command}, tables)
+    draw = _BY_COMMAND.get(command)
+    if draw is not None:
+        with style.context():
+            draw(shelf)
+    return shelf.pictures
+
+
+def figures_for(result: Any) -> dict[str, Picture]:
+    """All pictures of a result, by name.
+
+    Parameters
+    ----------
+    result : Result
+        Anything with `command`, `to_dict()` and `tables()`.
+    """
+    return pictures_of(result.command, result.to_dict(), result.tables())

@@ -1,0 +1,127 @@
+"""Rival explanations side by side, and measured against predicted numbers on one line of equality."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from mwdlink.figures import shading, style
+from mwdlink.figures.columns import Absent, find, numbers, positive, words
+from mwdlink.figures.words import number, value_of
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from pandas import DataFrame
+
+
+@style.styled
+def plot_explanations(explanations: Sequence[Mapping[str, Any]], *, ax: Axes | None = None) -> Axes:
+    """How much the data support each explanation, as bars; those not weighed are named as such.
+
+    Parameters
+    ----------
+    explanations : sequence of mappings
+        `name` and `support`: a share of 1, or None where the data cannot weigh it.
+    """
+    ax = style.new_axes(ax, height=26.0 + 6.5 * max(len(explanations), 2))
+    shares = [value_of(e.get("support")) for e in explanations]
+    known = [s for s in shares if s is not None]
+    scale = 100.0 if known and 0 <= min(known) and max(known) <= 1.0 else 1.0
+    for row, share in enumerate(shares):
+        if share is None:
+            ax.text(
+                0.0, row, " not weighed by these data", va="center", fontsize=8.0, color=style.SOFT
+            )
+            continue
+        ax.barh(
+            [row], [scale * share], height=0.6, color="#7db8da", edgecolor=style.INK, linewidth=0.7
+        )
+        ax.text(scale * share, row, f" {number(scale * share, 2)}", va="center", fontsize=8.0)
+    ax.set_yticks(range(len(explanations)), [str(e.get("name")) for e in explanations])
+    ax.set_ylim(len(explanations) - 0.5, -0.5)
+    ax.tick_params(axis="y", which="both", length=0)
+    if scale == 100.0:
+        ax.set_xlim(0, 112)
+        ax.set_xticks([0, 25, 50, 75, 100])
+        ax.set_xlabel("support by the data / %")
+    else:
+        low = min([0.0, *known])
+        ax.set_xlim(1.15 * low, 1.15 * max([*known, 1e-9]))
+        ax.set_xlabel("support by the data")
+    return ax
+
+
+def describe_explanations(explanations: Sequence[Mapping[str, Any]]) -> str:
+    """The picture in words."""
+    parts = [
+        f"{e.get('name')} {number(value_of(e.get('support')), 2) if value_of(e.get('support')) is not None else 'not weighed'}"
+        for e in explanations
+    ]
+    return f"Support of each explanation by the data: {'; '.join(parts)}." if parts else ""
+
+
+PAIRS = (
+    (
+        ("eta0 measured", "measured eta0"),
+        ("eta0 law", "eta0 fitted", "eta0 model", "eta0 predicted"),
+        r"$\eta_0$ / Pa s",
+    ),
+    (("measured",), ("predicted", "fitted", "model"), "value"),
+)
+
+
+@style.styled
+def plot_parity(table: DataFrame, *, ax: Axes | None = None) -> Axes:
+    """Measured against fitted values, sample by sample, on equal decades.
+
+    Parameters
+    ----------
+    table : DataFrame
+        `sample`, `eta0 measured [Pa s]` and `eta0 law [Pa s]` (or `measured` and `predicted`).
+    """
+    ax = style.new_axes(ax, height=86.0)
+    for measured, fitted, label in PAIRS:
+        x, y = numbers(table, *fitted), numbers(table, *measured)
+        if x is None or y is None:
+            continue
+        good = positive(x, y)
+        ends = shading.span_of([*x[good], *y[good]], 0.08)
+        ax.plot(ends, ends, color=style.BLUE, linewidth=1.0, label="law")
+        ax.plot(x[good], y[good], **style.data_look(0) | {"color": style.INK}, label="sample")
+        names = words(table, "sample", "name")
+        for k in np.flatnonzero(good)[:12]:
+            if names is not None:
+                ax.annotate(
+                    names[k],
+                    (x[k], y[k]),
+                    xytext=(6, -4),
+                    textcoords="offset points",
+                    fontsize=8.0,
+                    va="top",
+                )
+        style.log_axes(ax)
+        ax.set_xlim(*ends)
+        ax.set_ylim(*ends)
+        ax.set_aspect("equal", adjustable="box")
+        ax.set_anchor("N")
+        ax.set_xlabel(f"law, {label}")
+        ax.set_ylabel(f"measured, {label}")
+        style.legend_above(ax)
+        return ax
+    raise Absent("the table needs a measured and a fitted column")
+
+
+def has_pairs(table: DataFrame) -> bool:
+    return any(find(table, *m) and find(table, *f) for m, f, _ in PAIRS)
+
+
+def describe_parity(table: DataFrame) -> str:
+    """The picture in words."""
+    for measured, fitted, _ in PAIRS:
+        x, y = numbers(table, *fitted), numbers(table, *measured)
+        if x is not None and y is not None:
+            off = np.log10(y[positive(x, y)] / x[positive(x, y)])
+            return f"Measured against fitted for {len(off)} samples; largest distance {number(np.abs(off).max(), 2)} decades."
+    return ""
