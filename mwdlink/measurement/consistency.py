@@ -345,10 +345,11 @@ def check_consistency(
     warnings = list(sweep.warnings)
     if not verdict.passed:
         warnings.append(Caution("kramers_kronig_failed", verdict.text()))
-    elif words := chi2_in_words(
-        verdict.chi2_per_point, verdict.degrees_of_freedom, "given"
-    ) if verdict.noise_source in ("columns", "given") else "":
-        warnings.append(Caution("misfit_unlike_noise", words))
+    elif verdict.noise_source in ("columns", "given"):
+        words = chi2_in_words(
+            verdict.chi2_per_point, verdict.degrees_of_freedom, verdict.noise_source
+        )
+        warnings += [Caution("misfit_unlike_noise", words)] if words else []
     if outliers:
         text = _sentence("Readings that stand out: ", [o.text() for o in outliers])
         warnings.append(Caution("outliers", text + " They were kept; leave them out by their row."))

@@ -81,6 +81,34 @@ class Continuous:
         return self.members @ weight if members else float(self.H @ weight)
 
 
+def penalties(tau: np.ndarray, omega_low: float) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Rows whose squares are the roughness of u = ln H, the weak curvature prior, and the rises.
+
+    Parameters
+    ----------
+    tau : ndarray of shape (n,)
+        Uniform in ln tau [s].
+    omega_low : float
+        Lowest frequency of the data [rad/s].
+
+    Returns
+    -------
+    third : ndarray of shape (n-3, n)
+        Sum of squares = integral over decades of the squared third derivative by decades, so that
+        lambda does not depend on the grid.
+    second : ndarray of shape (n-2, n)
+        In units of BEND.
+    first : ndarray of shape (k, n)
+        Slopes beyond 1/omega_low in units of RISE; only positive ones are to be counted.
+    """
+    n = tau.size
+    d = float(np.log10(tau[-1] / tau[0])) / (n - 1)
+    third = np.diff(np.eye(n), 3, axis=0) / d**2.5
+    second = np.diff(np.eye(n), 2, axis=0) / (d**1.5 * BEND)
+    first = np.diff(np.eye(n), axis=0)[tau[1:] > 1.0 / omega_low] / (np.sqrt(d) * RISE)
+    return third, second, first
+
+
 class _Problem:
     """The penalised fit for given data; perturbed refits share its matrices."""
 
@@ -97,17 +125,13 @@ class _Problem:
         high = -np.log10(omega[0]) + MARGIN
         n = int(np.ceil((high - low) * per_decade)) + 1
         self.tau = np.logspace(low, high, n)
-        d = (high - low) / (n - 1)  # in decades: lambda is quoted per decade, free of the grid
+        d = (high - low) / (n - 1)
         up, out = mode_moduli(omega, self.tau)
         self.A = np.vstack([up, out]) * (d * np.log(10))
         self.y = np.log(np.concatenate([storage, loss]))
         self.w = 1.0 / np.concatenate([sigma_storage, sigma_loss])
-        D3 = np.diff(np.eye(n), 3, axis=0) / d**2.5  # sum of squares = integral of (u''')^2
-        D2 = np.diff(np.eye(n), 2, axis=0) * np.sqrt(d) / d**2 / BEND
-        self.D3, self.D2 = D3, D2
-        self.R3, self.R2 = D3.T @ D3, D2.T @ D2
-        beyond = self.tau[1:] > 1.0 / omega[0]
-        self.D1 = np.diff(np.eye(n), axis=0)[beyond] / (np.sqrt(d) * RISE)
+        self.D3, self.D2, self.D1 = penalties(self.tau, omega[0])
+        self.R3, self.R2 = self.D3.T @ self.D3, self.D2.T @ self.D2
 
     def start(self) -> np.ndarray:
         """A flat spectrum of the size of the data."""

@@ -188,9 +188,7 @@ def frequency_factor(sweep: Sweep, other: Sweep) -> float | None:
     return float(np.exp(best[1]))
 
 
-def pascal(
-    sweep: Sweep, plateau_modulus: float | None, complex_viscosity: Any
-) -> Proposal | None:
+def pascal(sweep: Sweep, plateau_modulus: float | None, complex_viscosity: Any) -> Proposal | None:
     """Moduli in kPa read as Pa, or the reverse: a factor of a thousand against G_N or |eta*|."""
     action = "Check the unit of the moduli; nothing was changed."
     if complex_viscosity is not None:

@@ -123,9 +123,7 @@ def weighted_rows(
         [1/Pa]
     """
     up, out = mode_moduli(omega, tau)
-    return np.vstack(
-        [up / (storage * sigma_storage)[:, None], out / (loss * sigma_loss)[:, None]]
-    )
+    return np.vstack([up / (storage * sigma_storage)[:, None], out / (loss * sigma_loss)[:, None]])
 
 
 def non_negative(A: np.ndarray, b: np.ndarray) -> np.ndarray:
@@ -351,9 +349,7 @@ def _fitter(
         d = 1.0 / (1.0 + x * x)
         up, out = g * x * x * d, g * x * d
         # d up/d ln tau = 2 up d, d out/d ln tau = out (1 - x^2) d
-        J = np.vstack(
-            [np.hstack([2 * up * d, up]), np.hstack([out * (1 - x * x) * d, out])]
-        )
+        J = np.vstack([np.hstack([2 * up * d, up]), np.hstack([out * (1 - x * x) * d, out])])
         value = np.concatenate([up.sum(axis=1), out.sum(axis=1)])
         return value * scale - b, J * scale[:, None]
 

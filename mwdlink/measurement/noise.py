@@ -123,9 +123,8 @@ def estimate_noise(sweep: Sweep, *, level: float = 0.9) -> NoiseEstimate:
     freedom = max(count - fit.free, 1)
     square = float(np.sum(residual[keep] ** 2))
     raw = float(np.sqrt(square / freedom))
-    low, high = (
-        float(np.sqrt(square / chi2_law.ppf(q, freedom))) for q in ((1 + level) / 2, (1 - level) / 2)
-    )
+    tails = chi2_law.ppf([(1 + level) / 2, (1 - level) / 2], freedom)
+    low, high = (float(x) for x in np.sqrt(square / tails))
     relative = Uncertain(max(raw, FLOOR), max(low, FLOOR), max(high, FLOOR), level)
     outliers = tuple(int(i) for i in np.flatnonzero(~keep.all(axis=0)))
     return NoiseEstimate(relative, raw, roughness(sweep), freedom, outliers, fit)

@@ -9,7 +9,7 @@ import numpy as np
 
 from mwdlink.errors import Caution, InputError, merge_cautions
 from mwdlink.measurement.consistency import KramersKronig, kramers_kronig
-from mwdlink.measurement.continuous import LEVEL, Continuous, fit_continuous
+from mwdlink.measurement.continuous import Continuous, fit_continuous
 from mwdlink.measurement.modes import ModeFit, parsimonious
 from mwdlink.measurement.noise import Weights, chi2_in_words, noise_of
 from mwdlink.measurement.sweep import Sweep
@@ -165,8 +165,8 @@ class SpectrumFit(Result):
             )
         modes = self.discrete.tau.size
         return (
-            f"{modes} relaxation mode{'s describe' if modes != 1 else ' describes'} the sweep, with "
-            f"{flow}; "
+            f"{modes} relaxation mode{'s describe' if modes != 1 else ' describes'} the sweep, "
+            f"with {flow}; "
             f"the data support the spectrum from {low:.2g} to {high:.2g} s."
         )
 
@@ -292,9 +292,7 @@ def fit_spectrum(
     )
 
 
-def _terminal(
-    sweep: Sweep, c: Continuous, discrete: ModeFit
-) -> tuple[dict[str, Uncertain], bool]:
+def _terminal(sweep: Sweep, c: Continuous, discrete: ModeFit) -> tuple[dict[str, Uncertain], bool]:
     """eta0, Je0 and mean time with their status, from the continuous spectrum and its members.
 
     Where they are resolved, the interval also holds the value of the discrete modes: the smoothing

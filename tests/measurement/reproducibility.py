@@ -82,7 +82,9 @@ def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--sweeps", type=int, default=60)
     sweeps = parser.parse_args().sweeps
-    print("| melt | window [rad/s] | points per decade | median | root mean square | largest | distance from the exact one |")
+    print(
+        "| melt | window [rad/s] | points per decade | median | root mean square | largest | distance from the exact one |"
+    )
     print("|---|---|---|---|---|---|---|")
     for name, distribution in melts().items():
         for window, density in (((-3, 3), 5), ((-2, 2), 5), ((-2, 2), 10)):
