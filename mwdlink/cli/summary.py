@@ -7,6 +7,7 @@ uncertain quantities or the parallel `bands`.
 from __future__ import annotations
 
 import math
+import re
 import textwrap
 from collections.abc import Iterator, Mapping
 from typing import Any
@@ -34,10 +35,13 @@ _UNITS = (
     ("_s", "s"),
 )
 
+# a property at a frequency, as in eta_0.1
+_AT = re.compile(r"(eta|tan_delta)_([\d.]+)")
+
 # these tell the entries of a list apart; the first one that is there becomes the entry's name
 _NAMES = ("name", "quantity", "kernel", "rule", "flag", "after", "load_kg", "M_g_per_mol")
 
-_STATUS = {"lower_bound": "at least", "upper_bound": "at most", "assumed": "assumed, not measured"}
+_BOUNDS = {"lower_bound": "at least ", "upper_bound": "at most "}
 
 
 def number(x: float, digits: int = 3) -> str:
@@ -102,13 +106,13 @@ def _rows(key: str, value: Any, band: Any, prefix: str = "") -> Iterator[Row]:
     name, unit = _name_and_unit(key)
     label = f"{prefix}{name}"
     if _uncertain(value):
-        yield label, _with_unit(value.get("value"), key, unit), _interval(value, key)
+        bound = _BOUNDS.get(value.get("status"), "")
+        yield label, bound + _with_unit(value.get("value"), key, unit), _interval(value, key)
     elif isinstance(value, Mapping):
         for k, v in value.items():
             if v is None or v in ([], {}):
                 continue
-            b = band.get(k) if isinstance(band, Mapping) else None
-            yield from _rows(k, v, b, f"{prefix}{_name_and_unit(k)[0]} " if _nested(v) else prefix)
+            yield from _rows(k, v, _part(band, k), prefix + _outer(k, v))
     elif isinstance(value, list):
         for i, entry in enumerate(value):
             b = band[i] if isinstance(band, list) and i < len(band) else None
@@ -116,7 +120,8 @@ def _rows(key: str, value: Any, band: Any, prefix: str = "") -> Iterator[Row]:
     elif isinstance(value, bool):
         yield label, "yes" if value else "no", ""
     elif isinstance(value, (int, float)):
-        yield label, _with_unit(value, key, unit), _interval(band, key)
+        bound = _BOUNDS.get(_part(band, "status"), "")
+        yield label, bound + _with_unit(value, key, unit), _interval(band, key)
     elif isinstance(value, str):
         yield label, value, ""
 
@@ -126,36 +131,42 @@ def _nested(value: Any) -> bool:
 
 
 def _entry(entry: Any, band: Any, key: str) -> Iterator[Row]:
-    """An entry of a list: its name, then what it holds, one row where one will do."""
+    """An entry of a list as one row: its name, then all that it holds."""
     if not isinstance(entry, Mapping) or _uncertain(entry):
         yield from _rows(key, entry, band)
         return
     key_of_name = next((k for k in _NAMES if k in entry), None)
     head = ""
-    if key_of_name is not None:
-        n, unit = _name_and_unit(key_of_name)
-        head = str(entry[key_of_name])
-        if not isinstance(entry[key_of_name], str):
-            head = f"{number(entry[key_of_name])} {unit}".strip()
-            head = f"{n} {head}" if n == "M" else head
-    rest = {k: v for k, v in entry.items() if k != key_of_name and v is not None}
-    rest = {k: v for k, v in rest.items() if not k.endswith(("_low", "_high"))}
-    plain = {k: v for k, v in rest.items() if not isinstance(v, (Mapping, list)) or _uncertain(v)}
-    if len(plain) > 1 and not any(_uncertain(v) for v in plain.values()):
-        parts = []
-        for k, v in plain.items():
-            for label, text, _ in _rows(k, v, None):
-                parts.append(text if isinstance(v, str) else f"{label} {text}")
-        yield head, ", ".join(parts), ""
-    else:
-        for k, v in plain.items():
-            b = band.get(k) if isinstance(band, Mapping) else None
-            for label, text, between in _rows(k, v, b):
-                yield f"{head} {label}".strip(), text, between
-    for k, v in rest.items():
-        if k not in plain and isinstance(v, Mapping):
-            for label, text, between in _rows(k, v, None, f"{head} {_name_and_unit(k)[0]} "):
-                yield label, text, between
+    if isinstance(entry.get(key_of_name), str):
+        head = entry[key_of_name]
+        head = head if " " in head else _name_and_unit(head)[0]
+    elif key_of_name is not None:
+        name, unit = _name_and_unit(key_of_name)
+        head = f"{number(entry[key_of_name])} {unit}"
+        head = f"M {head}" if name == "M" else head
+    rest = {
+        k: v
+        for k, v in entry.items()
+        if k != key_of_name and v is not None and not k.endswith(("_low", "_high"))
+    }
+    rows = [row for k, v in rest.items() for row in _rows(k, v, _part(band, k), _outer(k, v))]
+    if len(rows) == 1 and not isinstance(rest[next(iter(rest))], str):
+        yield f"{head} {rows[0][0]}".strip(), *rows[0][1:]
+        return
+    texts = {_name_and_unit(k)[0] for k, v in rest.items() if isinstance(v, str)}
+    parts = []
+    for what, text, between in rows:
+        part = text if what in texts else f"{what} {text}"
+        parts.append(f"{part} ({between})" if between else part)
+    yield head, ", ".join(parts), ""
+
+
+def _part(band: Any, key: str) -> Any:
+    return band.get(key) if isinstance(band, Mapping) else None
+
+
+def _outer(key: str, value: Any) -> str:
+    return f"{_name_and_unit(key)[0]} " if _nested(value) else ""
 
 
 def _uncertain(value: Any) -> bool:
@@ -187,8 +198,9 @@ def _interval(u: Any, key: str) -> str:
         return ""
     low, high = u.get("low"), u.get("high")
     text = "" if low is None or high is None else f"{_plain(low, key)} to {_plain(high, key)}"
-    status = _STATUS.get(str(u.get("status")), "")
-    return f"{text} ({status})" if text and status else text or status
+    if u.get("status") == "assumed":
+        return f"{text}, assumed".lstrip(", ")
+    return text
 
 
 def _name_and_unit(key: str) -> tuple[str, str]:
@@ -197,6 +209,9 @@ def _name_and_unit(key: str) -> tuple[str, str]:
     for ending, unit in _UNITS:
         if key.endswith(ending) and len(key) > len(ending):
             return key.removesuffix(ending).replace("_", " "), unit
+    at = _AT.fullmatch(key)
+    if at is not None:
+        return f"{at[1].replace('_', ' ')} at {at[2]} rad/s", "Pa s" if at[1] == "eta" else ""
     return key.replace("_", " "), ""
 
 
