@@ -32,7 +32,7 @@ RECORD: dict[str, Any] = {
     },
     "above": [{"M_g_per_mol": 5e5, "fraction": uncertain(0.03, 0.02, 0.04)}],
     "kernels": [{"kernel": "power-law", "chi2_per_point": 1.0, "admissible": True}],
-    "rest": [{"residual": 0.01, "after": "steady flow", "time_s": uncertain(30, 25, 40)}],
+    "rest": [{"residual": 0.01, "after": "steady flow", "time_s": uncertain(30.0, 25, 40)}],
     "advice": ["Measure down to 0.001 rad/s.", "Give the temperature."],
     "verdict": "consistent",
 }

@@ -11,6 +11,7 @@ from pathlib import Path
 import pytest
 from click.testing import CliRunner
 
+import mwdlink
 from mwdlink.cli.main import COMMANDS, main
 
 TOP = Path(__file__).parents[2]
@@ -50,7 +51,7 @@ def test_code_blocks_run(page: Path, tmp_path: Path) -> None:
     command.chmod(0o755)
     for name in ("python", "python3"):
         (programs / name).symlink_to(sys.executable)
-    inside = [str(Path(__import__("mwdlink").__file__).parents[1]), os.environ.get("PYTHONPATH", "")]
+    inside = [str(Path(mwdlink.__file__).parents[1]), os.environ.get("PYTHONPATH", "")]
     environment = os.environ | {
         "PATH": f"{programs}{os.pathsep}{os.environ['PATH']}",
         "PYTHONPATH": os.pathsep.join(filter(None, inside)),
