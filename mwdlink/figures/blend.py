@@ -10,18 +10,18 @@ import numpy as np
 
 from mwdlink.figures import shading, style
 from mwdlink.figures.columns import Absent, band, bare, find, numbers, positive, unit, words
-from mwdlink.figures.words import interval_of, listed, number, percent, value_of
+from mwdlink.figures.words import interval_of, listed, number, percent, short, upper_first, value_of
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from pandas import DataFrame
 
 PROPERTY_WORDS = {
-    "eta0": r"zero-shear viscosity $\eta_0$",
-    "Je0": r"compliance $J_e^0$",
+    "eta0": "zero-shear viscosity η₀",
+    "Je0": "steady compliance Je⁰",
     "MFR": "melt flow rate",
-    "crossover omega": r"crossover frequency $\omega_c$",
-    "crossover G": "crossover modulus $G_c$",
+    "crossover omega": "crossover frequency",
+    "crossover G": "crossover modulus",
     "mean time": "mean time",
 }
 
@@ -46,9 +46,9 @@ def property_headers(table: DataFrame) -> list[str]:
     return out
 
 
-def property_label(header: str) -> str:
-    """Axis label of a property column: quantity / unit."""
-    name, of = bare(header), unit(header)
+def property_words(header: str) -> str:
+    """A property column's name in words, without its unit."""
+    name = bare(header)
     words_ = PROPERTY_WORDS.get(name)
     if words_ is None:
         match = re.match(
@@ -57,14 +57,24 @@ def property_label(header: str) -> str:
         if match:
             kind = {
                 "MFR": "melt flow rate",
-                "tan delta": r"$\tan\delta$",
-                "|eta*|": r"$|\eta^*|$",
-            }.get(match[1], r"$\eta$")
+                "tan delta": "tan δ",
+                "|eta*|": "|η*|",
+            }.get(match[1], "viscosity")
             at = match[3] or ("kg" if match[1] == "MFR" else "rad/s")
             words_ = f"{kind} at {match[2]} {at}"
         else:
             words_ = name.replace("_", " ")
-    return f"{words_} / {of.replace('.', ' ')}" if of and of not in {"-", "1"} else words_
+    return words_
+
+
+def property_label(header: str) -> str:
+    """Axis label of a property column: quantity / unit."""
+    of = unit(header).replace("10min", "10 min").replace("10 min", "(10 min)")
+    return (
+        f"{property_words(header)} / {of}"
+        if of and of not in {"-", "1"}
+        else property_words(header)
+    )
 
 
 @style.styled
@@ -112,13 +122,14 @@ def plot_property(
         ys += [float(v) for b in between for v in b[np.isfinite(b)]]
     ax.plot(x, y, color=style.BLUE, label="prediction")
     wanted = value_of((target or {}).get("wanted"))
+    rising = bool(y[np.argmax(x)] > y[np.argmin(x)])
     if wanted is not None:
         ax.axhline(
             wanted,
             color=style.VERMILION,
             linestyle=style.DASHES[1],
             linewidth=1.2,
-            label=f"target {number(wanted)}",
+            label=f"target {short(wanted)}",
         )
         ys.append(wanted)
         for found in (target or {}).get("fractions") or []:
@@ -145,9 +156,10 @@ def plot_property(
                 linestyle="none",
             )
             ax.annotate(
-                f"{number(100 * at)} %",
+                f"{short(100 * at)} %",
                 (100 * at, wanted),
-                xytext=(5, 5),
+                xytext=(5, -6 if rising else 5),
+                va="top" if rising else "bottom",
                 textcoords="offset points",
                 fontsize=8.0,
             )
@@ -158,7 +170,7 @@ def plot_property(
             linewidth=0.9,
             linestyle=(0, (1.2, 1.2)),
             zorder=1,
-            label=f"asked for: {number(100 * fraction)} %",
+            label=f"asked for: {short(100 * fraction)} %",
         )
     if min(ys) > 0 and max(ys) / min(ys) > 3:
         style.log_axis(ax.yaxis)
@@ -182,7 +194,7 @@ def describe_property(
         return ""
     good = np.flatnonzero(np.isfinite(x) & np.isfinite(y))
     first, last = good[np.argmin(x[good])], good[np.argmax(x[good])]
-    name = bare(header).replace("_", " ")
+    name = upper_first(property_words(header))
     text = f"{name} against the fraction: {number(y[first])} at {percent(x[first])}, {number(y[last])} at {percent(x[last])}"
     text += f" ({unit(header)})." if unit(header) not in {"", "-"} else "."
     wanted = value_of((target or {}).get("wanted"))
@@ -213,7 +225,7 @@ def plot_recovered(
     component : str, optional
         Whose fraction is shown; the first component unless given.
     """
-    ax = style.new_axes(ax, height=88.0)
+    ax = style.new_axes(ax, height=108.0)
     component = component or next(iter(blends[0]["weighed"]), None)
     ax.plot(
         [0, 100],
@@ -302,7 +314,7 @@ def plot_blend_residuals(table: DataFrame, *, ax: Axes | None = None) -> Axes:
         decades) and `bias G' [decades]`, `bias G'' [decades]` (or `residual ...`), with
         `scatter G' [decades]` where known.
     """
-    ax = style.new_axes(ax, height=76.0)
+    ax = style.new_axes(ax, height=82.0)
     names = words(table, "blend", "name", "sample") or [""] * len(table)
     x = numbers(table, "omega", "omega centre")
     if x is None:
@@ -358,12 +370,12 @@ def plot_blend_residuals(table: DataFrame, *, ax: Axes | None = None) -> Axes:
     ax.text(
         0.02,
         0.03,
-        "open: $G'$, half filled: $G''$",
+        "open: G′, half filled: G″",
         transform=ax.transAxes,
         fontsize=8.0,
         color=style.SOFT,
     )
-    ax.set_xlabel(r"angular frequency $\omega$ / rad s$^{-1}$")
+    ax.set_xlabel("angular frequency ω / rad s⁻¹")
     ax.set_ylabel("predicted against measured / decades")
     style.legend_above(ax)
     return ax

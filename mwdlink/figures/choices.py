@@ -9,7 +9,7 @@ import numpy as np
 
 from mwdlink.figures import shading, style
 from mwdlink.figures.columns import Absent, find, numbers, positive
-from mwdlink.figures.words import interval_of, number, value_of, with_interval
+from mwdlink.figures.words import interval_of, number, short, value_of, with_interval
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -100,13 +100,13 @@ def plot_smoothing(
                 marker="s",
                 markersize=3.2,
                 markerfacecolor=style.PAPER,
-                label=r"misfit $\chi^2$ per point (right)",
+                label="misfit χ² per point (right)",
             )
             if style.decades_between(y[good].min(), y[good].max()) > 1.0:
                 style.log_axis(right.yaxis)
             else:
                 right.set_ylim(0.0, None)
-            right.set_ylabel(r"$\chi^2$ per point")
+            right.set_ylabel("χ² per point")
             ax.tick_params(axis="y", which="both", right=False)
             handles += right.get_legend_handles_labels()[0]
     good = lam[np.isfinite(lam) & (lam > 0)]
@@ -126,7 +126,7 @@ def plot_smoothing(
             va="bottom",
             bbox={"facecolor": style.PAPER, "edgecolor": "none", "alpha": 0.8, "pad": 0.6},
         )
-    ax.set_xlabel(r"smoothing $\lambda$  (free ← → smooth)")
+    ax.set_xlabel("smoothing λ  (free ← → smooth)")
     ax.set_ylabel(label)
     style.legend_above(ax, handles=handles)
     return ax
@@ -146,7 +146,7 @@ def describe_smoothing(table: DataFrame, chosen: float | None = None) -> str:
     lam = numbers(table, *LAMBDA)
     if lam is None:
         return ""
-    text = f"Scan of the smoothing parameter, {len(set(lam.tolist()))} values from {number(lam.min())} to {number(lam.max())}."
+    text = f"Scan of the smoothing parameter, {len(set(lam.tolist()))} values from {short(lam.min())} to {short(lam.max())}."
     return f"{text} The value used is {number(chosen)}." if chosen else text
 
 
@@ -155,7 +155,7 @@ def plot_kernels(
     kernels: Sequence[Mapping[str, Any]],
     *,
     key: str = "Mw_g_per_mol",
-    label: str = "weight-average molar mass $M_w$ / g mol$^{-1}$",
+    label: str = "weight-average molar mass Mw / g mol⁻¹",
     ax: Axes | None = None,
 ) -> Axes:
     """One line per kernel: its answer with its interval; rejected ones open, dashed and said so.
@@ -189,14 +189,18 @@ def plot_kernels(
             [x], [row], marker="o" if good else "x", markersize=5.5, color=color, linestyle="none"
         )
         chi = value_of(entry.get("chi2_per_point"))
-        said = "" if chi is None else rf"$\chi^2$ {number(chi, 2)}"
+        said = "" if chi is None else f"χ² {number(chi, 2)}"
         names.append(f"{entry.get('kernel')}\n{said}{'' if good else ', rejected'}".strip())
     ax.set_yticks(range(len(shown)), names)
     ax.set_ylim(len(shown) - 0.5, -0.5)
     ax.tick_params(axis="y", which="both", length=0)
-    if xs and min(xs) > 0:
+    if xs and min(xs) > 0 and max(xs) / min(xs) > 4.0:
         style.log_axis(ax.xaxis)
         ax.set_xlim(*shading.span_of(xs, 0.12))
+    elif xs:
+        style.linear_axis(ax.xaxis)
+        aside = 0.12 * (max(xs) - min(xs) or abs(xs[0]))
+        ax.set_xlim(min(xs) - aside, max(xs) + aside)
     ax.set_xlabel(label)
     return ax
 
@@ -225,9 +229,10 @@ def plot_budget(budgets: Mapping[str, Mapping[str, float]], *, ax: Axes | None =
     budgets : mapping of str to mapping
         Quantity to shares by source, each set adding up to 1.
     """
+    own = ax is None
     ax = style.new_axes(ax, height=30.0 + 8.0 * max(len(budgets), 2))
     parts = [p for p in BUDGET_WORDS if any((b.get(p) or 0) > 0 for b in budgets.values())]
-    fills = ("#0072b2", "#f0b37e", "#7fc4b0", "#d9a9ca", "#b8bec6", "#e8d98a", "#7d8794")
+    fills = ("#7db8da", "#f0b37e", "#7fc4b0", "#d9a9ca", "#b8bec6", "#e8d98a", "#7d8794")
     lefts = np.zeros(len(budgets))
     for i, part in enumerate(parts):
         share = np.array([100.0 * float(b.get(part) or 0.0) for b in budgets.values()])
@@ -259,7 +264,7 @@ def plot_budget(budgets: Mapping[str, Mapping[str, float]], *, ax: Axes | None =
     ax.tick_params(axis="y", which="both", length=0)
     ax.set_xlim(0, 100)
     ax.set_xlabel("share of the interval's variance / %")
-    style.legend_above(ax)
+    style.legend_above(ax, over_figure=own)
     return ax
 
 
@@ -268,8 +273,7 @@ def describe_budget(budgets: Mapping[str, Mapping[str, float]]) -> str:
     parts = []
     for name, shares in budgets.items():
         largest = max(shares, key=lambda p: shares.get(p) or 0.0)
-        plain = str(name).replace("$", "").replace("_", "")
         parts.append(
-            f"{plain} mostly {BUDGET_WORDS.get(largest, largest)} ({100 * float(shares[largest] or 0):.0f} %)"
+            f"{name} mostly {BUDGET_WORDS.get(largest, largest)} ({100 * float(shares[largest] or 0):.0f} %)"
         )
     return f"What the intervals are made of: {'; '.join(parts)}." if parts else ""

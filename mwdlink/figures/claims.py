@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from mwdlink.figures import style
-from mwdlink.figures.words import interval_of, listed, number, value_of
+from mwdlink.figures.words import interval_of, listed, number, upper_first, value_of
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -24,21 +24,21 @@ LOOKS = {
 def spoken(quantity: str) -> str:
     """A claim's key in words and symbols."""
     plain = {
-        "Mn_g_per_mol": "$M_n$",
-        "Mw_g_per_mol": "$M_w$",
-        "Mz_g_per_mol": "$M_z$",
+        "Mn_g_per_mol": "Mn",
+        "Mw_g_per_mol": "Mw",
+        "Mz_g_per_mol": "Mz",
         "dispersity": "dispersity",
-        "eta0_Pa_s": r"$\eta_0$",
+        "eta0_Pa_s": "η₀",
         "flow_rate_ratio": "flow rate ratio",
-        "intrinsic_viscosity": r"$[\eta]$",
+        "intrinsic_viscosity": "[η]",
         "activation_energy": "activation energy",
     }
     if quantity in plain:
         return plain[quantity]
     text = quantity.replace("_", " ")
     for key, words in (
-        ("crossover omega rad per s", r"crossover $\omega$"),
-        ("crossover G Pa", "crossover $G$"),
+        ("crossover omega rad per s", "crossover frequency"),
+        ("crossover G Pa", "crossover modulus"),
     ):
         text = text.replace(key, words)
     return text.removesuffix(" C") + " °C" if text.endswith(" C") else text
@@ -46,12 +46,9 @@ def spoken(quantity: str) -> str:
 
 def spoken_plain(quantity: str) -> str:
     """The same without symbols, for descriptions."""
-    plain = (
-        spoken(quantity)
-        .replace(r"$[\eta]$", "intrinsic viscosity")
-        .replace(r"$\eta_0$", "zero-shear viscosity")
+    return (
+        spoken(quantity).replace("[η]", "intrinsic viscosity").replace("η₀", "zero-shear viscosity")
     )
-    return plain.replace("$", "").replace("_", "").replace(r"\omega", "frequency")
 
 
 @style.styled
@@ -64,6 +61,7 @@ def plot_claims(claims: Sequence[Mapping[str, Any]], *, ax: Axes | None = None) 
         `quantity`, `claimed`, `tolerance` (relative half-width), `expected` (uncertain), `z`,
         `verdict`.
     """
+    own = ax is None
     ax = style.new_axes(ax, height=34.0 + 8.5 * max(len(claims), 2))
     said: set[str] = set()
     ends: list[float] = [-0.3, 0.3]
@@ -83,6 +81,7 @@ def plot_claims(claims: Sequence[Mapping[str, Any]], *, ax: Axes | None = None) 
                 va="center",
                 fontsize=8.0,
                 color=style.SOFT,
+                bbox={"facecolor": style.PAPER, "edgecolor": "none", "pad": 1.0},
             )
             continue
         between = interval_of(claim.get("expected"))
@@ -121,7 +120,7 @@ def plot_claims(claims: Sequence[Mapping[str, Any]], *, ax: Axes | None = None) 
         ends.append(x)
         if z is not None:
             ax.annotate(
-                f"$z$ = {z:+.1f}".replace("-", "−"),
+                f"z = {z:+.1f}".replace("-", "−"),
                 (1.0, row),
                 xycoords=ax.get_yaxis_transform(),
                 xytext=(4, 0),
@@ -170,7 +169,7 @@ def plot_claims(claims: Sequence[Mapping[str, Any]], *, ax: Axes | None = None) 
     ticks.sort()
     ax.set_xticks([float(np.log10(f)) for f in ticks], [f"{f:g}" for f in ticks])
     ax.set_xlabel("claimed / expected from all the others")
-    style.legend_above(ax)
+    style.legend_above(ax, over_figure=own)
     return ax
 
 
@@ -185,7 +184,7 @@ def describe_claims(claims: Sequence[Mapping[str, Any]]) -> str:
         )
     parts = [f"{verdict}: {listed(names)}" for verdict, names in groups.items()]
     return (
-        f"Claims of the sheet against what the others lead one to expect. {'; '.join(parts).capitalize()}."
+        f"Claims of the sheet against what the others lead one to expect. {upper_first('; '.join(parts))}."
         if parts
         else ""
     )

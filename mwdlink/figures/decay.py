@@ -10,7 +10,7 @@ import numpy as np
 from mwdlink.figures import shading, style
 from mwdlink.figures.columns import Absent, band, beginning, numbers, positive
 from mwdlink.figures.moduli import measured, modelled
-from mwdlink.figures.words import interval_of, number, value_of, with_interval
+from mwdlink.figures.words import interval_of, number, short, value_of, with_interval
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -41,7 +41,7 @@ def plot_relaxation(table: DataFrame, *, level: float = 0.9, ax: Axes | None = N
     line = model if model is not None else plain
     if time is None or line is None:
         raise Absent("the table needs the columns t [s] and G [Pa]")
-    floor = float(np.nanmax(line)) * 1e-8
+    floor = float(np.nanmax(line)) * 1e-6
     between = band(table, *modelled("G"), "G")
     if between is not None:
         good = positive(time, *between)
@@ -55,7 +55,7 @@ def plot_relaxation(table: DataFrame, *, level: float = 0.9, ax: Axes | None = N
             label=f"{100 * level:.0f} % interval",
         )
     good = positive(time, line) & (line > floor)
-    ax.plot(time[good], line[good], color=style.BLUE, label="$G(t)$" if data is None else "model")
+    ax.plot(time[good], line[good], color=style.BLUE, label="G(t)" if data is None else "model")
     xs = [time[good].min(), time[good].max()]
     ys = [line[good].min(), line[good].max()]
     if data is not None:
@@ -67,8 +67,8 @@ def plot_relaxation(table: DataFrame, *, level: float = 0.9, ax: Axes | None = N
     ax.set_xlim(*shading.span_of(xs, 0.02))
     ax.set_ylim(*shading.span_of(ys, 0.04))
     style.equal_decades(ax, own_figure=own)
-    ax.set_xlabel("time $t$ / s")
-    ax.set_ylabel("relaxation modulus $G$ / Pa")
+    ax.set_xlabel("time t / s")
+    ax.set_ylabel("relaxation modulus G / Pa")
     style.legend_above(ax)
     return ax
 
@@ -80,7 +80,7 @@ def describe_relaxation(table: DataFrame) -> str:
         return ""
     good = positive(time, modulus)
     t, g = time[good], modulus[good]
-    text = f"Relaxation modulus falling from {number(g[0])} Pa at {number(t[0])} s to {number(g[-1])} Pa at {number(t[-1])} s."
+    text = f"Relaxation modulus falling from {number(g[0])} Pa at {short(t[0])} s to {number(g[-1])} Pa at {short(t[-1])} s."
     hundredth = np.flatnonzero(g < 0.01 * g[0])
     if hundredth.size:
         text += f" It is below a hundredth of its first value after {number(t[hundredth[0]])} s."
@@ -185,7 +185,7 @@ def plot_rest(
             fontsize=8.0,
             color=style.SOFT,
         )
-    ax.set_xlabel("waiting time $t$ / s")
+    ax.set_xlabel("waiting time t / s")
     ax.set_ylabel("stress left, as a share")
     style.legend_above(ax)
     return ax

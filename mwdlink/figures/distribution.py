@@ -9,7 +9,7 @@ import numpy as np
 
 from mwdlink.figures import shading, style
 from mwdlink.figures.columns import Absent, band, numbers
-from mwdlink.figures.words import listed, number, percent, value_of, with_interval
+from mwdlink.figures.words import listed, number, percent, short, value_of, with_interval
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -17,8 +17,8 @@ if TYPE_CHECKING:
 
 MASS = ("M", "molar mass")
 DENSITY = ("dW/dlog10M", "dW/dlog10 M", "w")
-X_LABEL = "molar mass $M$ / g mol$^{-1}$"
-Y_LABEL = r"$\mathrm{d}W/\mathrm{d}\,\log_{10}M$"
+X_LABEL = "molar mass M / g mol⁻¹"
+Y_LABEL = "dW / d log₁₀M"
 
 
 def limits(
@@ -121,7 +121,7 @@ def mark_averages(ax: Axes, averages: Mapping[str, Any] | None) -> None:
         return
     left, right = ax.get_xlim()
     marks = {"lower_bound": "≥ ", "upper_bound": "≤ ", "assumed": "(", "resolved": ""}
-    for key, name in (("Mn_g_per_mol", "M_n"), ("Mw_g_per_mol", "M_w"), ("Mz_g_per_mol", "M_z")):
+    for key, name in (("Mn_g_per_mol", "Mn"), ("Mw_g_per_mol", "Mw"), ("Mz_g_per_mol", "Mz")):
         x = value_of(averages.get(key))
         if x is None or not left < x < right:
             continue
@@ -140,7 +140,7 @@ def mark_averages(ax: Axes, averages: Mapping[str, Any] | None) -> None:
         ax.text(
             x,
             0.045,
-            f"{before}${name}${after}",
+            f"{before}{name}{after}",
             transform=ax.get_xaxis_transform(),
             ha="center",
             va="bottom",
@@ -161,7 +161,7 @@ def describe_distribution(
         return ""
     peak = int(np.nanargmax(density))
     text = (
-        f"Weight distribution over molar mass, highest at {number(mass[peak])} g/mol "
+        f"Weight distribution over molar mass, highest at {short(mass[peak])} g/mol "
         f"({number(density[peak], 2)} per decade)."
     )
     if averages:
@@ -178,7 +178,7 @@ def describe_distribution(
             text += f" {listed(said)}."
     low, high = _edges(window)
     if low is not None and high is not None:
-        text += f" The sweep sees {number(low)} to {number(high)} g/mol; outside it is blind."
+        text += f" The sweep sees {short(low)} to {short(high)} g/mol; outside it is blind."
     return text
 
 
@@ -262,7 +262,7 @@ def plot_tail(
             shading.blind_range(ax, max(edges[1], gpc_high), right, "blind for both")
     if beyond is not None:
         ax.axvline(beyond, color=style.INK, linewidth=1.0, zorder=2.2)
-        said = f"beyond {number(beyond)} g/mol"
+        said = f"beyond {short(beyond)} g/mol"
         if value_of(fraction) is not None:
             said = f"{percent(value_of(fraction))} {said}"
         ax.annotate(
@@ -293,7 +293,7 @@ def describe_tail(joint: DataFrame, tail: Mapping[str, Any] | None) -> str:
     share = tail.get("fraction")
     beyond = value_of(tail.get("M_g_per_mol"))
     if value_of(share) is not None and beyond is not None:
-        text += f" Beyond {number(beyond)} g/mol lie {_share(share)}."
+        text += f" Beyond {short(beyond)} g/mol lie {_share(share)}."
     limit = value_of(tail.get("detection_limit"))
     if limit is not None:
         text += f" The smallest tail these data could show is {percent(limit)}."

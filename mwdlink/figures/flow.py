@@ -9,7 +9,7 @@ import numpy as np
 from mwdlink.figures import shading, style
 from mwdlink.figures.columns import Absent, band, numbers, positive
 from mwdlink.figures.moduli import measured, modelled
-from mwdlink.figures.words import number
+from mwdlink.figures.words import number, short
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -106,7 +106,7 @@ def plot_flow(
             linewidth=0.9,
             linestyle=(0, (4, 2)),
             zorder=1,
-            label=r"$\eta_0$",
+            label="η₀",
         )
         ys.append(eta0)
     style.log_axes(ax)
@@ -119,7 +119,7 @@ def plot_flow(
     ax.set_ylim(low, high)
     style.equal_decades(ax, own_figure=own)
     ax.set_xlabel(r"shear rate $\dot\gamma$ / s$^{-1}$")
-    ax.set_ylabel(r"viscosity $\eta$ / Pa s")
+    ax.set_ylabel("viscosity η / Pa s")
     style.legend_above(ax)
     return ax
 
@@ -132,7 +132,7 @@ def describe_flow(table: DataFrame, eta0: float | None = None) -> str:
     good = positive(rate, eta)
     x, y = rate[good], eta[good]
     text = (
-        f"Viscosity falling from {number(y[0])} Pa s at {number(x[0])} per second to {number(y[-1])} Pa s at "
-        f"{number(x[-1])} per second."
+        f"Viscosity falling from {number(y[0])} Pa s at {short(x[0])} per second to {number(y[-1])} Pa s at "
+        f"{short(x[-1])} per second."
     )
     return f"{text} Zero-shear viscosity {number(eta0)} Pa s." if eta0 else text

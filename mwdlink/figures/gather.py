@@ -27,7 +27,7 @@ from mwdlink.figures import (
 )
 from mwdlink.figures.columns import Absent, bare, find, numbers
 from mwdlink.figures.picture import Picture
-from mwdlink.figures.words import value_of
+from mwdlink.figures.words import short, upper_first, value_of
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -90,13 +90,13 @@ def level_of(record: Record) -> float:
 def collect_budgets(record: Record) -> dict[str, dict[str, float]]:
     """Name to shares of variance of every quantity that carries a budget."""
     names = {
-        "Mn_g_per_mol": "$M_n$",
-        "Mw_g_per_mol": "$M_w$",
-        "Mz_g_per_mol": "$M_z$",
+        "Mn_g_per_mol": "Mn",
+        "Mw_g_per_mol": "Mw",
+        "Mz_g_per_mol": "Mz",
         "dispersity": "dispersity",
-        "Mw_within_window_g_per_mol": "$M_w$ in window",
-        "eta0_Pa_s": r"$\eta_0$",
-        "Je0_per_Pa": "$J_e^0$",
+        "Mw_within_window_g_per_mol": "Mw in window",
+        "eta0_Pa_s": "η₀",
+        "Je0_per_Pa": "Je⁰",
         "time_law_factor": "time law",
         "fraction": "tail",
         "excess": "excess",
@@ -121,7 +121,7 @@ def collect_budgets(record: Record) -> dict[str, dict[str, float]]:
     for entry in record.get("above") or []:
         mass = value_of(entry.get("M_g_per_mol"))
         if mass is not None:
-            take("above", entry.get("fraction"), f"above {mass:.3g}")
+            take("above", entry.get("fraction"), f"above {short(mass)}")
     return dict(list(out.items())[:8])
 
 
@@ -400,10 +400,9 @@ def _fractions(shelf: _Shelf) -> None:
             for c in table.columns
             if c == blend.fraction_header(table) or bare(str(c)).startswith(bare(header))
         ]
-        words = bare(header).replace("_", " ")
         shelf.add(
             name,
-            f"{words} against the fraction",
+            f"{upper_first(blend.property_words(header))} against the fraction",
             table[keep],
             lambda header=header, wanted=wanted: blend.plot_property(
                 table,

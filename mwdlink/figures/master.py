@@ -74,7 +74,7 @@ def plot_master(
     ax.text(
         0.97,
         0.04,
-        "open: $G'$\nhalf filled: $G''$",
+        "open: G′\nhalf filled: G″",
         transform=ax.transAxes,
         ha="right",
         va="bottom",
@@ -83,7 +83,7 @@ def plot_master(
     )
     at = "" if reference_C is None else f" (at {reference_C:g} °C)"
     ax.set_xlabel(rf"$\omega\, a_T$ / rad s$^{{-1}}${at}")
-    ax.set_ylabel("$G'$, $G''$ / Pa")
+    ax.set_ylabel("G′, G″ / Pa")
     style.legend_above(ax)
     return ax
 

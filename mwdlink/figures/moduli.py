@@ -9,15 +9,15 @@ import numpy as np
 
 from mwdlink.figures import shading, style
 from mwdlink.figures.columns import Absent, band, find, numbers, positive, unit, words
-from mwdlink.figures.words import number
+from mwdlink.figures.words import number, short, upper_first
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from pandas import DataFrame
 
 FREQUENCY = ("omega", "angular frequency")
-SYMBOLS = (("G'", "$G'$"), ("G''", "$G''$"))
-X_LABEL = r"angular frequency $\omega$ / rad s$^{-1}$"
+SYMBOLS = (("G'", "G′"), ("G''", "G″"))
+X_LABEL = "angular frequency ω / rad s⁻¹"
 DEEPEST = 9.0
 """Decades below its top a model line is followed: the terminal slope needs no more."""
 
@@ -167,14 +167,22 @@ def plot_moduli(
     style.log_axes(ax)
     if seen_x and tops:
         top = max(tops)
-        floor = top / 10.0**DEEPEST
+        # as many decades down as across: deeper only repeats the terminal slope
+        across = style.decades_between(min(seen_x), max(seen_x))
+        floor = top / 10.0 ** min(max(across, 5.0), DEEPEST)
         bottom = min([*bottoms, max(floor, min(line_bottoms, default=floor))])
         ax.set_xlim(*shading.span_of(seen_x, 0.02))
         ax.set_ylim(*shading.span_of([bottom, top], 0.03))
         style.equal_decades(ax, own_figure=own)
     ax.set_xlabel(X_LABEL)
-    ax.set_ylabel("$G'$, $G''$ / Pa")
-    style.legend_above(ax)
+    ax.set_ylabel("G′, G″ / Pa")
+    found, labels = ax.get_legend_handles_labels()
+    rank = ("measured", "model")
+    order = sorted(
+        range(len(found)),
+        key=lambda i: next((r for r, w in enumerate(rank) if labels[i].endswith(w)), len(rank)),
+    )
+    style.legend_above(ax, handles=[found[i] for i in order])
     return ax
 
 
@@ -186,7 +194,7 @@ def describe_moduli(model: DataFrame | None, data: DataFrame | None = None) -> s
     x = numbers(table, *FREQUENCY)
     if x is None:
         return ""
-    text = f"Storage and loss modulus from {number(np.nanmin(x))} to {number(np.nanmax(x))} rad/s."
+    text = f"Storage and loss modulus from {short(np.nanmin(x))} to {short(np.nanmax(x))} rad/s."
     parts = []
     for name, spoken in (("G'", "storage modulus"), ("G''", "loss modulus")):
         found, line, _ = columns_of(table, name)
@@ -197,7 +205,7 @@ def describe_moduli(model: DataFrame | None, data: DataFrame | None = None) -> s
                 parts.append(
                     f"the {spoken} runs from {number(y[good][0])} to {number(y[good][-1])} Pa"
                 )
-    return f"{text} {' and '.join(parts).capitalize()}." if parts else text
+    return f"{text} {upper_first(' and '.join(parts))}." if parts else text
 
 
 @style.styled
@@ -252,16 +260,16 @@ def plot_residuals(table: DataFrame, *, ax: Axes | None = None) -> Axes:
         good = x[np.isfinite(x) & (x > 0)]
         ax.set_xlim(*shading.span_of([good.min(), good.max()], 0.03))
     top = top or 1.0
-    ax.set_ylim(-1.2 * top, 1.2 * top)
+    ax.set_ylim(-1.35 * top, 1.35 * top)
     ax.set_xlabel(
         {
-            "t": "time $t$ / s",
-            "time": "time $t$ / s",
+            "t": "time t / s",
+            "time": "time t / s",
             "rate": r"shear rate $\dot\gamma$ / s$^{-1}$",
             "row": "row of the source",
         }.get(name, X_LABEL)
     )
-    ax.set_ylabel("measured − model, in %" if percent else r"(measured − model) / $\sigma$")
+    ax.set_ylabel("measured − model, in %" if percent else "(measured − model) / σ")
     style.legend_above(ax)
     return ax
 
@@ -269,7 +277,7 @@ def plot_residuals(table: DataFrame, *, ax: Axes | None = None) -> Axes:
 def residual_columns(table: DataFrame) -> dict[str, str]:
     """Symbol to header of the residual columns a fit table has."""
     out: dict[str, str] = {}
-    for name, symbol in (("G'", "$G'$"), ("G''", "$G''$"), ("G", "$G$"), ("eta", r"$\eta$")):
+    for name, symbol in (("G'", "G′"), ("G''", "G″"), ("G", "G"), ("eta", "η")):
         ticks = name.removeprefix("G") if name.startswith("G'") else name
         header = find(
             table,
@@ -296,9 +304,8 @@ def describe_residuals(table: DataFrame) -> str:
         y = np.asarray(table[header], dtype=float)
         y = y[np.isfinite(y)]
         if y.size:
-            name = symbol.strip("$").replace("\\", "")
             parts.append(
-                f"{name}: mean {number(y.mean(), 2)}, largest {number(np.abs(y).max(), 2)}"
+                f"{symbol}: mean {number(y.mean(), 2)}, largest {number(np.abs(y).max(), 2)}"
             )
     return (
         f"Residuals of the fit, point by point; as relative parts: {'; '.join(parts)}."
@@ -328,8 +335,8 @@ def plot_phase_angle(curves: dict[str, DataFrame], *, ax: Axes | None = None) ->
     style.log_axis(ax.xaxis)
     ax.set_ylim(0, 95)
     ax.set_yticks([0, 15, 30, 45, 60, 75, 90])
-    ax.set_xlabel("$|G^*|$ / Pa")
-    ax.set_ylabel(r"phase angle $\delta$ / °")
+    ax.set_xlabel("|G*| / Pa")
+    ax.set_ylabel("phase angle δ / °")
     style.legend_above(ax)
     return ax
 

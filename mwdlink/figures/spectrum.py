@@ -8,7 +8,7 @@ import numpy as np
 
 from mwdlink.figures import shading, style
 from mwdlink.figures.columns import Absent, band, numbers, positive
-from mwdlink.figures.words import number
+from mwdlink.figures.words import number, short
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -17,7 +17,7 @@ if TYPE_CHECKING:
 TIME = ("tau", "relaxation time")
 STRENGTH = ("g", "strength")
 CONTINUOUS = ("H", "H(tau)", "spectrum")
-X_LABEL = r"relaxation time $\tau$ / s"
+X_LABEL = "relaxation time τ / s"
 
 
 @style.styled
@@ -63,7 +63,7 @@ def plot_spectrum(
                 tau[good],
                 strength[good],
                 color=style.BLUE,
-                label=r"continuous, $H(\tau)$",
+                label="continuous, H(τ)",
                 zorder=2,
             )
             high = good & (strength > strength[good].max() * 1e-7)
@@ -93,7 +93,7 @@ def plot_spectrum(
             markersize=3.6,
             markerfacecolor=style.PAPER,
             linestyle="none",
-            label="discrete modes, $g$",
+            label="discrete modes, g",
             zorder=3,
         )
     if supported:
@@ -111,7 +111,7 @@ def plot_spectrum(
             above="not supported",
         )
     ax.set_xlabel(X_LABEL)
-    ax.set_ylabel(r"$g$, $H$ / Pa" if continuous is not None else "$g$ / Pa")
+    ax.set_ylabel("g, H / Pa" if continuous is not None else "g / Pa")
     style.legend_above(ax)
     return ax
 
@@ -125,8 +125,8 @@ def describe_spectrum(
     if tau is not None and g is not None:
         good = positive(tau, g)
         text = (
-            f"Relaxation spectrum: {int(good.sum())} modes from {number(tau[good].min())} to "
-            f"{number(tau[good].max())} s."
+            f"Relaxation spectrum: {int(good.sum())} modes from {short(tau[good].min())} to "
+            f"{short(tau[good].max())} s."
         )
     if supported and None not in supported:
         text += f" The data support relaxation times from {number(supported[0])} to {number(supported[1])} s."

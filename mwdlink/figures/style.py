@@ -24,7 +24,7 @@ import matplotlib
 from matplotlib.axes import Axes
 from matplotlib.axis import Axis
 from matplotlib.figure import Figure
-from matplotlib.ticker import Formatter, LogLocator, NullFormatter
+from matplotlib.ticker import Formatter, FuncFormatter, LogLocator, MaxNLocator, NullFormatter
 
 P = ParamSpec("P")
 R = TypeVar("R")
@@ -274,29 +274,72 @@ def equal_decades(ax: Axes, *, own_figure: bool, least: float = 62.0, most: floa
             figure.set_size_inches(WIDTH * MM, min(max(height, least), most) * MM)
 
 
-def legend_above(ax: Axes, *, columns: int | None = None, handles: list[Any] | None = None) -> None:
-    """The legend over the axes, where it can hide nothing."""
+def linear_axis(axis: Axis) -> None:
+    """Numbers on a linear axis in groups of three figures, powers of ten where they are long."""
+    axis.set_major_formatter(FuncFormatter(lambda x, _: grouped(x)))
+    axis.set_major_locator(
+        MaxNLocator(nbins=6 if axis.axis_name == "y" else 5, steps=[1, 2, 2.5, 5, 10])
+    )
+
+
+def grouped(x: float) -> str:
+    """150 000, 1.5×10⁶: a tick's number as written in a text."""
+    size = abs(x)
+    if size and (size >= 1e6 or size < 1e-3):
+        exponent = math.floor(math.log10(size) + 1e-9)
+        return f"{x / 10.0**exponent:g}×10{superscript(exponent)}".replace("-", "−")
+    text = f"{x:.10g}".replace("-", "−")
+    whole, dot, rest = text.partition(".")
+    if len(whole.lstrip("−")) > 4:
+        whole = f"{whole[:-3]}\u202f{whole[-3:]}"
+    return whole + dot + rest
+
+
+def by_rows(items: list[Any], columns: int) -> list[Any]:
+    """Reorder so that a legend, which fills column by column, reads row by row."""
+    rows = math.ceil(len(items) / columns)
+    full = len(items) - (rows - 1) * columns
+    heights = [rows if c < full else rows - 1 for c in range(columns)]
+    return [items[r * columns + c] for c in range(columns) for r in range(heights[c])]
+
+
+def legend_above(
+    ax: Axes, *, handles: list[Any] | None = None, over_figure: bool = False, room: float = 92.0
+) -> None:
+    """The legend over the axes, where it can hide nothing.
+
+    Parameters
+    ----------
+    handles : list, optional
+        What to name, in reading order; everything labelled unless given.
+    over_figure : bool
+        Start at the figure's left edge: for pictures with long names beside the axes.
+    room : float
+        Width there is [mm].
+    """
     found, labels = ax.get_legend_handles_labels()
     if handles is not None:
-        found, labels = handles, [h.get_label() for h in handles]
+        found, labels = handles, [str(h.get_label()) for h in handles]
     if not found:
         return
-    if columns is None:
-        columns = 1
-        for n in range(min(4, len(found)), 1, -1):
-            rows = [labels[i::n] for i in range(n)]
-            if sum(max(map(len, r)) + 9 for r in rows) <= 62:
-                columns = n
-                break
-    ax.legend(
-        found,
-        labels,
-        loc="lower left",
-        bbox_to_anchor=(0.0, 1.01),
-        ncols=columns,
-        borderpad=0.0,
-        handletextpad=0.6,
-    )
+    figure = ax.get_figure(root=True)
+    over_figure = over_figure and isinstance(figure, Figure)
+    if over_figure:
+        room = 106.0
+    columns = 1
+    for n in range(min(5, len(found)), 1, -1):
+        widths = [max(len(label) for label in labels[c::n]) * 1.5 + 13.2 for c in range(n)]
+        if sum(widths) - 4.0 <= room:
+            rows = math.ceil(len(found) / n)
+            columns = math.ceil(len(found) / rows)
+            break
+    order = by_rows(list(range(len(found))), columns)
+    found, labels = [found[k] for k in order], [labels[k] for k in order]
+    look = {"ncols": columns, "borderpad": 0.0, "handletextpad": 0.6}
+    if over_figure:
+        figure.legend(found, labels, loc="outside upper left", **look)  # type: ignore[union-attr]
+    else:
+        ax.legend(found, labels, loc="lower left", bbox_to_anchor=(0.0, 1.01), **look)
 
 
 def series_look(i: int) -> dict[str, Any]:

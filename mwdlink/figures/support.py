@@ -66,7 +66,7 @@ PAIRS = (
     (
         ("eta0 measured", "measured eta0"),
         ("eta0 law", "eta0 fitted", "eta0 model", "eta0 predicted"),
-        r"$\eta_0$ / Pa s",
+        "η₀ / Pa s",
     ),
     (("measured",), ("predicted", "fitted", "model"), "value"),
 )
@@ -81,7 +81,7 @@ def plot_parity(table: DataFrame, *, ax: Axes | None = None) -> Axes:
     table : DataFrame
         `sample`, `eta0 measured [Pa s]` and `eta0 law [Pa s]` (or `measured` and `predicted`).
     """
-    ax = style.new_axes(ax, height=86.0)
+    ax = style.new_axes(ax, height=112.0)
     for measured, fitted, label in PAIRS:
         x, y = numbers(table, *fitted), numbers(table, *measured)
         if x is None or y is None:
@@ -93,13 +93,15 @@ def plot_parity(table: DataFrame, *, ax: Axes | None = None) -> Axes:
         names = words(table, "sample", "name")
         for k in np.flatnonzero(good)[:12]:
             if names is not None:
+                right = x[k] < ends[0] ** 0.2 * ends[1] ** 0.8
                 ax.annotate(
                     names[k],
                     (x[k], y[k]),
-                    xytext=(6, -4),
+                    xytext=(6 if right else -6, -4 if right else 4),
                     textcoords="offset points",
                     fontsize=8.0,
-                    va="top",
+                    ha="left" if right else "right",
+                    va="top" if right else "bottom",
                 )
         style.log_axes(ax)
         ax.set_xlim(*ends)

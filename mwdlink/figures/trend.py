@@ -98,6 +98,7 @@ def plot_trend(
     ax.set_xlim(0.4, len(y) + 0.6)
     if len(y) <= 15:
         ax.set_xticks(x)
+    style.linear_axis(ax.yaxis)
     ax.set_xlabel("lot, in the order of the table")
     ax.set_ylabel(property_label(header))
     style.legend_above(ax)

@@ -36,9 +36,23 @@ def number(x: Any, digits: int = 3) -> str:
     return f"{sign}{mantissa:.{digits - 1}f}×10{str(exponent).translate(_SUPER)}"
 
 
+def short(x: Any, digits: int = 3) -> str:
+    """The same without trailing noughts, for limits, settings and other round numbers."""
+    text = number(x, digits)
+    head, times, tail = text.partition("×")
+    if "." in head:
+        head = head.rstrip("0").rstrip(".")
+    return f"{head}{times}{tail}"
+
+
+def upper_first(text: str) -> str:
+    """The text with a capital at its start, the rest as it is."""
+    return text[:1].upper() + text[1:]
+
+
 def percent(x: Any, digits: int = 2) -> str:
     """A share as weight percent."""
-    return "not known" if x is None else f"{number(100.0 * float(x), digits)} %"
+    return "not known" if x is None else f"{short(100.0 * float(x), max(digits, 2))} %"
 
 
 def value_of(x: Any) -> float | None:
