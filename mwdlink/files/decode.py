@@ -1,4 +1,4 @@
-"""From a path to text: bounded reading, a fingerprint, the encoding found and said, binary refused."""
+"""From a path to text: bounded reading, a fingerprint, the encoding found and said."""
 
 from __future__ import annotations
 
@@ -113,9 +113,7 @@ def _cannot_open(name: str, error: Exception) -> InputError:
         hint = f" The folder holds {', '.join(near)}." if near else ""
         return InputError("there is no such file.", path=name, remedy=f"Check the path.{hint}")
     if number in (errno.EACCES, errno.EPERM):
-        return InputError(
-            "the file may not be read.", path=name, remedy="Check its permissions."
-        )
+        return InputError("the file may not be read.", path=name, remedy="Check its permissions.")
     reason = getattr(error, "strerror", None) or str(error)
     return InputError(
         f"the file cannot be read ({reason}).", path=name.replace("\0", "?"),
@@ -141,7 +139,7 @@ def decode(data: bytes, path: str | None = None) -> Text:
         if data.startswith(magic):
             raise InputError(f"this is {what}, not a text table.", path=path, remedy=remedy)
     text, encoding, notes = _to_text(data, path)
-    text = text.replace("\r\n", "\n").replace("\r", "\n").replace("\f", "\n")
+    text = text.replace("\r\n", "\n").replace("\r", "\n").replace("\f", " ")
     text = text.rstrip("\x1a")
     found = _CONTROL.search(text)
     if found is not None:

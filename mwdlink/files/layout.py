@@ -1,0 +1,445 @@
+"""Rows to blocks: preamble, header, units row, data, and where the next block begins.
+
+Nothing is dropped in silence: a row below a header is data, whatever it holds, unless it stands
+apart (after a blank line) as a title of the next block or a remark at the end.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Collection, Sequence
+from dataclasses import dataclass, field
+
+from mwdlink.errors import Caution, InputError
+from mwdlink.files.decode import MAX_ROWS
+from mwdlink.files.headers import count_known, list_headers, recognise, shorten
+from mwdlink.files.numbers import looks_numeric
+from mwdlink.files.split import (
+    NAMES,
+    Row,
+    find_delimiter,
+    split_header,
+    split_lines,
+)
+from mwdlink.files.units import EMPTY, is_any_unit
+
+# rows of text tried as headers before a file is given up: a book is no table
+_MAX_TRIED = 20_000
+
+
+@dataclass(frozen=True)
+class Block:
+    """One table of a file.
+
+    Attributes
+    ----------
+    headers : tuple of str
+    units : tuple of str or None
+        The row of units, as wide as the headers.
+    header_row : int or None
+        Line of the header; None when the table has none.
+    rows : list of int
+        Line number of each data row.
+    columns : list of list of str
+        The cells by column; rows that end early have empty cells.
+    preamble : tuple of str
+        Comments and lines between the end of the block before and this header.
+    sheet : str
+        Name of the sheet, of a workbook.
+    """
+
+    headers: tuple[str, ...]
+    units: tuple[str, ...] | None
+    header_row: int | None
+    rows: list[int]
+    columns: list[list[str]]
+    preamble: tuple[str, ...] = ()
+    sheet: str = ""
+
+
+@dataclass(frozen=True)
+class Layout:
+    """All tables of a file and how they were found."""
+
+    blocks: tuple[Block, ...]
+    delimiter: str
+    comments: tuple[str, ...] = ()
+    notes: tuple[Caution, ...] = ()
+
+
+@dataclass
+class _Draft:
+    """A block while its rows are being collected."""
+
+    headers: list[str]
+    units: list[str] | None
+    header_row: int | None
+    preamble: list[str]
+    data: list[Row] = field(default_factory=list)
+
+
+def read_layout(
+    text: str,
+    path: str | None,
+    *,
+    omit: Collection[int] = (),
+    named: Collection[str] = (),
+) -> Layout:
+    """The tables of a text.
+
+    Parameters
+    ----------
+    text : str
+    path : str or None
+        For messages.
+    omit : collection of int
+        Line numbers left out.
+    named : collection of str
+        Headers the user named: a row that holds them is a header.
+
+    Raises
+    ------
+    InputError
+        If there is no table or a row does not fit its header.
+    """
+    lines = text.split("\n")
+    delimiter = find_delimiter(lines)
+    rows, comments = split_lines(text, delimiter, path, frozenset(omit))
+    blocks = build_blocks(rows, comments, path, named=named, delimiter=delimiter)
+    return Layout(tuple(blocks), NAMES[delimiter], tuple(comments.values()))
+
+
+def build_blocks(
+    rows: Sequence[Row | None],
+    comments: dict[int, str],
+    path: str | None,
+    *,
+    named: Collection[str] = (),
+    delimiter: str = "",
+    sheet: str = "",
+) -> list[Block]:
+    """Blocks from rows (None among them is a run of blank lines)."""
+    if len(rows) > MAX_ROWS:
+        raise InputError(
+            f"the table has more than {MAX_ROWS} rows.", path=path, remedy="Give fewer points."
+        )
+    kinds = [_kind(row) for row in rows]
+    headers = _find_headers(rows, kinds, comments, named, delimiter)
+    if not headers:
+        headers = _guess_header(rows, kinds, comments, delimiter)
+    if not headers:
+        texts = [row for row in rows if row is not None]
+        raise InputError(
+            "no table was found: no row of column names with rows of numbers below it.",
+            path=path,
+            row=texts[0].line if texts else None,
+            remedy="The first row of the table must name its columns, as in: "
+            "omega [rad/s], G' [Pa], G'' [Pa].",
+        )
+    drafts: list[_Draft] = []
+    starts = sorted(headers)
+    begin = 0
+    for k, start in enumerate(starts):
+        end = starts[k + 1] if k + 1 < len(starts) else len(rows)
+        cells, line, from_comment = headers[start]
+        head = _texts(rows[begin:start], comments, _line_before(rows, begin), line)
+        first = start if from_comment else start + 1
+        units, first = _units_row(rows, kinds, first, len(cells))
+        stop = _end_of_data(rows, kinds, first, end, is_last=k + 1 == len(starts))
+        drafts += _collect(rows, kinds, first, stop, cells, units, line, head)
+        begin = stop
+    blocks = [_finish(d, path, sheet, delimiter) for d in drafts if d.data]
+    if not blocks:
+        row = headers[starts[0]][1]
+        raise InputError("there is no row of data below the header.", path=path, row=row,
+                         remedy="Export the table again.")  # fmt: skip
+    return blocks
+
+
+def _kind(row: Row | None) -> str:
+    """'blank', 'data' (some number in it) or 'text' (no number)."""
+    if row is None:
+        return "blank"
+    for cell in row.cells:
+        if cell and looks_numeric(cell):
+            return "data"
+    return "text"
+
+
+def _find_headers(
+    rows: Sequence[Row | None],
+    kinds: Sequence[str],
+    comments: dict[int, str],
+    named: Collection[str],
+    delimiter: str,
+) -> dict[int, tuple[list[str], int, bool]]:
+    """Position of each header row -> (cells, line, whether it stands in a comment)."""
+    wanted = {n.strip().casefold() for n in named}
+    found: dict[int, tuple[list[str], int, bool]] = {}
+    tried = 0
+    for i, row in enumerate(rows):
+        if row is None or kinds[i] != "text" or tried > _MAX_TRIED:
+            continue
+        below = _next_data(rows, kinds, i)
+        if below is None:
+            continue
+        tried += 1
+        cells = _trim(split_header(row.text, delimiter, len(_trim(rows[below].cells)))  # type: ignore[union-attr]
+                      if delimiter == " " else row.cells)  # fmt: skip
+        have = {c.strip().casefold() for c in cells}
+        if (
+            count_known(cells) >= 2
+            or (wanted and wanted <= have)
+            or (len(wanted & have) + count_known(cells) >= 2 and wanted & have)
+        ):
+            found[i] = (cells, row.line, False)
+    if not found:
+        found = _header_in_comment(rows, kinds, comments, delimiter)
+    return found
+
+
+def _next_data(rows: Sequence[Row | None], kinds: Sequence[str], i: int) -> int | None:
+    """The first row of numbers at most four rows of text below a header."""
+    texts = 0
+    for j in range(i + 1, min(i + 12, len(rows))):
+        if kinds[j] == "data":
+            return j
+        texts += kinds[j] == "text"
+        if texts > 4:
+            return None
+    return None
+
+
+def _header_in_comment(
+    rows: Sequence[Row | None], kinds: Sequence[str], comments: dict[int, str], delimiter: str
+) -> dict[int, tuple[list[str], int, bool]]:
+    """Some programs write the header behind a comment mark, right above the data."""
+    first = next((i for i, kind in enumerate(kinds) if kind == "data"), None)
+    if first is None:
+        return {}
+    row = rows[first]
+    width = len(_trim(row.cells))  # type: ignore[union-attr]
+    above = [n for n in sorted(comments) if n < row.line]  # type: ignore[union-attr]
+    for number in reversed(above[-6:]):
+        for mark in (delimiter, "\t", ";", ",", "|", " "):
+            cells = _trim(split_header(comments[number], mark, width))
+            if len(cells) == width and count_known(cells) >= 2:
+                return {first: (cells, number, True)}
+    return {}
+
+
+def _guess_header(
+    rows: Sequence[Row | None], kinds: Sequence[str], comments: dict[int, str], delimiter: str
+) -> dict[int, tuple[list[str], int, bool]]:
+    """No known name anywhere: the last row of text above the longest run of numbers."""
+    best, start, length = None, 0, 0
+    for i, kind in enumerate([*kinds, "end"]):
+        if kind == "data":
+            if length == 0:
+                start = i
+            length += 1
+        elif kind in ("text", "end") and length:
+            if best is None or length > best[1]:
+                best = (start, length)
+            length = 0
+    if best is None:
+        return {}
+    start = best[0]
+    width = len(_trim(rows[start].cells))  # type: ignore[union-attr]
+    for i in range(start - 1, max(-1, start - 8), -1):
+        row = rows[i]
+        if row is None or kinds[i] != "text":
+            continue
+        cells = _trim(split_header(row.text, delimiter, width) if delimiter == " " else row.cells)
+        if len(cells) >= 2 and not _is_units(cells):
+            return {i: (cells, row.line, False)}
+    if width < 2:
+        return {}
+    return {start: ([f"#{n + 1}" for n in range(width)], 0, True)}
+
+
+def _trim(cells: Sequence[str]) -> list[str]:
+    """Without the empty cells at the end."""
+    out = list(cells)
+    while out and not out[-1]:
+        out.pop()
+    return out
+
+
+def _line_before(rows: Sequence[Row | None], begin: int) -> int:
+    for i in range(min(begin, len(rows)) - 1, -1, -1):
+        row = rows[i]
+        if row is not None:
+            return row.line
+    return 0
+
+
+def _texts(
+    rows: Sequence[Row | None], comments: dict[int, str], after: int, before: int
+) -> list[str]:
+    """Preamble: rows and comments between two lines, in order."""
+    found = {row.line: row.text.strip() for row in rows if row is not None}
+    if comments:
+        found |= {n: text for n, text in comments.items() if after < n < before}
+    return [found[n] for n in sorted(found)]
+
+
+def _is_units(cells: Sequence[str]) -> bool:
+    """Whether a row of cells is a row of units: mostly known ones, none a column name with unit."""
+    given = [c for c in cells if c]
+    known = sum(1 for c in given if is_any_unit(c))
+    real = sum(1 for c in given if c.strip("[]() ") not in EMPTY and is_any_unit(c))
+    bracketed = sum(1 for c in given if c[0] in "[(" and c[-1] in "])")
+    return bool(given) and (real >= 1 or bracketed >= 2) and 2 * (known + bracketed) >= len(given)
+
+
+def _units_row(
+    rows: Sequence[Row | None], kinds: Sequence[str], first: int, width: int
+) -> tuple[list[str] | None, int]:
+    i = first
+    while i < len(rows) and kinds[i] == "blank":
+        i += 1
+    if i >= len(rows):
+        return None, first
+    row = rows[i]
+    cells = _trim(row.cells)  # type: ignore[union-attr]
+    text_only = kinds[i] == "text" or all(c in EMPTY or not looks_numeric(c) for c in cells)
+    if text_only and len(cells) <= width and _is_units(cells) and count_known(cells) < 2:
+        return cells + [""] * (width - len(cells)), i + 1
+    return None, first
+
+
+def _data_like(row: Row, pattern: Row) -> bool:
+    """Whether a row starts as the block's first data row does: with a number or with a text."""
+
+    def starts(r: Row) -> bool:
+        return looks_numeric(next((c for c in r.cells if c), ""))
+
+    return starts(row) == starts(pattern)
+
+
+def _end_of_data(
+    rows: Sequence[Row | None], kinds: Sequence[str], first: int, end: int, *, is_last: bool
+) -> int:
+    """Where the data of a block end: titles of the next block or remarks stand behind a blank."""
+    pattern = next((rows[i] for i in range(first, end) if kinds[i] == "data"), None)
+    stop = end
+    if pattern is None:
+        return stop
+    # back over everything that is no data row
+    i = end
+    while i > first:
+        row = rows[i - 1]
+        if (
+            row is not None
+            and kinds[i - 1] == "data"
+            and (_data_like(row, pattern) and len(_trim(row.cells)) >= 2)
+        ):
+            break
+        i -= 1
+    blank = next((j for j in range(i, end) if kinds[j] == "blank"), None)
+    if blank is not None:
+        return blank
+    if is_last:
+        return end
+    # no blank line: texts right above a header are its title, if they are short of cells
+    width = len(_trim(pattern.cells))
+    j = i
+    while j < end and not (kinds[j] == "text" and len(_trim(rows[j].cells)) < width):  # type: ignore[union-attr]
+        j += 1
+    return j
+
+
+def _collect(
+    rows: Sequence[Row | None],
+    kinds: Sequence[str],
+    first: int,
+    stop: int,
+    cells: list[str],
+    units: list[str] | None,
+    line: int,
+    head: list[str],
+) -> list[_Draft]:
+    """Data rows under one header; a title after a blank line, or a restart, opens a new block."""
+    drafts = [_Draft(cells, units, line or None, head)]
+    i = first
+    while i < stop:
+        row = rows[i]
+        if row is not None:
+            drafts[-1].data.append(row)
+            i += 1
+            continue
+        j = i + 1
+        title: list[str] = []
+        while j < stop and (rows[j] is None or _is_title(rows[j], kinds[j], drafts[-1], cells)):
+            if rows[j] is not None:
+                title.append(rows[j].text.strip())  # type: ignore[union-attr]
+            j += 1
+        if j < stop and drafts[-1].data and (title or _restarts(rows[j], drafts[-1])):  # type: ignore[arg-type]
+            drafts.append(_Draft(cells, units, line or None, title))
+        elif title:
+            # a title above the first row, or texts after the last one
+            drafts[-1].preamble = [*drafts[-1].preamble, *title]
+        i = j
+    return drafts
+
+
+def _is_title(row: Row | None, kind: str, draft: _Draft, cells: Sequence[str]) -> bool:
+    """A line between blocks: words in the first cell, and fewer cells than a row of the table."""
+    if row is None or not draft.data:
+        return False
+    return len(_trim(row.cells)) < min(len(cells), 3) and not _data_like(row, draft.data[0])
+
+
+def _restarts(row: Row, draft: _Draft) -> bool:
+    """Whether a row after a blank line begins with the number the block began with."""
+    old = [c for c in draft.data[0].cells if looks_numeric(c)]
+    new = [c for c in row.cells if looks_numeric(c)]
+    return bool(old and new) and len(draft.data) >= 3 and old[0] == new[0]
+
+
+def _finish(draft: _Draft, path: str | None, sheet: str, delimiter: str) -> Block:
+    width = len(draft.headers)
+    rows = [row.line for row in draft.data]
+    over = [row for row in draft.data if len(row.cells) > width and any(row.cells[width:])]
+    if over:
+        row = over[0]
+        hint = (
+            "If the numbers have decimal commas, separate the cells by semicolons or tabs."
+            if delimiter == "," and len(over) > len(draft.data) // 2
+            else f"Name every column, and check row {row.line}."
+        )
+        raise InputError(
+            f"{len(_trim(row.cells))} cells under {width} column names "
+            f"({list_headers(draft.headers)})"
+            + (f", and so in {len(over)} rows." if len(over) > 1 else "."),
+            path=path,
+            row=row.line,
+            column=shorten(row.cells[width]),
+            remedy=hint,
+        )
+    padded = [
+        row.cells[:width] if len(row.cells) >= width
+        else row.cells + [""] * (width - len(row.cells))
+        for row in draft.data
+    ]  # fmt: skip
+    columns = [list(column) for column in zip(*padded, strict=True)]
+    headers = tuple(h.replace("\n", " ") for h in draft.headers)
+    units = None if draft.units is None else tuple(draft.units)
+    return Block(headers, units, draft.header_row, rows, columns, tuple(draft.preamble), sheet)
+
+
+def unit_of(block: Block, index: int) -> str | None:
+    """What the units row says of a column; None where there is no such row or it is silent."""
+    if block.units is None or not block.units[index].strip():
+        return None
+    return block.units[index]
+
+
+def known_columns(block: Block) -> dict[int, tuple[str, str | None]]:
+    """Position -> (role, unit text) of the columns of a block that are recognised."""
+    out = {}
+    for i, header in enumerate(block.headers):
+        match = recognise(header)
+        if match is not None:
+            out[i] = (match.role, match.unit)
+    return out

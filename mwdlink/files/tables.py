@@ -1,0 +1,509 @@
+"""The readers: a path in, a distribution or a measured curve out, or an error that says where.
+
+All take the same options:
+
+- `columns`: role to `header` or `header:unit`, for columns whose names are not understood;
+- `omit`: line numbers left out ("3,17-19" or a collection); `omit_unreadable`: leave out rows with
+  a cell that is no number. Both are said in the result's warnings;
+- `decimal`: "." or ",", where the file alone does not tell;
+- `block`: which table of the file (from 1), `sheet`: which sheet of a workbook.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from mwdlink.errors import Caution, InputError, merge_cautions
+from mwdlink.files.columns import Picker
+from mwdlink.files.source import Source, open_source
+from mwdlink.measurement.sweep import FlowCurve, RelaxationCurve, Sweep
+
+if TYPE_CHECKING:
+    from mwdlink.chains.distribution import Distribution
+    from mwdlink.relaxation.spectrum import Spectrum
+
+MIN_POINTS = 3
+
+
+def read_distribution(
+    path: Any,
+    *,
+    columns: Mapping[str, Any] | None = None,
+    omit: Any = (),
+    omit_unreadable: bool = False,
+    calibration: str = "unstated",
+    label: str | None = None,
+    decimal: str | None = None,
+    block: int | None = None,
+    sheet: str | None = None,
+) -> Distribution:
+    """A molar-mass distribution from a table.
+
+    Parameters
+    ----------
+    path : str or Path
+    calibration : str
+        `absolute`, `universal`, `equivalent` or `unstated`.
+    label : str, optional
+        Default: the file's name.
+
+    Returns
+    -------
+    Distribution
+
+    Raises
+    ------
+    InputError
+        If the file cannot be used: where, and what to do.
+    """
+    from mwdlink.files import gpc
+
+    source = open_source(path, columns=columns, omit=omit, sheet=sheet)
+    pickers = _pickers(source, columns, decimal)
+    picker = _choose(pickers, [p for p in pickers if gpc.is_distribution(p)], block,
+                     "distribution")  # fmt: skip
+    label = source.label if label is None else label
+    found = gpc.read(picker, omit_unreadable=omit_unreadable, calibration=calibration, label=label)
+    return _with_warnings(found, source.notes, tuple(picker.notes))
+
+
+def read_sweep(
+    path: Any,
+    *,
+    columns: Mapping[str, Any] | None = None,
+    omit: Any = (),
+    omit_unreadable: bool = False,
+    temperature_C: float | None = None,
+    label: str | None = None,
+    same_temperature: float = 1.0,
+    decimal: str | None = None,
+    block: int | None = None,
+    sheet: str | None = None,
+) -> Sweep:
+    """One frequency sweep from a table.
+
+    Parameters
+    ----------
+    path : str or Path
+    temperature_C : float, optional
+        [C] The sweep's temperature where the file does not state one; of several sweeps in the
+        file, the one at this temperature is returned.
+    same_temperature : float
+        [K] Steps closer than this are one temperature.
+
+    Returns
+    -------
+    Sweep
+
+    Raises
+    ------
+    InputError
+        If the file cannot be used, or holds several sweeps and nothing says which.
+    """
+    sweeps = read_sweeps(
+        path,
+        columns=columns,
+        omit=omit,
+        omit_unreadable=omit_unreadable,
+        temperature_C=temperature_C,
+        label=label,
+        same_temperature=same_temperature,
+        decimal=decimal,
+        block=block,
+        sheet=sheet,
+    )
+    if len(sweeps) > 1 and temperature_C is not None:
+        near = [
+            s
+            for s in sweeps
+            if s.temperature_C is not None
+            and abs(s.temperature_C - temperature_C) <= same_temperature
+        ]
+        sweeps = near or sweeps
+    if len(sweeps) == 1:
+        return sweeps[0]
+    listed = (
+        "; ".join(
+            f"{_celsius(s)} with {len(s)} points from row {int(np.min(s.rows))}"  # type: ignore[arg-type]
+            for s in sweeps[:6]
+        )
+        + ("; ..." if len(sweeps) > 6 else "")
+    )
+    raise InputError(
+        f"the file holds {len(sweeps)} sweeps ({listed}).",
+        path=sweeps[0].path,
+        row=int(np.min(sweeps[1].rows)),  # type: ignore[arg-type]
+        remedy="Give the temperature of the one wanted, leave the others' rows out with --omit, "
+        "or make one curve of them with `mwdlink master`.",
+    )
+
+
+def _celsius(sweep: Sweep) -> str:
+    return "no temperature" if sweep.temperature_C is None else f"{sweep.temperature_C:.4g} C"
+
+
+def read_sweeps(
+    path: Any,
+    *,
+    columns: Mapping[str, Any] | None = None,
+    omit: Any = (),
+    omit_unreadable: bool = False,
+    temperature_C: float | None = None,
+    label: str | None = None,
+    same_temperature: float = 1.0,
+    decimal: str | None = None,
+    block: int | None = None,
+    sheet: str | None = None,
+) -> list[Sweep]:
+    """All frequency sweeps of a file: by its temperature column, its blocks, or both.
+
+    Returns
+    -------
+    list of Sweep
+        In the order of the file. Repeats at one temperature stay apart; pieces at one temperature
+        (within `same_temperature`) over different frequencies are joined.
+    """
+    from mwdlink.files import sweeps as make
+
+    source = open_source(path, columns=columns, omit=omit, sheet=sheet)
+    pickers = _pickers(source, columns, decimal)
+    suited = [p for p in pickers if make.is_sweep(p)]
+    if block is not None or not suited:
+        suited = [_choose(pickers, suited, block, "sweep")]
+    segments = []
+    for picker in suited:
+        segments += make.read_segments(
+            picker,
+            omit_unreadable=omit_unreadable,
+            same_temperature=same_temperature,
+            temperature_C=temperature_C,
+        )
+    segments = make.join_segments(segments, same_temperature)
+    label = source.label if label is None else label
+    found = [make.finish(s, source.path, label) for s in segments]
+    if len(found) > 1:
+        found = [s.with_(label=f"{label} {_celsius(s)}") if s.temperature_C is not None else s
+                 for s in found]  # fmt: skip
+    return [
+        s.with_(
+            warnings=merge_cautions(source.notes, s.warnings),
+            comments=(*(c for c in source.layout.comments if c not in s.comments), *s.comments),
+        )
+        for s in found
+    ]
+
+
+def read_relaxation(
+    path: Any,
+    *,
+    columns: Mapping[str, Any] | None = None,
+    omit: Any = (),
+    omit_unreadable: bool = False,
+    temperature_C: float | None = None,
+    label: str | None = None,
+    decimal: str | None = None,
+    block: int | None = None,
+    sheet: str | None = None,
+) -> RelaxationCurve:
+    """A relaxation modulus from a table with `t [s]` and `G [Pa]`."""
+    source = open_source(path, columns=columns, omit=omit, sheet=sheet)
+    pickers = _pickers(source, columns, decimal)
+    picker = _choose(pickers, [p for p in pickers if _is_relaxation(p)], block, "relaxation curve")
+    return _curve(  # type: ignore[return-value]
+        RelaxationCurve, picker, ("t", "G"), source, omit_unreadable, temperature_C, label
+    )
+
+
+def read_flow_curve(
+    path: Any,
+    *,
+    columns: Mapping[str, Any] | None = None,
+    omit: Any = (),
+    omit_unreadable: bool = False,
+    temperature_C: float | None = None,
+    label: str | None = None,
+    decimal: str | None = None,
+    block: int | None = None,
+    sheet: str | None = None,
+) -> FlowCurve:
+    """A steady flow curve from a table with `rate [1/s]` and `eta [Pa s]`."""
+    source = open_source(path, columns=columns, omit=omit, sheet=sheet)
+    pickers = _pickers(source, columns, decimal)
+    picker = _choose(pickers, [p for p in pickers if _is_flow(p)], block, "flow curve")
+    return _curve(  # type: ignore[return-value]
+        FlowCurve, picker, ("rate", "eta"), source, omit_unreadable, temperature_C, label
+    )
+
+
+def read_spectrum(
+    path: Any,
+    *,
+    columns: Mapping[str, Any] | None = None,
+    omit: Any = (),
+    omit_unreadable: bool = False,
+    decimal: str | None = None,
+    block: int | None = None,
+    sheet: str | None = None,
+) -> Spectrum:
+    """A discrete relaxation spectrum from a table with `tau [s]` and `g [Pa]`."""
+    from mwdlink.relaxation.spectrum import Spectrum
+
+    source = open_source(path, columns=columns, omit=omit, sheet=sheet)
+    pickers = _pickers(source, columns, decimal)
+    picker = _choose(pickers, [p for p in pickers if _is_spectrum(p)], block, "spectrum")
+    strength = _strength_role(picker)
+    needed = [picker.need("tau", _ACCEPTED["spectrum"]),
+              picker.need(strength, _ACCEPTED["spectrum"])]  # fmt: skip
+    values, rows = picker.read(needed, positive=("tau",), omit_unreadable=omit_unreadable)
+    tau, g = values["tau"], values[strength]
+    bad = np.flatnonzero(g < 0)
+    if bad.size:
+        raise InputError(
+            f"a strength of {g[bad[0]]:g} Pa is below zero.",
+            path=source.path,
+            row=int(rows[bad[0]]),
+            column=needed[1].header,
+            remedy="A spectrum of a melt has positive modes only.",
+        )
+    order = np.argsort(tau, kind="stable")
+    tau, g = tau[order], g[order]
+    start = np.flatnonzero(np.concatenate([[True], np.diff(tau) > 0]))
+    # modes of one time add up
+    try:
+        return Spectrum(tau[start], np.add.reduceat(g, start))
+    except InputError as error:
+        raise _placed(error, source.path, picker.block.header_row) from None
+
+
+def read_any(path: Any, **options: Any) -> Any:
+    """Whatever the table is: a Distribution, Sweep, RelaxationCurve, FlowCurve or Spectrum.
+
+    Several sweeps in one file come back as a list. Options that a kind does not know are left
+    aside (`calibration` for a sweep, say).
+
+    Raises
+    ------
+    InputError
+        If the columns are those of no kind.
+    """
+    import inspect
+
+    kind = find_kind(path, **{k: options[k] for k in ("columns", "omit", "sheet") if k in options})
+    reader = _READERS[kind]
+    known = inspect.signature(reader).parameters
+    found = reader(path, **{k: v for k, v in options.items() if k in known})
+    return found[0] if isinstance(found, list) and len(found) == 1 else found
+
+
+def find_kind(
+    path: Any, *, columns: Mapping[str, Any] | None = None, omit: Any = (), sheet: str | None = None
+) -> str:
+    """What kind of table a file holds.
+
+    Returns
+    -------
+    str
+        "distribution", "sweep", "relaxation curve", "flow curve" or "spectrum".
+    """
+    source = open_source(path, columns=columns, omit=omit, sheet=sheet)
+    pickers = _pickers(source, columns, None)
+    for kind, test in _tests().items():
+        if any(test(p) for p in pickers):
+            return kind
+    raise _no_kind(pickers, "table", " | ".join(f"{k}: {v}" for k, v in _ACCEPTED.items()))
+
+
+def _pickers(
+    source: Source, columns: Mapping[str, Any] | None, decimal: str | None
+) -> list[Picker]:
+    """One picker a block; blocks without a column the user named are passed over if others have."""
+    out: list[Picker] = []
+    first: InputError | None = None
+    for block in source.layout.blocks:
+        try:
+            out.append(Picker(source, block, columns, decimal))
+        except InputError as error:
+            first = first or error
+    if not out:
+        raise first or InputError("no table was found.", path=source.path)
+    return out
+
+
+def _choose(pickers: list[Picker], suited: list[Picker], block: int | None, kind: str) -> Picker:
+    if block is not None:
+        if not 1 <= block <= len(pickers):
+            raise InputError(
+                f"there is no block {block}; the file has {len(pickers)}.",
+                path=pickers[0].source.path,
+                remedy="Blocks are counted from 1.",
+            )
+        return pickers[block - 1]
+    if not suited:
+        raise _no_kind(pickers, kind, _ACCEPTED[kind])
+    if len(suited) > 1:
+        rows = [p.block.rows[0] for p in suited]
+        raise InputError(
+            f"the file holds {len(suited)} tables of a {kind}, from rows "
+            f"{', '.join(map(str, rows[:6]))}.",
+            path=suited[0].source.path,
+            row=rows[1],
+            remedy="Keep one of them in the file, or leave the others' rows out with --omit.",
+        )
+    return suited[0]
+
+
+def _no_kind(pickers: list[Picker], kind: str, accepted: str) -> InputError:
+    best = max(pickers, key=lambda p: len(p.found) + len(p.chosen))
+    other = next((k for k, test in _tests().items() if k != kind and test(best)), None)
+    error = best.missing(_first_missing(best, kind), accepted)
+    if other is not None and kind != "table":
+        return InputError(
+            f"this is no {kind}: the columns are those of a {other}.",
+            path=error.path,
+            row=error.row,
+            column=error.column,
+            remedy=error.remedy,
+        )
+    return error
+
+
+def _first_missing(picker: Picker, kind: str) -> str:
+    for group in _NEEDED.get(kind, ()):
+        if not any(picker.has(role) for role in group):
+            return group[0]
+    return _NEEDED[kind][0][0] if kind in _NEEDED else "omega"
+
+
+_NEEDED = {
+    "distribution": (("M", "log10 M", "log M", "ln M"), ("dW/dlog10M",)),
+    "sweep": (("omega", "f", "frequency"), ("G'", "|eta*|", "|G*|", "eta'"),
+              ("G''", "tan delta", "delta", "eta''")),
+    "relaxation curve": (("t",), ("G",)),
+    "flow curve": (("rate",), ("eta",)),
+    "spectrum": (("tau",), ("g",)),
+}  # fmt: skip
+
+
+def _is_relaxation(picker: Picker) -> bool:
+    return picker.has("t") and picker.has("G") and not picker.has("omega")
+
+
+def _is_flow(picker: Picker) -> bool:
+    return picker.has("rate") and picker.has("eta")
+
+
+def _is_spectrum(picker: Picker) -> bool:
+    return picker.has("tau") and (picker.has("g") or picker.has("G"))
+
+
+def _strength_role(picker: Picker) -> str:
+    return "g" if picker.has("g") or not picker.has("G") else "G"
+
+
+def _tests() -> dict[str, Any]:
+    from mwdlink.files.gpc import is_distribution
+    from mwdlink.files.sweeps import is_sweep
+
+    return {
+        "distribution": is_distribution,
+        "sweep": is_sweep,
+        "relaxation curve": _is_relaxation,
+        "flow curve": _is_flow,
+        "spectrum": _is_spectrum,
+    }
+
+
+_READERS = {
+    "distribution": read_distribution,
+    "sweep": read_sweeps,
+    "relaxation curve": read_relaxation,
+    "flow curve": read_flow_curve,
+    "spectrum": read_spectrum,
+}
+_ACCEPTED = {
+    "distribution": "M [g/mol], log10 M or ln M, with one of dW/dlog10M, dW/dlnM, dW/dM, "
+    "cumulative W, slice weight, dN/dlog10M, dN/dlnM, dN/dM, slice number",
+    "sweep": "omega [rad/s] or f [Hz]; G' [Pa] and G'' [Pa], or |eta*| [Pa s] with tan delta or "
+    "delta [deg|rad], or eta' and eta''",
+    "relaxation curve": "t [s] and G [Pa]",
+    "flow curve": "rate [1/s] and eta [Pa s]",
+    "spectrum": "tau [s] and g [Pa]",
+}
+
+
+def _curve(
+    kind: type[RelaxationCurve] | type[FlowCurve],
+    picker: Picker,
+    roles: tuple[str, str],
+    source: Source,
+    omit_unreadable: bool,
+    temperature_C: float | None,
+    label: str | None,
+) -> RelaxationCurve | FlowCurve:
+    from mwdlink.files.sweeps import _celsius as to_celsius
+    from mwdlink.files.sweeps import _preamble_temperature
+
+    accepted = _ACCEPTED["relaxation curve" if kind is RelaxationCurve else "flow curve"]
+    needed = [picker.need(role, accepted) for role in roles]
+    positive = set(roles)
+    for role in ("sigma", "T"):
+        column = picker.take(role)
+        if column is not None and picker.has_cells(column):
+            needed.append(column)
+    if "sigma" in {c.role for c in needed}:
+        positive.add("sigma")
+    values, rows = picker.read(needed, positive=positive, omit_unreadable=omit_unreadable)
+    place: dict[str, Any] = {"path": source.path, "row": int(rows[0])}
+    temperature = temperature_C
+    if "T" in values:
+        column = next(c for c in needed if c.role == "T")
+        t = to_celsius(picker, column, values["T"], rows)
+        if np.ptp(t) > 2.0:
+            raise InputError(
+                f"the temperature runs from {t.min():g} to {t.max():g} C in one curve.",
+                column=column.header,
+                remedy="Keep the rows of one temperature, or leave the others out with --omit.",
+                **place,
+            )
+        temperature = float(np.mean(t))
+    else:
+        stated = _preamble_temperature(picker)
+        temperature = stated if stated is not None else temperature
+    curve = kind.from_arrays(
+        values[roles[0]],
+        values[roles[1]],
+        sigma=values.get("sigma"),
+        temperature_C=temperature,
+        label=source.label if label is None else label,
+        rows=rows,
+        path=source.path,
+        warnings=merge_cautions(source.notes, picker.notes),
+        comments=(*source.layout.comments, *picker.block.preamble),
+    )
+    if len(curve) < MIN_POINTS:
+        raise InputError(
+            f"{len(curve)} points are too few for a curve; it needs at least {MIN_POINTS}.",
+            remedy="Give the whole curve.",
+            **place,
+        )
+    return curve
+
+
+def _placed(error: InputError, path: str, row: int | None) -> InputError:
+    """The same error with the place filled in."""
+    return InputError(
+        error.message,
+        path=error.path or path,
+        row=error.row if error.row is not None else row,
+        column=error.column,
+        remedy=error.remedy or "Check the table.",
+    )
+
+
+def _with_warnings(found: Any, *groups: tuple[Caution, ...]) -> Any:
+    from dataclasses import replace
+
+    return replace(found, warnings=merge_cautions(*groups, found.warnings))
