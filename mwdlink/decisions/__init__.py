@@ -1,0 +1,1 @@
+"""The questions people ask: predictions with bands, blends, tails, sheets, waiting times."""
