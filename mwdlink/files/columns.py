@@ -115,7 +115,7 @@ class Picker:
             raise InputError(
                 f"{len(claims)} columns are {role.rstrip('?')}: {', '.join(map(repr, names))}.",
                 column=names[1],
-                remedy=f'Name the one to use: --column "{role.rstrip("?")}={_name(names, claims)}".',
+                remedy=f'Name the one to use: --column "{role}={_name(names, claims)}".',
                 **place,
             )
         index, unit = claims[0]
@@ -208,17 +208,7 @@ class Picker:
 
     def _decimal(self, needed: Sequence[Column]) -> str:
         cells = [self.block.columns[c.index] for c in needed]
-        if self.decimal is None and not any(
-            "," in cell or cell.count(".") > 1 for column in cells for cell in column
-        ):
-            return "."
-        marked = (
-            (row, cell)
-            for column in cells
-            for row, cell in zip(self.block.rows, column, strict=True)
-            if "," in cell or "." in cell
-        )
-        return find_decimal(marked, self.source.path, given=self.decimal)
+        return find_decimal(cells, self.block.rows, self.source.path, given=self.decimal)
 
     def _unreadable(
         self,

@@ -260,7 +260,7 @@ def make_column(
     """
     kind = ROLES[role].kind
     header = headers[index] if index < len(headers) else f"#{index + 1}"
-    place = {"path": path, "row": row, "column": header}
+    place: dict[str, Any] = {"path": path, "row": row, "column": header}
     flag = f'--column "{role}={header}:UNIT"'
     known = ", ".join(UNITS[kind])
     if unit is None or (unit.strip() in EMPTY and kind not in ("fraction", "number", "signal")):

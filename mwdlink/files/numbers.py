@@ -7,7 +7,7 @@ no cell decides, or cells contradict each other, the table is refused rather tha
 from __future__ import annotations
 
 import re
-from collections.abc import Iterable, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -27,6 +27,8 @@ _GROUPED = {
     ".": re.compile(r"[+-]?[1-9]\d{0,2}(?:,\d{3})+(?:\.\d*)?", re.ASCII),
     ",": re.compile(r"[+-]?[1-9]\d{0,2}(?:\.\d{3})+(?:,\d*)?", re.ASCII),
 }
+# what nearly all cells look like
+_USUAL = re.compile(r"[+-]?\d{1,30}(?:[.,]\d{0,20})?(?:[eE][+-]?\d{1,3})?", re.ASCII).fullmatch
 _SIMPLE = frozenset("0123456789.+-eE")
 _MINUS = str.maketrans({"−": "-", "–": "-", "\ufeff": None, "\u200b": None})
 
@@ -52,6 +54,8 @@ class Numbers:
 
 def looks_numeric(cell: str, *, gaps: bool = True) -> bool:
     """Whether a cell is a number under either decimal mark."""
+    if _USUAL(cell):
+        return True
     cell = cell.strip()
     if not cell or len(cell) > 60:
         return False
@@ -125,6 +129,10 @@ def to_numbers(cells: Sequence[str], decimal: str) -> Numbers:
     return Numbers(values, np.array(bad, dtype=int), grouped)
 
 
+# two marks in one cell
+_TWICE = re.compile(r"[.,][^.,\n]*[.,]")
+
+
 def _evidence(cell: str) -> str:
     """'.' or ',' where the cell can be read with that decimal mark only, else ''; '?' if open."""
     cell = cell.strip().translate(_MINUS)
@@ -137,14 +145,20 @@ def _evidence(cell: str) -> str:
 
 
 def find_decimal(
-    cells: Iterable[tuple[int, str]], path: str | None, *, given: str | None = None
+    columns: Sequence[Sequence[str]],
+    rows: Sequence[int],
+    path: str | None,
+    *,
+    given: str | None = None,
 ) -> str:
     """The decimal mark of a table.
 
     Parameters
     ----------
-    cells : iterable of (row, cell)
-        The cells of its data rows that hold a comma or a point.
+    columns : sequence of sequence of str
+        The cells of its columns.
+    rows : sequence of int
+        Their rows in the file.
     given : {".", ","}, optional
         What the user says; nothing is examined then.
 
@@ -157,10 +171,24 @@ def find_decimal(
         if given not in (".", ","):
             raise InputError(f"{given!r} is no decimal mark.", remedy="Give '.' or ','.")
         return given
+    points = commas = several = False
+    for column in columns:
+        joined = "\n".join(column)
+        points |= "." in joined
+        commas |= "," in joined
+        several |= _TWICE.search(joined) is not None
+    if not commas and not several:
+        return "."
+    if not points and not several:
+        for column in columns:
+            if any("," in cell and _evidence(cell) == "," for cell in column):
+                return ","
     seen: dict[str, tuple[int, str]] = {}
     count = {".": 0, ",": 0}
     open_comma: tuple[int, str] | None = None
-    for row, cell in cells:
+    for row, cell in (pair for column in columns for pair in zip(rows, column, strict=True)):
+        if "," not in cell and "." not in cell:
+            continue
         mark = _evidence(cell)
         if mark in count:
             count[mark] += 1

@@ -66,9 +66,10 @@ def open_source(
     data, digest = read_bytes(name)
     left_out = parse_rows(omit)
     named = _named_headers(columns)
+    notes: tuple[Caution, ...] = ()
     if data.startswith(b"PK\x03\x04") and b"xl/" in data:
         layout, total = _workbook(name, data, left_out, named, sheet)
-        encoding, notes = "workbook", ()
+        encoding = "workbook"
     else:
         text = decode(data, name)
         total = text.text.count("\n") + 1

@@ -43,7 +43,7 @@ def split_quoted(line: str, delimiter: str) -> tuple[list[str], bool]:
 
     A quote opens only at the start of a cell: the second one in `G"` is a double prime.
     """
-    cells = []
+    cells: list[str] = []
     position = 0
     size = len(line)
     while True:

@@ -1,4 +1,4 @@
-"""Frequency sweeps from a block's columns: which columns, which temperature, which steps are one."""
+"""Frequency sweeps from a block's columns: which columns, which temperature, which steps."""
 
 from __future__ import annotations
 
@@ -504,8 +504,9 @@ def _append(held: Segment, more: Segment) -> None:
 
 def finish(segment: Segment, path: str, label: str) -> Sweep:
     """The segment as a sweep: sorted, repeats merged, and refused when too little is left."""
+    columns: dict[str, Any] = dict(segment.columns)
     sweep = Sweep.from_arrays(
-        **segment.columns,
+        **columns,
         rows=segment.rows,
         temperature_C=segment.temperature,
         label=label,

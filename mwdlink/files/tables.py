@@ -11,7 +11,7 @@ All take the same options:
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -416,7 +416,7 @@ def _tests() -> dict[str, Any]:
     }
 
 
-_READERS = {
+_READERS: dict[str, Callable[..., Any]] = {
     "distribution": read_distribution,
     "sweep": read_sweeps,
     "relaxation curve": read_relaxation,
