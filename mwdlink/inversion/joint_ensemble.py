@@ -1,0 +1,271 @@
+"""The joint inference from start to finish: kernels, smoothing, and members that carry it all."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from mwdlink.chains.distribution import Distribution
+from mwdlink.chains.melt import Melt
+from mwdlink.inversion import joint
+from mwdlink.inversion.joint import JointFit, JointProblem, JointScan, Priors
+from mwdlink.inversion.joint_alone import AloneFit, fit_alone, smooth_curve
+from mwdlink.inversion.joint_data import GpcRows, gpc_rows, supported_range
+from mwdlink.inversion.joint_response import sweep_response
+from mwdlink.inversion.window import Window, find_window
+from mwdlink.relaxation.mixing import Model, relaxation_times
+
+SMOOTHING = np.geomspace(3.0, 1e-5, 9)
+SPACING = 0.065
+# exponent unless card or user says otherwise: centre and spread of the prior
+EXPONENT_PRIOR = (2.0, 0.2)
+LEAST_TIME_SPREAD = 0.1
+# spread of ln (M of the GPC/true M) by what the molar masses are (equivalent and unstated:
+# recalled; the others: assumed)
+CALIBRATION_SPREAD = {"absolute": 0.01, "universal": 0.02, "equivalent": 0.05, "unstated": 0.05}
+# level of the moduli: gap and geometry of the rheometer, and the plateau modulus of the card
+MODULUS_SPREAD = 0.03
+BASELINE_SPREAD = 0.002
+# kernels whose evidence is this many e-folds below the best are impossible; the others share the
+# members, as none of them is the truth
+ADMISSIBLE = 8.0
+
+
+@dataclass(frozen=True, eq=False)
+class Setting:
+    """Everything of the pair of data sets that does not depend on the kernel.
+
+    Attributes
+    ----------
+    omega, storage, loss : ndarray of shape (n_w,)
+        [rad/s], [Pa], [Pa]
+    sigma : ndarray of shape (2 n_w,)
+        Relative errors of G' over G''.
+    melt : Melt
+    gpc : GpcRows
+    x : ndarray of shape (n,)
+        log10 M of the nodes.
+    priors : Priors
+    rouse : bool
+    """
+
+    omega: np.ndarray
+    storage: np.ndarray
+    loss: np.ndarray
+    sigma: np.ndarray
+    melt: Melt
+    gpc: GpcRows
+    x: np.ndarray
+    priors: Priors
+    rouse: bool
+
+    @property
+    def nodes(self) -> np.ndarray:
+        """Molar masses of the nodes [g/mol]."""
+        return 10.0**self.x
+
+    @property
+    def exponents(self) -> np.ndarray:
+        """Exponents the tables are made at."""
+        centre, spread = (float(a[joint.EXPONENT]) for a in (self.priors.centre, self.priors.spread))
+        if spread <= joint.PINNED:
+            return np.array([centre])
+        return np.maximum(centre + spread * np.linspace(-2.5, 2.5, 5), 1.0 + 0.05 * np.arange(5))
+
+    def problem(self, kernel: str) -> tuple[JointProblem, Window]:
+        """The joint problem of one kernel."""
+        model = Model(kernel, float(self.priors.centre[joint.EXPONENT]), self.rouse)
+        window = find_window(self.omega, self.melt, model)
+        last = float(relaxation_times(self.nodes[-1:], self.melt, model)[0])
+        window = replace(window, top_time=10.0 * last)
+        response = sweep_response(
+            self.omega, self.melt, kernel, self.nodes, window, self.exponents, self.rouse
+        )
+        data = np.log(np.concatenate([self.storage, self.loss]))
+        return JointProblem(self.x, self.gpc, response, data, self.sigma, self.priors), window
+
+
+def settle(
+    distribution: Distribution,
+    omega: np.ndarray,
+    storage: np.ndarray,
+    loss: np.ndarray,
+    sigma: np.ndarray,
+    melt: Melt,
+    kernels: tuple[str, ...],
+    *,
+    exponent: tuple[float, float] = EXPONENT_PRIOR,
+    trust_range: tuple[float, float] | None = None,
+    rouse: bool = True,
+) -> Setting:
+    """Nodes over the ranges of both instruments, rows of the GPC, priors.
+
+    Parameters
+    ----------
+    exponent : (float, float)
+        Centre and spread of the exponent's prior; a spread of 0 fixes it.
+    """
+    reach = max(
+        float(find_window(omega, melt, Model(k, exponent[0], rouse)).nodes[-1]) for k in kernels
+    )
+    low, high = supported_range(distribution)
+    if trust_range is not None:
+        low, high = max(low, trust_range[0]), min(high, trust_range[1])
+    share = distribution.mass
+    logs = np.log10(distribution.molar_mass)
+    width = float(np.sqrt(max(share @ (logs - share @ logs) ** 2, 0.0)))
+    spacing = float(np.clip(width / 4.0, 0.02, SPACING))
+    first = np.log10(low) - 4 * spacing
+    last = max(np.log10(reach), np.log10(high) + 0.25)
+    count = int(np.ceil((last - first) / spacing)) + 1
+    if count > 140:
+        spacing, count = (last - first) / 139, 140
+    x = first + spacing * np.arange(count)
+    rows = gpc_rows(distribution, trust_range, spacing)
+    plateau = MODULUS_SPREAD
+    if melt.plateau_range is not None:
+        a, b = melt.plateau_range
+        plateau = max(plateau, 0.25 * float(np.log(b / a)))
+    centre = np.array([0.0, exponent[0], 0.0, 0.0, 0.0])
+    spread = np.array(
+        [
+            max(melt.scatter_decades * np.log(10.0), LEAST_TIME_SPREAD),
+            max(exponent[1], joint.PINNED),
+            CALIBRATION_SPREAD[distribution.calibration],
+            plateau,
+            BASELINE_SPREAD,
+        ]
+    )
+    return Setting(omega, storage, loss, sigma, melt, rows, x, Priors(centre, spread), rouse)
+
+
+@dataclass(frozen=True, eq=False)
+class KernelScan:
+    """One kernel's scan and its standing among the others."""
+
+    kernel: str
+    scan: JointScan
+    window: Window
+    admissible: bool
+
+
+@dataclass(frozen=True, eq=False)
+class Joint:
+    """The joint inference.
+
+    Attributes
+    ----------
+    setting : Setting
+    alone : AloneFit
+        The GPC's own smooth curve and its continuation.
+    kernels : tuple of KernelScan
+        The best first.
+    w : ndarray of shape (m, n + 1)
+        Weights of nodes and lump of each member.
+    alone_w : ndarray of shape (m, n)
+        The smooth continuation of each member's GPC curve.
+    nuisance : ndarray of shape (m, 5)
+    kernel, smoothing : ndarray of int of shape (m,)
+        Which kernel and which lambda each member was drawn with.
+    unsettled : int
+        Members that did not converge and were left out.
+    """
+
+    setting: Setting
+    alone: AloneFit
+    kernels: tuple[KernelScan, ...]
+    w: np.ndarray
+    alone_w: np.ndarray
+    nuisance: np.ndarray
+    kernel: np.ndarray
+    smoothing: np.ndarray
+    unsettled: int = 0
+
+    @property
+    def best(self) -> JointFit:
+        """The fit of highest evidence."""
+        return self.kernels[0].scan.best
+
+
+def infer(setting: Setting, kernels: tuple[str, ...], members: int, seed: int) -> Joint:
+    """Fit with every kernel, weigh lambda by evidence, and draw members.
+
+    Members are drawn by perturbing all data and all priors by their own noise and fitting again
+    (randomise, then optimise); each has its own child seed.
+    """
+    alone = smooth_curve(setting.x, setting.gpc)
+    scans = []
+    for kernel in kernels:
+        problem, window = setting.problem(kernel)
+        found = joint.scan(problem, joint.start(problem, alone.u), SMOOTHING)
+        scans.append((kernel, found, window))
+    top = max(s.total for _, s, _ in scans)
+    scans.sort(key=lambda s: -s[1].total)
+    ranked = tuple(KernelScan(k, s, v, s.total > top - ADMISSIBLE) for k, s, v in scans)
+    return _draw(setting, alone, ranked, members, seed)
+
+
+def _draw(
+    setting: Setting, alone: AloneFit, ranked: tuple[KernelScan, ...], members: int, seed: int
+) -> Joint:
+    held = [k for k in ranked if k.admissible]
+    seeds = np.random.SeedSequence(seed).spawn(members)
+    w, other, nuisance, kernel, smooth = [], [], [], [], []
+    lost = 0
+    for i, child in enumerate(seeds):
+        rng = np.random.default_rng(child)
+        j = i % len(held)
+        chosen = held[j].scan
+        k = int(rng.choice(len(chosen.fits), p=chosen.weights))
+        noise = joint.draw_noise(chosen.problem, rng)
+        start = chosen.fits[k]
+        fit = joint.minimise(chosen.problem, start.z, start.smoothing, noise, tolerance=0.05)
+        if not fit.converged:
+            lost += 1
+            continue
+        rows = noise.data[chosen.problem.data.size : -1]
+        again = fit_alone(
+            setting.x,
+            setting.gpc,
+            alone.smoothing,
+            alone.u,
+            rng,
+            setting.gpc.density + setting.gpc.sigma * rows,
+        )
+        w.append(fit.w)
+        other.append(again.w)
+        nuisance.append(fit.nuisance)
+        kernel.append(j)
+        smooth.append(k)
+    n = setting.x.size
+    return Joint(
+        setting,
+        alone,
+        ranked,
+        np.array(w).reshape(-1, n + 1),
+        np.array(other).reshape(-1, n),
+        np.array(nuisance).reshape(-1, len(joint.NUISANCE)),
+        np.array(kernel, dtype=int),
+        np.array(smooth, dtype=int),
+        lost,
+    )
+
+
+def weight_beyond(x: np.ndarray, w: np.ndarray, mass: float) -> np.ndarray:
+    """Weight fraction beyond M, cells counted in part; lumps count whole.
+
+    Parameters
+    ----------
+    x : ndarray of shape (n,)
+        log10 M of the nodes.
+    w : ndarray of shape (..., n) or (..., n + 1)
+        Weights of the nodes, and of the lump above where there is one.
+    mass : float
+        [g/mol]
+    """
+    h = float(x[1] - x[0])
+    share = np.clip((x + h / 2 - np.log10(mass)) / h, 0.0, 1.0)
+    if w.shape[-1] == x.size + 1:
+        share = np.append(share, 1.0)
+    return w @ share

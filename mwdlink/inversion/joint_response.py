@@ -1,0 +1,211 @@
+"""Moduli of the joint inference as a function of weights, time-law factor and mixing exponent.
+
+A factor f on all times moves the curves along the frequency axis, G*(omega; f) = G*(f omega; 1):
+the moduli are computed on a fixed list of frequencies and read between them by local cubics in
+log-log. The exponent enters through tables of F^(1/beta) at five exponents, read between them by a
+polynomial. Both keep exact derivatives and cost nothing beside the fit itself.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from mwdlink.chains.melt import Melt
+from mwdlink.inversion.window import Window
+from mwdlink.relaxation.mixing import Model, survival_at, survival_matrix
+from mwdlink.relaxation.operator import LEAN_MARGIN, LEAN_TIMES, debye, time_operator
+from mwdlink.relaxation.rouse import rouse_moduli
+
+# frequencies beyond both ends of the data, for time-law factors up to 3
+PAD_DECADES = 0.5
+GRID_PER_DECADE = 8
+# a process of its own: a spectrum falling as tau^0.5 below its longest time, seven modes
+SLOW_RATIOS = 10.0 ** -np.linspace(0.0, 3.0, 7)
+SLOW_SHARES = SLOW_RATIOS**-0.5 / np.sum(SLOW_RATIOS**-0.5)
+# loss of an elastic network against its modulus (recalled: filled and gelled melts, flat tan delta)
+PLATEAU_LOSS = 0.05
+
+
+def lagrange_rows(x: np.ndarray, at: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Local cubic interpolation on a uniform grid, as a matrix, and its derivative.
+
+    Parameters
+    ----------
+    x : ndarray of shape (n,)
+        Uniform grid.
+    at : ndarray of shape (m,)
+        Where values are wanted; beyond the grid the end cubics go on.
+
+    Returns
+    -------
+    rows, slope : ndarray of shape (m, n)
+        Values and derivatives with respect to `at`.
+    """
+    h = float(x[1] - x[0])
+    i = np.clip(np.floor((at - x[0]) / h).astype(int) - 1, 0, x.size - 4)
+    s = (at - x[0]) / h - i
+    nodes = np.arange(4.0)
+    rows = np.zeros((at.size, x.size))
+    slope = np.zeros((at.size, x.size))
+    k = np.arange(at.size)
+    for j in range(4):
+        others = [m for m in range(4) if m != j]
+        bottom = np.prod([nodes[j] - nodes[m] for m in others])
+        a, b, c = (s - nodes[m] for m in others)
+        rows[k, i + j] = a * b * c / bottom
+        slope[k, i + j] = (a * b + a * c + b * c) / bottom / h
+    return rows, slope
+
+
+def polynomial_rows(nodes: np.ndarray, at: float) -> tuple[np.ndarray, np.ndarray]:
+    """Lagrange's weights of a polynomial through all nodes at one place, and their slopes."""
+    value, slope = np.ones(nodes.size), np.zeros(nodes.size)
+    for j in range(nodes.size):
+        others = np.delete(nodes, j)
+        factors = (at - others) / (nodes[j] - others)
+        value[j] = np.prod(factors)
+        slope[j] = sum(
+            np.prod(np.delete(factors, m)) / (nodes[j] - others[m]) for m in range(others.size)
+        )
+    return value, slope
+
+
+@dataclass(frozen=True, eq=False)
+class Response:
+    """From weights on nodes and in the lump above to ln G' and ln G'' at the data's frequencies.
+
+    Attributes
+    ----------
+    log_omega : ndarray of shape (n_w,)
+        ln of the data's frequencies.
+    grid : ndarray of shape (n_g,)
+        ln of the frequencies of the computation, uniform.
+    exponents : ndarray of shape (n_b,)
+    tables : ndarray of shape (n_b, n_t, n + 1)
+        F^(1/beta) at each exponent.
+    rows : ndarray of shape (2 n_g, n_t)
+        G(t)/G_N to moduli [Pa].
+    linear : ndarray of shape (2 n_g, n + 1)
+        Rouse part [Pa].
+    floor : float
+        Smallest modulus that is told from zero [Pa].
+    """
+
+    log_omega: np.ndarray
+    grid: np.ndarray
+    exponents: np.ndarray
+    tables: np.ndarray
+    rows: np.ndarray
+    linear: np.ndarray
+    floor: float
+
+    @property
+    def exponent_limits(self) -> tuple[float, float]:
+        """Exponents within which the tables may be read."""
+        if self.exponents.size == 1:
+            return float(self.exponents[0]), float(self.exponents[0])
+        edge = 0.5 * float(self.exponents[1] - self.exponents[0])
+        return max(float(self.exponents[0]) - edge, 1.0), float(self.exponents[-1]) + edge
+
+    def log_moduli(
+        self, w: np.ndarray, log_factor: float, exponent: float
+    ) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+        """ln of G' over G'' and its derivatives.
+
+        Returns
+        -------
+        value : ndarray of shape (2 n_w,)
+        d_weight : ndarray of shape (2 n_w, n + 1)
+        d_factor, d_exponent : ndarray of shape (2 n_w,)
+        """
+        share, d_share = polynomial_rows(self.exponents, exponent)
+        k = np.tensordot(share, self.tables, axes=1)
+        s = np.maximum(k @ w, 1e-30)
+        ds = (self.tables @ w).T @ d_share
+        p = s ** (exponent - 1.0)
+        net = p * s
+        y = self.rows @ net + self.linear @ w
+        good = y > self.floor
+        y = np.maximum(y, self.floor)
+        slope = self.rows @ ((exponent * p)[:, None] * k) + self.linear
+        slope = np.where(good[:, None], slope, 0.0) / y[:, None]
+        d_beta = np.where(good, self.rows @ (net * np.log(s) + exponent * p * ds), 0.0) / y
+        a, da = lagrange_rows(self.grid, self.log_omega + log_factor)
+        m = self.grid.size
+        log_y = np.log(y)
+        both = (log_y[:m], log_y[m:])
+        value = np.concatenate([a @ b for b in both])
+        d_factor = np.concatenate([da @ b for b in both])
+        d_weight = np.vstack([a @ slope[:m], a @ slope[m:]])
+        d_exponent = np.concatenate([a @ d_beta[:m], a @ d_beta[m:]])
+        return value, d_weight, d_factor, d_exponent
+
+    def extra_process(self, kind: str, q: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """G' over G'' of a process of its own [Pa] and its derivatives in q.
+
+        Parameters
+        ----------
+        kind : str
+            `slow` (q = ln strength, ln longest time) or `plateau` (q = ln strength).
+        """
+        n = self.log_omega.size
+        strength = np.exp(min(q[0], 40.0))
+        if kind == "plateau":
+            add = strength * np.concatenate([np.ones(n), np.full(n, PLATEAU_LOSS)])
+            return add, add[:, None]
+        omega = np.exp(self.log_omega)
+
+        def shape(log_time: float) -> np.ndarray:
+            storage, loss = debye(omega, np.exp(log_time) * SLOW_RATIOS)
+            return np.concatenate([storage @ SLOW_SHARES, loss @ SLOW_SHARES])
+
+        add = strength * shape(q[1])
+        step = 1e-4
+        d_time = strength * (shape(q[1] + step) - shape(q[1] - step)) / (2 * step)
+        return add, np.column_stack([add, d_time])
+
+
+def sweep_response(
+    omega: np.ndarray,
+    melt: Melt,
+    kernel: str,
+    nodes: np.ndarray,
+    window: Window,
+    exponents: np.ndarray,
+    rouse: bool = True,
+) -> Response:
+    """The response of a list of frequencies [rad/s] on given nodes [g/mol].
+
+    Parameters
+    ----------
+    exponents : ndarray of shape (n_b,)
+        Exponents of the tables: one, where it is fixed.
+    """
+    low, high = np.log10(omega.min()) - PAD_DECADES, np.log10(omega.max()) + PAD_DECADES
+    count = max(int(np.ceil((high - low) * GRID_PER_DECADE)) + 1, 8)
+    grid = np.linspace(low, high, count)
+    frequencies = 10.0**grid
+    operator = time_operator(frequencies, LEAN_MARGIN, LEAN_TIMES)
+    tables = np.zeros((exponents.size, operator.times.size, nodes.size + 1))
+    for i, beta in enumerate(exponents):
+        model = Model(kernel, float(beta), rouse)
+        tables[i, :, :-1] = survival_matrix(operator.times, nodes, melt, model)
+        tables[i, :, -1] = survival_at(
+            operator.times / window.top_time, float(nodes[-1]), melt, model
+        )
+    linear = np.zeros((2 * count, nodes.size + 1))
+    if rouse:
+        # twice the last node stands for the lump: its own mass is not known
+        part = rouse_moduli(frequencies, np.append(nodes, 2.0 * nodes[-1]), melt)
+        linear = np.vstack([part.real, part.imag])
+    return Response(
+        np.log(omega),
+        np.log(frequencies),
+        np.asarray(exponents, dtype=float),
+        tables,
+        operator.matrix * melt.plateau_modulus,
+        linear,
+        1e-11 * melt.plateau_modulus,
+    )
