@@ -125,9 +125,11 @@ def pictures_of(record: Mapping[str, Any], tables: Mapping[str, Any]) -> dict[st
     return pictures
 
 
-def report_of(result: Any, record: Mapping[str, Any], pictures: Mapping[str, Any]) -> str:
+def report_of(result: Any, record: Mapping[str, Any], pictures: Mapping[str, Any]) -> str | None:
     """The self-contained page."""
     report = importlib.import_module("mwdlink.report")
+    if not hasattr(report, "render"):
+        return None
     line = "mwdlink " + shlex.join(sys.argv[1:])
     page: str = report.render(result, record, pictures, command_line=line)
     return page

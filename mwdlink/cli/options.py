@@ -229,20 +229,10 @@ model_options = _family(
     polymer_option(), temperature_option, kernel_option, exponent_option, rouse_option
 )
 ensemble_options = _family(members_option, seed_option)
-reading_options = _family(
-    click.option(
-        "--column",
-        "columns",
-        type=Pair("ROLE=HEADER[:UNIT]"),
-        multiple=True,
-        help="Which column is what, where the header does not say; repeatable.",
-    ),
-    click.option("--omit", type=Rows(), help="Leave rows out, as in 3,17-19; they are listed."),
-    click.option("--omit-unreadable", is_flag=True, help="Leave out rows that cannot be read."),
-)
 calibration_option = click.option(
     "--calibration",
-    type=click.Choice(("absolute", "universal", "equivalent")),
+    type=click.Choice(("absolute", "universal", "equivalent", "unstated")),
+    default="unstated",
     help="What the GPC's molar masses are.",
 )
 enforce_option = click.option(
@@ -250,14 +240,45 @@ enforce_option = click.option(
 )
 
 
-def reading(columns: Any, omit: Any, omit_unreadable: bool, **more: Any) -> dict[str, Any]:
-    """The reading options as keyword arguments of the readers."""
-    return {
-        "columns": dict(columns) or None,
-        "omit": set(omit or ()),
-        "omit_unreadable": omit_unreadable,
-        **more,
-    }
+def reading_options(function: F) -> F:
+    """Add the options on how tables are read; the command gets one `reading` for the readers."""
+
+    @click.option(
+        "--column",
+        "columns",
+        type=Pair("ROLE=HEADER[:UNIT]"),
+        multiple=True,
+        help="Which column is what, where the header does not say; repeatable.",
+    )
+    @click.option("--omit", type=Rows(), help="Leave rows out, as in 3,17-19; they are listed.")
+    @click.option("--omit-unreadable", is_flag=True, help="Leave out rows that cannot be read.")
+    @click.option(
+        "--decimal", type=click.Choice((".", ",")), help="Decimal mark, where it is not clear."
+    )
+    @click.option("--block", type=click.IntRange(1), help="Which table of a file, from 1.")
+    @click.option("--sheet", help="Which sheet of a workbook.")
+    @functools.wraps(function)
+    def inner(
+        *args: Any,
+        columns: Any,
+        omit: frozenset[int] | None,
+        omit_unreadable: bool,
+        decimal: str | None,
+        block: int | None,
+        sheet: str | None,
+        **rest: Any,
+    ) -> Any:
+        reading = {
+            "columns": dict(columns) or None,
+            "omit": set(omit or ()),
+            "omit_unreadable": omit_unreadable,
+            "decimal": decimal,
+            "block": block,
+            "sheet": sheet,
+        }
+        return function(*args, reading=reading, **rest)
+
+    return inner  # type: ignore[return-value]
 
 
 def frequencies(omega: tuple[float, float, int] | None) -> Any:

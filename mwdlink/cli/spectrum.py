@@ -16,7 +16,6 @@ from mwdlink.cli.options import (
     ensemble_options,
     noise_option,
     output_options,
-    reading,
     reading_options,
 )
 
@@ -39,10 +38,8 @@ def command(
     noise: float | None,
     members: int,
     seed: int,
-    columns: Any,
-    omit: Any,
-    omit_unreadable: bool,
     enforce: bool,
+    reading: dict[str, Any],
     output: Output,
 ) -> None:
     """The relaxation spectrum of SWEEP, as discrete modes and as a curve with band.
@@ -57,8 +54,7 @@ def command(
     from mwdlink.files.tables import read_sweep
     from mwdlink.measurement.spectrum_fit import fit_spectrum
 
-    options = reading(columns, omit, omit_unreadable, temperature_C=temperature)
-    data = read_sweep(sweep, **options)
+    data = read_sweep(sweep, temperature_C=temperature, **reading)
     with working("Fitting the spectrum", output):
         result = fit_spectrum(data, noise=noise, members=members, seed=seed, modes=modes)
     checks = []

@@ -15,7 +15,7 @@ from typing import Any
 # what every record has, or what only a machine or the report needs
 _LEFT_OUT = {
     "schema", "version", "command", "inputs", "labels", "polymer", "model", "seed", "warnings",
-    "bands", "cross_check", "omitted", "settings", "points",
+    "bands", "cross_check", "central_model", "noise", "omitted", "settings", "points",
 }  # fmt: skip
 
 _UNITS = (
@@ -197,7 +197,8 @@ def _interval(u: Any, key: str) -> str:
     if not isinstance(u, Mapping):
         return ""
     low, high = u.get("low"), u.get("high")
-    text = "" if low is None or high is None else f"{_plain(low, key)} to {_plain(high, key)}"
+    ends = ["" if end is None else _plain(end, key) for end in (low, high)]
+    text = " to ".join(ends) if all(ends) and ends[0] != ends[1] else ""
     if u.get("status") == "assumed":
         return f"{text}, assumed".lstrip(", ")
     return text

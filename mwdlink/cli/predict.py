@@ -1,0 +1,77 @@
+"""``mwdlink predict``: from a distribution to all that follows from it."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Any
+
+import click
+
+from mwdlink.cli.deliver import deliver, working
+from mwdlink.cli.options import (
+    INPUT,
+    Output,
+    calibration_option,
+    ensemble_options,
+    frequencies,
+    model_options,
+    omega_option,
+    output_options,
+    reading_options,
+)
+
+
+@click.command()
+@click.argument("dist", type=INPUT)
+@model_options
+@omega_option
+@ensemble_options
+@reading_options
+@calibration_option
+@output_options
+def command(
+    dist: Path,
+    polymer: str,
+    temperature: float | None,
+    kernels: tuple[str, ...],
+    exponent: Any,
+    rouse: bool,
+    omega: Any,
+    members: int,
+    seed: int,
+    calibration: str,
+    reading: dict[str, Any],
+    output: Output,
+) -> None:
+    """Moduli, spectrum, relaxation, flow curve and melt flow rate from DIST.
+
+    \b
+    mwdlink predict gpc.csv --polymer hdpe --temperature 190 --out predicted
+
+    DIST is a table of a molecular-weight distribution, such as a GPC export.
+    The bands hold the card's constants, the kernels and the mixing exponent.
+    """
+    from mwdlink.decisions.predict import predict
+    from mwdlink.files.cards import read_polymer
+    from mwdlink.files.tables import read_distribution
+
+    card = read_polymer(polymer)
+    distribution = read_distribution(dist, calibration=calibration, **reading)
+    with working("Predicting", output):
+        result = predict(
+            distribution,
+            card,
+            kernels=kernels or None,
+            exponent=exponent,
+            rouse=rouse,
+            temperature_C=temperature,
+            omega=frequencies(omega),
+            members=members,
+            seed=seed,
+        )
+    model = {
+        "kernels": result.kernels,
+        "exponent": result.model.exponent,
+        "rouse": result.model.rouse,
+    }
+    deliver(result, output, inputs=[dist], polymer=card, model=model, seed=seed)
