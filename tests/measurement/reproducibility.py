@@ -83,7 +83,8 @@ def main() -> None:
     parser.add_argument("--sweeps", type=int, default=60)
     sweeps = parser.parse_args().sweeps
     print(
-        "| melt | window [rad/s] | points per decade | median | root mean square | largest | distance from the exact one |"
+        "| melt | window [rad/s] | points per decade | median | root mean square | largest "
+        "| distance from the exact one |"
     )
     print("|---|---|---|---|---|---|---|")
     for name, distribution in melts().items():

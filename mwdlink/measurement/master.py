@@ -1,0 +1,596 @@
+"""Sweeps at several temperatures onto one master curve."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from typing import Any, ClassVar
+
+import numpy as np
+
+from mwdlink.errors import Caution, InputError, merge_cautions
+from mwdlink.measurement.noise import Weights, noise_of
+from mwdlink.measurement.shift_laws import LawFit, fit_laws, preferred
+from mwdlink.measurement.shifts import Curve, ShiftFit, fit_shifts
+from mwdlink.measurement.superposition import Superposition, judge
+from mwdlink.measurement.sweep import Sweep
+from mwdlink.quantity import Uncertain, readonly
+from mwdlink.result import Result
+
+LN10 = float(np.log(10.0))
+VERTICALS = ("none", "rho-T", "free")
+LEVEL = 0.9
+# Free vertical factors must differ by this much, and by four standard errors, to be spoken of.
+VERTICAL_TOLD = 0.03
+
+
+@dataclass(frozen=True)
+class Step:
+    """One temperature of a master curve.
+
+    Attributes
+    ----------
+    temperature_C : float
+        [C]
+    sweep : Sweep
+        The readings as measured (several sweeps of one temperature put together).
+    a_T : Uncertain
+        Factor on the frequency [-].
+    b_T : float
+        Factor on the moduli that was used [-].
+    b_T_free : Uncertain
+        The factor the curves themselves would choose [-].
+    residual : float or None
+        Root mean square relative distance from the common curve where another temperature overlaps
+        [-]; None without overlap.
+    overlap_decades : float
+        Width of the overlap with the neighbour nearer to the reference, or the nearest one.
+    """
+
+    temperature_C: float
+    sweep: Sweep
+    a_T: Uncertain
+    b_T: float
+    b_T_free: Uncertain
+    residual: float | None
+    overlap_decades: float
+
+
+@dataclass(frozen=True)
+class Master(Result):
+    """One master curve from sweeps at several temperatures.
+
+    Attributes
+    ----------
+    reference_C : float
+    steps : tuple of Step
+        By temperature, ascending.
+    vertical : str
+        "none", "rho-T" or "free".
+    laws : mapping of str to LawFit
+        "arrhenius" and, with three temperatures or more, "wlf".
+    law : LawFit
+        The preferred one.
+    superposition : Superposition
+    fit : ShiftFit
+    branching : tuple
+        Flags set by `mwdlink.decisions.branching`; None until it has looked.
+    warnings : tuple of Caution
+    """
+
+    command: ClassVar[str] = "master"
+    main_table: ClassVar[str] = "shifts.csv"
+
+    reference_C: float
+    steps: tuple[Step, ...]
+    vertical: str
+    laws: dict[str, LawFit]
+    law: LawFit
+    superposition: Superposition
+    fit: ShiftFit
+    branching: tuple[Any, ...] | None = None
+    warnings: tuple[Caution, ...] = ()
+
+    # -- the curve ----------------------------------------------------------------------------
+    def master_sweep(self) -> Sweep:
+        """The master curve as one sweep at the reference temperature, ready for `invert`."""
+        parts = [s.sweep.shifted(s.a_T.value, s.b_T) for s in self.steps]
+        named: dict[str, Any] = {
+            "temperature_C": self.reference_C,
+            "label": "master curve",
+            "warnings": (),
+        }
+        if all(p.sigma_storage is not None and p.sigma_loss is not None for p in parts):
+            named["sigma_storage"] = np.concatenate([p.sigma_storage for p in parts])
+            named["sigma_loss"] = np.concatenate([p.sigma_loss for p in parts])
+        sweep = Sweep.from_arrays(
+            np.concatenate([p.omega for p in parts]),
+            np.concatenate([p.storage for p in parts]),
+            np.concatenate([p.loss for p in parts]),
+            **named,
+        )
+        # the parts interleave by construction: that they were put in order is no news
+        quiet = tuple(w for w in sweep.warnings if w.code not in ("points_sorted", "points_merged"))
+        return sweep.with_(warnings=quiet)
+
+    def with_branching(self, flags: Sequence[Any], warnings: Sequence[Caution] = ()) -> Master:
+        """A copy that carries branching flags."""
+        return replace(
+            self, branching=tuple(flags), warnings=merge_cautions(self.warnings, warnings)
+        )
+
+    # -- output -------------------------------------------------------------------------------
+    def payload(self) -> dict[str, Any]:
+        return {
+            "reference_C": self.reference_C,
+            "vertical": self.vertical,
+            "shift": {"kind": self.law.kind, **self.law.constants},
+            "laws": {k: v.to_dict() for k, v in self.laws.items()},
+            "superposition": self.superposition.to_dict(),
+            "branching": {
+                "flags": [f.to_dict() for f in self.branching or ()],
+                "assessed": self.branching is not None,
+            },
+            "shifts": [
+                {
+                    "temperature_C": s.temperature_C,
+                    "a_T": s.a_T,
+                    "b_T": s.b_T,
+                    "b_T_free": s.b_T_free,
+                    "residual": s.residual,
+                    "overlap_decades": s.overlap_decades,
+                    "points": len(s.sweep),
+                }
+                for s in self.steps
+            ],
+        }
+
+    def tables(self) -> dict[str, Any]:
+        return {
+            "master.csv": self._master_table(),
+            "shifts.csv": self._shift_table(),
+            "bands.csv": self._band_table(),
+            "phase_angle.csv": self.phase_angle_table(),
+        }
+
+    def _master_table(self) -> Any:
+        import pandas as pd
+
+        rows = []
+        for s, model in zip(self.steps, self.fit.model, strict=True):
+            lift = s.b_T
+            rows.append(
+                pd.DataFrame(
+                    {
+                        "omega [rad/s]": s.sweep.omega * s.a_T.value,
+                        "G' [Pa]": s.sweep.storage * lift,
+                        "G'' [Pa]": s.sweep.loss * lift,
+                        "G' fit [Pa]": np.exp(model[0]) * lift,
+                        "G'' fit [Pa]": np.exp(model[1]) * lift,
+                        "measured at [C]": s.temperature_C,
+                    }
+                )
+            )
+        frame = pd.concat(rows, ignore_index=True)
+        return frame.sort_values("omega [rad/s]", kind="stable", ignore_index=True)
+
+    def _shift_table(self) -> Any:
+        import pandas as pd
+
+        T = np.array([s.temperature_C for s in self.steps])
+        table: dict[str, Any] = {
+            "T [C]": T,
+            "a_T [-]": [s.a_T.value for s in self.steps],
+            "a_T low [-]": [s.a_T.low for s in self.steps],
+            "a_T high [-]": [s.a_T.high for s in self.steps],
+            "log10 a_T [-]": [np.log10(s.a_T.value) for s in self.steps],
+            "b_T [-]": [s.b_T for s in self.steps],
+            "b_T free [-]": [s.b_T_free.value for s in self.steps],
+            "b_T free low [-]": [s.b_T_free.low for s in self.steps],
+            "b_T free high [-]": [s.b_T_free.high for s in self.steps],
+        }
+        for name, law in self.laws.items():
+            table[f"a_T {name} [-]"] = 10.0 ** law.log10_factor(T)
+        table["residual [-]"] = [s.residual for s in self.steps]
+        table["overlap [decades]"] = [s.overlap_decades for s in self.steps]
+        table["points"] = [len(s.sweep) for s in self.steps]
+        return pd.DataFrame(table)
+
+    def _band_table(self) -> Any:
+        import pandas as pd
+
+        return pd.DataFrame(
+            {
+                "omega low [rad/s]": [b.low for b in self.superposition.bands],
+                "omega high [rad/s]": [b.high for b in self.superposition.bands],
+                "residual [-]": [b.residual for b in self.superposition.bands],
+                "limit [-]": [b.limit for b in self.superposition.bands],
+                "points": [b.points for b in self.superposition.bands],
+            }
+        )
+
+    def phase_angle_table(self) -> Any:
+        """Phase angle against |G*| of every temperature: no shift in frequency enters."""
+        import pandas as pd
+
+        return pd.concat(
+            [
+                pd.DataFrame(
+                    {
+                        "T [C]": s.temperature_C,
+                        "|G*| [Pa]": s.sweep.complex_modulus * s.b_T,
+                        "delta [deg]": np.degrees(np.arctan(s.sweep.tan_delta)),
+                    }
+                )
+                for s in self.steps
+            ],
+            ignore_index=True,
+        )
+
+    # -- words --------------------------------------------------------------------------------
+    def answer(self) -> str:
+        T = [s.temperature_C for s in self.steps]
+        return (
+            f"{len(T)} temperatures from {T[0]:.4g} to {T[-1]:.4g} C make one master curve at "
+            f"{self.reference_C:.4g} C; the shifts follow {_law_text(self.law)}. "
+            f"{self.superposition.text()}"
+        )
+
+    def paragraph(self) -> str:
+        text = self.answer()
+        if "wlf" in self.laws:
+            other = self.laws["wlf" if self.law.kind == "arrhenius" else "arrhenius"]
+            text += (
+                f" The other law, {_law_text(other)}, misses the shifts by "
+                f"{other.residual_decades:.3f} decades (this one by "
+                f"{self.law.residual_decades:.3f})."
+            )
+        treatment = {
+            "none": "Moduli were not shifted vertically.",
+            "rho-T": "Moduli were shifted by density times absolute temperature.",
+            "free": "Vertical factors were fitted freely.",
+        }[self.vertical]
+        return f"{text} {treatment}"
+
+    def cannot_say(self) -> tuple[str, ...]:
+        T = [s.temperature_C for s in self.steps]
+        out = [
+            f"Outside {T[0]:.4g} to {T[-1]:.4g} C the shift law is extrapolated.",
+            "That curves superpose does not prove linear chains, and a failure does not prove "
+            "branching: filler, gel, a second phase or a sample that changes do it too.",
+        ]
+        if len(T) < 4:
+            out.append(f"With {len(T)} temperatures Arrhenius and WLF can hardly be told apart.")
+        return tuple(out)
+
+
+def _law_text(law: LawFit) -> str:
+    def span(q: Uncertain) -> str:
+        return "" if q.low is None or q.high is None else f" ({q.low:.3g} to {q.high:.3g})"
+
+    c = law.constants
+    if law.kind == "arrhenius":
+        e = c["energy_kJ_per_mol"]
+        return f"an Arrhenius law with {e.value:.3g} kJ/mol{span(e)}"
+    return (
+        f"a WLF law with c1 = {c['c1'].value:.3g}{span(c['c1'])} and c2 = {c['c2_K'].value:.4g} "
+        f"K{span(c['c2_K'])}"
+    )
+
+
+def make_master(
+    sweeps: Sequence[Sweep],
+    reference_C: float,
+    *,
+    vertical: str = "none",
+    polymer: Any = None,
+    same_temperature: float = 1.0,
+    noise: float | None = None,
+    members: int = 200,
+    seed: int = 0,
+    level: float = LEVEL,
+) -> Master:
+    """One master curve from sweeps at several temperatures.
+
+    Parameters
+    ----------
+    sweeps : sequence of Sweep
+        Each with its temperature; two temperatures or more.
+    reference_C : float
+        Temperature of the master curve [C]; measured or not.
+    vertical : str
+        "none" (default), "rho-T" (density times absolute temperature; density from `polymer`, else
+        constant) or "free" (fitted).
+    polymer : Polymer, optional
+        For the density of "rho-T".
+    same_temperature : float
+        Steps within this are one temperature [K].
+    noise : float, optional
+        Relative noise [-]; default columns, else estimated and pooled over the sweeps.
+    members : int
+        Perturbed shifts behind the intervals; 0 gives none.
+    seed : int
+    level : float
+        Probability of the intervals.
+
+    Returns
+    -------
+    Master
+        Horizontal factors multiply the frequency, vertical ones the moduli: reduced omega is
+        a_T omega, reduced G is b_T G, both one at the reference.
+
+    Raises
+    ------
+    InputError
+        Fewer than two temperatures, a sweep without one, fewer than four points at one, no overlap
+        between neighbours, an unknown `vertical`.
+    NotConverged
+    """
+    if vertical not in VERTICALS:
+        raise InputError(
+            f"vertical shift {vertical!r} is unknown.", remedy=f"Choose {', '.join(VERTICALS)}."
+        )
+    groups, notes = group_temperatures(sweeps, same_temperature)
+    T = np.array([t for t, _ in groups])
+    parts = [s for _, s in groups]
+    sigma, notes_noise = _pooled_noise(parts, noise)
+    curves = [_curve(p, s) for p, s in zip(parts, sigma, strict=True)]
+    pivot = int(np.argmin(np.abs(T - reference_C)))
+    fixed = _rho_T(T, reference_C, polymer) if vertical == "rho-T" else np.zeros(T.size)
+    names = [f"{t:.4g} C" for t in T]
+    fit = fit_shifts(curves, pivot, vertical=fixed, free_vertical=vertical == "free", names=names)
+    free = (
+        fit
+        if vertical == "free"
+        else fit_shifts(
+            curves, pivot, free_vertical=True, start=fit.log_shift, smoothing=fit.smoothing
+        )
+    )
+    # where the curves do not superpose, the misfit and not the noise limits the shifts
+    scale = max(1.0, fit.chi2_per_point)
+    rng = np.random.default_rng(np.random.SeedSequence(seed))
+    y = fit.log_shift / LN10
+    laws, draws = fit_laws(
+        T, y, fit.covariance * scale / LN10**2, pivot, reference_C,
+        members=members, rng=rng, level=level,
+    )  # fmt: skip
+    law = preferred(laws)
+    to_reference, drawn = _reference_offset(law, float(T[pivot]), members)
+    y = y + to_reference
+    draws = draws + drawn[:, None]
+    reduced = [p.omega * 10.0**a for p, a in zip(parts, y, strict=True)]
+    b = np.exp(fit.log_vertical)
+    verdict, overlap = judge(
+        reduced,
+        fit,
+        sigma,
+        [p.complex_modulus * f for p, f in zip(parts, b, strict=True)],
+        [np.arctan(p.tan_delta) for p in parts],
+    )
+    free_scale = np.sqrt(max(1.0, free.chi2_per_point))
+    steps = tuple(
+        Step(
+            float(T[k]),
+            parts[k],
+            _factor(y[k], draws[:, k], level),
+            float(b[k]),
+            _free_factor(free, k, free_scale, level, members > 0),
+            _rms(fit.residual[k][:, overlap[k]]),
+            _overlap(reduced, k, pivot),
+        )
+        for k in range(T.size)
+    )
+    warnings = merge_cautions(
+        *(p.warnings for p in parts),
+        notes,
+        notes_noise,
+        _cautions(T, reference_C, same_temperature, steps, vertical, fixed, free, free_scale,
+                  verdict, polymer),
+    )  # fmt: skip
+    return Master(float(reference_C), steps, vertical, laws, law, verdict, fit, None, warnings)
+
+
+def group_temperatures(
+    sweeps: Sequence[Sweep], same_temperature: float = 1.0
+) -> tuple[list[tuple[float, Sweep]], list[Caution]]:
+    """Sweeps by temperature, those within `same_temperature` put together.
+
+    Returns
+    -------
+    groups : list of (float, Sweep)
+        Temperature [C], ascending, and the readings.
+    notes : list of Caution
+
+    Raises
+    ------
+    InputError
+    """
+    sweeps = list(sweeps)
+    for s in sweeps:
+        if s.temperature_C is None:
+            raise InputError(
+                f"the sweep {s.label or s.path or ''!r} has no temperature.",
+                path=s.path,
+                remedy="Give a column T [C], or state the temperature when reading the file.",
+            )
+    sweeps.sort(key=lambda s: s.temperature_C)
+    clusters: list[list[Sweep]] = []
+    for s in sweeps:
+        if clusters and s.temperature_C - clusters[-1][0].temperature_C <= same_temperature:
+            clusters[-1].append(s)
+        else:
+            clusters.append([s])
+    if len(clusters) < 2:
+        raise InputError(
+            "a master curve needs sweeps at two temperatures or more, more than "
+            f"{same_temperature:g} K apart.",
+            remedy="Give more sweeps, or invert the single one as it is.",
+        )
+    groups, notes = [], []
+    for cluster in clusters:
+        T = [float(s.temperature_C) for s in cluster]
+        if len(cluster) > 1:
+            shown = ", ".join(f"{t:.4g}" for t in T)
+            text = f"The steps at {shown} C were taken as one temperature, {np.mean(T):.4g} C."
+            notes.append(Caution("temperatures_joined", text))
+        joined = _joined(cluster, float(np.mean(T)))
+        if len(joined) < 4:
+            raise InputError(
+                f"there are only {len(joined)} points at {np.mean(T):.4g} C.",
+                path=cluster[0].path,
+                remedy="Leave this temperature out or measure at least four frequencies.",
+            )
+        groups.append((float(np.mean(T)), joined))
+    return groups, notes
+
+
+def _joined(cluster: list[Sweep], T: float) -> Sweep:
+    if len(cluster) == 1:
+        return cluster[0]
+
+    def together(name: str) -> np.ndarray | None:
+        columns = [getattr(s, name) for s in cluster]
+        return None if any(c is None for c in columns) else np.concatenate(columns)
+
+    sweep = Sweep.from_arrays(
+        *(together(k) for k in ("omega", "storage", "loss")),
+        sigma_storage=together("sigma_storage"),
+        sigma_loss=together("sigma_loss"),
+        rows=together("rows"),
+        temperature_C=T,
+        label=cluster[0].label,
+        path=cluster[0].path,
+    )
+    own = merge_cautions(*(s.warnings for s in cluster))
+    return sweep.with_(warnings=own)
+
+
+def _pooled_noise(
+    parts: list[Sweep], noise: float | None
+) -> tuple[list[np.ndarray], list[Caution]]:
+    """Relative errors of both moduli of each sweep, shape (2, n); estimates are pooled."""
+    weights: list[Weights] = [noise_of(p, noise) for p in parts]
+    estimated = [w for w in weights if w.source == "estimated"]
+    pooled = float(np.sqrt(np.mean([w.typical**2 for w in estimated]))) if estimated else 0.0
+    out, notes = [], []
+    for p, w in zip(parts, weights, strict=True):
+        if w.source != "estimated":
+            out.append(np.vstack([w.sigma_storage, w.sigma_loss]))
+            continue
+        out.append(np.full((2, len(p)), pooled))
+        estimate = w.estimate
+        if estimate is not None and estimate.outliers:
+            rows = [str(int(p.rows[i]) if p.rows is not None else i + 1) for i in estimate.outliers]
+            text = (
+                f"At {p.temperature_C:.4g} C the readings in row {', '.join(rows)} stand out from "
+                "the others; they were kept."
+            )
+            notes.append(Caution("outliers", text))
+    return out, notes
+
+
+def _curve(sweep: Sweep, sigma: np.ndarray) -> Curve:
+    logs = (np.log(x) for x in (sweep.omega, sweep.storage, sweep.loss))
+    return Curve(*(readonly(x) for x in logs), readonly(sigma[0]), readonly(sigma[1]))
+
+
+def _rho_T(T: np.ndarray, reference_C: float, polymer: Any) -> np.ndarray:
+    """ln b_T = ln(rho_0 T_0/(rho T))."""
+    kelvin, kelvin_0 = T + 273.15, reference_C + 273.15
+    ratio = kelvin_0 / kelvin
+    if polymer is not None:
+        ratio = ratio * np.array([polymer.density(reference_C) / polymer.density(t) for t in T])
+    return np.log(ratio)
+
+
+def _reference_offset(law: LawFit, pivot_C: float, members: int) -> tuple[float, np.ndarray]:
+    """log10 a_T of the pivot relative to the reference, by the law; nothing where they agree."""
+    if abs(pivot_C - law.reference_C) < 1e-9:
+        return 0.0, np.zeros(members)
+    drawn = np.array([float(law.log10_factor(pivot_C, c)) for c in law.members])
+    value = float(law.log10_factor(pivot_C))
+    return value, np.where(np.isfinite(drawn), drawn, value) if members else np.zeros(0)
+
+
+def _factor(y: float, draws: np.ndarray, level: float) -> Uncertain:
+    value = float(10.0**y)
+    if draws.size == 0:
+        return Uncertain(value, level=level)
+    return Uncertain.from_samples(10.0**draws, value, level=level)
+
+
+def _free_factor(free: ShiftFit, k: int, scale: float, level: float, wanted: bool) -> Uncertain:
+    value = float(np.exp(free.log_vertical[k]))
+    if not wanted:
+        return Uncertain(value, level=level)
+    half = 1.6449 * free.vertical_sigma[k] * scale
+    return Uncertain(value, value * float(np.exp(-half)), value * float(np.exp(half)), level)
+
+
+def _rms(x: np.ndarray) -> float | None:
+    return float(np.sqrt(np.mean(x**2))) if x.size else None
+
+
+def _overlap(reduced: list[np.ndarray], k: int, pivot: int) -> float:
+    """Decades shared with the neighbour towards the pivot (at the pivot: the better neighbour)."""
+    if k == pivot:
+        near = [j for j in (k - 1, k + 1) if 0 <= j < len(reduced)]
+    else:
+        near = [k + 1 if k < pivot else k - 1]
+    best = 0.0
+    for j in near:
+        low = max(reduced[k][0], reduced[j][0])
+        high = min(reduced[k][-1], reduced[j][-1])
+        best = max(best, float(np.log10(high / low)) if high > low else 0.0)
+    return best
+
+
+def _cautions(
+    T: np.ndarray,
+    reference_C: float,
+    same_temperature: float,
+    steps: tuple[Step, ...],
+    vertical: str,
+    fixed: np.ndarray,
+    free: ShiftFit,
+    free_scale: float,
+    verdict: Superposition,
+    polymer: Any,
+) -> tuple[Caution, ...]:
+    out = []
+    nearest = float(np.min(np.abs(T - reference_C)))
+    if nearest > same_temperature:
+        where = "between" if T[0] < reference_C < T[-1] else "outside"
+        text = (
+            f"{reference_C:g} C was not measured and lies {where} the measured temperatures: the "
+            "curve was taken there by the fitted shift law."
+        )
+        out.append(Caution("reference_not_measured", text))
+    if vertical == "rho-T" and polymer is None:
+        text = "Without a polymer the density was taken as constant: b_T is T_ref/T alone."
+        out.append(Caution("density_assumed", text))
+    if vertical != "free":
+        pivot = int(np.argmin(np.abs(T - reference_C)))
+        off = free.log_vertical - (fixed - fixed[pivot])
+        told = (np.abs(off) > VERTICAL_TOLD) & (np.abs(off) > 4 * free.vertical_sigma * free_scale)
+        if told.any():
+            k = int(np.argmax(np.abs(off) * told))
+            text = (
+                f"Left free, the curves ask for vertical factors that differ from those used, most "
+                f"at {T[k]:.4g} C ({np.exp(free.log_vertical[k]):.3f} against "
+                f"{np.exp(fixed[k] - fixed[pivot]):.3f}). Linear polyethylene and polypropylene "
+                "need none; branched ones do (Mavridis & Shroff, published). A change of gap or filling "
+                "between the steps does it too."
+            )
+            out.append(Caution("vertical_disagrees", text))
+    thin = [s for s in steps if s.overlap_decades < 0.5]
+    if thin:
+        shown = ", ".join(f"{s.temperature_C:.4g} C ({s.overlap_decades:.2f})" for s in thin)
+        text = (
+            f"Less than half a decade of overlap with the neighbour [decades]: {shown}. The shifts "
+            "there rest on few points; a temperature in between would help."
+        )
+        out.append(Caution("thin_overlap", text))
+    if not verdict.passed:
+        out.append(Caution("superposition_failed", verdict.text()))
+    return tuple(out)
