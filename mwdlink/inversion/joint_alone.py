@@ -2,20 +2,23 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.linalg import cho_factor, cho_solve
 from scipy.linalg.lapack import dposv
 
 from mwdlink.inversion.joint_data import GpcRows
+from mwdlink.inversion.joint_response import lagrange_rows
 from mwdlink.inversion.roughness import roughness
 
 # from almost log-normal to as free as a continuation may be
 SCAN = np.geomspace(3.0, 3e-3, 4)
-# beyond the last row the curve has no data: it must not open upwards there. One row of the prior
-# per node asks for a fall of its slope of at least this much a decade (a log-normal of dispersity
-# 20 falls by 1.8)
-LEAST_CURVATURE, CURVATURE_SPREAD = -3.0, 2.0
+# beyond the last row the curve has no data and must not open upwards: its slope has to fall by at
+# least this much a decade (a log-normal of dispersity 20 falls by 1.8)
+LEAST_FALL = 1.5
+FALL_SPREAD = 1.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -25,31 +28,60 @@ class AloneFit:
     Attributes
     ----------
     u : ndarray of shape (n,)
-        ln density on the nodes, up to a constant.
+        ln weight of the nodes, sum of exp(u) 1.
     smoothing : float
-    objective, chi2, log_evidence : float
+    chi2, log_evidence : float
+    slope : ndarray of shape (m, n)
+        Derivatives of the scaled residuals.
+    rows : ndarray of shape (n_p, n)
+        Rows of the prior.
+    hessian : ndarray of shape (n, n)
     """
 
     u: np.ndarray
     smoothing: float
-    objective: float
     chi2: float
     log_evidence: float
+    slope: np.ndarray
+    rows: np.ndarray
+    hessian: np.ndarray
 
     @property
     def w(self) -> np.ndarray:
         """Weights on the nodes, sum 1."""
-        e = np.exp(self.u - self.u.max())
-        return e / e.sum()
+        return np.exp(self.u)
+
+    @property
+    def prior_rows(self) -> int:
+        """Number of rows of the prior."""
+        return int(self.rows.shape[0])
+
+    def drawn(self, pushes: Sequence[tuple[np.ndarray, np.ndarray]]) -> np.ndarray:
+        """Weights of the curve when data and prior err by given numbers of standard deviations.
+
+        To first order in u, which is all the continuation needs: it is linear in u.
+
+        Parameters
+        ----------
+        pushes : sequence of (ndarray of shape (m,), ndarray of shape (n_p,))
+
+        Returns
+        -------
+        ndarray of shape (len(pushes), n)
+        """
+        n = self.u.size
+        if not pushes:
+            return np.zeros((0, n))
+        data = np.array([p[0] for p in pushes])
+        prior = np.array([p[1] for p in pushes])
+        factor = cho_factor(self.hessian + 1e-9 * np.eye(n))
+        u = self.u + cho_solve(factor, (data @ self.slope + prior @ self.rows).T).T
+        e = np.exp(u - u.max(axis=1, keepdims=True))
+        return e / e.sum(axis=1, keepdims=True)
 
 
 def fit_alone(
-    x: np.ndarray,
-    gpc: GpcRows,
-    smoothing: float,
-    u0: np.ndarray | None = None,
-    rng: np.random.Generator | None = None,
-    data: np.ndarray | None = None,
+    x: np.ndarray, gpc: GpcRows, smoothing: float, u0: np.ndarray | None = None
 ) -> AloneFit:
     """Fit the GPC's rows alone on the joint nodes.
 
@@ -60,11 +92,7 @@ def fit_alone(
     gpc : GpcRows
     smoothing : float
     u0 : ndarray of shape (n,), optional
-        Start; default the GPC's own moments.
-    rng : Generator, optional
-        Perturbs the prior.
-    data : ndarray of shape (m,), optional
-        Perturbed rows in place of the measured ones.
+        Start; default a log-normal of the GPC's own moments.
     """
     n = x.size
     h = float(x[1] - x[0])
@@ -72,25 +100,27 @@ def fit_alone(
     beyond = np.flatnonzero(x[1:-1] > gpc.position[-1] - 2 * h) + 1
     bend = np.zeros((beyond.size, n))
     k = np.arange(beyond.size)
-    bend[k, beyond - 1], bend[k, beyond], bend[k, beyond + 1] = 1.0, -2.0, 1.0
-    bend /= h * h * CURVATURE_SPREAD * np.sqrt(max(beyond.size, 1))
+    scale = FALL_SPREAD * np.sqrt(max(beyond.size, 1))
+    for shift, number in ((-1, 1.0), (0, -2.0), (1, 1.0)):
+        bend[k, beyond + shift] = number / (h * h * scale)
+    limit = -LEAST_FALL / scale
     rows = np.vstack([np.sqrt(smoothing) * base.third[:, :n], base.weak[:, :n]])
     target = np.concatenate([np.zeros(n - 3), base.weak_centre])
-    if rng is not None:
-        target = target + rng.standard_normal(target.size)
     precision = rows.T @ rows
-    y = gpc.density if data is None else data
-    u = first_guess(x, gpc) if u0 is None else np.array(u0)
+    reader = lagrange_rows(x, gpc.position)[0]
 
     def cost(v: np.ndarray) -> tuple[float, np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
-        d, slope, _, _ = gpc.model(x, v, 0.0, 0.0)
-        r = (d - y) / gpc.sigma
+        value = reader @ v
+        d = np.exp(value - value.max())
+        d /= d @ gpc.step
+        r = (d - gpc.density) / gpc.sigma
+        slope = (d / gpc.sigma)[:, None] * (reader - (d * gpc.step) @ reader)
         q = rows @ v - target
         # one-sided: only a curve that bends upwards is pulled
-        limit = LEAST_CURVATURE / (CURVATURE_SPREAD * np.sqrt(max(beyond.size, 1)))
         b = np.maximum(bend @ v - limit, 0.0)
-        return float(r @ r + q @ q + b @ b), r, slope / gpc.sigma[:, None], q, b
+        return float(r @ r + q @ q + b @ b), r, slope, q, b
 
+    u = first_guess(x, gpc) if u0 is None else np.array(u0)
     value, r, slope, q, b = cost(u)
     damping = 1e-3
     for _ in range(60):
@@ -126,7 +156,8 @@ def fit_alone(
     evidence = -0.5 * value + 0.5 * (
         np.linalg.slogdet(precision + floor)[1] - np.linalg.slogdet(hessian + floor)[1]
     )
-    return AloneFit(u, smoothing, value, float(r @ r), float(evidence))
+    u = u - (u.max() + np.log(np.sum(np.exp(u - u.max()))))
+    return AloneFit(u, smoothing, float(r @ r), float(evidence), slope, rows, hessian)
 
 
 def first_guess(x: np.ndarray, gpc: GpcRows) -> np.ndarray:
@@ -135,16 +166,15 @@ def first_guess(x: np.ndarray, gpc: GpcRows) -> np.ndarray:
     share = share / share.sum()
     mean = float(share @ gpc.position)
     width = float(np.sqrt(max(share @ (gpc.position - mean) ** 2, 1e-4)))
-    return -0.5 * ((x - mean) / width) ** 2 - np.log(np.sum(np.exp(-0.5 * ((x - mean) / width) ** 2)))
+    u = -0.5 * ((x - mean) / width) ** 2
+    return np.asarray(u - np.log(np.sum(np.exp(u))))
 
 
 def smooth_curve(x: np.ndarray, gpc: GpcRows) -> AloneFit:
     """The GPC's curve at the smoothing of highest evidence."""
-    best = None
-    u = None
-    for smoothing in SCAN:
-        fit = fit_alone(x, gpc, float(smoothing), u)
-        u = fit.u
-        if best is None or fit.log_evidence > best.log_evidence:
+    fit = best = fit_alone(x, gpc, float(SCAN[0]))
+    for smoothing in SCAN[1:]:
+        fit = fit_alone(x, gpc, float(smoothing), fit.u)
+        if fit.log_evidence > best.log_evidence:
             best = fit
-    return best  # type: ignore[return-value]
+    return best

@@ -10,7 +10,7 @@ from mwdlink.chains.distribution import Distribution
 from mwdlink.chains.melt import Melt
 from mwdlink.inversion import joint
 from mwdlink.inversion.joint import JointFit, JointProblem, JointScan, Priors
-from mwdlink.inversion.joint_alone import AloneFit, fit_alone, smooth_curve
+from mwdlink.inversion.joint_alone import AloneFit, smooth_curve
 from mwdlink.inversion.joint_data import GpcRows, gpc_rows, supported_range
 from mwdlink.inversion.joint_response import sweep_response
 from mwdlink.inversion.window import Window, find_window
@@ -48,6 +48,8 @@ class Setting:
         log10 M of the nodes.
     priors : Priors
     rouse : bool
+    windows : dict of str to Window
+        What the sweep sees, by kernel.
     """
 
     omega: np.ndarray
@@ -59,6 +61,7 @@ class Setting:
     x: np.ndarray
     priors: Priors
     rouse: bool
+    windows: dict[str, Window]
 
     @property
     def nodes(self) -> np.ndarray:
@@ -76,7 +79,7 @@ class Setting:
     def problem(self, kernel: str) -> tuple[JointProblem, Window]:
         """The joint problem of one kernel."""
         model = Model(kernel, float(self.priors.centre[joint.EXPONENT]), self.rouse)
-        window = find_window(self.omega, self.melt, model)
+        window = self.windows[kernel]
         last = float(relaxation_times(self.nodes[-1:], self.melt, model)[0])
         window = replace(window, top_time=10.0 * last)
         response = sweep_response(
@@ -106,9 +109,8 @@ def settle(
     exponent : (float, float)
         Centre and spread of the exponent's prior; a spread of 0 fixes it.
     """
-    reach = max(
-        float(find_window(omega, melt, Model(k, exponent[0], rouse)).nodes[-1]) for k in kernels
-    )
+    windows = {k: find_window(omega, melt, Model(k, exponent[0], rouse)) for k in kernels}
+    reach = max(float(v.nodes[-1]) for v in windows.values())
     low, high = supported_range(distribution)
     if trust_range is not None:
         low, high = max(low, trust_range[0]), min(high, trust_range[1])
@@ -137,7 +139,8 @@ def settle(
             BASELINE_SPREAD,
         ]
     )
-    return Setting(omega, storage, loss, sigma, melt, rows, x, Priors(centre, spread), rouse)
+    priors = Priors(centre, spread)
+    return Setting(omega, storage, loss, sigma, melt, rows, x, priors, rouse, windows)
 
 
 @dataclass(frozen=True, eq=False)
@@ -211,44 +214,33 @@ def _draw(
 ) -> Joint:
     held = [k for k in ranked if k.admissible]
     seeds = np.random.SeedSequence(seed).spawn(members)
-    w, other, nuisance, kernel, smooth = [], [], [], [], []
-    lost = 0
+    fits, pushes, kernel, smooth = [], [], [], []
     for i, child in enumerate(seeds):
         rng = np.random.default_rng(child)
         j = i % len(held)
         chosen = held[j].scan
         k = int(rng.choice(len(chosen.fits), p=chosen.weights))
         noise = joint.draw_noise(chosen.problem, rng)
-        start = chosen.fits[k]
-        fit = joint.minimise(chosen.problem, start.z, start.smoothing, noise, tolerance=0.05)
-        if not fit.converged:
-            lost += 1
-            continue
-        rows = noise.data[chosen.problem.data.size : -1]
-        again = fit_alone(
-            setting.x,
-            setting.gpc,
-            alone.smoothing,
-            alone.u,
-            rng,
-            setting.gpc.density + setting.gpc.sigma * rows,
-        )
-        w.append(fit.w)
-        other.append(again.w)
-        nuisance.append(fit.nuisance)
-        kernel.append(j)
-        smooth.append(k)
+        first = chosen.fits[k]
+        fit = joint.minimise(chosen.problem, first.z, first.smoothing, noise, tolerance=0.05)
+        own = rng.standard_normal(alone.prior_rows)
+        if fit.converged:
+            fits.append(fit)
+            # the same error of the GPC pushes its own curve
+            pushes.append((noise.data[chosen.problem.data.size : -1], own))
+            kernel.append(j)
+            smooth.append(k)
     n = setting.x.size
     return Joint(
         setting,
         alone,
         ranked,
-        np.array(w).reshape(-1, n + 1),
-        np.array(other).reshape(-1, n),
-        np.array(nuisance).reshape(-1, len(joint.NUISANCE)),
+        np.array([f.w for f in fits]).reshape(-1, n + 1),
+        alone.drawn(pushes),
+        np.array([f.nuisance for f in fits]).reshape(-1, len(joint.NUISANCE)),
         np.array(kernel, dtype=int),
         np.array(smooth, dtype=int),
-        lost,
+        members - len(fits),
     )
 
 

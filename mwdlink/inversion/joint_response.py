@@ -9,6 +9,7 @@ polynomial. Both keep exact derivatives and cost nothing beside the fit itself.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
@@ -44,32 +45,26 @@ def lagrange_rows(x: np.ndarray, at: np.ndarray) -> tuple[np.ndarray, np.ndarray
         Values and derivatives with respect to `at`.
     """
     h = float(x[1] - x[0])
-    i = np.clip(np.floor((at - x[0]) / h).astype(int) - 1, 0, x.size - 4)
-    s = (at - x[0]) / h - i
-    nodes = np.arange(4.0)
+    place = (at - x[0]) / h
+    i = np.minimum(np.maximum(np.floor(place).astype(int) - 1, 0), x.size - 4)
+    # distances to the four nodes, in steps
+    a = place - i
+    b, c, d = a - 1.0, a - 2.0, a - 3.0
+    ab, cd = a * b, c * d
+    column = i[:, None] + np.arange(4)
+    row = np.arange(at.size)[:, None]
     rows = np.zeros((at.size, x.size))
     slope = np.zeros((at.size, x.size))
-    k = np.arange(at.size)
-    for j in range(4):
-        others = [m for m in range(4) if m != j]
-        bottom = np.prod([nodes[j] - nodes[m] for m in others])
-        a, b, c = (s - nodes[m] for m in others)
-        rows[k, i + j] = a * b * c / bottom
-        slope[k, i + j] = (a * b + a * c + b * c) / bottom / h
+    rows[row, column] = np.column_stack([-b * cd / 6.0, a * cd / 2.0, -ab * d / 2.0, ab * c / 6.0])
+    slope[row, column] = np.column_stack(
+        [
+            -(cd + b * d + b * c) / (6.0 * h),
+            (cd + a * d + a * c) / (2.0 * h),
+            -(b * d + a * d + ab) / (2.0 * h),
+            (b * c + a * c + ab) / (6.0 * h),
+        ]
+    )
     return rows, slope
-
-
-def polynomial_rows(nodes: np.ndarray, at: float) -> tuple[np.ndarray, np.ndarray]:
-    """Lagrange's weights of a polynomial through all nodes at one place, and their slopes."""
-    value, slope = np.ones(nodes.size), np.zeros(nodes.size)
-    for j in range(nodes.size):
-        others = np.delete(nodes, j)
-        factors = (at - others) / (nodes[j] - others)
-        value[j] = np.prod(factors)
-        slope[j] = sum(
-            np.prod(np.delete(factors, m)) / (nodes[j] - others[m]) for m in range(others.size)
-        )
-    return value, slope
 
 
 @dataclass(frozen=True, eq=False)
@@ -101,6 +96,12 @@ class Response:
     linear: np.ndarray
     floor: float
 
+    @cached_property
+    def _coefficients(self) -> np.ndarray:
+        """Polynomial through all exponents: powers of (beta - first) to weights of the tables."""
+        steps = self.exponents - self.exponents[0]
+        return np.linalg.inv(np.vander(steps, increasing=True))
+
     @property
     def exponent_limits(self) -> tuple[float, float]:
         """Exponents within which the tables may be read."""
@@ -120,8 +121,10 @@ class Response:
         d_weight : ndarray of shape (2 n_w, n + 1)
         d_factor, d_exponent : ndarray of shape (2 n_w,)
         """
-        share, d_share = polynomial_rows(self.exponents, exponent)
-        k = np.tensordot(share, self.tables, axes=1)
+        power = (exponent - self.exponents[0]) ** np.arange(self.exponents.size)
+        share = power @ self._coefficients
+        d_share = (np.arange(1, power.size) * power[:-1]) @ self._coefficients[1:]
+        k = (share @ self.tables.reshape(share.size, -1)).reshape(self.tables.shape[1:])
         s = np.maximum(k @ w, 1e-30)
         ds = (self.tables @ w).T @ d_share
         p = s ** (exponent - 1.0)
