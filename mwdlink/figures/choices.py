@@ -232,7 +232,6 @@ def plot_budget(budgets: Mapping[str, Mapping[str, float]], *, ax: Axes | None =
     own = ax is None
     ax = style.new_axes(ax, height=30.0 + 8.0 * max(len(budgets), 2))
     parts = [p for p in BUDGET_WORDS if any((b.get(p) or 0) > 0 for b in budgets.values())]
-    fills = ("#7db8da", "#f0b37e", "#7fc4b0", "#d9a9ca", "#b8bec6", "#e8d98a", "#7d8794")
     lefts = np.zeros(len(budgets))
     for i, part in enumerate(parts):
         share = np.array([100.0 * float(b.get(part) or 0.0) for b in budgets.values()])
@@ -241,7 +240,7 @@ def plot_budget(budgets: Mapping[str, Mapping[str, float]], *, ax: Axes | None =
             share,
             left=lefts,
             height=0.62,
-            color=fills[i % len(fills)],
+            color=style.FILLS[i % len(style.FILLS)],
             hatch=HATCHES[i % len(HATCHES)],
             edgecolor=style.INK,
             linewidth=0.6,

@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 from mwdlink.figures import style
+from mwdlink.files.results import csv_text
 
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
@@ -45,4 +46,4 @@ class Picture:
 
     def csv(self) -> bytes:
         """The numbers behind the picture, as a table that can be read again."""
-        return self.data.to_csv(index=False, lineterminator="\n").encode("utf-8")
+        return csv_text(self.data).encode("utf-8")

@@ -42,6 +42,9 @@ BLUE = "#0072b2"
 VERMILION = "#d55e00"
 GREEN = "#008a65"
 PURPLE = "#a5528c"
+HATCH = "#b9bfc7"
+FILLS = ("#7db8da", "#f0b37e", "#7fc4b0", "#d9a9ca", "#b8bec6", "#e8d98a", "#7d8794")
+"""Fills of bars; each has its own hatch as well."""
 SERIES = (BLUE, VERMILION, GREEN, PURPLE, INK)
 DASHES: tuple[Any, ...] = (
     "-",
@@ -89,7 +92,7 @@ _RC: dict[str, Any] = {
     "legend.handlelength": 2.4,
     "legend.columnspacing": 1.4,
     "legend.borderaxespad": 0.2,
-    "hatch.color": "#b9bfc7",
+    "hatch.color": HATCH,
     "hatch.linewidth": 0.6,
     "svg.fonttype": "none",
     "svg.hashsalt": "mwdlink",

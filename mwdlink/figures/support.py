@@ -36,7 +36,12 @@ def plot_explanations(explanations: Sequence[Mapping[str, Any]], *, ax: Axes | N
             )
             continue
         ax.barh(
-            [row], [scale * share], height=0.6, color="#7db8da", edgecolor=style.INK, linewidth=0.7
+            [row],
+            [scale * share],
+            height=0.6,
+            color=style.FILLS[0],
+            edgecolor=style.INK,
+            linewidth=0.7,
         )
         ax.text(scale * share, row, f" {number(scale * share, 2)}", va="center", fontsize=8.0)
     ax.set_yticks(range(len(explanations)), [str(e.get("name")) for e in explanations])

@@ -378,7 +378,17 @@ def live_quadratic() -> dict[str, Any]:
             "second": {"storage": second[0].tolist(), "loss": second[1].tolist()},
             "cross": {"storage": cross[0].tolist(), "loss": cross[1].tolist()},
         },
-        "band": {"storage": 0.12, "loss": 0.09},
+        "band": {
+            "fraction": [0.0, 0.5, 1.0],
+            "storage": {
+                "low": [[0.95] * 41, [0.8] * 41, [0.95] * 41],
+                "high": [[1.05] * 41, [1.25] * 41, [1.05] * 41],
+            },
+            "viscosity": {
+                "low": [[0.96] * 41, [0.85] * 41, [0.96] * 41],
+                "high": [[1.04] * 41, [1.18] * 41, [1.04] * 41],
+            },
+        },
         "properties": [
             {
                 "key": "eta0_Pa_s",
@@ -389,6 +399,47 @@ def live_quadratic() -> dict[str, Any]:
                 "low": table["eta0 low [Pa s]"].tolist(),
                 "high": table["eta0 high [Pa s]"].tolist(),
             },
+            {
+                "key": "zero",
+                "label": "zero-shear viscosity, exact",
+                "unit": "Pa s",
+                "kind": "quadratic",
+                "first": 9.0e4,
+                "second": 1.0e3,
+                "cross": 2.0e4,
+                "band": {"fraction": [0, 1], "low": [0.9, 0.9], "high": [1.1, 1.1]},
+            },
+            {
+                "key": "Je0_per_Pa",
+                "label": "steady compliance",
+                "unit": "1/Pa",
+                "kind": "compliance",
+                "first": 2.7e5,
+                "second": 30.0,
+                "cross": 6.0e4,
+                "eta0": {"first": 9.0e4, "second": 1.0e3, "cross": 2.0e4},
+            },
+            {
+                "key": "eta_1",
+                "label": "viscosity at 1 rad/s",
+                "unit": "Pa s",
+                "kind": "viscosity",
+                "omega": 1.0,
+            },
+            {
+                "key": "tan_1",
+                "label": "tan δ at 1 rad/s",
+                "unit": "",
+                "kind": "tan_delta",
+                "omega": 1.0,
+            },
+            {
+                "key": "wc",
+                "label": "crossover frequency",
+                "unit": "rad/s",
+                "kind": "crossover_omega",
+            },
+            {"key": "gc", "label": "crossover modulus", "unit": "Pa", "kind": "crossover_G"},
             {
                 "key": "MFR_g_per_10min@2.16",
                 "label": "melt flow rate, 2.16 kg",
