@@ -579,8 +579,8 @@ def _cautions(
                 f"Left free, the curves ask for vertical factors that differ from those used, most "
                 f"at {T[k]:.4g} C ({np.exp(free.log_vertical[k]):.3f} against "
                 f"{np.exp(fixed[k] - fixed[pivot]):.3f}). Linear polyethylene and polypropylene "
-                "need none; branched ones do (Mavridis & Shroff, published). A change of gap or filling "
-                "between the steps does it too."
+                "need none; branched ones do (Mavridis & Shroff, published). A change of gap or "
+                "filling between the steps does it too."
             )
             out.append(Caution("vertical_disagrees", text))
     thin = [s for s in steps if s.overlap_decades < 0.5]

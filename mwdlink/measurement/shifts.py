@@ -250,31 +250,37 @@ def pair_shift(a: Curve, b: Curve) -> float | None:
     float or None
         None where the curves nowhere lie on each other over at least 0.15 decades.
     """
-    best: tuple[float, float] | None = None
     span = (a.log_omega[0] - b.log_omega[-1], a.log_omega[-1] - b.log_omega[0])
     # a reading counts within three of these; interpolation between sparse points adds a little
     size = 2.0 * float(np.median(np.concatenate([a.sigma_storage, b.sigma_loss]))) + 0.02
-    for shift in np.arange(*span, 0.02 * LN10):
+    coarse, fine = 0.05 * LN10, 0.01 * LN10
+    best = _best_shift(a, b, np.arange(*span, coarse), 2.0 * size)
+    if best is None:
+        return None
+    near = best + np.arange(-coarse, coarse + fine, fine)
+    return _best_shift(a, b, near, size) or best
+
+
+def _best_shift(a: Curve, b: Curve, shifts: np.ndarray, size: float) -> float | None:
+    """The shift under which most readings lie on the other curve; None where hardly any do."""
+    best: tuple[float, float] | None = None
+    for shift in shifts:
         score, count = 0.0, 0
-        for near, far, move in ((a, b, shift), (b, a, -shift)):
-            x = far.log_omega + move
-            inside = (x >= near.log_omega[0]) & (x <= near.log_omega[-1])
-            if not inside.any():
-                continue
-            count += int(inside.sum())
-            for y, z in ((near.log_storage, far.log_storage), (near.log_loss, far.log_loss)):
-                d = (np.interp(x[inside], near.log_omega, y) - z[inside]) / size
-                score += float(np.sum(np.minimum(d * d, 9.0) - 9.0))
         overlap = min(a.log_omega[-1], b.log_omega[-1] + shift) - max(
             a.log_omega[0], b.log_omega[0] + shift
         )
-        if count < 3 or overlap < LEAST_OVERLAP * LN10:
+        if overlap < LEAST_OVERLAP * LN10:
             continue
-        if best is None or score < best[0]:
+        for near, far, move in ((a, b, shift), (b, a, -shift)):
+            x = far.log_omega + move
+            first, last = np.searchsorted(x, [near.log_omega[0], near.log_omega[-1]])
+            count += int(last - first)
+            for y, z in ((near.log_storage, far.log_storage), (near.log_loss, far.log_loss)):
+                d = (np.interp(x[first:last], near.log_omega, y) - z[first:last]) / size
+                score += float(np.minimum(d * d, 9.0).sum()) - 9.0 * d.size
+        if count >= 3 and (best is None or score < best[0]):
             best = (score, float(shift))
-    if best is None or best[0] > -9.0:
-        return None
-    return best[1]
+    return None if best is None or best[0] > -9.0 else best[1]
 
 
 def fit_shifts(
