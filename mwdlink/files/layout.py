@@ -131,12 +131,13 @@ def build_blocks(
         raise InputError(
             "no table was found: no row of column names with rows of numbers below it.",
             path=path,
-            row=texts[0].line if texts else None,
+            row=texts[0].line if texts else min(comments, default=1),
             remedy="The first row of the table must name its columns, as in: "
             "omega [rad/s], G' [Pa], G'' [Pa].",
         )
     drafts: list[_Draft] = []
     starts = sorted(headers)
+    _refuse_rows_above(rows, kinds, starts[0], path)
     begin = 0
     for k, start in enumerate(starts):
         end = starts[k + 1] if k + 1 < len(starts) else len(rows)
@@ -153,6 +154,30 @@ def build_blocks(
         raise InputError("there is no row of data below the header.", path=path, row=row,
                          remedy="Export the table again.")  # fmt: skip
     return blocks
+
+
+def _refuse_rows_above(
+    rows: Sequence[Row | None], kinds: Sequence[str], start: int, path: str | None
+) -> None:
+    """Rows like those of the table above its header: the order of the lines is broken."""
+    below = _next_data(rows, kinds, start)
+    pattern = None if below is None else _pattern(rows[below])
+    if pattern is None or pattern.count("n") < 2:
+        return
+    lost = [row.line for row in rows[:start] if row is not None and _pattern(row) == pattern]
+    if lost:
+        raise InputError(
+            f"there are rows of numbers above the header ({len(lost)} of them).",
+            path=path,
+            row=lost[0],
+            remedy="Put the header above the numbers, or leave these rows out with --omit.",
+        )
+
+
+def _pattern(row: Row | None) -> str:
+    """What stands in each cell: a number, a text, nothing."""
+    cells = [] if row is None else _trim(row.cells)
+    return "".join(" " if not c else "n" if looks_numeric(c) else "t" for c in cells)
 
 
 def _kind(row: Row | None) -> str:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import re
 from collections import Counter
 from collections.abc import Callable, Iterable, Sequence
-from dataclasses import dataclass
+from typing import NamedTuple
 
 from mwdlink.errors import InputError
 from mwdlink.files.headers import count_known
@@ -19,8 +19,7 @@ _SAMPLE = 600
 _MAX_QUOTED_LINES = 8
 
 
-@dataclass(frozen=True)
-class Row:
+class Row(NamedTuple):
     """One line of a table.
 
     Attributes
