@@ -194,9 +194,11 @@ def describe_property(
         return ""
     good = np.flatnonzero(np.isfinite(x) & np.isfinite(y))
     first, last = good[np.argmin(x[good])], good[np.argmax(x[good])]
-    name = upper_first(property_words(header))
-    text = f"{name} against the fraction: {number(y[first])} at {percent(x[first])}, {number(y[last])} at {percent(x[last])}"
-    text += f" ({unit(header)})." if unit(header) not in {"", "-"} else "."
+    of = f" {unit(header)}" if unit(header) not in {"", "-"} else ""
+    text = (
+        f"{number(y[first])}{of} at {percent(x[first])}, {number(y[last])}{of} at "
+        f"{percent(x[last])}."
+    )
     wanted = value_of((target or {}).get("wanted"))
     if wanted is not None:
         met = [
@@ -300,7 +302,7 @@ def describe_recovered(blends: Sequence[Mapping[str, Any]]) -> str:
         parts.append(
             f"{entry.get('name')}: {percent(x)} {component} weighed, {percent(y)} recovered, {verdict}"
         )
-    return f"Fractions recovered from the rheology. {'; '.join(parts)}." if parts else ""
+    return f"{'; '.join(parts)}." if parts else ""
 
 
 @style.styled
@@ -396,7 +398,7 @@ def describe_blend_residuals(table: DataFrame) -> str:
             parts.append(
                 f"{spoken}: mean {number(np.nanmean(bias), 2)}, largest {number(np.nanmax(np.abs(bias)), 2)} decades"
             )
-    return f"Predicted against measured blends, by frequency; {'; '.join(parts)}." if parts else ""
+    return f"{upper_first('; '.join(parts))}." if parts else ""
 
 
 def rule_label(rule: Mapping[str, Any]) -> str:
@@ -440,7 +442,7 @@ def describe_rules(rules: Sequence[Mapping[str, Any]]) -> str:
     best = min(shown, key=lambda r: value_of(r["scatter_decades"]) or 0.0)
     worst = max(shown, key=lambda r: value_of(r["scatter_decades"]) or 0.0)
     return (
-        f"Rules ranked by the scatter on a blend left out: least with {rule_label(best)} "
+        f"Scatter on a blend left out: least with {rule_label(best)} "
         f"({number(value_of(best['scatter_decades']), 2)} decades), most with {rule_label(worst)} "
         f"({number(value_of(worst['scatter_decades']), 2)} decades)."
     )

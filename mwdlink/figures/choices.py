@@ -9,7 +9,7 @@ import numpy as np
 
 from mwdlink.figures import shading, style
 from mwdlink.figures.columns import Absent, find, numbers, positive
-from mwdlink.figures.words import interval_of, number, short, value_of, with_interval
+from mwdlink.figures.words import interval_of, number, short, upper_first, value_of, with_interval
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -214,7 +214,7 @@ def describe_kernels(
         for k in kernels
         if value_of(k.get(key)) is not None
     ]
-    return f"The answer by each kernel: {'; '.join(parts)}." if parts else ""
+    return f"{upper_first('; '.join(parts))}." if parts else ""
 
 
 HATCHES = ("", "////", "....", "xxxx", "\\\\\\\\", "++++", "----")
@@ -275,4 +275,4 @@ def describe_budget(budgets: Mapping[str, Mapping[str, float]]) -> str:
         parts.append(
             f"{name} mostly {BUDGET_WORDS.get(largest, largest)} ({100 * float(shares[largest] or 0):.0f} %)"
         )
-    return f"What the intervals are made of: {'; '.join(parts)}." if parts else ""
+    return f"Shares of the variance: {'; '.join(parts)}." if parts else ""

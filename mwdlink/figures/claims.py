@@ -184,7 +184,7 @@ def describe_claims(claims: Sequence[Mapping[str, Any]]) -> str:
         )
     parts = [f"{verdict}: {listed(names)}" for verdict, names in groups.items()]
     return (
-        f"Claims of the sheet against what the others lead one to expect. {upper_first('; '.join(parts))}."
+        f"Each against what the others lead one to expect. {upper_first('; '.join(parts))}."
         if parts
         else ""
     )

@@ -10,7 +10,7 @@ import numpy as np
 from mwdlink.figures import shading, style
 from mwdlink.figures.columns import Absent, band, beginning, numbers, positive
 from mwdlink.figures.moduli import measured, modelled
-from mwdlink.figures.words import interval_of, number, short, value_of, with_interval
+from mwdlink.figures.words import interval_of, number, short, upper_first, value_of, with_interval
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -80,7 +80,7 @@ def describe_relaxation(table: DataFrame) -> str:
         return ""
     good = positive(time, modulus)
     t, g = time[good], modulus[good]
-    text = f"Relaxation modulus falling from {number(g[0])} Pa at {short(t[0])} s to {number(g[-1])} Pa at {short(t[-1])} s."
+    text = f"Falling from {number(g[0])} Pa at {short(t[0])} s to {number(g[-1])} Pa at {short(t[-1])} s."
     hundredth = np.flatnonzero(g < 0.01 * g[0])
     if hundredth.size:
         text += f" It is below a hundredth of its first value after {number(t[hundredth[0]])} s."
@@ -199,11 +199,7 @@ def describe_rest(rest: Sequence[Mapping[str, Any]]) -> str:
         for r in rest
         if value_of(r.get("time_s")) is not None and r.get("residual") is not None
     ]
-    return (
-        f"Decay of the stress while waiting: {'; '.join(parts)}."
-        if parts
-        else "Decay of the stress while waiting."
-    )
+    return f"{upper_first('; '.join(parts))}." if parts else "Two curves of decay."
 
 
 def has_rest_columns(table: DataFrame) -> bool:

@@ -160,10 +160,7 @@ def describe_distribution(
     if mass is None or density is None:
         return ""
     peak = int(np.nanargmax(density))
-    text = (
-        f"Weight distribution over molar mass, highest at {short(mass[peak])} g/mol "
-        f"({number(density[peak], 2)} per decade)."
-    )
+    text = f"Highest at {short(mass[peak])} g/mol ({number(density[peak], 2)} per decade)."
     if averages:
         said = [
             f"{name} {with_interval(averages[key], 'g/mol')}"

@@ -132,7 +132,7 @@ def describe_flow(table: DataFrame, eta0: float | None = None) -> str:
     good = positive(rate, eta)
     x, y = rate[good], eta[good]
     text = (
-        f"Viscosity falling from {number(y[0])} Pa s at {short(x[0])} per second to {number(y[-1])} Pa s at "
+        f"Falling from {number(y[0])} Pa s at {short(x[0])} per second to {number(y[-1])} Pa s at "
         f"{short(x[-1])} per second."
     )
     return f"{text} Zero-shear viscosity {number(eta0)} Pa s." if eta0 else text

@@ -6,7 +6,7 @@ can be drawn as well. What is absent is left out without a word.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
 import pandas as pd
@@ -27,7 +27,7 @@ from mwdlink.figures import (
 )
 from mwdlink.figures.columns import Absent, bare, find, numbers
 from mwdlink.figures.picture import Picture
-from mwdlink.figures.words import short, upper_first, value_of
+from mwdlink.figures.words import short, split_unit, upper_first, value_of
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -85,6 +85,38 @@ def level_of(record: Record) -> float:
                 yield from levels(v)
 
     return next(levels(record), 0.9)
+
+
+def table_of(entries: Sequence[Mapping[str, Any]]) -> pd.DataFrame:
+    """A list of JSON objects as a table with units in its headers, intervals in columns beside."""
+    rows = []
+    for entry in entries:
+        row: dict[str, Any] = {}
+        for key, x in entry.items():
+            name, unit = split_unit(str(key))
+            name, of = name.replace("_", " "), f" [{unit}]" if unit else ""
+            if isinstance(x, Mapping) and "value" in x:
+                row |= {
+                    f"{name}{of}": x["value"],
+                    f"{name} low{of}": x.get("low"),
+                    f"{name} high{of}": x.get("high"),
+                }
+                if x.get("status"):
+                    row[f"{name} status"] = x["status"]
+            elif isinstance(x, Mapping):
+                for k, v in x.items():
+                    if isinstance(v, Mapping):
+                        row |= {
+                            f"{name} {k}": v.get("value"),
+                            f"{name} {k} low": v.get("low"),
+                            f"{name} {k} high": v.get("high"),
+                        }
+                    else:
+                        row[f"{name} {k}"] = v
+            else:
+                row[f"{name}{of}"] = x
+        rows.append(row)
+    return pd.DataFrame(rows)
 
 
 def collect_budgets(record: Record) -> dict[str, dict[str, float]]:
@@ -241,7 +273,7 @@ def _choices(shelf: _Shelf) -> None:
         shelf.add(
             "kernels",
             "The answer by each kernel",
-            pd.json_normalize(kernels),
+            table_of(kernels),
             lambda: choices.plot_kernels(kernels),
             lambda: choices.describe_kernels(kernels),
         )
@@ -423,7 +455,7 @@ def _blendcheck(shelf: _Shelf) -> None:
         shelf.add(
             "recovered",
             "Recovered against weighed fractions",
-            pd.json_normalize(blends),
+            table_of(blends),
             lambda: blend.plot_recovered(blends),
             lambda: blend.describe_recovered(blends),
         )
@@ -441,7 +473,7 @@ def _blendcheck(shelf: _Shelf) -> None:
         shelf.add(
             "rules",
             "Rules ranked",
-            pd.json_normalize(list(rules)),
+            table_of(rules),
             lambda: blend.plot_rules(rules),
             lambda: blend.describe_rules(rules),
         )
@@ -473,7 +505,7 @@ def _tail(shelf: _Shelf) -> None:
         shelf.add(
             "explanations",
             "Rival explanations",
-            pd.DataFrame(list(explanations)),
+            table_of(explanations),
             lambda: support.plot_explanations(explanations),
             lambda: support.describe_explanations(explanations),
         )
@@ -487,7 +519,7 @@ def _datasheet(shelf: _Shelf) -> None:
         shelf.add(
             "claims",
             "The sheet's claims",
-            pd.json_normalize(list(entries)) if table is None else table,
+            table_of(entries) if table is None else table,
             lambda: claims.plot_claims(entries),
             lambda: claims.describe_claims(entries),
         )

@@ -194,7 +194,7 @@ def describe_moduli(model: DataFrame | None, data: DataFrame | None = None) -> s
     x = numbers(table, *FREQUENCY)
     if x is None:
         return ""
-    text = f"Storage and loss modulus from {short(np.nanmin(x))} to {short(np.nanmax(x))} rad/s."
+    text = f"From {short(np.nanmin(x))} to {short(np.nanmax(x))} rad/s."
     parts = []
     for name, spoken in (("G'", "storage modulus"), ("G''", "loss modulus")):
         found, line, _ = columns_of(table, name)
@@ -308,7 +308,7 @@ def describe_residuals(table: DataFrame) -> str:
                 f"{symbol}: mean {number(y.mean(), 2)}, largest {number(np.abs(y).max(), 2)}"
             )
     return (
-        f"Residuals of the fit, point by point; as relative parts: {'; '.join(parts)}."
+        f"Measured less model, point by point, in relative parts. {'; '.join(parts)}."
         if parts
         else ""
     )
@@ -344,6 +344,6 @@ def plot_phase_angle(curves: dict[str, DataFrame], *, ax: Axes | None = None) ->
 def describe_phase_angle(curves: dict[str, DataFrame]) -> str:
     """The picture in words."""
     return (
-        f"Phase angle against the magnitude of the complex modulus for {', '.join(curves)}. "
+        f"Curves for {', '.join(curves)}. "
         "Where all points fall on one curve, one shift in frequency brings the temperatures together."
     )

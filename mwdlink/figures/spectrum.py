@@ -120,14 +120,13 @@ def describe_spectrum(
     discrete: DataFrame | None, supported: tuple[float | None, float | None] | None = None
 ) -> str:
     """The picture in words."""
-    text = "Relaxation spectrum."
+    text = ""
     tau, g = numbers(discrete, *TIME), numbers(discrete, *STRENGTH)
     if tau is not None and g is not None:
         good = positive(tau, g)
         text = (
-            f"Relaxation spectrum: {int(good.sum())} modes from {short(tau[good].min())} to "
-            f"{short(tau[good].max())} s."
+            f"{int(good.sum())} modes from {short(tau[good].min())} to {short(tau[good].max())} s."
         )
     if supported and None not in supported:
-        text += f" The data support relaxation times from {number(supported[0])} to {number(supported[1])} s."
+        text += f"{' ' if text else ''}The data support relaxation times from {number(supported[0])} to {number(supported[1])} s."
     return text

@@ -307,7 +307,7 @@ def by_rows(items: list[Any], columns: int) -> list[Any]:
 
 
 def legend_above(
-    ax: Axes, *, handles: list[Any] | None = None, over_figure: bool = False, room: float = 92.0
+    ax: Axes, *, handles: list[Any] | None = None, over_figure: bool = False, room: float = 94.0
 ) -> None:
     """The legend over the axes, where it can hide nothing.
 

@@ -55,6 +55,35 @@ def percent(x: Any, digits: int = 2) -> str:
     return "not known" if x is None else f"{short(100.0 * float(x), max(digits, 2))} %"
 
 
+UNITS = (
+    ("_g_per_10min", "g/10min"),
+    ("_cm3_per_10min", "cm3/10min"),
+    ("_kJ_per_mol", "kJ/mol"),
+    ("_rad_per_s", "rad/s"),
+    ("_g_per_mol", "g/mol"),
+    ("_kg_per_m3", "kg/m3"),
+    ("_dL_per_g", "dL/g"),
+    ("_decades", "decades"),
+    ("_per_Pa", "1/Pa"),
+    ("_per_K", "1/K"),
+    ("_per_s", "1/s"),
+    ("_Pa_s", "Pa s"),
+    ("_Pa", "Pa"),
+    ("_kg", "kg"),
+    ("_C", "C"),
+    ("_K", "K"),
+    ("_s", "s"),
+)
+
+
+def split_unit(key: str) -> tuple[str, str]:
+    """Name and unit of a JSON key: `eta0_Pa_s` is (eta0, Pa s)."""
+    for suffix, unit in UNITS:
+        if key.endswith(suffix) and len(key) > len(suffix):
+            return key.removesuffix(suffix), unit
+    return key, ""
+
+
 def value_of(x: Any) -> float | None:
     """The central number of a plain number or an uncertain quantity in JSON form."""
     if isinstance(x, Mapping):

@@ -131,6 +131,17 @@
 
   var W = 420, H = 330, L = 62, R = 12, T = 26, B = 46;
 
+  /* height of a chart on which a decade is as long upwards as it is across */
+  function height(xSpan, ySpan) {
+    var across = log(xSpan[1] / xSpan[0]), up = log(ySpan[1] / ySpan[0]);
+    return Math.round((W - L - R) * up / across + T + B);
+  }
+
+  function resize(svg, h) {
+    H = h;
+    svg.setAttribute("viewBox", "0 0 " + W + " " + h);
+  }
+
   function add(parent, name, attributes, text) {
     var e = document.createElementNS(NS, name);
     Object.keys(attributes).forEach(function (k) { e.setAttribute(k, attributes[k]); });
@@ -214,13 +225,21 @@
     return [low / pad, high * pad];
   }
 
+  /* at least as many decades upwards as asked for, and not more than a page can hold */
+  function within(s, least, most) {
+    var d = log(s[1] / s[0]) / Math.LN10, aside = Math.pow(10, Math.max(0, least - d) / 2);
+    return [Math.max(s[0] / aside, s[1] / Math.pow(10, most)), s[1] * aside];
+  }
+
   /* limits are set once, from both ends, so that the eye sees the curves move and not the axes */
   var ends = [blend(0), blend(1)];
-  var moduliSpan = span([ends[0].storage, ends[0].loss, ends[1].storage, ends[1].loss], 9);
-  var etaSpan = span([ends[0].viscosity, ends[1].viscosity], 9);
   var omegaSpan = [D.omega[0], D.omega[D.omega.length - 1]];
+  var across = log(omegaSpan[1] / omegaSpan[0]) / Math.LN10;
+  var moduliSpan = within(span([ends[0].storage, ends[0].loss, ends[1].storage, ends[1].loss], 12), 0.6 * across, 1.4 * across);
+  var etaSpan = within(span([ends[0].viscosity, ends[1].viscosity], 12), 0.6 * across, 1.4 * across);
 
   function drawCurves(svg, b, p, parts, ySpan, xLabel, yLabel, entries) {
+    resize(svg, height(omegaSpan, ySpan));
     var x = scale(omegaSpan[0], omegaSpan[1], L, W - R, true), y = scale(ySpan[0], ySpan[1], H - B, T, true);
     var g = frame(svg, x, y, decades(omegaSpan[0], omegaSpan[1], 9), decades(ySpan[0], ySpan[1], 10), xLabel, yLabel);
     parts.forEach(function (part, i) {
@@ -245,6 +264,7 @@
   }
 
   function drawProperty(svg, p, now) {
+    resize(svg, 330);
     var all = [course.value, course.low, course.high];
     var wanted = target && shown.key === target.key ? target.wanted : null;
     if (wanted !== null) { all.push([wanted]); }

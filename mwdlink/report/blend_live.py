@@ -56,7 +56,7 @@ from typing import Any
 import numpy as np
 
 from mwdlink.errors import ModelError
-from mwdlink.figures.words import short
+from mwdlink.figures.words import short, upper_first
 from mwdlink.quantity import to_plain
 
 KINDS = (
@@ -184,7 +184,7 @@ def _chart(name: str, label: str) -> str:
 
 def section(data: Mapping[str, Any]) -> str:
     """The section with slider, charts and table; hidden until its script runs."""
-    first, second = (escape(str(c)) for c in data["components"])
+    first = escape(str(data["components"][0]))
     start = short(100.0 * float(data["fraction"]))
     aimed = (data.get("target") or {}).get("key")
     properties = data.get("properties") or []
@@ -203,7 +203,9 @@ def section(data: Mapping[str, Any]) -> str:
     )
     charts += _chart("flow", "Viscosity against rate, taken from the complex viscosity (Cox-Merz)")
     if shown is not None:
-        charts += _chart("property", f"{shown.get('label', shown.get('key'))} against the fraction")
+        charts += _chart(
+            "property", upper_first(f"{shown.get('label', shown.get('key'))} against the fraction")
+        )
     exact = (
         "Every fraction is computed exactly from three stored curves (mixing exponent 2)."
         if data["mode"] == "quadratic"
@@ -219,8 +221,8 @@ def section(data: Mapping[str, Any]) -> str:
 </div>
 <p id="live-said" role="status"></p>
 <div class="figures">{charts}</div>
-<div class="scroll" tabindex="0" role="region" aria-label="Properties at the chosen fraction">
-<table id="live-table"><caption>Properties at the chosen fraction of {first} (rest {second})</caption>
+<div class="scroll" tabindex="0" role="region" aria-label="Properties at this fraction">
+<table id="live-table"><caption>Properties at this fraction</caption>
 <thead><tr><th scope="col">Property</th><th scope="col" class="n">Value</th><th scope="col" class="n">Interval</th><th scope="col" class="n">Target</th></tr></thead>
 <tbody>{rows}</tbody></table></div>
 <p class="small">{exact} Bands are the trust band of the prediction.</p>

@@ -11,27 +11,11 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
-from mwdlink.figures.words import number, short, upper_first
+from mwdlink.figures.claims import spoken
+from mwdlink.figures.words import number, short, split_unit, upper_first
 
-UNITS = (
-    ("_g_per_10min", "g/10 min"),
-    ("_cm3_per_10min", "cm³/10 min"),
-    ("_kJ_per_mol", "kJ/mol"),
-    ("_rad_per_s", "rad/s"),
-    ("_g_per_mol", "g/mol"),
-    ("_kg_per_m3", "kg/m³"),
-    ("_dL_per_g", "dL/g"),
-    ("_decades", "decades"),
-    ("_per_Pa", "1/Pa"),
-    ("_per_K", "1/K"),
-    ("_per_s", "1/s"),
-    ("_Pa_s", "Pa s"),
-    ("_Pa", "Pa"),
-    ("_kg", "kg"),
-    ("_C", "°C"),
-    ("_K", "K"),
-    ("_s", "s"),
-)
+PRINTED = {"g/10min": "g/10 min", "cm3/10min": "cm³/10 min", "kg/m3": "kg/m³", "C": "°C"}
+"""Units as a page prints them, where a table's header keeps to plain letters."""
 
 WORDS = {
     "Mn": "number average Mn",
@@ -128,11 +112,8 @@ def name_and_unit(key: str) -> tuple[str, str]:
         if key.endswith(suffix) and key not in WORDS:
             key, end = key.removesuffix(suffix), spoken
             break
-    unit = ""
-    for suffix, spoken in UNITS:
-        if key.endswith(suffix) and len(key) > len(suffix):
-            key, unit = key.removesuffix(suffix), spoken
-            break
+    key, unit = split_unit(key)
+    unit = PRINTED.get(unit, unit)
     if key in WORDS:
         return WORDS[key] + end, unit
     at = re.fullmatch(r"(eta|tan_delta|thinning)_([\d.eE+-]+)(?:_([\d.eE+-]+))?", key)
@@ -152,6 +133,11 @@ def heading(key: str) -> str:
 
 def is_uncertain(x: Any) -> bool:
     return isinstance(x, Mapping) and "value" in x and "status" in x and "low" in x
+
+
+def spoken_as(key: str, x: Any) -> str:
+    """A value under its key: names of quantities are keys themselves."""
+    return spoken(x) if key in {"quantity", "odd_one_out"} and isinstance(x, str) else said(x)
 
 
 def said(x: Any) -> str:
@@ -237,7 +223,7 @@ def _quantity_row(key: str, x: Any, band: Any, before: str = "") -> tuple[str, .
             unit,
             "",
         )
-    return name, said(x), "–", "", unit, ""
+    return name, spoken_as(key, x), "–", "", unit, ""
 
 
 def _walk(entry: Mapping[str, Any], bands: Any, before: str = "") -> list[tuple[str, ...]]:
@@ -278,7 +264,7 @@ def _list_block(caption: str, entries: Sequence[Mapping[str, Any]], bands: Any) 
         )
         row = []
         for k in keys:
-            text = said(e.get(k))
+            text = spoken_as(k, e.get(k))
             if is_uncertain(band.get(k)) and not is_uncertain(e.get(k)):
                 text += f" ({interval_words(band[k])})"
             row.append(text)
@@ -361,6 +347,7 @@ CARD_WORDS = {
     "coefficient": ("coefficient of η₀ = K Mᵃ", "Pa s (g/mol)⁻ᵃ"),
     "exponent": ("exponent a of η₀ = K Mᵃ", ""),
     "a": ("exponent a", ""),
+    "kg_per_m3": ("density of the melt", "kg/m³"),
     "K_dL_per_g": ("coefficient K", "dL/g"),
 }
 

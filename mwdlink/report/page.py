@@ -167,8 +167,8 @@ def _figure(picture: Picture, prefix: str) -> str:
         picture.svg(), prefix=prefix, title=picture.title, description=picture.description
     )
     return (
-        f'<figure id="{prefix}">{svg}<figcaption><strong>{escape(picture.title)}.</strong> '
-        f"{escape(picture.description)}</figcaption>"
+        f'<figure id="{prefix}"><div class="whole">{svg}<figcaption><strong>{escape(picture.title)}.</strong> '
+        f"{escape(picture.description)}</figcaption></div>"
         f"<details><summary>Table behind this figure</summary>{_frame(picture.data, picture)}</details></figure>"
     )
 
