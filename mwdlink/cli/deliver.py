@@ -121,8 +121,24 @@ def pictures_of(record: Mapping[str, Any], tables: Mapping[str, Any]) -> dict[st
     """The pictures that belong to a result, by name."""
     figures = importlib.import_module("mwdlink.figures")
     frames = {name: table for name, table in tables.items() if not isinstance(table, str)}
-    pictures: dict[str, Any] = figures.pictures_of(record["command"], record, frames)
-    return pictures
+    pictures = figures.pictures_of(record["command"], record, frames)
+    return {name: DrawnOnce(picture) for name, picture in pictures.items()}
+
+
+class DrawnOnce:
+    """A picture whose SVG is made once: the file and the report show the same, and it is slow."""
+
+    def __init__(self, picture: Any) -> None:
+        self._picture = picture
+        self._svg: bytes | None = None
+
+    def __getattr__(self, name: str) -> Any:
+        return getattr(self._picture, name)
+
+    def svg(self) -> bytes:
+        if self._svg is None:
+            self._svg = self._picture.svg()
+        return self._svg
 
 
 def report_of(result: Any, record: Mapping[str, Any], pictures: Mapping[str, Any]) -> str | None:
@@ -130,7 +146,9 @@ def report_of(result: Any, record: Mapping[str, Any], pictures: Mapping[str, Any
     report = importlib.import_module("mwdlink.report")
     if not hasattr(report, "render"):
         return None
-    line = "mwdlink " + shlex.join(sys.argv[1:])
+    # without what changes nothing in the result, so that a repeated run gives the same page
+    typed = [a for a in sys.argv[1:] if a not in ("--replace", "--quiet", "--json")]
+    line = "mwdlink " + shlex.join(typed)
     page: str = report.render(result, record, pictures, command_line=line)
     return page
 

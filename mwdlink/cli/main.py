@@ -26,7 +26,7 @@ COMMANDS = {
     # "blendcheck": "Hold measured blends of known fractions against the rule.",
     # "tail": "GPC and sweep together: weight beyond what the GPC sees.",
     # "datasheet": "Do the numbers on a supplier's sheet hang together?",
-    # "master": "From sweeps at several temperatures to one master curve.",
+    "master": "From sweeps at several temperatures to one master curve.",
     "spectrum": "From a sweep to its relaxation spectrum, without a chain model.",
     # "rest": "How long to wait after loading a sample.",
     # "calibrate": "A polymer card from samples with both GPC and sweep.",

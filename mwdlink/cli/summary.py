@@ -39,7 +39,17 @@ _UNITS = (
 _AT = re.compile(r"(eta|tan_delta)_([\d.]+)")
 
 # these tell the entries of a list apart; the first one that is there becomes the entry's name
-_NAMES = ("name", "quantity", "kernel", "rule", "flag", "after", "load_kg", "M_g_per_mol")
+_NAMES = (
+    "name",
+    "quantity",
+    "kernel",
+    "rule",
+    "flag",
+    "after",
+    "load_kg",
+    "M_g_per_mol",
+    "temperature_C",
+)
 
 _BOUNDS = {"lower_bound": "at least ", "upper_bound": "at most "}
 
@@ -110,7 +120,7 @@ def _rows(key: str, value: Any, band: Any, prefix: str = "") -> Iterator[Row]:
         yield label, bound + _with_unit(value.get("value"), key, unit), _interval(value, key)
     elif isinstance(value, Mapping):
         for k, v in value.items():
-            if v is None or v in ([], {}):
+            if v is None or v in ([], {}) or k == "bands":
                 continue
             yield from _rows(k, v, _part(band, k), prefix + _outer(k, v))
     elif isinstance(value, list):

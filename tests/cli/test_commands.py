@@ -1,0 +1,215 @@
+"""Each command end to end: what it writes, what it prints, how it ends."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Callable, Iterator
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pandas as pd
+import pytest
+from click.testing import CliRunner, Result
+
+import mwdlink
+from mwdlink.chains.families import lognormal
+from mwdlink.cli.main import main
+
+COMMON = (
+    "schema",
+    "version",
+    "command",
+    "inputs",
+    "labels",
+    "polymer",
+    "model",
+    "seed",
+    "warnings",
+)
+
+
+@pytest.fixture(scope="module")
+def inputs(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """A made-up melt: its GPC table, a sweep at 190 C, and sweeps at three temperatures."""
+    folder = tmp_path_factory.mktemp("inputs")
+    melt = lognormal(Mw=1.2e5, dispersity=4.0)
+    melt.to_frame().to_csv(folder / "gpc.csv", index=False)
+    card = mwdlink.read_polymer("hdpe")
+    chance = np.random.default_rng(3)
+    omega = np.geomspace(1e-2, 1e2, 17)
+    rows = []
+    for T in (170.0, 190.0, 210.0):
+        storage, loss = mwdlink.Relaxation(melt, card.melt(T), mwdlink.Model()).moduli(omega)
+        noise = 1 + 0.02 * chance.standard_normal((2, omega.size))
+        rows.append(
+            pd.DataFrame(
+                {
+                    "T [C]": T,
+                    "omega [rad/s]": omega,
+                    "G' [Pa]": storage * noise[0],
+                    "G'' [Pa]": loss * noise[1],
+                }
+            )
+        )
+    rows[1].to_csv(folder / "sweep.csv", index=False)
+    pd.concat(rows).to_csv(folder / "all.csv", index=False)
+    return folder
+
+
+@pytest.fixture
+def run(inputs: Path, monkeypatch: pytest.MonkeyPatch) -> Iterator[Callable[..., Result]]:
+    """Call the command line in the folder of the inputs."""
+    monkeypatch.chdir(inputs)
+
+    def call(line: str, *more: str, status: int = 0) -> Result:
+        done = CliRunner().invoke(main, [*line.split(), *more], terminal_width=80)
+        if done.exception is not None and not isinstance(done.exception, SystemExit):
+            raise done.exception
+        assert done.exit_code == status, done.output
+        return done
+
+    yield call
+
+
+# command line -> tables of the interface, keys of the interface
+WRITTEN = {
+    "predict gpc.csv --polymer hdpe --members 4": (
+        "sweep.csv spectrum.csv relaxation.csv flow.csv distribution.csv",
+        "averages terminal crossover melt_flow indices bands",
+    ),
+    "spectrum sweep.csv --members 4": (
+        "spectrum.csv continuous.csv fit.csv",
+        "terminal supported consistency",
+    ),
+    "master all.csv --reference 190 --members 4": (
+        "master.csv shifts.csv",
+        "reference_C shift superposition branching",
+    ),
+}
+
+
+@pytest.mark.parametrize("line", WRITTEN)
+def test_folder_as_promised(run: Callable[..., Result], tmp_path: Path, line: str) -> None:
+    """Interface: tables, keys, figures and report of each command."""
+    tables, keys = WRITTEN[line]
+    out = tmp_path / "out"
+    done = run(line, "--out", str(out), "--label", "sample=made up", "--quiet")
+    record = json.loads((out / "result.json").read_text())
+    assert [k for k in (*COMMON, *keys.split()) if k not in record] == []
+    assert record["schema"] == f"mwdlink/{line.split()[0]}/1"
+    assert record["labels"] == {"sample": "made up"}
+    assert record["inputs"][0]["path"] == line.split()[1]
+    for name in tables.split():
+        table = pd.read_csv(out / name, comment="#")
+        assert len(table)
+        assert (out / name).read_text().startswith("# mwdlink")
+    assert "made up" in (out / "report.html").read_text()
+    pictures = {p.name for p in (out / "figures").iterdir()}
+    assert pictures
+    assert {p.removesuffix(".svg") + ".png" for p in pictures if p.endswith(".svg")} <= pictures
+    assert max(map(len, done.stdout.splitlines())) <= 80
+    assert done.stderr == ""
+
+
+def test_same_input_same_bytes(run: Callable[..., Result], tmp_path: Path) -> None:
+    """Interface: a second run, in place of the first, gives the same bytes in every file."""
+    line = f"spectrum sweep.csv --members 4 --out {tmp_path / 'out'}"
+    run(line)
+    before = {p: p.read_bytes() for p in (tmp_path / "out").rglob("*") if p.is_file()}
+    run(line, "--replace")
+    assert {p: p.read_bytes() for p in before} == before
+
+
+def test_json_is_all_of_stdout(run: Callable[..., Result]) -> None:
+    """Interface: --json prints the record and nothing else; notes go to stderr, unless quiet."""
+    line = "predict gpc.csv --polymer hdpe --members 0 --omega 1e-2:1e2:5 --json"
+    done = run(line)
+    record = json.loads(done.stdout)
+    assert record["command"] == "predict" and record["model"]["kernels"]
+    assert record["warnings"] and "note:" in done.stderr
+    assert run(line, "--quiet").stderr == ""
+
+
+def no_pictures(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Leave out the drawing, which takes longest, where it is not what is tested."""
+    monkeypatch.setattr("mwdlink.cli.deliver.pictures_of", lambda record, tables: {})
+
+
+def test_written_tables_are_read_again(
+    run: Callable[..., Result], tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Interface: written tables are accepted as input again, and say the same."""
+    no_pictures(monkeypatch)
+    out = tmp_path / "out"
+    line = "--polymer hdpe --members 0 --calibration absolute --json --quiet"
+    first: dict[str, Any] = json.loads(
+        run(f"predict gpc.csv {line} --omega 1e-2:1e2:5", "--out", str(out)).stdout
+    )
+    assert (out / "result.json").read_text() == json.dumps(
+        first, indent=2, ensure_ascii=False
+    ) + "\n"
+    assert len(pd.read_csv(out / "sweep.csv", comment="#")) == 21
+    second = json.loads(run(f"predict {out / 'distribution.csv'} {line}").stdout)
+    for key in ("averages", "terminal"):
+        for name, value in first[key].items():
+            assert second[key][name] == pytest.approx(value, rel=1e-3)
+    run(f"spectrum {out / 'sweep.csv'} --members 0")
+
+
+def test_used_folder_is_refused_before_computing(
+    run: Callable[..., Result], tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Interface: a non-empty --out without --replace is a usage error, found at once."""
+    import mwdlink.measurement.spectrum_fit as module
+
+    monkeypatch.setattr(module, "fit_spectrum", lambda *a, **k: pytest.fail("was computed"))
+    (tmp_path / "old.txt").write_text("")
+    done = run("spectrum sweep.csv", "--out", str(tmp_path), status=2)
+    assert "--replace" in done.stderr
+
+
+@pytest.mark.parametrize(
+    "line",
+    [
+        "predict gpc.csv",
+        "predict gpc.csv --polymer hdpee",
+        "predict gpc.csv --polymer hdpe --exponent 0.3",
+        "predict nowhere.csv --polymer hdpe",
+        "spectrum sweep.csv --members -1",
+        "master all.csv",
+        "spectrum sweep.csv --no-such-option",
+    ],
+)
+def test_usage(run: Callable[..., Result], line: str) -> None:
+    """Interface: usage errors end with 2 and leave stdout empty."""
+    done = run(line, status=2)
+    assert done.stdout == ""
+    assert "Error" in done.stderr
+
+
+def test_bad_table_ends_with_3(inputs: Path) -> None:
+    """Interface: input that cannot be used ends with 3, naming file, row and column."""
+    import subprocess
+    import sys
+
+    (inputs / "bad.csv").write_text("omega [rad/s],G' [Pa],G'' [Pa]\n1,2,3\n2,x,3\n3,4,5\n4,5,6\n")
+    done = subprocess.run(
+        [sys.executable, "-m", "mwdlink", "spectrum", "bad.csv"],
+        cwd=inputs,
+        capture_output=True,
+        text=True,
+    )
+    assert done.returncode == 3
+    assert done.stdout == ""
+    assert "bad.csv, row 3" in done.stderr and "G'" in done.stderr
+
+
+def test_enforced_check_ends_with_4(run: Callable[..., Result], inputs: Path) -> None:
+    """Interface: --enforce turns a failed check into status 4, after everything was said."""
+    table = pd.read_csv(inputs / "sweep.csv")
+    table["G' [Pa]"] *= np.where(np.arange(len(table)) % 2, 2.0, 0.5)
+    table.to_csv(inputs / "inconsistent.csv", index=False)
+    line = "spectrum inconsistent.csv --members 0 --noise 2%"
+    assert "Kramers" in run(f"{line} --enforce", status=4).stderr
+    run(line)
