@@ -30,12 +30,15 @@ class Forward:
     linear : ndarray of shape (n_r, n + 2)
         Rouse part of each unit weight [Pa].
     exponent : float
+    times : ndarray of shape (n_t,)
+        [s]
     """
 
     survival: np.ndarray
     rows: np.ndarray
     linear: np.ndarray
     exponent: float
+    times: np.ndarray | None = None
 
     def values(self, w: np.ndarray) -> np.ndarray:
         """Data rows [Pa], shape (n_r,), of weights w of shape (n + 2,)."""
@@ -57,7 +60,9 @@ def sweep_forward(omega: np.ndarray, melt: Melt, model: Model, window: Window) -
     k = time_columns(operator.times, melt, model, window)
     r = rouse_columns(omega, melt, model, window)
     linear = np.vstack([r.real, r.imag])
-    return Forward(k, operator.matrix * melt.plateau_modulus, linear, model.exponent)
+    return Forward(
+        k, operator.matrix * melt.plateau_modulus, linear, model.exponent, operator.times
+    )
 
 
 def time_columns(times: np.ndarray, melt: Melt, model: Model, window: Window) -> np.ndarray:

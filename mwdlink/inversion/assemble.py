@@ -1,0 +1,486 @@
+"""From branches and members to the numbers, statuses and tables of an `Inversion`."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from mwdlink.chains.distribution import Distribution
+from mwdlink.chains.melt import Melt
+from mwdlink.chains.polymer import Polymer
+from mwdlink.errors import Caution, merge_cautions
+from mwdlink.inversion import closed_form
+from mwdlink.inversion.budget import variance_shares
+from mwdlink.inversion.ensemble import Branch, ExponentPrior, Members, prior_weights
+from mwdlink.inversion.inversion_result import Inversion
+from mwdlink.inversion.peaks import find_peaks
+from mwdlink.inversion.quantities import Cells
+from mwdlink.inversion.statuses import average_statuses, prior_dominates, zero_excluded
+from mwdlink.measurement.sweep import Sweep
+from mwdlink.quantity import Uncertain, quantiles, readonly
+from mwdlink.relaxation.kernels import DEFAULT_KERNEL
+from mwdlink.relaxation.validity import frequency_cautions
+
+PRIOR_DRAWS = 200
+# a lambda this near an end of the scan was chosen by the scan, not by the data
+AT_END_ROUGH, AT_END_SMOOTH = 1, 0
+
+
+@dataclass(frozen=True, eq=False)
+class Pool:
+    """Members of all branches side by side.
+
+    Attributes
+    ----------
+    cells : tuple of Cells
+        One per branch (branches have their own nodes).
+    kernel, smoothing : ndarray of int, shape (m,)
+    exponent, ln_time : ndarray of shape (m,)
+    """
+
+    cells: tuple[Cells, ...]
+    kernel: np.ndarray
+    smoothing: np.ndarray
+    exponent: np.ndarray
+    ln_time: np.ndarray
+
+    def gather(self, f: Any) -> np.ndarray:
+        """A quantity of every member, f(Cells) -> (m_b,) or (m_b, k)."""
+        return np.concatenate([f(c) for c in self.cells])
+
+    def shares(self, value: np.ndarray) -> dict[str, float]:
+        return variance_shares(
+            value,
+            self.kernel,
+            self.exponent,
+            self.ln_time,
+            self.smoothing,
+            np.zeros_like(self.kernel),
+        )
+
+
+def make_pool(branches: Sequence[Branch], drawn: Sequence[Members]) -> Pool | None:
+    """Members of the admissible branches; those that did not converge are left out."""
+    if not drawn:
+        return None
+    cells, kernel, smooth, exponent, ln_time = [], [], [], [], []
+    for i, (b, m) in enumerate(zip(branches, drawn, strict=True)):
+        ok = m.converged
+        # eta0 = K M^a: a law `factor` times higher reads the same times as shorter chains
+        scale = np.exp(-m.ln_time[ok] / b.melt.law_exponent)
+        cells.append(Cells.make(b.problem.window.edges, m.w[ok], scale))
+        kernel.append(np.full(int(ok.sum()), i))
+        smooth.append(m.smoothing_index[ok])
+        exponent.append(m.exponent[ok])
+        ln_time.append(m.ln_time[ok])
+    return Pool(
+        tuple(cells),
+        np.concatenate(kernel),
+        np.concatenate(smooth),
+        np.concatenate(exponent),
+        np.concatenate(ln_time),
+    )
+
+
+def assemble(
+    sweep: Any,
+    polymer: Polymer,
+    melt: Melt,
+    branches: Sequence[Branch],
+    allowed: Sequence[bool],
+    drawn: Sequence[Members],
+    *,
+    above: tuple[float, ...],
+    seed: int,
+    prior_seed: np.random.SeedSequence,
+    fixed_exponent: bool,
+    exponent_prior: ExponentPrior,
+    rouse: bool,
+    noise: Mapping[str, Any],
+    method: str,
+    choose: str,
+    want: Mapping[str, float] | None,
+    level: float,
+    notes: tuple[Caution, ...],
+) -> Inversion:
+    """All numbers of the result. Central values are medians of the ensemble, else the fit's."""
+    used = [b for b, ok in zip(branches, allowed, strict=True) if ok]
+    centre = _preferred(used)
+    pool = make_pool(used, drawn)
+    low = max(b.problem.window.low for b in used)
+    high = min(b.problem.window.high for b in used)
+    single = Cells.make(centre.problem.window.edges, centre.fit.w)
+    prior = Cells.make(
+        centre.problem.window.edges, prior_weights(centre, PRIOR_DRAWS, prior_seed)
+    )
+    averages = _averages(single, pool, prior, low, high, level)
+    outside = {
+        "above": _fraction(centre, single, pool, prior, high, level),
+        "below": _below(single, pool, prior, low, level),
+    }
+    tops = tuple(
+        (m, _asked(centre, single, pool, prior, m, low, high, level, outside["above"]))
+        for m in above
+    )
+    grid, density, band, sampled = _curve(used, centre, pool, level)
+    exponent = _exponent(used, pool, fixed_exponent, exponent_prior, level)
+    check, check_notes = _cross_check(sweep, centre, averages, noise, outside["above"])
+    found = find_peaks(
+        grid, sampled, density, centre.problem.window, level=level,
+        groups=None if pool is None else pool.kernel,
+    )
+    notes = merge_cautions(notes, _fit_cautions(centre, method), check_notes, _sweep_cautions(sweep, melt))
+    notes = notes + _bound_cautions(averages, outside)
+    advice = _advice(centre, sweep, polymer, want, averages, outside)
+    return Inversion(
+        molar_mass=readonly(grid),
+        density=readonly(density),
+        density_low=None if band is None else readonly(band[0]),
+        density_high=None if band is None else readonly(band[1]),
+        distribution=Distribution(
+            centre.problem.window.nodes,
+            np.maximum(centre.fit.w[:-2], 0.0),
+            centre.problem.window.edges,
+            label=sweep.label,
+            calibration="absolute",
+        ),
+        averages=averages,
+        window=(low, high),
+        outside=outside,
+        above=tops,
+        fit={
+            "chi2_per_point": centre.chi2_per_point,
+            "points": int(centre.problem.data.size),
+            "smoothing": float(centre.scan.smoothing[centre.scan.best]),
+            "method": method,
+            "kernel": centre.kernel,
+            "converged": bool(centre.fit.converged),
+            "members": 0 if pool is None else int(pool.kernel.size),
+        },
+        fit_table=_fit_table(sweep, centre),
+        smoothing_table=_smoothing_table(centre),
+        kernels=_kernel_rows(branches, allowed, low, high, pool, used),
+        model={
+            "kernels": [b.kernel for b in used],
+            "exponent": centre.model.exponent,
+            "exponent_spread": centre.exponent_spread,
+            "rouse": rouse,
+        },
+        polymer=polymer.to_dict(),
+        seed=seed,
+        noise=noise,
+        exponent=exponent,
+        peaks=tuple(_peak_row(p) for p in found),
+        cross_check=None if check is None else check.to_dict(),
+        advice=advice,
+        members=_member_table(pool, used, low, high),
+        time_law_scatter_decades=melt.scatter_decades,
+        warnings=notes,
+    )
+
+
+def _preferred(used: Sequence[Branch]) -> Branch:
+    """The default kernel where the data allow it, else the likeliest."""
+    for b in used:
+        if b.kernel == DEFAULT_KERNEL:
+            return b
+    return max(used, key=lambda b: b.scan.total)
+
+
+def _uncertain(
+    value: float, samples: np.ndarray | None, level: float, status: str, pool: Pool | None
+) -> Uncertain:
+    if samples is None or pool is None:
+        return Uncertain(float(value), None, None, level, status)
+    return Uncertain.from_samples(samples, level=level, status=status, budget=pool.shares(samples))
+
+
+def _averages(
+    single: Cells, pool: Pool | None, prior: Cells, low: float, high: float, level: float
+) -> dict[str, Uncertain]:
+    central = single.averages()
+    guess = prior.averages()
+    if pool is None:
+        status = average_statuses(single, central, single.edges[:, -1])
+        samples: dict[str, np.ndarray | None] = dict.fromkeys(central)
+    else:
+        parts = [c.averages() for c in pool.cells]
+        joined = {k: np.concatenate([p[k] for p in parts]) for k in central}
+        w = np.concatenate([c.w[:, -2:] for c in pool.cells])
+        top = np.concatenate([c.edges[:, -1] for c in pool.cells])
+        status = average_statuses(Cells(np.empty((0, 0)), w), joined, top)
+        samples = dict(joined)
+        for k in ("Mw", "Mz"):
+            if status[k] == "resolved" and prior_dominates(joined[k], guess[k]):
+                status[k] = "assumed"
+    names = {"Mn": "Mn_g_per_mol", "Mw": "Mw_g_per_mol", "Mz": "Mz_g_per_mol"}
+    out = {
+        names.get(k, k): _uncertain(float(central[k][0]), samples[k], level, status[k], pool)
+        for k in ("Mn", "Mw", "Mz", "dispersity")
+    }
+    inside = None if pool is None else pool.gather(lambda c: c.mean_within(low, high))
+    state = "resolved"
+    if inside is not None and prior_dominates(inside, prior.mean_within(low, high)):
+        state = "assumed"
+    value = float(single.mean_within(low, high)[0])
+    out["Mw_within_window_g_per_mol"] = _uncertain(value, inside, level, state, pool)
+    return out
+
+
+def _fraction(
+    centre: Branch, single: Cells, pool: Pool | None, prior: Cells, m: float, level: float
+) -> Uncertain:
+    """Weight above M: resolved, or an upper bound where the data would do without it."""
+    value = float(single.above(m)[0])
+    samples = None if pool is None else pool.gather(lambda c: c.above(m))
+    status = "resolved"
+    if samples is not None and prior_dominates(samples, prior.above(m)):
+        status = "assumed"
+    elif not zero_excluded(centre.problem, centre.fit.w, centre.problem.window.edges, m):
+        status = "upper_bound"
+    out = _uncertain(value, samples, level, status, pool)
+    if status == "upper_bound" and out.low is not None:
+        out = Uncertain(out.value, 0.0, out.high, level, status, out.budget)
+    return out
+
+
+def _below(single: Cells, pool: Pool | None, prior: Cells, m: float, level: float) -> Uncertain:
+    value = 1.0 - float(single.above(m)[0])
+    samples = None if pool is None else 1.0 - pool.gather(lambda c: c.above(m))
+    status = "resolved"
+    if samples is not None and prior_dominates(samples, 1.0 - prior.above(m)):
+        status = "assumed"
+    elif samples is not None and float(np.quantile(samples, (1 - level) / 2)) < 1e-3:
+        status = "upper_bound"
+    return _uncertain(value, samples, level, status, pool)
+
+
+def _asked(
+    centre: Branch,
+    single: Cells,
+    pool: Pool | None,
+    prior: Cells,
+    m: float,
+    low: float,
+    high: float,
+    level: float,
+    beyond: Uncertain,
+) -> Uncertain:
+    if m <= high and m >= low:
+        return _fraction(centre, single, pool, prior, m, level)
+    inner = _fraction(centre, single, pool, prior, m, level)
+    if m > high:
+        # beyond the window only the sum is known: anything from nothing to all of it
+        return Uncertain(inner.value, 0.0, beyond.high, level, "upper_bound", inner.budget)
+    at_low = single.above(low) if pool is None else pool.gather(lambda c: c.above(low))
+    least = float(np.quantile(at_low, (1 - level) / 2))
+    return Uncertain(inner.value, min(least, inner.value or least), 1.0, level, "lower_bound")
+
+
+def _curve(
+    used: Sequence[Branch], centre: Branch, pool: Pool | None, level: float
+) -> tuple[np.ndarray, np.ndarray, np.ndarray | None, np.ndarray | None]:
+    """Common grid, central density, band and member densities on it."""
+    nodes = centre.problem.window.nodes
+    grid = np.geomspace(nodes[0], nodes[-1], nodes.size)
+    single = Cells.make(centre.problem.window.edges, centre.fit.w)
+    density = single.density(grid)[0]
+    if pool is None:
+        return grid, density, None, None
+    sampled = pool.gather(lambda c: c.density(grid))
+    band = np.quantile(sampled, [(1 - level) / 2, (1 + level) / 2], axis=0)
+    band[0] = np.minimum(band[0], density)
+    band[1] = np.maximum(band[1], density)
+    return grid, density, band, sampled
+
+
+def _exponent(
+    used: Sequence[Branch],
+    pool: Pool | None,
+    fixed: bool,
+    prior: ExponentPrior,
+    level: float,
+) -> Uncertain | None:
+    if fixed:
+        return Uncertain(prior.mean, None, None, level, "assumed")
+    if pool is None:
+        return Uncertain(float(np.mean([b.model.exponent for b in used])), None, None, level, "assumed")
+    low, middle, high = quantiles(pool.exponent, [(1 - level) / 2, 0.5, (1 + level) / 2])
+    wide = (high - low) > 0.8 * 2 * 1.6449 * prior.spread
+    return Uncertain(
+        float(middle), float(low), float(high), level, "assumed" if wide else "resolved"
+    )
+
+
+def _cross_check(
+    sweep: Any, centre: Branch, averages: Mapping[str, Uncertain], noise: Mapping[str, Any], beyond: Uncertain
+) -> tuple[Any, tuple[Caution, ...]]:
+    if not isinstance(sweep, Sweep):
+        return None, ()
+    check = closed_form.cross_check(
+        sweep.omega, sweep.storage, sweep.loss, float(noise["relative"]), centre.melt, centre.model
+    )
+
+    def span(key: str) -> tuple[float, float] | None:
+        u = averages[key]
+        if u.value is None or u.status == "assumed":
+            return None
+        return (u.low or u.value, u.high or u.value)
+
+    cautions = check.cautions(
+        span("Mw_g_per_mol"), span("Mz_g_per_mol"), weight_above=float(beyond.value or 0.0)
+    )
+    return check, cautions
+
+
+def _fit_cautions(centre: Branch, method: str) -> tuple[Caution, ...]:
+    scan = centre.scan
+    if scan.smoothing.size > 1 and scan.best >= scan.smoothing.size - AT_END_ROUGH:
+        return (
+            Caution(
+                "smoothing_at_end",
+                "The smoothing chosen is the least of the scan: the data ask for more detail than "
+                "the scan allows, or their noise is understated.",
+            ),
+        )
+    return ()
+
+
+def _sweep_cautions(sweep: Any, melt: Melt) -> tuple[Caution, ...]:
+    omega = getattr(sweep, "omega", None)
+    return () if omega is None else frequency_cautions(float(np.max(omega)), melt)
+
+
+def _bound_cautions(
+    averages: Mapping[str, Uncertain], outside: Mapping[str, Uncertain]
+) -> tuple[Caution, ...]:
+    out = []
+    if averages["Mz_g_per_mol"].status == "lower_bound":
+        out.append(
+            Caution(
+                "weight_above_window",
+                f"Up to {100 * (outside['above'].high or outside['above'].value or 0):.2g} % of the "
+                "weight is in chains too long to be sized: Mz (and Mw where so marked) are lower "
+                "bounds. Long-chain branching or a second phase would look the same.",
+            )
+        )
+    out.append(
+        Caution(
+            "branching_rival",
+            "The reading takes linear chains. Long-chain branching changes the low-frequency end as "
+            "a high-molar-mass tail does; a second temperature or the intrinsic viscosity would "
+            "tell them apart.",
+        )
+    )
+    return tuple(out)
+
+
+def _advice(
+    centre: Branch,
+    sweep: Any,
+    polymer: Polymer,
+    want: Mapping[str, float] | None,
+    averages: Mapping[str, Uncertain],
+    outside: Mapping[str, Uncertain],
+) -> tuple[str, ...] | None:
+    return None
+
+
+def _peak_row(peak: Any) -> dict[str, Any]:
+    return dict(peak.to_dict())
+
+
+def _fit_table(sweep: Any, centre: Branch) -> dict[str, np.ndarray]:
+    problem = centre.problem
+    model = problem.forward.values(centre.fit.w)
+    residual = problem.data - np.log(model)
+    if isinstance(sweep, Sweep):
+        n = len(sweep)
+        return {
+            "omega [rad/s]": sweep.omega,
+            "G' [Pa]": sweep.storage,
+            "G'' [Pa]": sweep.loss,
+            "G' fit [Pa]": model[:n],
+            "G'' fit [Pa]": model[n:],
+            "G' residual [-]": residual[:n],
+            "G'' residual [-]": residual[n:],
+            "sigma' used [-]": problem.sigma[:n],
+            "sigma'' used [-]": problem.sigma[n:],
+        }
+    frame = sweep.to_frame()
+    first, second = list(frame.columns)[:2]
+    return {
+        first: frame[first].to_numpy(),
+        second: frame[second].to_numpy(),
+        f"fit {second}": model,
+        "residual [-]": residual,
+        "sigma used [-]": problem.sigma,
+    }
+
+
+def _smoothing_table(centre: Branch) -> dict[str, np.ndarray]:
+    scan = centre.scan
+    return {
+        "smoothing [-]": scan.smoothing,
+        "chi2 per point [-]": np.array([f.chi2 for f in scan.fits]) / centre.problem.data.size,
+        "roughness [-]": scan.roughness,
+        "freedom [-]": scan.freedom,
+        "log evidence [-]": scan.log_evidence,
+        "weight [-]": scan.weights,
+        "chosen": np.arange(scan.smoothing.size) == scan.best,
+    }
+
+
+def _kernel_rows(
+    branches: Sequence[Branch],
+    allowed: Sequence[bool],
+    low: float,
+    high: float,
+    pool: Pool | None,
+    used: Sequence[Branch],
+) -> tuple[dict[str, Any], ...]:
+    rows = []
+    for b, ok in zip(branches, allowed, strict=True):
+        cells = Cells.make(b.problem.window.edges, b.fit.w)
+        values = cells.averages()
+        row: dict[str, Any] = {
+            "kernel": b.kernel,
+            "chi2_per_point": b.chi2_per_point,
+            "admissible": bool(ok),
+            "exponent": b.model.exponent,
+            "Mw_g_per_mol": float(values["Mw"][0]),
+            "Mz_g_per_mol": float(values["Mz"][0]),
+            "Mw_within_window_g_per_mol": float(cells.mean_within(low, high)[0]),
+            "Mw_low_g_per_mol": None,
+            "Mw_high_g_per_mol": None,
+        }
+        if ok and pool is not None:
+            held = pool.cells[list(used).index(b)].averages()["Mw"]
+            row["Mw_low_g_per_mol"], row["Mw_high_g_per_mol"] = (
+                float(x) for x in np.quantile(held, [0.05, 0.95])
+            )
+        rows.append(row)
+    return tuple(rows)
+
+
+def _member_table(
+    pool: Pool | None, used: Sequence[Branch], low: float, high: float
+) -> dict[str, np.ndarray]:
+    if pool is None:
+        return {}
+    parts = [c.averages() for c in pool.cells]
+    joined = {k: np.concatenate([p[k] for p in parts]) for k in parts[0]}
+    return {
+        "kernel": np.array([used[i].kernel for i in pool.kernel]),
+        "exponent [-]": pool.exponent,
+        "time-law factor [-]": np.exp(pool.ln_time),
+        "Mn [g/mol]": joined["Mn"],
+        "Mw [g/mol]": joined["Mw"],
+        "Mz [g/mol]": joined["Mz"],
+        "Mw within window [g/mol]": pool.gather(lambda c: c.mean_within(low, high)),
+        "weight above window [-]": pool.gather(lambda c: c.above(high)),
+        "weight below window [-]": 1.0 - pool.gather(lambda c: c.above(low)),
+    }

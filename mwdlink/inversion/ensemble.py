@@ -1,0 +1,308 @@
+"""The ensemble behind every interval: kernels, exponents, smoothing, noise, time law.
+
+One branch a kernel. Within a branch the exponent's posterior is its prior weighed by the evidence;
+members draw an exponent, a lambda and perturbations of data and prior, and are solved again
+(randomise, then optimise). The time law's scatter moves the molar-mass axis and needs no refit.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from mwdlink.chains.melt import Melt
+from mwdlink.errors import MwdlinkError
+from mwdlink.inversion.many import Copies, minimise_many
+from mwdlink.inversion.objective import (
+    LUMP_CENTRE,
+    LUMP_SPREAD,
+    Problem,
+    time_columns,
+    weights,
+)
+from mwdlink.inversion.roughness import relieved
+from mwdlink.inversion.smoothing import Scan, log_evidence, scan
+from mwdlink.inversion.solve import Fit, minimise
+from mwdlink.relaxation.kernels import get_kernel
+from mwdlink.relaxation.mixing import Model
+
+# a kernel is impossible when its chi2 exceeds the best one's by this much, in units of the best
+# one's chi2 per degree of freedom (five standard deviations)
+REJECT = 25.0
+
+
+@dataclass(frozen=True)
+class ExponentPrior:
+    """Normal prior of the mixing exponent; spread 0 fixes it."""
+
+    mean: float = 2.0
+    spread: float = 0.2
+
+
+@dataclass(frozen=True, eq=False)
+class Branch:
+    """One kernel fitted to the data.
+
+    Attributes
+    ----------
+    kernel : str
+    melt : Melt
+    model : Model
+        With the exponent's posterior mean.
+    exponent_spread : float
+        Posterior standard deviation of the exponent.
+    problem : Problem
+    scan : Scan
+    plateau_factor : float
+        Factor on the card's plateau modulus.
+    """
+
+    kernel: str
+    melt: Melt
+    model: Model
+    exponent_spread: float
+    problem: Problem
+    scan: Scan
+    plateau_factor: float = 1.0
+
+    @property
+    def fit(self) -> Fit:
+        """The fit of highest evidence."""
+        return self.scan.fits[self.scan.best]
+
+    @property
+    def chi2(self) -> float:
+        """Least chi2 over the scan's believable part."""
+        held = self.scan.weights > 0.01
+        return min(f.chi2 for f, h in zip(self.scan.fits, held, strict=True) if h)
+
+    @property
+    def chi2_per_point(self) -> float:
+        return self.fit.chi2 / self.problem.data.size
+
+
+@dataclass(frozen=True, eq=False)
+class Members:
+    """Members of one branch.
+
+    Attributes
+    ----------
+    w : ndarray of shape (m, n + 2)
+    exponent, ln_time : ndarray of shape (m,)
+        Mixing exponent; ln of the factor on the time law.
+    smoothing_index : ndarray of int, shape (m,)
+    converged : ndarray of bool, shape (m,)
+    """
+
+    w: np.ndarray
+    exponent: np.ndarray
+    ln_time: np.ndarray
+    smoothing_index: np.ndarray
+    converged: np.ndarray
+
+
+def local_scan(problem: Problem, u0: np.ndarray | None = None) -> tuple[Problem, Scan]:
+    """Scan, relax the prior where there is no weight, scan again."""
+    first = scan(problem, u0)
+    mean = np.zeros(problem.size)
+    for share, fit in zip(first.weights, first.fits, strict=True):
+        mean += share * fit.w
+    problem = replace(problem, prior=relieved(problem.prior, mean))
+    return problem, scan(problem, first.fits[first.best].u)
+
+
+def fit_branch(
+    build: BranchBuilder, kernel: str, prior: ExponentPrior, fixed_smoothing: float | None = None
+) -> Branch:
+    """Fit one kernel, with its exponent weighed by the fit.
+
+    Raises
+    ------
+    MwdlinkError
+        If the kernel cannot serve this card or window.
+    """
+    mean, spread = prior.mean, prior.spread
+    values = None if fixed_smoothing is None else np.array([fixed_smoothing])
+    melt, model, problem = build.problem(kernel, mean)
+    problem, found = _scan(problem, None, values)
+    if spread > 0:
+        for _ in range(2):
+            mean_new, sd = _exponent_posterior(build, kernel, problem, found, mean, prior)
+            moved = abs(mean_new - mean)
+            mean, spread = mean_new, sd
+            if moved < 0.25 * sd:
+                break
+            melt, model, problem = build.problem(kernel, mean)
+            problem, found = _scan(problem, found.fits[found.best].u, values)
+        else:
+            melt, model, problem = build.problem(kernel, mean)
+            problem, found = _scan(problem, found.fits[found.best].u, values)
+        model = replace(model, exponent=float(model.exponent))
+    return Branch(kernel, melt, model, spread, problem, found, build.plateau_factor)
+
+
+def _scan(
+    problem: Problem, u0: np.ndarray | None, values: np.ndarray | None
+) -> tuple[Problem, Scan]:
+    if values is not None:
+        return problem, scan(problem, u0, values)
+    return local_scan(problem, u0)
+
+
+class BranchBuilder:
+    """Builds problems of one data set for any kernel and exponent on fixed nodes a kernel."""
+
+    def __init__(self, make_problem: object, melt: Melt, rouse: bool, plateau_factor: float = 1.0):
+        self.make_problem = make_problem
+        self.plateau_factor = plateau_factor
+        self.melt = (
+            melt
+            if plateau_factor == 1.0
+            else melt.with_(plateau_modulus=melt.plateau_modulus * plateau_factor)
+        )
+        self.rouse = rouse
+        self._window: dict[str, object] = {}
+
+    def problem(self, kernel: str, exponent: float) -> tuple[Melt, Model, Problem]:
+        model = Model(kernel, float(max(exponent, 1.0)), self.rouse)
+        built = self.make_problem(self.melt, model, self._window.get(kernel))  # type: ignore[operator]
+        self._window.setdefault(kernel, built.window)
+        return self.melt, model, built
+
+
+def _exponent_posterior(
+    build: BranchBuilder,
+    kernel: str,
+    problem: Problem,
+    found: Scan,
+    centre: float,
+    prior: ExponentPrior,
+) -> tuple[float, float]:
+    """Mean and spread of prior times evidence, the evidence a parabola through three exponents."""
+    best = found.fits[found.best]
+    reach = 1.2 * prior.spread
+    offsets = np.array([-reach, 0.0, reach])
+    offsets = np.maximum(centre + offsets, 1.0) - centre
+    values = []
+    for d in offsets:
+        if d == 0.0:
+            values.append(log_evidence(problem, best))
+            continue
+        other = build.problem(kernel, centre + d)[2]
+        other = replace(other, prior=problem.prior)
+        fit = minimise(other, best.u, best.smoothing)
+        values.append(log_evidence(other, fit))
+    c2, c1, _ = np.polyfit(offsets, values, 2) if offsets[0] < 0 else (0.0, 0.0, 0.0)
+    # log posterior: c2 d^2 + c1 d - (centre + d - mean)^2/(2 spread^2)
+    precision = max(-2.0 * c2, 0.0) + 1.0 / prior.spread**2
+    slope = c1 - (centre - prior.mean) / prior.spread**2
+    shift = float(np.clip(slope / precision, -2.5 * prior.spread, 2.5 * prior.spread))
+    return max(centre + shift, 1.0), float(1.0 / np.sqrt(precision))
+
+
+def draw_members(branch: Branch, count: int, seed: np.random.SeedSequence, scatter: float) -> Members:
+    """Perturbed refits of a branch.
+
+    Parameters
+    ----------
+    branch : Branch
+    count : int
+    seed : SeedSequence
+    scatter : float
+        Standard deviation of ln of the time-law factor.
+    """
+    problem, found = branch.problem, branch.scan
+    rng = np.random.default_rng(seed)
+    index = rng.choice(found.smoothing.size, size=count, p=found.weights)
+    n = problem.size
+    z = rng.standard_normal(count)
+    exponent = np.maximum(branch.model.exponent + branch.exponent_spread * z, 1.0)
+    survival = None
+    if branch.exponent_spread > 0:
+        survival = _survival_of(branch, exponent)
+    copies = Copies(
+        np.array([found.fits[k].u for k in index]),
+        found.smoothing[index],
+        rng.standard_normal((count, problem.data.size)),
+        rng.standard_normal((count, n - 5)),
+        rng.standard_normal((count, 3)),
+        rng.standard_normal((count, 2)),
+        survival,
+        exponent if branch.exponent_spread > 0 else None,
+    )
+    ln_time = scatter * rng.standard_normal(count)
+    u, ok = minimise_many(problem, copies)
+    e = np.exp(u - u.max(axis=1, keepdims=True))
+    return Members(e / e.sum(axis=1, keepdims=True), exponent, ln_time, index, ok)
+
+
+def _survival_of(branch: Branch, exponent: np.ndarray) -> np.ndarray:
+    """Survival matrices at many exponents: ln K is a parabola in 1/beta through three of them.
+
+    Exact for kernels whose F does not depend on beta, 1e-4 for those whose time constant does.
+    """
+    centre, reach = branch.model.exponent, 2.0 * branch.exponent_spread
+    at = np.array([max(centre - reach, 1.0), centre, centre + reach])
+    problem = branch.problem
+    forward = problem.forward
+    times = forward.times
+    columns = []
+    for b in at:
+        k = time_columns(times, branch.melt, replace(branch.model, exponent=float(b)), problem.window)
+        columns.append(np.log(np.maximum(k, 1e-300)))
+    x, y = 1.0 / at, 1.0 / exponent
+    out = np.zeros((exponent.size, *columns[0].shape))
+    for i in range(3):
+        j, k = (i + 1) % 3, (i + 2) % 3
+        lagrange = (y - x[j]) * (y - x[k]) / ((x[i] - x[j]) * (x[i] - x[k]))
+        out += lagrange[:, None, None] * columns[i]
+    np.exp(out, out=out)
+    dead = columns[1] < -600.0
+    out[:, dead] = 0.0
+    return out
+
+
+def admissible(branches: Sequence[Branch]) -> list[bool]:
+    """Which kernels the data allow: chi2 within REJECT of the best, scaled by the best's own."""
+    chi2 = np.array([b.chi2 for b in branches])
+    n = branches[0].problem.data.size
+    best = float(chi2.min())
+    winner = branches[int(np.argmin(chi2))].scan
+    dof = max(n - float(winner.freedom[winner.best]), 1.0)
+    unit = max(best / dof, 1.0)
+    return [bool((c - best) / unit <= REJECT) for c in chi2]
+
+
+def prior_weights(branch: Branch, count: int, seed: np.random.SeedSequence) -> np.ndarray:
+    """Weights drawn from the prior alone, shape (count, n + 2): what no data would say."""
+    rng = np.random.default_rng(seed)
+    problem, found = branch.problem, branch.scan
+    precision = problem.prior.precision(float(found.smoothing[found.best]))
+    n = problem.size
+    lumps = slice(n - 2, n)
+    core = precision[: n - 2, : n - 2]
+    mean = np.linalg.solve(
+        core + 1e-9 * np.eye(n - 2), (problem.prior.weak.T @ problem.prior.weak_centre)[: n - 2]
+    )
+    root = np.linalg.cholesky(core + 1e-9 * np.eye(n - 2))
+    z = rng.standard_normal((n - 2, count))
+    u = mean[:, None] + np.linalg.solve(root.T, z)
+    w = np.zeros((count, n))
+    for i in range(count):
+        lump = np.exp(np.minimum(LUMP_CENTRE + LUMP_SPREAD * rng.standard_normal(2), 1.0))
+        body = weights(u[:, i])
+        w[i, : n - 2] = body
+        w[i, lumps] = lump
+        w[i] /= w[i].sum()
+    return w
+
+
+def usable(kernel: str, melt: Melt) -> bool:
+    """Whether a kernel can serve a melt's card."""
+    try:
+        get_kernel(kernel, melt)
+    except MwdlinkError:
+        return False
+    return True

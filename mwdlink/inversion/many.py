@@ -1,0 +1,177 @@
+"""Damped Gauss-Newton for many perturbed copies of one problem at once.
+
+The copies of an ensemble are small and alike; stacked, their matrix products and factorisations
+run without Python in between. The arithmetic of a copy does not depend on its neighbours.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from mwdlink.inversion.objective import LUMP_CENTRE, LUMP_SPREAD, Problem
+
+MAX_STEPS = 60
+# a promised decrease of the objective below this is a tenth of a standard deviation at most
+TOLERANCE = 5e-3
+# copies solved together: enough to hide the interpreter, few enough to stay in the cache
+STACK = 25
+
+
+@dataclass(frozen=True, eq=False)
+class Copies:
+    """Perturbed copies to solve.
+
+    Attributes
+    ----------
+    u : ndarray of shape (m, n + 2)
+        Starts.
+    smoothing : ndarray of shape (m,)
+    data, third, weak, lumps : ndarray
+        Perturbations of the rows, shapes (m, n_r), (m, n - 3), (m, 3), (m, 2).
+    survival : ndarray of shape (m, n_t, n + 2), optional
+        Own survival matrices (another mixing exponent each); the problem's unless given.
+    exponent : ndarray of shape (m,), optional
+    """
+
+    u: np.ndarray
+    smoothing: np.ndarray
+    data: np.ndarray
+    third: np.ndarray
+    weak: np.ndarray
+    lumps: np.ndarray
+    survival: np.ndarray | None = None
+    exponent: np.ndarray | None = None
+
+    def part(self, index: slice | np.ndarray) -> Copies:
+        return Copies(
+            self.u[index],
+            self.smoothing[index],
+            self.data[index],
+            self.third[index],
+            self.weak[index],
+            self.lumps[index],
+            None if self.survival is None else self.survival[index],
+            None if self.exponent is None else self.exponent[index],
+        )
+
+
+def minimise_many(problem: Problem, copies: Copies) -> tuple[np.ndarray, np.ndarray]:
+    """Solve all copies.
+
+    Returns
+    -------
+    u : ndarray of shape (m, n + 2)
+    converged : ndarray of bool, shape (m,)
+    """
+    m = copies.u.shape[0]
+    u = np.empty_like(copies.u)
+    ok = np.zeros(m, dtype=bool)
+    for a in range(0, m, STACK):
+        part = slice(a, min(a + STACK, m))
+        u[part], ok[part] = _stack(problem, copies.part(part))
+    return u, ok
+
+
+class _State:
+    """One stack of copies and everything their objective needs."""
+
+    def __init__(self, problem: Problem, copies: Copies) -> None:
+        self.problem, self.c = problem, copies
+        f = problem.forward
+        self.survival = f.survival if copies.survival is None else copies.survival
+        m = copies.u.shape[0]
+        self.power = np.full(m, f.exponent) if copies.exponent is None else copies.exponent
+        self.root = np.sqrt(copies.smoothing)[:, None]
+        prior = problem.prior
+        self.rough = prior.third.T @ prior.third
+        self.soft = prior.weak.T @ prior.weak
+        self.data = problem.data + problem.sigma * copies.data
+        self.inverse = 1.0 / problem.sigma
+        self.target = prior.weak_centre + copies.weak
+
+    def rows(self, u: np.ndarray, index: np.ndarray) -> tuple[np.ndarray, ...]:
+        e = np.exp(u - u.max(axis=1, keepdims=True))
+        w = e / e.sum(axis=1, keepdims=True)
+        k = self.survival if self.survival.ndim == 2 else self.survival[index]
+        s = (w @ k.T) if k.ndim == 2 else np.matmul(k, w[:, :, None])[:, :, 0]
+        p = s ** (self.power[index] - 1.0)[:, None]
+        f = self.problem.forward
+        y = (p * s) @ f.rows.T + w @ f.linear.T
+        r = (np.log(y) - self.data[index]) * self.inverse
+        prior = self.problem.prior
+        t = self.root[index] * (u @ prior.third.T) - self.c.third[index]
+        q = u @ prior.weak.T - self.target[index]
+        lump = (np.log(np.maximum(w[:, -2:], 1e-300)) - LUMP_CENTRE) / LUMP_SPREAD
+        lump = lump - self.c.lumps[index]
+        return w, k, p, y, r, t, q, lump
+
+    def cost(self, u: np.ndarray, index: np.ndarray) -> np.ndarray:
+        *_, r, t, q, lump = self.rows(u, index)
+        return (r * r).sum(1) + (t * t).sum(1) + (q * q).sum(1) + (lump * lump).sum(1)
+
+    def normal(self, u: np.ndarray, index: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Gauss-Newton matrix and half gradient of each copy."""
+        w, k, p, y, r, t, q, lump = self.rows(u, index)
+        f = self.problem.forward
+        weighted = (self.power[index][:, None] * p)[:, :, None] * k
+        slope = np.matmul(f.rows, weighted) + f.linear
+        scaled = slope * (self.inverse / y)[:, :, None]
+        j = scaled * w[:, None, :]
+        j -= j.sum(axis=2, keepdims=True) * w[:, None, :]
+        jt = j.transpose(0, 2, 1)
+        n = u.shape[1]
+        prior = self.problem.prior
+        h = np.matmul(jt, j)
+        h += self.c.smoothing[index][:, None, None] * self.rough + self.soft
+        lump_j = np.repeat(-w[:, None, :], 2, axis=1) / LUMP_SPREAD
+        lump_j[:, 0, n - 2] += 1.0 / LUMP_SPREAD
+        lump_j[:, 1, n - 1] += 1.0 / LUMP_SPREAD
+        h += np.matmul(lump_j.transpose(0, 2, 1), lump_j)
+        g = np.matmul(jt, r[:, :, None])[:, :, 0]
+        g += (self.root[index] * t) @ prior.third + q @ prior.weak
+        g += np.matmul(lump[:, None, :], lump_j)[:, 0, :]
+        return h, g
+
+
+def _stack(problem: Problem, copies: Copies) -> tuple[np.ndarray, np.ndarray]:
+    state = _State(problem, copies)
+    m, n = copies.u.shape
+    u = copies.u.copy()
+    active = np.arange(m)
+    value = state.cost(u, active)
+    damping = np.full(m, 1e-3)
+    done = np.zeros(m, dtype=bool)
+    diag = np.arange(n)
+    for _ in range(MAX_STEPS):
+        if active.size == 0:
+            break
+        h, g = state.normal(u[active], active)
+        pending = np.arange(active.size)
+        for _retry in range(12):
+            who = active[pending]
+            lhs = h[pending].copy()
+            d = lhs[:, diag, diag]
+            lhs[:, diag, diag] = d * (1.0 + damping[who][:, None]) + 1e-12
+            step = -np.linalg.solve(lhs, g[pending][:, :, None])[:, :, 0]
+            trial = u[who] + step
+            with np.errstate(all="ignore"):
+                new = state.cost(trial, who)
+            promised = -(g[pending] * step).sum(axis=1)
+            good = np.isfinite(new) & (new <= value[who] * (1 + 1e-12))
+            small = promised < TOLERANCE
+            taken = who[good]
+            gain = value[taken] - new[good]
+            u[taken] = trial[good] - trial[good].max(axis=1, keepdims=True)
+            value[taken] = new[good]
+            better = gain > 0.25 * promised[good]
+            damping[taken] = np.maximum(damping[taken] * np.where(better, 0.15, 2.0), 1e-9)
+            done[who[small]] = True
+            left = ~(good | small)
+            if not left.any():
+                break
+            damping[who[left]] = np.maximum(damping[who[left]] * 6.0, 1e-6)
+            pending = pending[left]
+        active = np.flatnonzero(~done & (damping < 1e8))
+    return u, done

@@ -1,0 +1,5 @@
+"""The methods `invert` offers, by name."""
+
+from __future__ import annotations
+
+METHODS = ("smooth",)
