@@ -93,7 +93,9 @@ def exponent_belief(melt: Melt, exponent: Any = None) -> ExponentBelief:
     if isinstance(exponent, Sequence):
         low, high = (float(x) for x in exponent)
         if not 1.0 <= low <= high <= 8.0:
-            raise ModelError(f"a range of exponents must rise within 1 to 8, not {low:g} to {high:g}")
+            raise ModelError(
+                f"a range of exponents must rise within 1 to 8, not {low:g} to {high:g}"
+            )
         return ExponentBelief(0.5 * (low + high), low, high, 0.0, source)
     value = float(exponent)
     if not 1.0 <= value <= 8.0:
@@ -184,7 +186,9 @@ def draw(
     return Draws(names, exponent, factor, plateau, levels, ENTRANCE_LOST * shares())
 
 
-def budget(samples: np.ndarray, draws: Draws, extra: Mapping[str, np.ndarray] | None = None) -> dict[str, float]:
+def budget(
+    samples: np.ndarray, draws: Draws, extra: Mapping[str, np.ndarray] | None = None
+) -> dict[str, float]:
     """Shares of the variance of ln(samples) by source, sum 1.
 
     The Latin square makes the sources nearly orthogonal, so that each one's share is what a
@@ -207,12 +211,18 @@ def budget(samples: np.ndarray, draws: Draws, extra: Mapping[str, np.ndarray] | 
         return {}
     e = draws.exponent
     sources: dict[str, np.ndarray] = {
-        "kernel": np.array([[n == k for k in sorted(set(draws.kernel))] for n in draws.kernel], float),
+        "kernel": np.array(
+            [[n == k for k in sorted(set(draws.kernel))] for n in draws.kernel], float
+        ),
         "exponent": np.column_stack([e, e**2]),
         "time_law": np.log(draws.time_factor)[:, None],
-        "card": np.array([[p == k for k in range(draws.plateau_levels.size)] for p in draws.plateau], float),
+        "card": np.array(
+            [[p == k for k in range(draws.plateau_levels.size)] for p in draws.plateau], float
+        ),
     }
-    sources.update({k: np.asarray(v, dtype=float).reshape(len(draws), -1) for k, v in (extra or {}).items()})
+    sources.update(
+        {k: np.asarray(v, dtype=float).reshape(len(draws), -1) for k, v in (extra or {}).items()}
+    )
     out = {}
     for name, columns in sources.items():
         c = columns[good] - columns[good].mean(axis=0)
@@ -224,7 +234,9 @@ def budget(samples: np.ndarray, draws: Draws, extra: Mapping[str, np.ndarray] | 
     return {k: v / total for k, v in out.items()} if total > 0 else {}
 
 
-def band(samples: np.ndarray, value: float | None, draws: Draws | None = None, **more: Any) -> Uncertain:
+def band(
+    samples: np.ndarray, value: float | None, draws: Draws | None = None, **more: Any
+) -> Uncertain:
     """The interval of an ensemble around a central value, with its budget."""
     shares = budget(samples, draws) if draws is not None else {}
     return Uncertain.from_samples(samples, value, level=LEVEL, budget=shares, **more)

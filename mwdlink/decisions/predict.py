@@ -57,7 +57,9 @@ class Outputs:
     values: Mapping[str, float | None]
     bands: Mapping[str, Uncertain] = field(default_factory=dict)
 
-    def blocks(self, averages: Mapping[str, float], spread: Mapping[str, Uncertain]) -> dict[str, Any]:
+    def blocks(
+        self, averages: Mapping[str, float], spread: Mapping[str, Uncertain]
+    ) -> dict[str, Any]:
         """The keys `averages` to `indices` of a record, and `bands` in the same shape."""
         plain = _shape(dict(self.values) | dict(averages))
         out = dict(plain)
@@ -283,7 +285,13 @@ def frequencies(omega: Any = None) -> np.ndarray:
     if omega is None:
         return log_grid(*DEFAULT_OMEGA)
     w = np.atleast_1d(np.asarray(omega, dtype=float))
-    if w.ndim != 1 or w.size < 2 or not np.all(np.isfinite(w)) or w[0] <= 0 or np.any(np.diff(w) <= 0):
+    if (
+        w.ndim != 1
+        or w.size < 2
+        or not np.all(np.isfinite(w))
+        or w[0] <= 0
+        or np.any(np.diff(w) <= 0)
+    ):
         raise InputError(
             "output frequencies must be at least two, positive and ascending.",
             remedy="Give them as LOW:HIGH:PER_DECADE [rad/s].",
@@ -328,11 +336,12 @@ class Recorder:
 
     def _curves(self, r: Any, storage: np.ndarray, loss: np.ndarray) -> dict[str, np.ndarray]:
         t = self.time
-        modulus, started = r.relaxation(t)[0], r.started(t)[0]
+        n = t.size
+        fine = r.relaxation(np.concatenate([t, t * 0.9, t * 1.1]))[0]
+        modulus, started = fine[:n], r.started(t)[0]
         eta0 = float(r.terminal[0][0])
         # -dG/dln t, to first order the density of modes at tau = t
-        fine = r.relaxation(np.concatenate([t * 0.9, t * 1.1]))[0]
-        slope = np.maximum(fine[: t.size] - fine[t.size :], 1e-30)
+        slope = np.maximum(fine[n : 2 * n] - fine[2 * n :], 1e-30)
         return {
             "G'": storage,
             "G''": loss,
@@ -348,15 +357,33 @@ class Recorder:
         """Set the central melt, moduli given."""
         self.central = self._curves(r, storage, loss)
 
-    def member(self, r: Any) -> None:
-        """Add a member of the ensemble."""
+    def member(self, r: Any, offset: Any = None) -> None:
+        """Add a member of the ensemble.
+
+        `offset` takes frequencies and gives what to add to ln G' and ln G'' there.
+        """
         storage, loss = r.moduli(self.omega)
-        for k, v in self._curves(r, storage[0], loss[0]).items():
+        up, out = storage[0], loss[0]
+        if offset is not None:
+            a, b = offset(self.omega)
+            up, out = up * np.exp(a), out * np.exp(b)
+        found = self._curves(r, up, out)
+        if offset is not None:
+            a, b = offset(1.0 / self.time)
+            for name in ("G", "slope"):
+                found[name] = found[name] * np.exp(a)
+            found["eta+"] = found["eta+"] * np.exp(b)
+        for k, v in found.items():
             self.samples.setdefault(k, []).append(v)
+
+    @property
+    def bands(self) -> dict[str, Band]:
+        """Low and high of every curve; empty without members."""
+        return {k: curve_band(np.array(v), self.central[k]) for k, v in self.samples.items()}
 
     def tables(self, spectrum: Spectrum) -> dict[str, dict[str, np.ndarray]]:
         """Columns by table and header."""
-        bands = {k: curve_band(np.array(v), self.central[k]) for k, v in self.samples.items()}
+        bands = self.bands
         seen = self.central["G"] > 1e-12 * self.central["G"].max()
 
         def columns(*pairs: tuple[str, str], mask: Any = slice(None)) -> dict[str, np.ndarray]:
@@ -480,9 +507,8 @@ def band_words(kernels: Sequence[str], belief: ExponentBelief, melt: Melt, membe
         f"law's scatter of {melt.scatter_decades:g} decades"
     )
     if melt.plateau_range is not None:
-        text += (
-            f", and plateau moduli from {melt.plateau_range[0]:.3g} to {melt.plateau_range[1]:.3g} Pa"
-        )
+        low, high = melt.plateau_range
+        text += f", and plateau moduli from {low:.3g} to {high:.3g} Pa"
     return text + "."
 
 

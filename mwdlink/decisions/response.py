@@ -81,9 +81,9 @@ class Response:
         """eta+(t) = int_0^t G [Pa s], shape (k, n)."""
         step = np.log(self.times[1] / self.times[0])
         f = self.modulus * self.times
-        area = np.concatenate(
-            [f[:, :1], 0.5 * (f[:, 1:] + f[:, :-1]) * step], axis=1
-        ).cumsum(axis=1)
+        area = np.concatenate([f[:, :1], 0.5 * (f[:, 1:] + f[:, :-1]) * step], axis=1).cumsum(
+            axis=1
+        )
         x = np.log(np.clip(t, self.times[0], self.times[-1]))
         out = np.exp(_cubic_rows(np.log(self.times), np.log(area), x))
         if self.rouse_tau.size:
@@ -140,6 +140,16 @@ def _cubic_rows(x: np.ndarray, y: np.ndarray, at: np.ndarray) -> np.ndarray:
         u * (u - 1) * (u - 2) / 6,
     )
     return sum(y[:, i + j] * c[j] for j in range(4))  # type: ignore[return-value]
+
+
+def even_times(low: float, high: float) -> np.ndarray:
+    """Times from low to beyond high [s], always the same step and few different lengths.
+
+    The matrix that fits exponentials depends on step and length only, and is kept.
+    """
+    count = int(np.ceil(np.log10(high / low) * TIMES_PER_DECADE)) + 1
+    count += -count % 20
+    return low * 10.0 ** (np.arange(count) / TIMES_PER_DECADE)
 
 
 @lru_cache(maxsize=64)
@@ -210,7 +220,7 @@ class Bank:
             everything = np.concatenate(taus)
             low = min(1e-3 / self.omega_max, 1e-7 * float(everything.max()))
             # exp(-t/tau) is 1e-20 of itself at 46 tau; F of the slower kernels is below that
-            t = log_grid(low, 400.0 * float(everything.max()), TIMES_PER_DECADE)
+            t = even_times(low, 400.0 * float(everything.max()))
             columns = []
             for d, tau, mask in zip(self.components, taus, held, strict=True):
                 log_f = np.full((t.size, d.molar_mass.size), -np.inf)
@@ -308,8 +318,8 @@ def from_modulus(
 ) -> Response:
     """A response from G(t) of rows (k, n_t) at times even in ln t."""
     decades = np.log10(times[-1] / times[0])
-    modes = int(np.ceil(decades * MODES_PER_DECADE)) + 1
-    step = round(float(np.log(times[-1] / times[0]) / (times.size - 1)), 12)
+    modes = round(decades * MODES_PER_DECADE) + 1
+    step = round(float(np.log(times[-1] / times[0]) / (times.size - 1)), 9)
     fit = _fit_matrix(times.size, step, modes)
     tau = np.geomspace(times[0], times[-1], modes)
     none = np.empty(0)

@@ -1,0 +1,225 @@
+"""Which fraction reaches a target: the roots of a property along the line of fractions."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from mwdlink.decisions.ensemble import LEVEL
+from mwdlink.errors import InputError
+from mwdlink.quantity import Uncertain
+
+PLAIN_TARGETS = (
+    "eta0_Pa_s",
+    "Je0_per_Pa",
+    "mean_time_s",
+    "crossover_omega_rad_per_s",
+    "crossover_G_Pa",
+)
+TARGETS_AT = {"viscosity_Pa_s": "rad/s", "tan_delta": "rad/s", "MFR_g_per_10min": "kg"}
+
+_FORMS = (
+    "viscosity_Pa_s@0.1=2e4, eta0_Pa_s=1e4, MFR_g_per_10min@2.16=1.5, tan_delta@0.1=3 or "
+    "crossover_omega_rad_per_s=20"
+)
+
+
+@dataclass(frozen=True)
+class Target:
+    """A wanted value of a property.
+
+    Attributes
+    ----------
+    name : str
+        Property, such as `viscosity_Pa_s`.
+    wanted : float
+        > 0.
+    at : float or None
+        Frequency [rad/s] or load [kg].
+    """
+
+    name: str
+    wanted: float
+    at: float | None = None
+
+    @property
+    def key(self) -> str:
+        """Its name among the properties: `viscosity_Pa_s@0.1`."""
+        return self.name if self.at is None else f"{self.name}@{self.at:g}"
+
+
+def parse_target(text: Any) -> Target:
+    """A target from `NAME=VALUE` or `NAME@AT=VALUE`.
+
+    Raises
+    ------
+    InputError
+        Another form, an unknown property, or a value that is not positive.
+    """
+    if isinstance(text, Target):
+        return text
+    if isinstance(text, tuple):
+        text = "=".join(map(str, text))
+    match = re.fullmatch(r"\s*([A-Za-z0-9_]+)\s*(?:@\s*([^=\s]+)\s*)?=\s*(\S+)\s*", str(text))
+    if match is None:
+        raise InputError(f"{text!r} is no target.", remedy=f"Targets read {_FORMS}.")
+    name, at, value = match[1], match[2], match[3]
+    if name not in PLAIN_TARGETS and name not in TARGETS_AT:
+        raise InputError(f"there is no target {name!r}.", remedy=f"Targets read {_FORMS}.")
+    if (at is None) != (name in PLAIN_TARGETS):
+        where = f"needs its {TARGETS_AT[name]}" if at is None else "takes no @"
+        raise InputError(f"the target {name} {where}.", remedy=f"Targets read {_FORMS}.")
+    numbers = []
+    for part in (value, at):
+        try:
+            x = None if part is None else float(part)
+        except ValueError:
+            x = -1.0
+        if x is not None and not (np.isfinite(x) and x > 0):
+            raise InputError(
+                f"{part!r} in the target is no positive number.", remedy=f"Targets read {_FORMS}."
+            )
+        numbers.append(x)
+    return Target(name, float(numbers[0]), numbers[1])  # type: ignore[arg-type]
+
+
+@dataclass(frozen=True)
+class TargetFound:
+    """Where a target is met.
+
+    Attributes
+    ----------
+    target : Target
+    component : str
+        Whose fraction is given; the others keep their proportions.
+    fractions : tuple of Uncertain
+        Each fraction that meets it [-], rising.
+    shares : tuple of float
+        Of the ensemble's members, how many meet the target near that fraction.
+    reachable : (float, float) or None
+        Range of the property over all fractions, central prediction.
+    reason : str
+        Why there is none or more than one, or what the interval holds.
+    """
+
+    target: Target
+    component: str
+    fractions: tuple[Uncertain, ...]
+    shares: tuple[float, ...]
+    reachable: tuple[float, float] | None
+    reason: str
+
+    def to_dict(self) -> dict[str, Any]:
+        out: dict[str, Any] = {
+            "quantity": self.target.key,
+            "wanted": self.target.wanted,
+            "component": self.component,
+            "fractions": list(self.fractions),
+            "members_that_meet_it": list(self.shares),
+            "reachable": None if self.reachable is None else list(self.reachable),
+            "reason": self.reason,
+        }
+        return out
+
+
+def roots_along(phi: np.ndarray, values: np.ndarray, wanted: float) -> list[float]:
+    """Fractions within 0 and 1 at which a property takes the wanted value.
+
+    Parameters
+    ----------
+    phi : ndarray of shape (n,)
+        Rising from 0 to 1.
+    values : ndarray of shape (n,)
+        > 0 or NaN.
+    """
+    good = np.isfinite(values) & (values > 0)
+    x, y = phi[good], np.log(values[good]) - np.log(wanted)
+    found: list[float] = []
+    for i in range(x.size):
+        # exactly there: counted once, also at the ends
+        if abs(y[i]) < 1e-9:
+            found.append(float(x[i]))
+        elif i + 1 < x.size and abs(y[i + 1]) >= 1e-9 and y[i] * y[i + 1] < 0:
+            found.append(float(x[i] + (x[i + 1] - x[i]) * y[i] / (y[i] - y[i + 1])))
+    return found
+
+
+def find_fractions(
+    target: Target,
+    component: str,
+    phi: np.ndarray,
+    values: np.ndarray,
+    member_phi: np.ndarray,
+    member_values: np.ndarray | None,
+    others: Sequence[str] = (),
+) -> TargetFound:
+    """Fractions that meet a target, with intervals from the ensemble.
+
+    Parameters
+    ----------
+    target : Target
+    component : str
+    phi, values : ndarray of shape (n,)
+        Central property against the fraction.
+    member_phi : ndarray of shape (q,)
+    member_values : ndarray of shape (m, q) or None
+        The members' property at those fractions.
+    others : sequence of str
+        The remaining components, for words.
+    """
+    good = np.isfinite(values) & (values > 0)
+    wanted, name = target.wanted, target.key
+    if not np.any(good):
+        reason = f"{name} cannot be predicted at any fraction (out of reach of the curves)."
+        return TargetFound(target, component, (), (), None, reason)
+    low, high = float(values[good].min()), float(values[good].max())
+    centres = roots_along(phi, values, wanted)
+    if not centres:
+        side = "above" if wanted > high else "below"
+        rest = " and ".join(others) or "the rest"
+        reason = (
+            f"No fraction of {component} with {rest} meets it: between 0 and 1 the property runs "
+            f"from {low:.4g} to {high:.4g}, and {wanted:.4g} lies {side}."
+        )
+        if wanted <= high and wanted >= low:  # a gap where the property is unknown
+            reason = "No fraction meets it where the property can be predicted."
+        if member_values is not None:
+            count = sum(bool(roots_along(member_phi, v, wanted)) for v in member_values)
+            share = count / len(member_values)
+            if share > 0.02:
+                reason += f" Within the prediction's band {100 * share:.0f} % of members reach it."
+        return TargetFound(target, component, (), (), (low, high), reason)
+    if member_values is None:
+        sets: list[list[float]] = [[] for _ in centres]
+    else:
+        sets = [[] for _ in centres]
+        for v in member_values:
+            left = roots_along(member_phi, v, wanted)
+            for k in np.argsort([min((abs(c - r) for r in left), default=9.0) for c in centres]):
+                if not left:
+                    break
+                j = int(np.argmin([abs(centres[k] - r) for r in left]))
+                sets[k].append(left.pop(j))
+    out, shares = [], []
+    for c, s in zip(centres, sets, strict=True):
+        out.append(Uncertain.from_samples(s, c, level=LEVEL) if s else Uncertain(c, level=LEVEL))
+        shares.append(len(s) / len(member_values) if member_values is not None else 1.0)
+    if len(centres) > 1:
+        listed = ", ".join(f"{100 * c:.3g} %" for c in centres)
+        reason = (
+            f"{len(centres)} fractions meet it ({listed} of {component}): the property has an "
+            "extremum between."
+        )
+    else:
+        reason = f"One fraction of {component} meets it."
+    weak = [s for s in shares if s < 0.95]
+    if member_values is not None and weak:
+        reason += (
+            f" Only {100 * min(weak):.0f} % of the ensemble's members meet it at all: for the "
+            "others it lies out of reach, and the interval holds for those that do."
+        )
+    return TargetFound(target, component, tuple(out), tuple(shares), (low, high), reason)
