@@ -10,7 +10,7 @@ import numpy as np
 from mwdlink.figures import shading, style
 from mwdlink.figures.columns import Absent, band, beginning, numbers, positive
 from mwdlink.figures.moduli import measured, modelled
-from mwdlink.figures.words import interval_of, number, short, upper_first, value_of, with_interval
+from mwdlink.figures.words import interval_of, number, short, upper_first, value_of
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -66,10 +66,10 @@ def plot_relaxation(table: DataFrame, *, level: float = 0.9, ax: Axes | None = N
     style.log_axes(ax)
     ax.set_xlim(*shading.span_of(xs, 0.02))
     ax.set_ylim(*shading.span_of(ys, 0.04))
-    style.equal_decades(ax, own_figure=own)
     ax.set_xlabel("time t / s")
     ax.set_ylabel("relaxation modulus G / Pa")
     style.legend_above(ax)
+    style.equal_decades(ax, own_figure=own)
     return ax
 
 
@@ -140,7 +140,7 @@ def plot_rest(
                 linewidth=0,
             )
         ax.plot(time[good], y[good], **look, label=label)
-        shown = good & (y > floor) & (y < 0.97)
+        shown = good & (y > floor) & (y < 0.8)
         if shown.any():
             xs += [time[shown].min(), time[shown].max()]
     for entry in rest:
@@ -191,10 +191,30 @@ def plot_rest(
     return ax
 
 
+def duration(seconds: float) -> str:
+    """A time as people say it: 0.095 s, 25 min, 6.3 h, 4.1 d."""
+    for size, unit in ((86400.0, "d"), (3600.0, "h"), (60.0, "min")):
+        if seconds >= 2.0 * size:
+            return f"{short(seconds / size, 2)} {unit}"
+    return f"{short(seconds, 2)} s"
+
+
+def waiting(time: Any) -> str:
+    """A waiting time with its interval and, where it is one, its being a bound."""
+    value, between = value_of(time), interval_of(time)
+    if value is None:
+        return "not known"
+    text = duration(value)
+    if between is not None:
+        text += f" ({duration(between[0])} to {duration(between[1])})"
+    bound = {"lower_bound": "at least ", "upper_bound": "at most "}
+    return bound.get(str(time.get("status")) if isinstance(time, Mapping) else "", "") + text
+
+
 def describe_rest(rest: Sequence[Mapping[str, Any]]) -> str:
     """The picture in words."""
     parts = [
-        f"{with_interval(r.get('time_s'), 's')} until {100 * float(r['residual']):g} % is left after "
+        f"{waiting(r.get('time_s'))} until {100 * float(r['residual']):g} % is left after "
         f"{'a step' if r.get('after') == 'step' else r.get('after')}"
         for r in rest
         if value_of(r.get("time_s")) is not None and r.get("residual") is not None

@@ -109,6 +109,10 @@ def plot_flow(
             label="η₀",
         )
         ys.append(eta0)
+    if between is not None:
+        # the band belongs on the picture, but not where it runs away
+        good = positive(rate, *between)
+        ys += [max(between[0][good].min(), min(ys) / 10), min(between[1][good].max(), max(ys) * 10)]
     style.log_axes(ax)
     ax.set_xlim(*shading.span_of(xs, 0.02))
     low, high = shading.span_of(ys, 0.06)
@@ -117,10 +121,10 @@ def plot_flow(
         middle = np.sqrt(low * high)
         low, high = middle / 10, middle * 10
     ax.set_ylim(low, high)
-    style.equal_decades(ax, own_figure=own)
     ax.set_xlabel(r"shear rate $\dot\gamma$ / s$^{-1}$")
     ax.set_ylabel("viscosity η / Pa s")
     style.legend_above(ax)
+    style.equal_decades(ax, own_figure=own)
     return ax
 
 

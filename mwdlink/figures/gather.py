@@ -6,6 +6,7 @@ can be drawn as well. What is absent is left out without a word.
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
@@ -122,24 +123,32 @@ def table_of(entries: Sequence[Mapping[str, Any]]) -> pd.DataFrame:
 def collect_budgets(record: Record) -> dict[str, dict[str, float]]:
     """Name to shares of variance of every quantity that carries a budget."""
     names = {
-        "Mn_g_per_mol": "Mn",
-        "Mw_g_per_mol": "Mw",
-        "Mz_g_per_mol": "Mz",
-        "dispersity": "dispersity",
-        "Mw_within_window_g_per_mol": "Mw in window",
-        "eta0_Pa_s": "η₀",
-        "Je0_per_Pa": "Je⁰",
+        "Mn": "Mn",
+        "Mw": "Mw",
+        "Mz": "Mz",
+        "Mw_within_window": "Mw in window",
+        "eta0": "η₀",
+        "Je0": "Je⁰",
         "time_law_factor": "time law",
         "fraction": "tail",
-        "excess": "excess",
+        "omega": "crossover ω",
+        "G": "crossover G",
     }
+
+    def plain(key: str) -> str:
+        name = split_unit(key)[0]
+        at = re.fullmatch(r"(eta|tan_delta|MFR)_([\d.eE+-]+)", name)
+        if at:
+            return f"{({'eta': 'η', 'tan_delta': 'tan δ'}).get(at[1], at[1])} at {at[2]}"
+        return names.get(name, name.replace("_", " "))
+
     out: dict[str, dict[str, float]] = {}
 
     def take(key: str, entry: Any, name: str = "") -> None:
         if isinstance(entry, Mapping) and entry.get("budget"):
             shares = {str(k): float(v or 0.0) for k, v in entry["budget"].items()}
             if sum(shares.values()) > 0:
-                out.setdefault(name or names.get(key, key.replace("_", " ")), shares)
+                out.setdefault(name or plain(key), shares)
 
     for group in ("averages", "terminal", "tail", "bands"):
         entries = record.get(group)
@@ -338,6 +347,8 @@ def _master(shelf: _Shelf) -> None:
             lambda: master.plot_shifts(shifts, reference_C=reference, shift=shift),
             lambda: master.describe_shifts(shifts, shift),
         )
+    angles = shelf.table("phase_angle.csv")
+    table = table if angles is None else angles
     if table is not None:
         curves = master.by_temperature(table)
         shelf.add(
@@ -376,19 +387,11 @@ def target_header(table: pd.DataFrame, target: Any) -> str | None:
         "crossover_omega_rad_per_s": ("crossover omega", "omega crossover"),
     }
     for stem in stems.get(name, (name,)):
+        ends = ("", " rad/s", " kg")
         spellings = (
-            [stem]
-            if not at
-            else [
-                f"{stem} {at}",
-                f"{stem}_{at}",
-                f"{stem}@{at}",
-                f"{stem} at {at}",
-                f"{stem} at {at} rad/s",
-                f"{stem} {at} rad/s",
-                f"{stem} {at} kg",
-                f"{stem} at {at} kg",
-            ]
+            [f"{stem}{gap}{at}{end}" for gap in (" ", "@", " at ") for end in ends]
+            if at
+            else [stem]
         )
         found = find(table, *spellings)
         if found is not None:

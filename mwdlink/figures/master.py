@@ -10,13 +10,14 @@ import numpy as np
 
 from mwdlink.figures import shading, style
 from mwdlink.figures.columns import Absent, band, find, numbers, positive
+from mwdlink.figures.moduli import modelled
 from mwdlink.figures.words import number, value_of, with_interval
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from pandas import DataFrame
 
-TEMPERATURE = ("T", "temperature")
+TEMPERATURE = ("measured at", "T", "temperature")
 REDUCED = ("omega aT", "omega a_T", "reduced omega", "omega reduced", "omega")
 SHIFT = ("aT", "a_T", "shift factor")
 VERTICAL = ("bT", "b_T", "vertical shift")
@@ -65,12 +66,12 @@ def plot_master(
             ax.plot(x[good], y[good], **look, label=label if name == "G'" else None)
             xs += [x[good].min(), x[good].max()]
             ys += [y[good].min(), y[good].max()]
+    _common_curve(ax, table)
     if not xs:
         raise Absent("the table needs the columns omega [rad/s], G' [Pa] and G'' [Pa]")
     style.log_axes(ax)
     ax.set_xlim(*shading.span_of(xs, 0.02))
     ax.set_ylim(*shading.span_of(ys, 0.03))
-    style.equal_decades(ax, own_figure=own)
     ax.text(
         0.97,
         0.04,
@@ -85,7 +86,28 @@ def plot_master(
     ax.set_xlabel(rf"$\omega\, a_T$ / rad s$^{{-1}}${at}")
     ax.set_ylabel("G′, G″ / Pa")
     style.legend_above(ax)
+    style.equal_decades(ax, own_figure=own)
     return ax
+
+
+def _common_curve(ax: Axes, table: DataFrame) -> None:
+    """The smooth curve put through all temperatures, where the table has it."""
+    x = numbers(table, *REDUCED)
+    for j, name in enumerate(("G'", "G''")):
+        y = numbers(table, *modelled(name))
+        if x is None or y is None:
+            continue
+        good = positive(x, y)
+        order = np.argsort(x[good], kind="stable")
+        ax.plot(
+            x[good][order],
+            y[good][order],
+            color=style.SOFT,
+            linewidth=0.9,
+            linestyle=style.DASHES[j],
+            zorder=1,
+            label=None if j else "common curve",
+        )
 
 
 def describe_master(table: DataFrame, superposition: Mapping[str, Any] | None = None) -> str:

@@ -173,7 +173,6 @@ def plot_moduli(
         bottom = min([*bottoms, max(floor, min(line_bottoms, default=floor))])
         ax.set_xlim(*shading.span_of(seen_x, 0.02))
         ax.set_ylim(*shading.span_of([bottom, top], 0.03))
-        style.equal_decades(ax, own_figure=own)
     ax.set_xlabel(X_LABEL)
     ax.set_ylabel("G′, G″ / Pa")
     found, labels = ax.get_legend_handles_labels()
@@ -183,6 +182,8 @@ def plot_moduli(
         key=lambda i: next((r for r, w in enumerate(rank) if labels[i].endswith(w)), len(rank)),
     )
     style.legend_above(ax, handles=[found[i] for i in order])
+    if seen_x:
+        style.equal_decades(ax, own_figure=own)
     return ax
 
 
@@ -321,16 +322,18 @@ def plot_phase_angle(curves: dict[str, DataFrame], *, ax: Axes | None = None) ->
     Parameters
     ----------
     curves : dict of str to DataFrame
-        Name to table with `G' [Pa]` and `G'' [Pa]`.
+        Name to table with `|G*| [Pa]` and `delta [deg]`, or `G' [Pa]` and `G'' [Pa]`.
     """
     ax = style.new_axes(ax, height=72.0)
     for i, (label, table) in enumerate(curves.items()):
-        storage, loss = numbers(table, "G'"), numbers(table, "G''")
-        if storage is None or loss is None:
-            continue
-        good = positive(storage, loss)
-        size = np.hypot(storage[good], loss[good])
-        angle = np.degrees(np.arctan2(loss[good], storage[good]))
+        size, angle = numbers(table, "|G*|"), numbers(table, "delta", "phase angle")
+        if size is None or angle is None:
+            storage, loss = numbers(table, "G'"), numbers(table, "G''")
+            if storage is None or loss is None:
+                continue
+            size, angle = np.hypot(storage, loss), np.degrees(np.arctan2(loss, storage))
+        good = positive(size, angle)
+        size, angle = size[good], angle[good]
         ax.plot(size, angle, **style.data_look(i) | {"markersize": 4.0}, label=label)
     style.log_axis(ax.xaxis)
     ax.set_ylim(0, 95)

@@ -78,19 +78,20 @@ def plot_spectrum(
             modes = tau[good], strength[good]
             tops.append(modes[1].max())
             floor_from.append(modes[1].min())
-            xs += [modes[0].min(), modes[0].max()]
     if not tops:
         raise Absent("neither discrete modes nor a continuous spectrum to show")
     top = max(tops)
     bottom = max(top * 1e-8, min(floor_from, default=top * 1e-6) / 3)
     style.log_axes(ax)
     if modes is not None:
+        shown = modes[1] >= bottom
+        xs += [modes[0][shown].min(), modes[0][shown].max()]
         ax.vlines(modes[0], bottom / 10, modes[1], color=style.VERMILION, linewidth=0.9, zorder=2.4)
         ax.plot(
             *modes,
             color=style.VERMILION,
             marker="o",
-            markersize=3.6,
+            markersize=3.6 if modes[0].size < 40 else 2.4,
             markerfacecolor=style.PAPER,
             linestyle="none",
             label="discrete modes, g",

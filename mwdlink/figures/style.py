@@ -270,7 +270,9 @@ def equal_decades(ax: Axes, *, own_figure: bool, least: float = 62.0, most: floa
     ax.set_aspect("equal", adjustable="box")
     ax.set_anchor("N")
     if own_figure and x > 0:
-        beside, around = 21.0, 24.0
+        legend = ax.get_legend()
+        rows = 0 if legend is None else math.ceil(len(legend.get_texts()) / legend._ncols)
+        beside, around = 19.0, 17.0 + 4.6 * rows
         height = (WIDTH - beside) * y / x + around
         figure = ax.get_figure()
         if figure is not None:
