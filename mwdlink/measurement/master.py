@@ -190,7 +190,8 @@ class Master(Result):
             "b_T free high [-]": [s.b_T_free.high for s in self.steps],
         }
         for name, law in self.laws.items():
-            table[f"a_T {name} [-]"] = 10.0 ** law.log10_factor(T)
+            title = {"wlf": "WLF", "arrhenius": "Arrhenius"}[name]
+            table[f"a_T {title} [-]"] = 10.0 ** law.log10_factor(T)
         table["residual [-]"] = [s.residual for s in self.steps]
         table["overlap [decades]"] = [s.overlap_decades for s in self.steps]
         table["points"] = [len(s.sweep) for s in self.steps]
@@ -339,13 +340,7 @@ def make_master(
     fixed = _rho_T(T, reference_C, polymer) if vertical == "rho-T" else np.zeros(T.size)
     names = [f"{t:.4g} C" for t in T]
     fit = fit_shifts(curves, pivot, vertical=fixed, free_vertical=vertical == "free", names=names)
-    free = (
-        fit
-        if vertical == "free"
-        else fit_shifts(
-            curves, pivot, free_vertical=True, start=fit.log_shift, smoothing=fit.smoothing
-        )
-    )
+    free = fit if vertical == "free" else fit_shifts(curves, pivot, free_vertical=True, start=fit)
     # where the curves do not superpose, the misfit and not the noise limits the shifts
     scale = max(1.0, fit.chi2_per_point)
     rng = np.random.default_rng(np.random.SeedSequence(seed))

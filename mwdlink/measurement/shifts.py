@@ -72,6 +72,8 @@ class ShiftFit:
     points : int
     effective_parameters : float
     smoothing : float
+    tau, log_H : ndarray of shape (n,)
+        The common curve as a continuous spectrum: [s], ln of [Pa].
     """
 
     log_shift: np.ndarray
@@ -84,6 +86,8 @@ class ShiftFit:
     points: int
     effective_parameters: float
     smoothing: float
+    tau: np.ndarray
+    log_H: np.ndarray
 
     @property
     def chi2_per_point(self) -> float:
@@ -172,7 +176,7 @@ class _Joint:
         return P
 
     def solve(
-        self, p: np.ndarray, lam: float, *, hold: bool = False, rounds: int = 60
+        self, p: np.ndarray, lam: float, *, hold: bool = False, rounds: int = 100
     ) -> tuple[np.ndarray, float, float]:
         """Damped Gauss-Newton; returns the unknowns, chi2 and the penalised cost.
 
@@ -289,8 +293,7 @@ def fit_shifts(
     *,
     vertical: np.ndarray | None = None,
     free_vertical: bool = False,
-    start: np.ndarray | None = None,
-    smoothing: float | None = None,
+    start: ShiftFit | None = None,
     names: Sequence[str] = (),
 ) -> ShiftFit:
     """Shift factors of all curves at once onto one smooth common curve.
@@ -305,10 +308,9 @@ def fit_shifts(
         Fixed ln b_T; default zero.
     free_vertical : bool
         Fit ln b_T too.
-    start : ndarray of shape (k,), optional
-        ln a_T to start from; default neighbour by neighbour.
-    smoothing : float, optional
-        Fixed weight; None lets the evidence choose.
+    start : ShiftFit, optional
+        A fit to start from, whose smoothing is kept; default neighbour by neighbour, with the
+        smoothing the evidence chooses.
     names : sequence of str
         What to call the curves in messages.
 
@@ -325,18 +327,18 @@ def fit_shifts(
     count = len(curves)
     vertical = np.zeros(count) if vertical is None else np.asarray(vertical, dtype=float)
     names = list(names) or [f"curve {k + 1}" for k in range(count)]
+    shift = _start(curves, pivot, names) if start is None else start.log_shift
+    joint = _Joint(curves, pivot, shift, vertical, free_vertical)
+    extra = joint.others.size if free_vertical else 0
     if start is None:
-        start = _start(curves, pivot, names)
-    joint = _Joint(curves, pivot, start, vertical, free_vertical)
-    extra = joint.others.size
-    p = np.concatenate(
-        [
-            np.full(joint.n, float(np.median(joint.y)) - np.log(2.0)),
-            start[joint.others],
-            np.zeros(extra if free_vertical else 0),
-        ]
-    )
-    scan = SCAN if smoothing is None else np.array([smoothing])
+        u = np.full(joint.n, float(np.median(joint.y)) - np.log(2.0))
+    else:
+        u = np.interp(np.log(joint.tau), np.log(start.tau), start.log_H)
+    p = np.concatenate([u, shift[joint.others], np.zeros(extra)])
+    if start is not None:
+        p, chi2, _ = joint.solve(p, start.smoothing)
+        return _describe(joint, p, start.smoothing, chi2)
+    scan = SCAN
     held = _scan(joint, p, scan, hold=True)
     top = max(held, key=lambda k: held[k][0])
     fits = _scan(joint, held[top][1], scan[[top]], first=top)
@@ -416,4 +418,6 @@ def _describe(joint: _Joint, p: np.ndarray, lam: float, chi2: float) -> ShiftFit
         joint.y.size,
         effective,
         lam,
+        readonly(joint.tau),
+        readonly(p[:n]),
     )
