@@ -28,6 +28,7 @@ GROUND = {"errors", "quantity", "result"}
 PURE = {"chains", "relaxation", "inversion"}
 THIRD_PARTY = {"numpy", "scipy", "pandas", "matplotlib", "click"}
 LONG = 500
+TOO_LONG = 700
 
 
 def modules() -> list[Path]:
@@ -143,10 +144,10 @@ def test_no_assert_no_print_no_global_pyplot() -> None:
     assert not wrong, "\n".join(wrong)
 
 
-def test_modules_are_short(capsys: object) -> None:
-    """DEVELOPERS.md: a module past 500 lines is two ideas. Reports the five longest."""
+def test_modules_are_short() -> None:
+    """DEVELOPERS.md: a module past 500 lines is usually two ideas: reported; past 700: refused."""
     lengths = {p: len(p.read_text(encoding="utf-8").splitlines()) for p in modules()}
     longest = sorted(lengths, key=lengths.get, reverse=True)[:5]  # type: ignore[arg-type]
-    for path in longest:
+    for path in [p for p in lengths if lengths[p] > LONG] or longest:
         print(f"{lengths[path]:5d} {path.relative_to(HOME)}")
-    assert lengths[longest[0]] <= LONG, f"{longest[0]} has {lengths[longest[0]]} lines"
+    assert lengths[longest[0]] <= TOO_LONG, f"{longest[0]} has {lengths[longest[0]]} lines"

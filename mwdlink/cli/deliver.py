@@ -8,7 +8,7 @@ import shlex
 import shutil
 import sys
 import threading
-from collections.abc import Iterable, Iterator, Mapping
+from collections.abc import Collection, Iterable, Iterator, Mapping
 from pathlib import Path
 from typing import Any
 
@@ -30,6 +30,7 @@ def deliver(
     model: Mapping[str, Any] | None = None,
     seed: int | None = None,
     checks: Iterable[tuple[bool | None, str]] = (),
+    without: Collection[str] = (),
 ) -> None:
     """Print a result and write its folder, as the output options ask.
 
@@ -47,11 +48,13 @@ def deliver(
     checks : iterable of (passed, words)
         Checks that the user enforces: one that is False ends the run with status 4, after
         everything has been written and said.
+    without : collection of str
+        Tables not to write.
     """
     record = record_of(result, inputs, output.labels, polymer=polymer, model=model, seed=seed)
     if output.out is not None:
         with working("Drawing and writing", output):
-            tables = result.tables()
+            tables = {k: v for k, v in result.tables().items() if k not in without}
             pictures = pictures_of(record, tables)
             figures: dict[str, bytes] = {}
             for name, picture in pictures.items():

@@ -137,6 +137,21 @@ class Pair(click.ParamType):
         return key.strip(), rest.strip()
 
 
+class Wanted(click.ParamType):
+    """A quantity and the relative precision wanted of it, as in Mz=0.1."""
+
+    name = "QUANTITY=PRECISION"
+
+    def convert(self, value: Any, param: Any, ctx: Any) -> tuple[str, float]:
+        if isinstance(value, tuple):
+            return value
+        name, _, text = str(value).partition("=")
+        precision = _float(text)
+        if not name.strip() or precision is None or not 0 < precision < 1:
+            self.fail(f"{value!r} is not like Mz=0.1.", param, ctx)
+        return name.strip(), precision
+
+
 class Rows(click.ParamType):
     """Line numbers such as 3,17-19."""
 

@@ -154,11 +154,7 @@ def _entry(entry: Any, band: Any, key: str) -> Iterator[Row]:
         name, unit = _name_and_unit(key_of_name)
         head = f"{number(entry[key_of_name])} {unit}"
         head = f"M {head}" if name == "M" else head
-    rest = {
-        k: v
-        for k, v in entry.items()
-        if k != key_of_name and v is not None and not k.endswith(("_low", "_high"))
-    }
+    rest = {k: v for k, v in _folded(entry).items() if k != key_of_name and v is not None}
     rows = [row for k, v in rest.items() for row in _rows(k, v, _part(band, k), _outer(k, v))]
     if len(rows) == 1 and not isinstance(rest[next(iter(rest))], str):
         yield f"{head} {rows[0][0]}".strip(), *rows[0][1:]
@@ -169,6 +165,21 @@ def _entry(entry: Any, band: Any, key: str) -> Iterator[Row]:
         part = text if what in texts else f"{what} {text}"
         parts.append(f"{part} ({between})" if between else part)
     yield head, ", ".join(parts), ""
+
+
+def _folded(entry: Mapping[str, Any]) -> dict[str, Any]:
+    """An entry with each number and its own `_low` and `_high` made one."""
+    out, ends = dict(entry), ("low", "high")
+    for key, value in entry.items():
+        suffix = next((s for s, _ in _UNITS if key.endswith(s) and key != s), "")
+        stem = key.removesuffix(suffix)
+        for names in ([f"{key}_{e}" for e in ends], [f"{stem}_{e}{suffix}" for e in ends]):
+            if all(n in entry for n in names):
+                low, high = (out.pop(n, None) for n in names)
+                if isinstance(value, (int, float)):
+                    out[key] = {"value": value, "low": low, "high": high, "level": None}
+                break
+    return out
 
 
 def _part(band: Any, key: str) -> Any:

@@ -78,6 +78,11 @@ WRITTEN = {
         "sweep.csv spectrum.csv relaxation.csv flow.csv distribution.csv",
         "averages terminal crossover melt_flow indices bands",
     ),
+    "invert sweep.csv --polymer hdpe --members 20 --kernel power-law --above 5e5": (
+        "distribution.csv fit.csv smoothing.csv",
+        "averages window outside_window above fit kernels cross_check peaks advice",
+    ),
+    "rest gpc.csv --polymer hdpe --members 4 --residual 1%": ("rest.csv", "rest"),
     "spectrum sweep.csv --members 4": (
         "spectrum.csv continuous.csv fit.csv",
         "terminal supported consistency",
@@ -119,6 +124,30 @@ def test_same_input_same_bytes(run: Callable[..., Result], tmp_path: Path) -> No
     before = {p: p.read_bytes() for p in (tmp_path / "out").rglob("*") if p.is_file()}
     run(line, "--replace")
     assert {p: p.read_bytes() for p in before} == before
+
+
+def test_members_only_when_asked(
+    run: Callable[..., Result], tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Interface: members.csv is written with --write-members only."""
+    no_pictures(monkeypatch)
+    line = "invert sweep.csv --polymer hdpe --members 20 --kernel power-law --exponent 2 --quiet"
+    run(line, "--out", str(tmp_path / "a"))
+    run(line, "--write-members", "--out", str(tmp_path / "b"))
+    assert not (tmp_path / "a" / "members.csv").exists()
+    assert len(pd.read_csv(tmp_path / "b" / "members.csv", comment="#"))
+
+
+def test_wrong_kind_of_table(inputs: Path) -> None:
+    """Common practice: a table of another kind is named, with the kinds that would do."""
+    from mwdlink.cli.inputs import MEASURED, read_one
+    from mwdlink.errors import InputError
+
+    reading = dict(
+        columns=None, omit=set(), omit_unreadable=False, decimal=None, block=None, sheet=None
+    )
+    with pytest.raises(InputError, match=r"is a distribution\. This command takes a sweep"):
+        read_one(inputs / "gpc.csv", MEASURED, reading)
 
 
 def test_json_is_all_of_stdout(run: Callable[..., Result]) -> None:

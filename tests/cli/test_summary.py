@@ -32,6 +32,16 @@ RECORD: dict[str, Any] = {
     },
     "above": [{"M_g_per_mol": 5e5, "fraction": uncertain(0.03, 0.02, 0.04)}],
     "kernels": [{"kernel": "power-law", "chi2_per_point": 1.0, "admissible": True}],
+    "peaks": [
+        {
+            "M_g_per_mol": 6e4,
+            "M_low_g_per_mol": 4e4,
+            "M_high_g_per_mol": 7e4,
+            "fraction": 0.7,
+            "fraction_low": 0.6,
+            "fraction_high": 0.8,
+        }
+    ],
     "rest": [{"residual": 0.01, "after": "steady flow", "time_s": uncertain(30.0, 25, 40)}],
     "advice": ["Measure down to 0.001 rad/s.", "Give the temperature."],
     "verdict": "consistent",
@@ -59,6 +69,7 @@ def test_what_it_says() -> None:
         "eta at 0.1 rad/s 6000 Pa s",
         "M 5.00e5 g/mol fraction 3.00 wt% 2.00 to 4.00",
         "power-law chi2 per point 1.00, admissible yes",
+        "M 60000 g/mol fraction 70.0 wt% 60.0 to 80.0",
         "steady flow residual 0.0100, time 30.0 s (25.0 to 40.0)",
         "- Measure down to 0.001 rad/s.",
         "Verdict: consistent",
