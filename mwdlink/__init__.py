@@ -41,7 +41,7 @@ _HOME = {
     "predict": "mwdlink.decisions.predict",
     "invert": "mwdlink.inversion.invert",
     "fit_spectrum": "mwdlink.measurement.spectrum_fit",
-    "make_master": "mwdlink.measurement.master",
+    "make_master": "mwdlink.decisions.branching",
     "rest_time": "mwdlink.decisions.rest",
     "blend": "mwdlink.decisions.blend",
     "check_blends": "mwdlink.decisions.blendcheck",

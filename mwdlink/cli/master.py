@@ -40,6 +40,15 @@ from mwdlink.cli.options import (
     help="Steps closer than this are one temperature [K].",
 )
 @polymer_option(required=False)
+@click.option("--Mw", "Mw", type=Number("M", 1), help="Known Mw [g/mol]; for the branching flags.")
+@click.option(
+    "--dispersity", type=Number("D", 1, open_low=False), help="Known Mw/Mn; for the same."
+)
+@click.option(
+    "--intrinsic-viscosity",
+    type=Number("DL_PER_G", 0),
+    help="In trichlorobenzene at 135 C [dL/g]; for the same.",
+)
 @noise_option
 @ensemble_options
 @reading_options
@@ -51,6 +60,9 @@ def command(
     vertical: str,
     same_temperature: float,
     polymer: str | None,
+    Mw: float | None,
+    dispersity: float | None,
+    intrinsic_viscosity: float | None,
     noise: float | None,
     members: int,
     seed: int,
@@ -66,11 +78,12 @@ def command(
 
     SWEEPS are one file with a temperature column, or a file for each
     temperature. The shifts come from all curves at once, with the constants of
-    an Arrhenius and a WLF law fitted to them.
+    an Arrhenius and a WLF law fitted to them. Signs of long-chain branching are
+    listed, each with what else could cause it.
     """
+    from mwdlink.decisions.branching import make_master
     from mwdlink.files.cards import read_polymer
     from mwdlink.files.tables import read_sweeps
-    from mwdlink.measurement.master import make_master
 
     card = None if polymer is None else read_polymer(polymer)
     found = [
@@ -84,6 +97,9 @@ def command(
             reference,
             vertical=vertical,
             polymer=card,
+            Mw_g_per_mol=Mw,
+            dispersity=dispersity,
+            intrinsic_viscosity_dL_per_g=intrinsic_viscosity,
             same_temperature=same_temperature,
             noise=noise,
             members=members,
