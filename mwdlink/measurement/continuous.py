@@ -256,7 +256,7 @@ def fit_continuous(
     """
     problem = _Problem(omega, storage, loss, sigma_storage, sigma_loss, per_decade)
     u = problem.start()
-    fits = []
+    fits: list[tuple[float, float, float, float, np.ndarray]] = []
     for lam in SCAN if smoothing is None else np.array([smoothing]):
         try:
             u, chi2, cost, N = problem.solve(u, lam)
@@ -265,7 +265,7 @@ def fit_continuous(
             u = error.partial
             continue
         log_evidence, trace = problem.evidence(lam, cost, N)
-        fits.append((lam, log_evidence, chi2, trace, u))
+        fits.append((float(lam), log_evidence, chi2, trace, u))
     if not fits:
         raise NotConverged("The continuous spectrum did not converge at any smoothing weight.")
     scan = np.array([f[:3] for f in fits])

@@ -76,7 +76,8 @@ class Drift(Result):
 
     def answer(self) -> str:
         def percent(q: Uncertain) -> str:
-            return f"{100 * q.value:+.1f} % ({100 * q.low:+.1f} to {100 * q.high:+.1f} %)"
+            ends = [100.0 * (x or 0.0) for x in (q.value, q.low, q.high)]
+            return f"{ends[0]:+.1f} % ({ends[1]:+.1f} to {ends[2]:+.1f} %)"
 
         if not self.changed:
             return (
@@ -86,7 +87,7 @@ class Drift(Result):
         cause = (
             "A rise, strongest at low frequency, is what crosslinking, branching or further "
             "polymerisation does; loss of a volatile does it too."
-            if self.low_end_change.value > 0
+            if (self.low_end_change.value or 0.0) > 0
             else "A fall, strongest at low frequency, is what chain scission does; an emptying or "
             "fracturing gap lowers all frequencies alike."
         )
@@ -147,8 +148,7 @@ def compare_drift(
     x, xa = np.log(omega), np.log(after.omega)
     up = np.interp(x, xa, np.log(after.storage)) - np.log(before.storage[inside])
     out = np.interp(x, xa, np.log(after.loss)) - np.log(before.loss[inside])
-    sizes = [noise_of(s, noise).typical for s in (before, after)]
-    sigma = float(np.hypot(*sizes))
+    sigma = float(np.hypot(noise_of(before, noise).typical, noise_of(after, noise).typical))
     r = np.concatenate([up, out])
     value = float(np.mean(r**2)) / sigma**2
     limit = float(chi2_law.ppf(0.999, r.size)) / r.size

@@ -9,11 +9,11 @@ from typing import Any, ClassVar
 import numpy as np
 
 from mwdlink.errors import Caution, InputError, merge_cautions
-from mwdlink.measurement.noise import Weights, noise_of
 from mwdlink.measurement.shift_laws import LawFit, fit_laws, preferred
 from mwdlink.measurement.shifts import Curve, ShiftFit, fit_shifts
 from mwdlink.measurement.superposition import Superposition, judge
 from mwdlink.measurement.sweep import Sweep
+from mwdlink.measurement.temperatures import group_temperatures, pooled_noise
 from mwdlink.quantity import Uncertain, readonly
 from mwdlink.result import Result
 
@@ -55,6 +55,11 @@ class Step:
     residual: float | None
     overlap_decades: float
 
+    @property
+    def factor(self) -> float:
+        """a_T as a plain number [-]."""
+        return float(self.a_T.value or 1.0)
+
 
 @dataclass(frozen=True)
 class Master(Result):
@@ -94,7 +99,7 @@ class Master(Result):
     # -- the curve ----------------------------------------------------------------------------
     def master_sweep(self) -> Sweep:
         """The master curve as one sweep at the reference temperature, ready for `invert`."""
-        parts = [s.sweep.shifted(s.a_T.value, s.b_T) for s in self.steps]
+        parts = [s.sweep.shifted(s.factor, s.b_T) for s in self.steps]
         named: dict[str, Any] = {
             "temperature_C": self.reference_C,
             "label": "master curve",
@@ -162,7 +167,7 @@ class Master(Result):
             rows.append(
                 pd.DataFrame(
                     {
-                        "omega [rad/s]": s.sweep.omega * s.a_T.value,
+                        "omega [rad/s]": s.sweep.omega * s.factor,
                         "G' [Pa]": s.sweep.storage * lift,
                         "G'' [Pa]": s.sweep.loss * lift,
                         "G' fit [Pa]": np.exp(model[0]) * lift,
@@ -183,7 +188,7 @@ class Master(Result):
             "a_T [-]": [s.a_T.value for s in self.steps],
             "a_T low [-]": [s.a_T.low for s in self.steps],
             "a_T high [-]": [s.a_T.high for s in self.steps],
-            "log10 a_T [-]": [np.log10(s.a_T.value) for s in self.steps],
+            "log10 a_T [-]": [np.log10(s.factor) for s in self.steps],
             "b_T [-]": [s.b_T for s in self.steps],
             "b_T free [-]": [s.b_T_free.value for s in self.steps],
             "b_T free low [-]": [s.b_T_free.low for s in self.steps],
@@ -334,7 +339,7 @@ def make_master(
     groups, notes = group_temperatures(sweeps, same_temperature)
     T = np.array([t for t, _ in groups])
     parts = [s for _, s in groups]
-    sigma, notes_noise = _pooled_noise(parts, noise)
+    sigma, notes_noise = pooled_noise(parts, noise)
     curves = [_curve(p, s) for p, s in zip(parts, sigma, strict=True)]
     pivot = int(np.argmin(np.abs(T - reference_C)))
     fixed = _rho_T(T, reference_C, polymer) if vertical == "rho-T" else np.zeros(T.size)
@@ -385,108 +390,9 @@ def make_master(
     return Master(float(reference_C), steps, vertical, laws, law, verdict, fit, None, warnings)
 
 
-def group_temperatures(
-    sweeps: Sequence[Sweep], same_temperature: float = 1.0
-) -> tuple[list[tuple[float, Sweep]], list[Caution]]:
-    """Sweeps by temperature, those within `same_temperature` put together.
-
-    Returns
-    -------
-    groups : list of (float, Sweep)
-        Temperature [C], ascending, and the readings.
-    notes : list of Caution
-
-    Raises
-    ------
-    InputError
-    """
-    sweeps = list(sweeps)
-    for s in sweeps:
-        if s.temperature_C is None:
-            raise InputError(
-                f"the sweep {s.label or s.path or ''!r} has no temperature.",
-                path=s.path,
-                remedy="Give a column T [C], or state the temperature when reading the file.",
-            )
-    sweeps.sort(key=lambda s: s.temperature_C)
-    clusters: list[list[Sweep]] = []
-    for s in sweeps:
-        if clusters and s.temperature_C - clusters[-1][0].temperature_C <= same_temperature:
-            clusters[-1].append(s)
-        else:
-            clusters.append([s])
-    if len(clusters) < 2:
-        raise InputError(
-            "a master curve needs sweeps at two temperatures or more, more than "
-            f"{same_temperature:g} K apart.",
-            remedy="Give more sweeps, or invert the single one as it is.",
-        )
-    groups, notes = [], []
-    for cluster in clusters:
-        T = [float(s.temperature_C) for s in cluster]
-        if len(cluster) > 1:
-            shown = ", ".join(f"{t:.4g}" for t in T)
-            text = f"The steps at {shown} C were taken as one temperature, {np.mean(T):.4g} C."
-            notes.append(Caution("temperatures_joined", text))
-        joined = _joined(cluster, float(np.mean(T)))
-        if len(joined) < 4:
-            raise InputError(
-                f"there are only {len(joined)} points at {np.mean(T):.4g} C.",
-                path=cluster[0].path,
-                remedy="Leave this temperature out or measure at least four frequencies.",
-            )
-        groups.append((float(np.mean(T)), joined))
-    return groups, notes
-
-
-def _joined(cluster: list[Sweep], T: float) -> Sweep:
-    if len(cluster) == 1:
-        return cluster[0]
-
-    def together(name: str) -> np.ndarray | None:
-        columns = [getattr(s, name) for s in cluster]
-        return None if any(c is None for c in columns) else np.concatenate(columns)
-
-    sweep = Sweep.from_arrays(
-        *(together(k) for k in ("omega", "storage", "loss")),
-        sigma_storage=together("sigma_storage"),
-        sigma_loss=together("sigma_loss"),
-        rows=together("rows"),
-        temperature_C=T,
-        label=cluster[0].label,
-        path=cluster[0].path,
-    )
-    own = merge_cautions(*(s.warnings for s in cluster))
-    return sweep.with_(warnings=own)
-
-
-def _pooled_noise(
-    parts: list[Sweep], noise: float | None
-) -> tuple[list[np.ndarray], list[Caution]]:
-    """Relative errors of both moduli of each sweep, shape (2, n); estimates are pooled."""
-    weights: list[Weights] = [noise_of(p, noise) for p in parts]
-    estimated = [w for w in weights if w.source == "estimated"]
-    pooled = float(np.sqrt(np.mean([w.typical**2 for w in estimated]))) if estimated else 0.0
-    out, notes = [], []
-    for p, w in zip(parts, weights, strict=True):
-        if w.source != "estimated":
-            out.append(np.vstack([w.sigma_storage, w.sigma_loss]))
-            continue
-        out.append(np.full((2, len(p)), pooled))
-        estimate = w.estimate
-        if estimate is not None and estimate.outliers:
-            rows = [str(int(p.rows[i]) if p.rows is not None else i + 1) for i in estimate.outliers]
-            text = (
-                f"At {p.temperature_C:.4g} C the readings in row {', '.join(rows)} stand out from "
-                "the others; they were kept."
-            )
-            notes.append(Caution("outliers", text))
-    return out, notes
-
-
 def _curve(sweep: Sweep, sigma: np.ndarray) -> Curve:
-    logs = (np.log(x) for x in (sweep.omega, sweep.storage, sweep.loss))
-    return Curve(*(readonly(x) for x in logs), readonly(sigma[0]), readonly(sigma[1]))
+    x, up, out = (readonly(np.log(y)) for y in (sweep.omega, sweep.storage, sweep.loss))
+    return Curve(x, up, out, readonly(sigma[0]), readonly(sigma[1]))
 
 
 def _rho_T(T: np.ndarray, reference_C: float, polymer: Any) -> np.ndarray:

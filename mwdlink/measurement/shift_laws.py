@@ -64,9 +64,8 @@ class LawFit:
         """Apparent activation energy R d ln a_T/d(1/T) [kJ/mol] at a temperature [C]."""
         if self.kind == "arrhenius":
             return float(self.constants["energy_kJ_per_mol"].value or 0.0)
-        return float(
-            _wlf_energy(*(q.value for q in self.constants.values()), self.reference_C, T_C)
-        )
+        c1, c2 = (float(q.value or 0.0) for q in self.constants.values())
+        return _wlf_energy(c1, c2, self.reference_C, T_C)
 
     def activation_energy_interval(self, T_C: float) -> Uncertain:
         """The same with its interval."""
@@ -233,6 +232,7 @@ def _law(
     reference_C: float,
     level: float,
 ) -> LawFit:
+    names: tuple[str, ...]
     if kind == "arrhenius":
         predicted = _arrhenius(T[others], pivot_C) * best[0]
         names = ("energy_kJ_per_mol",)

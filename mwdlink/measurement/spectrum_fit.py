@@ -298,37 +298,37 @@ def _terminal(sweep: Sweep, c: Continuous, discrete: ModeFit) -> tuple[dict[str,
     Where they are resolved, the interval also holds the value of the discrete modes: the smoothing
     broadens a spectrum of single lines a little, and the members cannot know it.
     """
-    has = c.members.shape[0] > 0
-    eta0, second = c.integral(1.0), c.integral(2.0)
+    eta0, second = float(c.integral(1.0)), float(c.integral(2.0))
     je0 = second / eta0**2
     # the fitted response at the lowest frequency, for curve and members alike
     at = Spectrum(c.tau, c.H * c.step).moduli(sweep.omega[:1])
     g_abs = float(np.hypot(at[0][0], at[1][0]))
     eta_low, je_low = g_abs / sweep.omega[0], float(at[0][0]) / g_abs**2
-    reached = eta0 / eta_low <= REACHED_ETA0
-    reached_je0 = reached and je0 / je_low <= REACHED_JE0
-    if has:
-        m_eta0 = np.asarray(c.integral(1.0, members=True))
-        m_second = np.asarray(c.integral(2.0, members=True))
-        x = sweep.omega[0] * c.tau
-        m_up = c.members @ (c.step * x * x / (1 + x * x))
-        m_out = c.members @ (c.step * x / (1 + x * x))
-        m_abs = np.hypot(m_up, m_out)
-    else:
-        m_eta0 = m_second = m_up = m_abs = None
-
+    reached = bool(eta0 / eta_low <= REACHED_ETA0)
+    reached_je0 = bool(reached and je0 / je_low <= REACHED_JE0)
+    # the same of every member; empty without members
+    x = sweep.omega[0] * c.tau
+    m_eta0 = np.asarray(c.integral(1.0, members=True))
+    m_second = np.asarray(c.integral(2.0, members=True))
+    m_up = c.members @ (c.step * x * x / (1 + x * x))
+    m_abs = np.hypot(m_up, c.members @ (c.step * x / (1 + x * x)))
     single = Spectrum(discrete.tau, discrete.strength)
 
     def quantity(
-        value: float, samples: Any, resolved: bool, bound: float, bounds: Any, lines: float
+        value: float,
+        samples: np.ndarray,
+        resolved: bool,
+        bound: float,
+        bounds: np.ndarray,
+        lines: float,
     ) -> Uncertain:
         if resolved:
-            if samples is None:
+            if samples.size == 0:
                 return Uncertain(float(value), level=c.level)
             q = Uncertain.from_samples(samples, value, level=c.level)
             low, high = min(q.low or lines, lines), max(q.high or lines, lines)
             return Uncertain(q.value, low, high, c.level)
-        if bounds is None:
+        if bounds.size == 0:
             return Uncertain(float(bound), level=c.level, status="lower_bound")
         low = float(np.quantile(bounds, (1 - c.level) / 2))
         # the upper end is where the smooth continuation leads: no promise, a plain number all the
@@ -338,11 +338,8 @@ def _terminal(sweep: Sweep, c: Continuous, discrete: ModeFit) -> tuple[dict[str,
             float(bound), min(low, float(bound)), max(high, value), c.level, "lower_bound"
         )
 
-    m_je0 = None if m_eta0 is None else m_second / m_eta0**2
-    m_time = None if m_eta0 is None else m_second / m_eta0
-    m_eta_low = None if m_abs is None else m_abs / sweep.omega[0]
-    m_je_low = None if m_abs is None else m_up / m_abs**2
-    m_time_low = None if m_abs is None else m_eta_low * m_je_low
+    m_je0, m_time = m_second / m_eta0**2, m_second / m_eta0
+    m_eta_low, m_je_low = m_abs / sweep.omega[0], m_up / m_abs**2
     bands = {
         "eta0_Pa_s": quantity(
             float(eta0), m_eta0, reached, eta_low, m_eta_low, single.zero_shear_viscosity
@@ -355,7 +352,7 @@ def _terminal(sweep: Sweep, c: Continuous, discrete: ModeFit) -> tuple[dict[str,
             m_time,
             reached_je0,
             eta_low * je_low,
-            m_time_low,
+            m_eta_low * m_je_low,
             single.mean_time,
         ),
     }
