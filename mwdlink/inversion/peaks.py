@@ -224,11 +224,9 @@ def _half_width(x: np.ndarray, density: np.ndarray, top: _Top) -> float | None:
         return None
 
     left, right = side(-1, top.first), side(1, top.last)
-    if left is None and right is None:
-        return None
-    if left is None or right is None:
-        return 2.0 * float(right if left is None else left)
-    return left + right
+    if left is None:
+        return None if right is None else 2.0 * right
+    return 2.0 * left if right is None else left + right
 
 
 def _peak(
