@@ -16,6 +16,7 @@ References
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, field, replace
 
 import numpy as np
@@ -27,6 +28,7 @@ from mwdlink.inversion.objective import Forward, Problem, rouse_columns, time_co
 from mwdlink.inversion.roughness import roughness
 from mwdlink.inversion.solve import Shift, minimise
 from mwdlink.inversion.window import Window, find_window
+from mwdlink.measurement.noise import Weights
 from mwdlink.measurement.sweep import FlowCurve, RelaxationCurve
 from mwdlink.relaxation.mixing import Model
 from mwdlink.relaxation.operator import LEAN_MARGIN, LEAN_TIMES, time_operator
@@ -159,6 +161,53 @@ def flow_problem(
     sigma = np.hypot(sigma, COX_MERZ_ERROR)
     prior = roughness(window.nodes.size, window.spacing)
     return Problem(np.log(curve.viscosity), sigma, forward, prior, window)
+
+
+class _Maker:
+    """Builds problems of one curve for any melt and model; picklable, so that workers can."""
+
+    def __init__(self, curve: RelaxationCurve | FlowCurve, noise: float | None) -> None:
+        self.curve, self.noise = curve, noise
+
+    def __call__(self, melt: Melt, model: Model, window: Window | None) -> Problem:
+        if isinstance(self.curve, FlowCurve):
+            return flow_problem(self.curve, melt, model, noise=self.noise, window=window)
+        return relaxation_problem(self.curve, melt, model, noise=self.noise, window=window)
+
+
+def curve_maker(
+    curve: RelaxationCurve | FlowCurve, noise: float | None = None
+) -> tuple[Callable[[Melt, Model, Window | None], Problem], int, Weights]:
+    """What builds the problems of a curve, its number of data, and its errors.
+
+    Parameters
+    ----------
+    curve : RelaxationCurve or FlowCurve
+    noise : float, optional
+        Relative noise [-].
+
+    Raises
+    ------
+    InputError
+        Too few points, or a noise that makes no sense.
+    """
+    _enough(len(curve))
+    if noise is not None and not 0 < noise < 1:
+        raise InputError(
+            f"a relative noise of {noise:g} makes no sense.",
+            remedy="Give a fraction: 0.02 for 2 %.",
+        )
+    if isinstance(curve, FlowCurve):
+        sigma = np.hypot(_sigma(curve.sigma, noise, curve.rate, curve.viscosity), COX_MERZ_ERROR)
+    else:
+        sigma = _sigma(curve.sigma, noise, curve.time, curve.modulus)
+    source = "given" if noise is not None else "estimated" if curve.sigma is None else "columns"
+    return _Maker(curve, noise), len(curve), Weights(sigma, sigma[:0], source)
+
+
+def curve_cautions(curve: RelaxationCurve | FlowCurve) -> tuple[Caution, ...]:
+    """What must be said with a distribution read from such a curve."""
+    return flow_cautions(curve) if isinstance(curve, FlowCurve) else relaxation_cautions(curve)
 
 
 def minimise_copies(problem: Problem, copies: Copies) -> tuple[np.ndarray, np.ndarray]:

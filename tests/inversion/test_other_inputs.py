@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import pickle
+
 import numpy as np
 import pytest
 
@@ -12,6 +14,8 @@ from mwdlink.inversion.many import Copies
 from mwdlink.inversion.objective import sweep_problem, weights
 from mwdlink.inversion.other_inputs import (
     COX_MERZ_ERROR,
+    curve_cautions,
+    curve_maker,
     flow_cautions,
     flow_problem,
     minimise_copies,
@@ -159,3 +163,21 @@ def test_too_few_points_and_unfinished_relaxation_are_said():
         flow_problem(FlowCurve(RATE[:5], np.linspace(5, 1, 5)), MELT, MODEL)
     early = RelaxationCurve(TIME[:10], 1e5 * TIME[:10] ** -0.3)
     assert relaxation_cautions(early)[0].code == "relaxation_not_terminal"
+
+
+def test_a_maker_builds_the_problems_of_any_model_and_survives_a_worker():
+    """Derived: the same problem as by hand, after pickling too; where the errors came from."""
+    for curve, by_hand in (
+        (relaxation_curve(), relaxation_problem), (flow_curve(), flow_problem)
+    ):
+        maker, points, errors = curve_maker(curve, 0.02)
+        assert points == len(curve) and errors.source == "given"
+        assert curve_maker(curve)[2].source == "estimated"
+        built = pickle.loads(pickle.dumps(maker))(MELT, MODEL, None)
+        other = by_hand(curve, MELT, MODEL, noise=0.02)
+        w = np.full(other.size, 1 / other.size)
+        assert np.array_equal(built.misfit(w), other.misfit(w))
+        assert np.allclose(errors.sigma_storage, other.sigma)
+        with pytest.raises(InputError, match="noise"):
+            curve_maker(curve, 3.0)
+    assert curve_cautions(flow_curve())[0].code == "flow_curve_input"
