@@ -21,7 +21,7 @@ from mwdlink.files.layout import Block, unit_of
 from mwdlink.files.numbers import Numbers, find_decimal, grouped_note, to_numbers
 from mwdlink.files.roles import ROLES
 from mwdlink.files.source import Source, rows_option, rows_text
-from mwdlink.files.units import EMPTY, find_unit, normal_unit
+from mwdlink.files.units import find_unit, is_empty, normal_unit
 
 # kinds whose bare numbers need no word about a unit
 _UNITLESS = ("fraction", "number", "signal", "any")
@@ -62,9 +62,9 @@ class Picker:
 
     def _unit(self, index: int, header: str, given: str | None, kind: str) -> str | None:
         row = unit_of(self.block, index)
-        if given is None or given.strip() in EMPTY:
+        if given is None or is_empty(given):
             return row if row is not None else given
-        if row is None or row.strip() in EMPTY:
+        if row is None or is_empty(row):
             return given
         known = find_unit(given, kind)
         if (known is not None and known == find_unit(row, kind)) or (
@@ -105,7 +105,7 @@ class Picker:
         claims = self.found.get(role, [])
         if len(claims) > 1:
             kind = ROLES[role].kind
-            fit = [c for c in claims if c[1] is None or c[1].strip() in EMPTY
+            fit = [c for c in claims if c[1] is None or is_empty(c[1])
                    or find_unit(c[1], kind)]  # fmt: skip
             claims = fit if len(fit) == 1 else claims
         if not claims:

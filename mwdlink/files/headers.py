@@ -15,7 +15,7 @@ from typing import Any
 
 from mwdlink.errors import InputError
 from mwdlink.files.roles import ROLES, plain_name, role_of
-from mwdlink.files.units import EMPTY, UNITS, Conversion, conversion, find_unit
+from mwdlink.files.units import UNITS, Conversion, conversion, find_unit, is_empty
 
 _BRACKETED = (
     re.compile(r"^(?P<name>.*?)\s*\[(?P<unit>[^\[\]]*)\]\s*$"),
@@ -68,7 +68,7 @@ def recognise(header: str) -> Match | None:
         if found is None:
             continue
         inner = recognise(found["name"]) if found["name"] else None
-        if inner is not None and (inner.unit is None or found["unit"].strip() in EMPTY):
+        if inner is not None and (inner.unit is None or is_empty(found["unit"])):
             return Match(inner.role, inner.unit or found["unit"])
     for loose in _LOOSE:
         found = loose.match(text)
@@ -263,7 +263,7 @@ def make_column(
     place: dict[str, Any] = {"path": path, "row": row, "column": header}
     flag = f'--column "{role}={header}:UNIT"'
     known = ", ".join(UNITS[kind])
-    if unit is None or (unit.strip() in EMPTY and kind not in ("fraction", "number", "signal")):
+    if unit is None or (is_empty(unit) and kind not in ("fraction", "number", "signal")):
         assumed = ROLES[role].assumed
         if assumed is None and kind == "frequency":
             raise InputError(
@@ -275,7 +275,7 @@ def make_column(
             # settled later, from the values, or given up (see `tables`)
             assumed = next(iter(UNITS[kind]), "")
         return Column(role, index, header, conversion(assumed, kind), True, chosen)
-    if unit.strip() in EMPTY:
+    if is_empty(unit):
         return Column(role, index, header, conversion("-", kind), False, chosen)
     found = find_unit(unit, kind)
     if found is None:

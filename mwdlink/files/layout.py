@@ -20,7 +20,7 @@ from mwdlink.files.split import (
     split_header,
     split_lines,
 )
-from mwdlink.files.units import EMPTY, is_any_unit
+from mwdlink.files.units import is_any_unit, is_empty
 
 # rows of text tried as headers before a file is given up: a book is no table
 _MAX_TRIED = 20_000
@@ -312,7 +312,7 @@ def _is_units(cells: Sequence[str]) -> bool:
     """Whether a row of cells is a row of units: mostly known ones, none a column name with unit."""
     given = [c for c in cells if c]
     known = sum(1 for c in given if is_any_unit(c))
-    real = sum(1 for c in given if c.strip("[]() ") not in EMPTY and is_any_unit(c))
+    real = sum(1 for c in given if not is_empty(c) and is_any_unit(c))
     bracketed = sum(1 for c in given if c[0] in "[(" and c[-1] in "])")
     return bool(given) and (real >= 1 or bracketed >= 2) and 2 * (known + bracketed) >= len(given)
 
@@ -327,7 +327,7 @@ def _units_row(
         return None, first
     row = rows[i]
     cells = _trim(row.cells)  # type: ignore[union-attr]
-    text_only = kinds[i] == "text" or all(c in EMPTY or not looks_numeric(c) for c in cells)
+    text_only = kinds[i] == "text" or all(is_empty(c) or not looks_numeric(c) for c in cells)
     if text_only and len(cells) <= width and _is_units(cells) and count_known(cells) < 2:
         return cells + [""] * (width - len(cells)), i + 1
     return None, first
@@ -386,6 +386,7 @@ def _collect(
 ) -> list[_Draft]:
     """Data rows under one header; a title after a blank line, or a restart, opens a new block."""
     drafts = [_Draft(cells, units, line or None, head)]
+    abscissa = _find_abscissa(cells)
     i = first
     while i < stop:
         row = rows[i]
@@ -399,7 +400,7 @@ def _collect(
             if rows[j] is not None:
                 title.append(rows[j].text.strip())  # type: ignore[union-attr]
             j += 1
-        if j < stop and drafts[-1].data and (title or _restarts(rows[j], drafts[-1])):  # type: ignore[arg-type]
+        if j < stop and drafts[-1].data and (title or _restarts(rows[j], drafts[-1], abscissa)):  # type: ignore[arg-type]
             drafts.append(_Draft(cells, units, line or None, title))
         elif title:
             # a title above the first row, or texts after the last one
@@ -415,11 +416,26 @@ def _is_title(row: Row | None, kind: str, draft: _Draft, cells: Sequence[str]) -
     return len(_trim(row.cells)) < min(len(cells), 3) and not _data_like(row, draft.data[0])
 
 
-def _restarts(row: Row, draft: _Draft) -> bool:
-    """Whether a row after a blank line begins with the number the block began with."""
-    old = [c for c in draft.data[0].cells if looks_numeric(c)]
-    new = [c for c in row.cells if looks_numeric(c)]
-    return bool(old and new) and len(draft.data) >= 3 and old[0] == new[0]
+def _restarts(row: Row, draft: _Draft, abscissa: int | None) -> bool:
+    """Whether a row after a blank line begins again at the abscissa the block began with."""
+    if abscissa is None or len(draft.data) < 3:
+        return False
+    old = [r.cells[abscissa] for r in draft.data if abscissa < len(r.cells)]
+    new = row.cells[abscissa] if abscissa < len(row.cells) else ""
+    # an abscissa that repeats within the block anyway says nothing
+    return bool(old) and looks_numeric(new) and new == old[0] and len(set(old)) == len(old)
+
+
+def _find_abscissa(headers: Sequence[str]) -> int | None:
+    """The column that orders the rows, if one is recognised."""
+    for i, header in enumerate(headers):
+        match = recognise(header)
+        if match is not None and match.role in _ABSCISSAE:
+            return i
+    return None
+
+
+_ABSCISSAE = ("omega", "f", "frequency", "rate", "tau", "M", "log10 M", "log M", "ln M", "t")
 
 
 def _finish(draft: _Draft, path: str | None, sheet: str, delimiter: str) -> Block:

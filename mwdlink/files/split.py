@@ -125,18 +125,17 @@ def find_delimiter(lines: Sequence[str]) -> str:
     if len(lines) > 2 * _SAMPLE:
         middle = len(lines) // 2
         sample += [s for s in lines[middle : middle + _SAMPLE // 4] if s.strip()]
-    best, best_score = ",", (False, 0.0)
+    scores = {}
     for delimiter in DELIMITERS:
-        if delimiter != " " and not any(delimiter in s for s in sample):
-            continue
-        score = _score(sample, delimiter)
-        if score > best_score:
-            best, best_score = delimiter, score
-    return best
+        if delimiter == " " or any(delimiter in s for s in sample):
+            scores[delimiter] = _score(sample, delimiter)
+    # a mark under which header and rows fit beats blanks, which may also part thousands
+    sure = {d: s for d, s in scores.items() if d != " " and s[0] and s[2] > 0.6} or scores
+    return max(sure, key=lambda d: sure[d][:2])
 
 
-def _score(sample: Iterable[str], delimiter: str) -> tuple[bool, float]:
-    """Whether a header shows under this delimiter, and how many numbers minus how many texts."""
+def _score(sample: Iterable[str], delimiter: str) -> tuple[bool, float, float]:
+    """Whether a header shows, numbers minus texts, and the share of rows of the usual width."""
     split = splitter(delimiter)
     rows = []
     header = False
@@ -151,9 +150,10 @@ def _score(sample: Iterable[str], delimiter: str) -> tuple[bool, float]:
         elif good == 0 and len(cells) >= 2 and not header:
             header = count_known(join_units(cells) if delimiter == " " else cells) >= 2
     if not rows:
-        return header, 0.0
-    width = Counter(n for n, _ in rows).most_common(1)[0][0]
-    return header, float(sum(value for n, value in rows if n == width))
+        return header, 0.0, 0.0
+    width, often = Counter(n for n, _ in rows).most_common(1)[0]
+    total = float(sum(value for n, value in rows if n == width))
+    return header, total, often / len(rows)
 
 
 def join_units(cells: Sequence[str]) -> list[str]:

@@ -185,9 +185,14 @@ def find_unit(text: str, kind: str) -> str | None:
     return None
 
 
+def is_empty(text: str) -> bool:
+    """Whether a unit's text says that there is none: nothing, a dash, a one, in brackets or not."""
+    return text.strip().strip("[](){} ") in EMPTY
+
+
 def is_any_unit(text: str) -> bool:
     """Whether a cell could stand in a row of units."""
-    return text.strip().strip("[]() ") in EMPTY or any(find_unit(text, kind) for kind in UNITS)
+    return is_empty(text) or any(find_unit(text, kind) for kind in UNITS)
 
 
 @dataclass(frozen=True)

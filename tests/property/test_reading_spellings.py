@@ -91,7 +91,9 @@ def sweeps(draw: Any) -> tuple[str, str, dict[str, list[float]], dict[str, str]]
         ]
         numbers[role] = [max(x, 0.01) for x in numbers[role]]
     numbers["note"] = [0.0] * count
-    delimiter = draw(st.sampled_from([",", ";", "\t", "|", "  "]))
+    # bars around a name and bars between cells exclude each other
+    marks = [",", ";", "\t", "  "] if "|eta*|" in roles else [",", ";", "\t", "  ", "|"]
+    delimiter = draw(st.sampled_from(marks))
     decimal = draw(st.sampled_from([".", ","] if delimiter not in ", " else ["."]))
     other = "," if decimal == "." else "."
     thousands = draw(st.sampled_from(["", "", other, " ", "\u202f", "'"]))
@@ -119,7 +121,8 @@ def sweeps(draw: Any) -> tuple[str, str, dict[str, list[float]], dict[str, str]]
         unit_row.append(f"[{unit}]" if style == "row[]" else unit)
     lines = []
     for _ in range(draw(st.integers(0, 2))):
-        lines.append(draw(st.sampled_from(["# made up", "#", "# sample: X", "Report of a test", ""])))
+        above = ["# made up", "#", "# sample: X", "Report of a test", ""]
+        lines.append(draw(st.sampled_from(above)))
     trailing = delimiter if delimiter in ";\t" and draw(st.booleans()) else ""
     lines.append(delimiter.join(head) + trailing)
     if style.startswith("row") and any(u.strip("[]") not in ("", "-", "1") for u in unit_row):
@@ -132,7 +135,8 @@ def sweeps(draw: Any) -> tuple[str, str, dict[str, list[float]], dict[str, str]]
             cells.append(f'"{cell}"' if quoted else cell)
         lines.append(delimiter.join(cells) + trailing)
         if draw(st.integers(0, 9)) == 0:
-            lines.append(draw(st.sampled_from(["", "# a remark", delimiter * 3 if trailing else ""])))
+            between = ["", "# a remark", delimiter * 3 if trailing else ""]
+            lines.append(draw(st.sampled_from(between)))
     end = draw(st.sampled_from(["\n", "\r\n", "\r"]))
     text = end.join(lines) + draw(st.sampled_from(["", end, end * 2]))
     fits = [e for e in ("utf-8", "utf-8-sig", "utf-16", "utf-16-le", "latin-1", "cp1252")
