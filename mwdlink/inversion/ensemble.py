@@ -23,14 +23,16 @@ from mwdlink.inversion.objective import (
     weights,
 )
 from mwdlink.inversion.roughness import relieved
-from mwdlink.inversion.smoothing import Scan, log_evidence, scan
-from mwdlink.inversion.solve import Fit, minimise
+from mwdlink.inversion.smoothing import Scan, scan
+from mwdlink.inversion.solve import Fit
 from mwdlink.relaxation.kernels import get_kernel
 from mwdlink.relaxation.mixing import Model
 
 # a kernel is impossible when its chi2 exceeds the best one's by this much, in units of the best
 # one's chi2 per degree of freedom (five standard deviations)
 REJECT = 25.0
+# the fit may narrow the exponent's prior to half its spread at most
+MOST_PRECISION = 3.0
 
 
 @dataclass(frozen=True)
@@ -128,18 +130,10 @@ def fit_branch(
     melt, model, problem = build.problem(kernel, mean)
     problem, found = _scan(problem, None, values)
     if spread > 0:
-        for _ in range(2):
-            mean_new, sd = _exponent_posterior(build, kernel, problem, found, mean, prior)
-            moved = abs(mean_new - mean)
-            mean, spread = mean_new, sd
-            if moved < 0.25 * sd:
-                break
-            melt, model, problem = build.problem(kernel, mean)
-            problem, found = _scan(problem, found.fits[found.best].u, values)
-        else:
-            melt, model, problem = build.problem(kernel, mean)
-            problem, found = _scan(problem, found.fits[found.best].u, values)
-        model = replace(model, exponent=float(model.exponent))
+        mean, spread = _exponent_posterior(build, kernel, problem, found, mean, prior)
+        melt, model, moved = build.problem(kernel, mean)
+        problem = replace(moved, prior=problem.prior)
+        found = scan(problem, found.fits[found.best].u, found.smoothing)
     return Branch(kernel, melt, model, spread, problem, found, build.plateau_factor)
 
 
@@ -180,26 +174,30 @@ def _exponent_posterior(
     centre: float,
     prior: ExponentPrior,
 ) -> tuple[float, float]:
-    """Mean and spread of prior times evidence, the evidence a parabola through three exponents."""
-    best = found.fits[found.best]
+    """Mean and spread of prior times evidence, the evidence a parabola through three exponents.
+
+    The evidence is averaged over lambda at each exponent: at one fixed lambda, and worst at a
+    smooth one, it would measure how log-normal the melt is, not the exponent.
+    """
     reach = 1.2 * prior.spread
-    offsets = np.array([-reach, 0.0, reach])
-    offsets = np.maximum(centre + offsets, 1.0) - centre
-    values = []
+    offsets = np.array([max(centre - reach, 1.0) - centre, 0.0, reach])
+    if offsets[0] > -0.5 * reach:
+        return centre, prior.spread
+    u = found.fits[found.best].u
+    values = np.unique(np.append(found.smoothing[::4], found.smoothing[found.best]))[::-1]
+    totals = []
     for d in offsets:
-        if d == 0.0:
-            values.append(log_evidence(problem, best))
-            continue
         other = build.problem(kernel, centre + d)[2]
-        other = replace(other, prior=problem.prior)
-        fit = minimise(other, best.u, best.smoothing)
-        values.append(log_evidence(other, fit))
-    c2, c1, _ = np.polyfit(offsets, values, 2) if offsets[0] < 0 else (0.0, 0.0, 0.0)
-    # log posterior: c2 d^2 + c1 d - (centre + d - mean)^2/(2 spread^2)
-    precision = max(-2.0 * c2, 0.0) + 1.0 / prior.spread**2
-    slope = c1 - (centre - prior.mean) / prior.spread**2
-    shift = float(np.clip(slope / precision, -2.5 * prior.spread, 2.5 * prior.spread))
-    return max(centre + shift, 1.0), float(1.0 / np.sqrt(precision))
+        totals.append(scan(replace(other, prior=problem.prior), u, values).total)
+    c2, c1, _ = np.polyfit(offsets, totals, 2)
+    # the shape prior speaks in this evidence too, so it may not narrow the exponent without limit
+    data = float(np.clip(-2.0 * c2, 0.0, MOST_PRECISION / prior.spread**2))
+    # log posterior: data/2 (d - peak)^2 + (centre + d - mean)^2/(2 spread^2)
+    peak = float(np.clip(c1 / (-2.0 * c2), -reach, reach)) if data > 0 else reach * np.sign(c1)
+    pull = 1.0 / prior.spread**2
+    precision = data + pull
+    shift = (data * peak + pull * (prior.mean - centre)) / precision
+    return max(centre + float(shift), 1.0), float(1.0 / np.sqrt(precision))
 
 
 def draw_members(branch: Branch, count: int, seed: np.random.SeedSequence, scatter: float) -> Members:

@@ -1,0 +1,1 @@
+"""Whole jobs: the example scenario, and many inputs at once."""
