@@ -156,7 +156,9 @@ def even_times(low: float, high: float) -> np.ndarray:
 def _fit_matrix(count: int, step: float, modes: int) -> np.ndarray:
     """Values at `count` times e^(i step) -> strengths at `modes` times over the same range."""
     t = np.exp(step * np.arange(count))
-    return exponential_fit(t, np.geomspace(t[0], t[-1], modes))
+    fit = exponential_fit(t, np.geomspace(t[0], t[-1], modes))
+    fit.setflags(write=False)
+    return fit
 
 
 def lean(distribution: Distribution) -> Distribution:
@@ -320,9 +322,11 @@ def from_modulus(
     decades = np.log10(times[-1] / times[0])
     modes = round(decades * MODES_PER_DECADE) + 1
     step = round(float(np.log(times[-1] / times[0]) / (times.size - 1)), 9)
-    fit = _fit_matrix(times.size, step, modes)
+    fit = _fit_matrix(times.size, step, modes)  # (modes, times)
     tau = np.geomspace(times[0], times[-1], modes)
     none = np.empty(0)
+    # what is left at the longest times are numbers so small that arithmetic with them is slow
+    modulus = np.where(modulus > 1e-40 * modulus.max(), modulus, 0.0)
     return Response(
         times,
         modulus,

@@ -155,7 +155,7 @@ class Trust:
 
     def to_toml(self) -> str:
         """Text of trust.toml."""
-        head = "# What measured blends taught about the mixing rule; read by `mwdlink blend --trust`.\n"
+        head = "# What measured blends taught about the rule; `mwdlink blend --trust` reads it.\n"
         return head + toml_text(self.to_mapping())
 
     @classmethod
