@@ -308,10 +308,10 @@ def by_rows(items: list[Any], columns: int) -> list[Any]:
     return [items[r * columns + c] for c in range(columns) for r in range(heights[c])]
 
 
-def legend_above(
-    ax: Axes, *, handles: list[Any] | None = None, over_figure: bool = False, room: float = 94.0
-) -> None:
+def legend_above(ax: Axes, *, handles: list[Any] | None = None, over_figure: bool = False) -> None:
     """The legend over the axes, where it can hide nothing.
+
+    It starts at the axes' left edge; where it is too wide for that it ends at their right edge.
 
     Parameters
     ----------
@@ -319,32 +319,32 @@ def legend_above(
         What to name, in reading order; everything labelled unless given.
     over_figure : bool
         Start at the figure's left edge: for pictures with long names beside the axes.
-    room : float
-        Width there is [mm].
     """
     found, labels = ax.get_legend_handles_labels()
     if handles is not None:
         found, labels = handles, [str(h.get_label()) for h in handles]
     if not found:
         return
-    figure = ax.get_figure(root=True)
-    over_figure = over_figure and isinstance(figure, Figure)
-    if over_figure:
-        room = 106.0
-    columns = 1
-    for n in range(min(5, len(found)), 1, -1):
-        widths = [max(len(label) for label in labels[c::n]) * 1.5 + 13.2 for c in range(n)]
-        if sum(widths) - 4.0 <= room:
-            rows = math.ceil(len(found) / n)
-            columns = math.ceil(len(found) / rows)
+    columns, width = 1, 0.0
+    for n in range(min(5, len(found)), 0, -1):
+        rows = math.ceil(len(found) / n)
+        columns = math.ceil(len(found) / rows)
+        # handle, gaps and about 1.6 mm a character
+        width = (
+            sum(max(len(t) for t in labels[c::columns]) * 1.6 + 13.2 for c in range(columns)) - 4
+        )
+        if width <= WIDTH - 8.0:
             break
     order = by_rows(list(range(len(found))), columns)
     found, labels = [found[k] for k in order], [labels[k] for k in order]
-    look = {"ncols": columns, "borderpad": 0.0, "handletextpad": 0.6}
-    if over_figure:
-        figure.legend(found, labels, loc="outside upper left", **look)  # type: ignore[union-attr]
-    else:
+    look: dict[str, Any] = {"ncols": columns, "borderpad": 0.0, "handletextpad": 0.6}
+    figure = ax.get_figure(root=True)
+    if over_figure and isinstance(figure, Figure):
+        figure.legend(found, labels, loc="outside upper left", **look)
+    elif width <= WIDTH - 34.0:
         ax.legend(found, labels, loc="lower left", bbox_to_anchor=(0.0, 1.01), **look)
+    else:
+        ax.legend(found, labels, loc="lower right", bbox_to_anchor=(1.0, 1.01), **look)
 
 
 def series_look(i: int) -> dict[str, Any]:
