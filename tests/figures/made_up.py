@@ -365,8 +365,7 @@ def live_quadratic() -> dict[str, Any]:
     omega = np.logspace(-2, 2, 41)
     first = maxwell(omega, TAU * 12)
     second = maxwell(omega, TAU / 6)
-    half = maxwell(omega, TAU * 1.5)
-    cross = tuple(2 * h - 0.5 * (a + b) for h, a, b in zip(half, first, second, strict=True))
+    cross = maxwell(omega, TAU * 1.7)
     table = fractions_table()
     return {
         "mode": "quadratic",

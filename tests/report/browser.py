@@ -15,9 +15,6 @@ from pathlib import Path
 from queue import Empty, Queue
 from typing import Any
 
-BROWSER = next(
-    (p for p in map(shutil.which, ("chromium", "chromium-browser", "google-chrome")) if p), None
-)
 FLAGS = (
     "--headless", "--no-sandbox", "--disable-gpu", "--disable-quic", "--no-first-run", "--disable-background-networking",
     "--disable-component-update", "--disable-sync", "--disable-dev-shm-usage", "--remote-debugging-pipe",
@@ -27,7 +24,7 @@ FLAGS = (
 class Browser:
     """One browser with an empty profile; pages are opened one after another in one tab."""
 
-    def __init__(self) -> None:
+    def __init__(self, program: str) -> None:
         self._home = tempfile.mkdtemp(prefix="mwdlink-browser-")
         ends = [
             fcntl.fcntl(fd, fcntl.F_DUPFD_CLOEXEC, 20)
@@ -41,7 +38,7 @@ class Browser:
             os.dup2(theirs_out, 4)
 
         self._process = subprocess.Popen(
-            [str(BROWSER), *FLAGS, f"--user-data-dir={self._home}", "about:blank"],
+            [program, *FLAGS, f"--user-data-dir={self._home}", "about:blank"],
             preexec_fn=hand_over, pass_fds=(3, 4), stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL, start_new_session=True,
         )  # fmt: skip
         os.close(theirs_in)
