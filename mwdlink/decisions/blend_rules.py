@@ -54,10 +54,21 @@ class BlendData:
 class Rule(Protocol):
     """A mixing rule with one free exponent, and a free factor of the time law where it has one."""
 
-    kernel: str
-    route: str
-    exponents: np.ndarray
-    factors: np.ndarray
+    @property
+    def kernel(self) -> str:
+        """Kernel, or `measured spectra`."""
+
+    @property
+    def route(self) -> str:
+        """`sweeps` or `distributions`."""
+
+    @property
+    def exponents(self) -> np.ndarray:
+        """Exponents tried [-], even."""
+
+    @property
+    def factors(self) -> np.ndarray:
+        """Factors on the time law tried [-], even in their logarithm."""
 
     def response(self, phi: np.ndarray, exponent: float, member: int | None = None) -> Response:
         """Blends of fractions (k, n_i)."""

@@ -81,7 +81,7 @@ def verdict_of(
     good = [d for d in error.decades if d.trusted]
     if good and judged:
         out.append(
-            f"It may be trusted from {good[0].low:.2g} to {good[-1].high:.2g} rad/s (error at most "
+            f"The rule may be trusted from {good[0].low:.2g} to {good[-1].high:.2g} rad/s (error at most "
             f"{trusted:.2g} decades in each decade of frequency)"
         )
     elif judged:

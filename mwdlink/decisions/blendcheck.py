@@ -550,16 +550,16 @@ def _error(
             b.append(misses[i][n:][mask])
     decades = []
     for k in sorted(pooled):
-        a, b = (np.concatenate(x) for x in pooled[k])
-        rms = float(np.sqrt(np.mean(a**2))), float(np.sqrt(np.mean(b**2)))
+        up, out = (np.concatenate(x) for x in pooled[k])
+        rms = float(np.sqrt(np.mean(up**2))), float(np.sqrt(np.mean(out**2)))
         decades.append(
             Decade(
                 float(10.0**k),
                 float(10.0 ** (k + 1)),
                 rms[0],
                 rms[1],
-                float(a.mean()),
-                float(b.mean()),
+                float(up.mean()),
+                float(out.mean()),
                 max(rms) <= TRUSTED_DECADES,
             )
         )

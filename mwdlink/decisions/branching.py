@@ -23,7 +23,7 @@ from mwdlink.decisions.branching_signs import (
     superposition,
     zero_shear_viscosity,
 )
-from mwdlink.errors import Caution, merge_cautions
+from mwdlink.errors import Caution, ModelError, merge_cautions
 from mwdlink.measurement import master as master_curve
 from mwdlink.measurement.master import Master
 from mwdlink.measurement.spectrum_fit import SpectrumFit, fit_spectrum
@@ -178,7 +178,7 @@ def assess_branching(
                     intrinsic_viscosity_dL_per_g, intrinsic_error,
                 )
             )  # fmt: skip
-        curve, shape = curve_shape(spectrum)
+        curve, shape = curve_shape(spectrum, _plateau(polymer, temperature))
         flags += shape
     else:
         curve = {}
@@ -189,6 +189,16 @@ def assess_branching(
         if f.state == "departs"
     ]
     return Branching(out, curve, _next_steps(out, master), tuple(warnings))
+
+
+def _plateau(polymer: Any, temperature_C: float | None) -> float | None:
+    """Plateau modulus [Pa] where the card can say."""
+    if polymer is None:
+        return None
+    try:
+        return float(polymer.melt(temperature_C).plateau_modulus)
+    except ModelError:
+        return None
 
 
 def make_master(

@@ -57,7 +57,8 @@ OTHER_CAUSES = {
     ),
     "low_frequency": (
         "filler, gel or a second phase (G' levels off, tan delta flattens); a small amount of very "
-        "long linear chains; crosslinking in the test; readings near the torque floor"
+        "long linear chains; crosslinking in the test; readings near the torque floor; the "
+        "entanglement plateau itself, in a window that does not leave it"
     ),
 }
 
@@ -317,7 +318,9 @@ def _to_190(master: Master | None, polymer: Any, T: float) -> float | None:
     return None
 
 
-def curve_shape(spectrum: SpectrumFit) -> tuple[dict[str, np.ndarray], list[Flag]]:
+def curve_shape(
+    spectrum: SpectrumFit, plateau: float | None = None
+) -> tuple[dict[str, np.ndarray], list[Flag]]:
     """Phase angle against |G*| of the fitted curve, and the two signs its shape can show."""
     c, sweep = spectrum.continuous, spectrum.sweep
     omega = np.geomspace(sweep.omega[0], sweep.omega[-1], 120)
@@ -335,7 +338,7 @@ def curve_shape(spectrum: SpectrumFit) -> tuple[dict[str, np.ndarray], list[Flag
         "delta low [deg]": np.minimum(low, delta[0]),
         "delta high [deg]": np.maximum(high, delta[0]),
     }
-    return curve, [_dip(delta), _low_end(np.log(omega), np.log(storage))]
+    return curve, [_dip(delta), _low_end(np.log(omega), np.log(storage), modulus[0], plateau)]
 
 
 def _dip(delta: np.ndarray) -> Flag:
@@ -373,26 +376,32 @@ def _rise_above(delta: np.ndarray) -> float:
     return float(rise.max())
 
 
-def _low_end(x: np.ndarray, storage: np.ndarray) -> Flag:
-    """Bend of ln G' against ln omega over the lowest decade: slope at the end less slope above it.
+def _low_end(
+    x: np.ndarray, storage: np.ndarray, modulus: np.ndarray, plateau: float | None
+) -> Flag:
+    """Slope of ln G' at the low end less the steepest slope above it, in the flow region.
 
     Towards low frequency the slope of a melt that is to flow rises towards two; where it falls
-    again, something slower is there.
+    again, something slower is there. The flow region lies below a third of the plateau modulus
+    (without one, below a tenth of the largest |G*|).
     """
-    lowest = x < x[0] + np.log(10.0)
+    top = 0.1 * float(modulus.max()) if plateau is None else 0.3 * plateau
+    flow = modulus < top
+    # at least the lowest decade: a window that ends in the plateau has no flow region
+    flow |= x < x[0] + np.log(10.0)
+    end = x < x[0] + 0.25 * np.log(10.0)
     bends, slopes = [], []
     for y in storage:
-        slope = np.gradient(y, x)[lowest]
-        half = slope.size // 2
-        bends.append(float(slope[:half].mean() - slope[half:].mean()))
-        slopes.append(float(slope[:half].mean()))
+        slope = np.gradient(y, x)
+        slopes.append(float(slope[end].mean()))
+        bends.append(slopes[-1] - float(slope[flow].max()))
     value = _sampled(np.array(bends))
     middle, _, high = _ends(value)
-    state = "departs" if high < -0.05 else "in line"
+    state = "departs" if high < -0.1 else "in line"
     at = slopes[0]
     text = (
-        f"At the low end the slope of G' falls towards low frequency (by {-middle:.2f} within "
-        f"the lowest decade, to {at:.2f}) instead of rising towards 2: a second, slower process is "
+        f"At the low end the slope of G' falls towards low frequency (by {-middle:.2f} from "
+        f"its steepest, to {at:.2f}) instead of rising towards 2: a second, slower process is "
         "there."
         if state == "departs"
         else f"At the low end the slope of G' is {at:.2f} and does not fall towards low frequency: "
@@ -400,7 +409,7 @@ def _low_end(x: np.ndarray, storage: np.ndarray) -> Flag:
     )
     source = "limit of linear viscoelasticity: G' goes with the square of the frequency [derived]"
     return Flag(
-        "low_frequency", state, value, Uncertain(0.0, -0.05, None), "-", source, text,
+        "low_frequency", state, value, Uncertain(0.0, -0.1, None), "-", source, text,
         OTHER_CAUSES["low_frequency"],
     )  # fmt: skip
 
