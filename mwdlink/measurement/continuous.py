@@ -280,7 +280,7 @@ def fit_continuous(
         member_lam = fits[k][0]
         y = problem.y + rng.standard_normal(problem.y.size) / problem.w
         pull3 = rng.standard_normal(problem.D3.shape[0]) / np.sqrt(member_lam)
-        pull2 = rng.standard_normal(problem.D2.shape[0])
+        pull2 = np.asarray(rng.standard_normal(problem.D2.shape[0]))
         try:
             rows.append(problem.solve(fits[k][4], member_lam, y, pull3, pull2)[0])
         except NotConverged:
