@@ -29,6 +29,8 @@ _LOOSE = (
     re.compile(r"^(?P<name>.*?)\s*,\s*(?P<unit>[^,]+)$"),
     re.compile(r"^(?P<name>.*?)\s+in\s+(?P<unit>.+)$"),
 )
+# said to be without a unit: `[-]`, `(1)`
+_UNITLESS = re.compile(r"^(?P<name>.*?)\s*[\[(]\s*[-–—1]\s*[\])]\s*$")
 # the argument of a logarithm carries its unit inside: log10(M/(g/mol))
 _LOG_UNIT = re.compile(
     r"^(?P<name>(?:log10|log|lg|ln)\s*[\[(]?\s*[A-Za-z. ]+?)\s*/\s*[(\[]?(?P<unit>k?g/mole?|k?Da)"
@@ -57,6 +59,9 @@ def recognise(header: str) -> Match | None:
     text = header.strip().lstrip("\ufeff").strip()
     if not text or len(text) > 200:
         return None
+    bare = _UNITLESS.match(text)
+    if bare is not None and bare["name"] and (inner := recognise(bare["name"])) is not None:
+        return Match(inner.role, inner.unit or "-")
     role = role_of(text)
     if role is not None:
         return Match(role, None)
@@ -206,7 +211,7 @@ def _find_header(
         lambda a, b: a == b,
         lambda a, b: a.casefold() == b.casefold(),
         # the name alone, where the file's header carries a unit
-        lambda a, b: bool(plain_name(b)) and plain_name(_bare(a)) == plain_name(b),
+        lambda a, b: bool(plain_name(b)) and _folded(_bare(a)) == _folded(b),
     ):
         found = [i for i, h in enumerate(headers) if same(h.strip(), wanted)]
         if len(found) == 1:
@@ -222,6 +227,10 @@ def _find_header(
     if number is not None and int(number.group(1)) <= len(headers):
         return int(number.group(1)) - 1
     return None
+
+
+def _folded(name: str) -> str:
+    return plain_name(name).casefold()
 
 
 def _bare(header: str) -> str:
@@ -263,6 +272,9 @@ def make_column(
     place: dict[str, Any] = {"path": path, "row": row, "column": header}
     flag = f'--column "{role}={header}:UNIT"'
     known = ", ".join(UNITS[kind])
+    if kind == "any":
+        # only its steps are looked at
+        return Column(role, index, header, Conversion("", "", lambda x: x, True), False, chosen)
     if unit is None or (is_empty(unit) and kind not in ("fraction", "number", "signal")):
         assumed = ROLES[role].assumed
         if assumed is None and kind == "frequency":

@@ -387,6 +387,7 @@ def _collect(
     """Data rows under one header; a title after a blank line, or a restart, opens a new block."""
     drafts = [_Draft(cells, units, line or None, head)]
     abscissa = _find_abscissa(cells)
+    pattern = next((rows[j] for j in range(first, stop) if _pattern(rows[j]).count("n") >= 2), None)
     i = first
     while i < stop:
         row = rows[i]
@@ -396,7 +397,7 @@ def _collect(
             continue
         j = i + 1
         title: list[str] = []
-        while j < stop and (rows[j] is None or _is_title(rows[j], kinds[j], drafts[-1], cells)):
+        while j < stop and (rows[j] is None or _is_title(rows[j], pattern, len(cells))):
             if rows[j] is not None:
                 title.append(rows[j].text.strip())  # type: ignore[union-attr]
             j += 1
@@ -409,11 +410,11 @@ def _collect(
     return drafts
 
 
-def _is_title(row: Row | None, kind: str, draft: _Draft, cells: Sequence[str]) -> bool:
+def _is_title(row: Row | None, pattern: Row | None, width: int) -> bool:
     """A line between blocks: words in the first cell, and fewer cells than a row of the table."""
-    if row is None or not draft.data:
+    if row is None or pattern is None:
         return False
-    return len(_trim(row.cells)) < min(len(cells), 3) and not _data_like(row, draft.data[0])
+    return len(_trim(row.cells)) < min(width, 3) and not _data_like(row, pattern)
 
 
 def _restarts(row: Row, draft: _Draft, abscissa: int | None) -> bool:

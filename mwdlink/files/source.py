@@ -53,8 +53,8 @@ def open_source(
 
     Parameters
     ----------
-    path : str or Path
-        CSV, TSV or the like, or .xlsx.
+    path : str, Path or Source
+        CSV, TSV or the like, or .xlsx. An opened file is returned as it is.
     columns : mapping, optional
         Role to `header[:unit]` (see `headers.find_chosen`); the headers help to find the table.
     omit : collection of int, or str such as "3,17-19"
@@ -62,6 +62,8 @@ def open_source(
     sheet : str, optional
         The sheet of a workbook; else all that hold a table.
     """
+    if isinstance(path, Source):
+        return path
     name = os.fspath(path) if isinstance(path, (str, os.PathLike)) else str(path)
     data, digest = read_bytes(name)
     left_out = parse_rows(omit)

@@ -16,7 +16,7 @@ from mwdlink.files.headers import Column, recognise
 from mwdlink.files.numbers import read_number
 from mwdlink.files.source import rows_text
 from mwdlink.files.units import conversion, find_unit
-from mwdlink.measurement.sweep import Sweep
+from mwdlink.measurement.sweep import Sweep, exact_mean
 
 ACCEPTED = (
     "omega [rad/s] or f [Hz]; G' [Pa] and G'' [Pa], or |eta*| [Pa s] with tan delta or "
@@ -107,8 +107,8 @@ def read_segments(
     _cross_check(picker, (first.role, second.role), rows, columns)
     t = None
     if temperature is not None and "T" in values:
-        t = _celsius(picker, temperature, values["T"], rows)
-    stated = None if t is not None else _preamble_temperature(picker)
+        t = celsius(picker, temperature, values["T"], rows)
+    stated = None if t is not None else preamble_temperature(picker)
     parts = [] if t is None else _steps(picker, t, rows, same_temperature)
     notes = tuple(picker.notes)
     comments = tuple(picker.block.preamble)
@@ -117,7 +117,7 @@ def read_segments(
         return [Segment(where, columns, rows, notes, comments)]
     return [
         Segment(
-            float(np.mean(t[part])),
+            exact_mean(t[part]),
             {k: v[part] for k, v in columns.items()},
             rows[part],
             notes,
@@ -341,7 +341,7 @@ def _cross_check(
             )
 
 
-def _celsius(picker: Picker, column: Column, t: np.ndarray, rows: np.ndarray) -> np.ndarray:
+def celsius(picker: Picker, column: Column, t: np.ndarray, rows: np.ndarray) -> np.ndarray:
     bad = np.flatnonzero(~((t > -273.15) & (t < 2000)))
     place: dict[str, Any] = {"path": picker.source.path, "column": column.header}
     if bad.size:
@@ -361,7 +361,7 @@ def _celsius(picker: Picker, column: Column, t: np.ndarray, rows: np.ndarray) ->
     return t
 
 
-def _preamble_temperature(picker: Picker) -> float | None:
+def preamble_temperature(picker: Picker) -> float | None:
     """A temperature stated above the table, as in `Temperature: 190 C`."""
     found: list[tuple[float, str]] = []
     for line in picker.block.preamble:
@@ -495,7 +495,7 @@ def _append(held: Segment, more: Segment) -> None:
                 "temperature.",
             )
             held.warnings = merge_cautions(held.warnings, (note,))
-        held.temperature = (n * held.temperature + m * more.temperature) / (n + m)
+            held.temperature = (n * held.temperature + m * more.temperature) / (n + m)
     held.columns = {k: np.concatenate([v, more.columns[k]]) for k, v in held.columns.items()}
     held.rows = np.concatenate([held.rows, more.rows])
     held.warnings = merge_cautions(held.warnings, more.warnings)

@@ -7,6 +7,8 @@ All take the same options:
   a cell that is no number. Both are said in the result's warnings;
 - `decimal`: "." or ",", where the file alone does not tell;
 - `block`: which table of the file (from 1), `sheet`: which sheet of a workbook.
+
+In place of a path they take a file opened by `source.open_source` with the same options.
 """
 
 from __future__ import annotations
@@ -19,7 +21,7 @@ import numpy as np
 from mwdlink.errors import Caution, InputError, merge_cautions
 from mwdlink.files.columns import Picker
 from mwdlink.files.source import Source, open_source
-from mwdlink.measurement.sweep import FlowCurve, RelaxationCurve, Sweep
+from mwdlink.measurement.sweep import FlowCurve, RelaxationCurve, Sweep, exact_mean
 
 if TYPE_CHECKING:
     from mwdlink.chains.distribution import Distribution
@@ -291,10 +293,12 @@ def read_any(path: Any, **options: Any) -> Any:
     """
     import inspect
 
-    kind = find_kind(path, **{k: options[k] for k in ("columns", "omit", "sheet") if k in options})
+    look = {k: options[k] for k in ("columns", "omit", "sheet") if k in options}
+    source = open_source(path, **look)
+    kind = find_kind(source, **look)
     reader = _READERS[kind]
     known = inspect.signature(reader).parameters
-    found = reader(path, **{k: v for k, v in options.items() if k in known})
+    found = reader(source, **{k: v for k, v in options.items() if k in known})
     return found[0] if isinstance(found, list) and len(found) == 1 else found
 
 
@@ -443,8 +447,7 @@ def _curve(
     temperature_C: float | None,
     label: str | None,
 ) -> RelaxationCurve | FlowCurve:
-    from mwdlink.files.sweeps import _celsius as to_celsius
-    from mwdlink.files.sweeps import _preamble_temperature
+    from mwdlink.files.sweeps import celsius, preamble_temperature
 
     accepted = _ACCEPTED["relaxation curve" if kind is RelaxationCurve else "flow curve"]
     needed = [picker.need(role, accepted) for role in roles]
@@ -460,7 +463,7 @@ def _curve(
     temperature = temperature_C
     if "T" in values:
         column = next(c for c in needed if c.role == "T")
-        t = to_celsius(picker, column, values["T"], rows)
+        t = celsius(picker, column, values["T"], rows)
         if np.ptp(t) > 2.0:
             raise InputError(
                 f"the temperature runs from {t.min():g} to {t.max():g} C in one curve.",
@@ -468,9 +471,9 @@ def _curve(
                 remedy="Keep the rows of one temperature, or leave the others out with --omit.",
                 **place,
             )
-        temperature = float(np.mean(t))
+        temperature = exact_mean(t)
     else:
-        stated = _preamble_temperature(picker)
+        stated = preamble_temperature(picker)
         temperature = stated if stated is not None else temperature
     curve = kind.from_arrays(
         values[roles[0]],

@@ -179,7 +179,7 @@ def find_unit(text: str, kind: str) -> str | None:
         return unit
     same = [u for u in table if u.lower() == unit.lower()]
     # milli and mega differ by case alone
-    same = [u for u in same if u[0] not in "mM" or u[0] == unit[0] or u in _PLAIN_M]
+    same = [u for u in same if u[0] not in "mM" or u in _PLAIN_M]
     if same and len({table[u] for u in same}) == 1:
         return same[0]
     return None

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import importlib.util
 import io
 import math
 import zipfile
@@ -24,14 +25,12 @@ def read_sheets(
         If openpyxl is missing, the file is damaged, or the sheet does not exist.
     """
     _refuse_bomb(path, data)
-    try:
-        import openpyxl  # noqa: F401
-    except ImportError:
+    if importlib.util.find_spec("openpyxl") is None:
         raise InputError(
             "reading .xlsx needs the optional package openpyxl.",
             path=path,
             remedy="Install it (pip install openpyxl), or save the sheet as CSV.",
-        ) from None
+        )
     import pandas as pd
 
     try:

@@ -186,7 +186,7 @@ class _Curve:
                     column="T [C]",
                     remedy="Make one curve per temperature.",
                 )
-            named = named | {"temperature_C": float(np.mean(values))}
+            named = named | {"temperature_C": exact_mean(values)}
         return cls.from_arrays(**(data | named))
 
     def to_frame(self) -> Any:
@@ -241,6 +241,11 @@ class _Curve:
         return True
 
     __hash__ = None  # type: ignore[assignment]
+
+
+def exact_mean(values: np.ndarray) -> float:
+    """The mean; of equal numbers the number itself, to the last bit."""
+    return float(values[0]) if np.all(values == values[0]) else float(np.mean(values))
 
 
 def _merge(
