@@ -137,38 +137,6 @@ class Pair(click.ParamType):
         return key.strip(), rest.strip()
 
 
-class Fractions(click.ParamType):
-    """Weight fractions that sum to 1 or 100, as 0.7,0.3 or 70,30."""
-
-    name = "F,F,..."
-
-    def convert(self, value: Any, param: Any, ctx: Any) -> tuple[float, ...]:
-        if isinstance(value, tuple):
-            return value
-        numbers = [_float(part) for part in str(value).split(",")]
-        if len(numbers) < 2 or any(n is None or n < 0 for n in numbers):
-            self.fail(f"{value!r} is not like 0.7,0.3.", param, ctx)
-        total = sum(numbers)  # type: ignore[arg-type]
-        if not any(abs(total / whole - 1) < 2e-3 for whole in (1, 100)):
-            self.fail(f"{value!r} sums to {total:g}, neither 1 nor 100.", param, ctx)
-        return tuple(n / total for n in numbers)  # type: ignore[operator]
-
-
-class Target(click.ParamType):
-    """A property and the value wanted of it, as in viscosity_Pa_s@0.1=2e4."""
-
-    name = "QUANTITY=VALUE"
-
-    def convert(self, value: Any, param: Any, ctx: Any) -> Any:
-        from mwdlink.decisions.blend_target import parse_target
-        from mwdlink.errors import InputError
-
-        try:
-            return parse_target(value)
-        except InputError as error:
-            self.fail(str(error), param, ctx)
-
-
 class Wanted(click.ParamType):
     """A quantity and the relative precision wanted of it, as in Mz=0.1."""
 

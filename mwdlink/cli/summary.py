@@ -51,6 +51,9 @@ _NAMES = (
     "temperature_C",
 )
 
+# entries of a list that are shown
+MOST = 8
+
 _BOUNDS = {"lower_bound": "at least ", "upper_bound": "at most "}
 
 
@@ -93,6 +96,10 @@ def summary(answer: str, record: Mapping[str, Any], width: int = 80) -> list[str
     for key, value in record.items():
         if key in _LEFT_OUT or value is None or value in ([], {}):
             continue
+        if key == "verdict" and isinstance(value, str) and value.startswith(answer):
+            value = value[len(answer) :].strip()  # the answer was its first sentence
+            if not value:
+                continue
         band = (record.get("bands") or {}).get(key)
         lines += ["", *_section(key, value, band, width)]
     return lines
@@ -124,9 +131,7 @@ def _rows(key: str, value: Any, band: Any, prefix: str = "") -> Iterator[Row]:
                 continue
             yield from _rows(k, v, _part(band, k), prefix + _outer(k, v))
     elif isinstance(value, list):
-        for i, entry in enumerate(value):
-            b = band[i] if isinstance(band, list) and i < len(band) else None
-            yield from _entry(entry, b, key)
+        yield from _list(key, label, value, band)
     elif isinstance(value, bool):
         yield label, "yes" if value else "no", ""
     elif isinstance(value, (int, float)):
@@ -134,6 +139,21 @@ def _rows(key: str, value: Any, band: Any, prefix: str = "") -> Iterator[Row]:
         yield label, bound + _with_unit(value, key, unit), _interval(band, key)
     elif isinstance(value, str):
         yield label, value, ""
+
+
+def _list(key: str, label: str, value: list[Any], band: Any) -> Iterator[Row]:
+    unit = _name_and_unit(key)[1]
+    if all(isinstance(v, str) for v in value):
+        yield label, ", ".join(value), ""
+    elif all(isinstance(v, (int, float)) for v in value):
+        between = " to " if len(value) == 2 else ", "
+        yield label, f"{between.join(_plain(v, key) for v in value)} {unit}".strip(), ""
+    else:
+        for i, entry in enumerate(value[:MOST]):
+            b = band[i] if isinstance(band, list) and i < len(band) else None
+            yield from _entry(entry, b, key)
+        if len(value) > MOST:
+            yield "...", f"{len(value) - MOST} more in result.json", ""
 
 
 def _nested(value: Any) -> bool:
@@ -154,6 +174,11 @@ def _entry(entry: Any, band: Any, key: str) -> Iterator[Row]:
         name, unit = _name_and_unit(key_of_name)
         head = f"{number(entry[key_of_name])} {unit}"
         head = f"M {head}" if name == "M" else head
+    if isinstance(entry.get("text"), str):  # its own sentence says it all
+        name = str(entry.get("name") or entry.get("code") or "").replace("_", " ")
+        state = f"{entry['state']}: " if isinstance(entry.get("state"), str) else ""
+        yield name, f"{state}{entry['text']}", ""
+        return
     rest = {k: v for k, v in _folded(entry).items() if k != key_of_name and v is not None}
     rows = [row for k, v in rest.items() for row in _rows(k, v, _part(band, k), _outer(k, v))]
     if len(rows) == 1 and not isinstance(rest[next(iter(rest))], str):

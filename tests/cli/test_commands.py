@@ -29,31 +29,65 @@ COMMON = (
 )
 
 
+STUDY = """\
+polymer = "hdpe"
+temperature_C = 190
+[[component]]
+name = "A"
+sweep = "sweep.csv"
+distribution = "gpc.csv"
+calibration = "absolute"
+[[component]]
+name = "B"
+sweep = "b-sweep.csv"
+distribution = "b.csv"
+calibration = "absolute"
+[[blend]]
+name = "A50B50"
+fractions = {A = 0.5, B = 0.5}
+sweep = "ab-sweep.csv"
+[[blend]]
+name = "A25B75"
+fractions = {A = 0.25, B = 0.75}
+sweep = "aab-sweep.csv"
+"""
+
+
+def measured(melt: Any, T: float, chance: np.random.Generator) -> pd.DataFrame:
+    """A sweep of a made-up melt with 2 % noise."""
+    omega = np.geomspace(1e-2, 1e2, 17)
+    at_T = mwdlink.read_polymer("hdpe").melt(T)
+    storage, loss = mwdlink.Relaxation(melt, at_T, mwdlink.Model()).moduli(omega)
+    noise = 1 + 0.02 * chance.standard_normal((2, omega.size))
+    return pd.DataFrame(
+        {
+            "T [C]": T,
+            "omega [rad/s]": omega,
+            "G' [Pa]": storage * noise[0],
+            "G'' [Pa]": loss * noise[1],
+        }
+    )
+
+
 @pytest.fixture(scope="module")
 def inputs(tmp_path_factory: pytest.TempPathFactory) -> Path:
-    """A made-up melt: its GPC table, a sweep at 190 C, and sweeps at three temperatures."""
+    """Two made-up grades: GPC tables, sweeps, a study of their blends."""
     folder = tmp_path_factory.mktemp("inputs")
-    melt = lognormal(Mw=1.2e5, dispersity=4.0)
-    melt.to_frame().to_csv(folder / "gpc.csv", index=False)
-    card = mwdlink.read_polymer("hdpe")
     chance = np.random.default_rng(3)
-    omega = np.geomspace(1e-2, 1e2, 17)
-    rows = []
-    for T in (170.0, 190.0, 210.0):
-        storage, loss = mwdlink.Relaxation(melt, card.melt(T), mwdlink.Model()).moduli(omega)
-        noise = 1 + 0.02 * chance.standard_normal((2, omega.size))
-        rows.append(
-            pd.DataFrame(
-                {
-                    "T [C]": T,
-                    "omega [rad/s]": omega,
-                    "G' [Pa]": storage * noise[0],
-                    "G'' [Pa]": loss * noise[1],
-                }
-            )
-        )
-    rows[1].to_csv(folder / "sweep.csv", index=False)
-    pd.concat(rows).to_csv(folder / "all.csv", index=False)
+    grade, other = lognormal(Mw=1.2e5, dispersity=4.0), lognormal(Mw=6e4, dispersity=2.5)
+    grade.to_frame().to_csv(folder / "gpc.csv", index=False)
+    other.to_frame().to_csv(folder / "b.csv", index=False)
+    tables = [measured(grade, T, chance) for T in (170.0, 190.0, 210.0)]
+    pd.concat(tables).to_csv(folder / "all.csv", index=False)
+    tables[1].to_csv(folder / "sweep.csv", index=False)
+    melts = {
+        "b": other,
+        "ab": mwdlink.Distribution.blend([(grade, 0.5), (other, 0.5)]),
+        "aab": mwdlink.Distribution.blend([(grade, 0.25), (other, 0.75)]),
+    }
+    for name, melt in melts.items():
+        measured(melt, 190.0, chance).to_csv(folder / f"{name}-sweep.csv", index=False)
+    (folder / "study.toml").write_text(STUDY)
     return folder
 
 
@@ -82,6 +116,14 @@ WRITTEN = {
         "distribution.csv fit.csv smoothing.csv",
         "averages window outside_window above fit kernels cross_check peaks advice",
     ),
+    "blend gpc.csv b.csv --fractions 70,30 --polymer hdpe --members 4": (
+        "sweep.csv spectrum.csv relaxation.csv flow.csv distribution.csv fractions.csv",
+        "averages terminal crossover melt_flow indices bands blend target",
+    ),
+    "blendcheck study.toml": (
+        "residuals.csv blends.csv",
+        "blends exponent left_out rules verdict",
+    ),
     "rest gpc.csv --polymer hdpe --members 4 --residual 1%": ("rest.csv", "rest"),
     "spectrum sweep.csv --members 4": (
         "spectrum.csv continuous.csv fit.csv",
@@ -95,8 +137,16 @@ WRITTEN = {
 
 
 @pytest.mark.parametrize("line", WRITTEN)
-def test_folder_as_promised(run: Callable[..., Result], tmp_path: Path, line: str) -> None:
-    """Interface: tables, keys, figures and report of each command."""
+def test_folder_as_promised(
+    run: Callable[..., Result], tmp_path: Path, monkeypatch: pytest.MonkeyPatch, line: str
+) -> None:
+    """Interface: tables, keys, figures and report of each command.
+
+    The PNG files, which repeat the SVG, are real in the test of same bytes only: they are slow.
+    """
+    from mwdlink.figures import Picture
+
+    monkeypatch.setattr(Picture, "png", lambda self: b"PNG")
     tables, keys = WRITTEN[line]
     out = tmp_path / "out"
     done = run(line, "--out", str(out), "--label", "sample=made up", "--quiet")
@@ -115,6 +165,20 @@ def test_folder_as_promised(run: Callable[..., Result], tmp_path: Path, line: st
     assert {p.removesuffix(".svg") + ".png" for p in pictures if p.endswith(".svg")} <= pictures
     assert max(map(len, done.stdout.splitlines())) <= 80
     assert done.stderr == ""
+
+
+def test_trust_is_carried_on(
+    run: Callable[..., Result], tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Interface: blendcheck writes trust.toml, and blend takes it; all files read are listed."""
+    no_pictures(monkeypatch)
+    run("blendcheck study.toml --quiet", "--out", str(tmp_path / "check"))
+    trust = tmp_path / "check" / "trust.toml"
+    line = "blend study.toml --fractions 0.6,0.4 --members 4 --json --quiet --trust"
+    record = json.loads(run(line, str(trust)).stdout)
+    paths = [i["path"] for i in record["inputs"]]
+    assert "study.toml" in paths and str(trust) in paths and "b-sweep.csv" in paths
+    assert record["blend"]["route"] == "sweeps"
 
 
 def test_same_input_same_bytes(run: Callable[..., Result], tmp_path: Path) -> None:
