@@ -172,6 +172,8 @@ class Master(Result):
                         "G'' [Pa]": s.sweep.loss * lift,
                         "G' fit [Pa]": np.exp(model[0]) * lift,
                         "G'' fit [Pa]": np.exp(model[1]) * lift,
+                        # the curve's temperature, so that the table reads back as one sweep
+                        "T [C]": self.reference_C,
                         "measured at [C]": s.temperature_C,
                     }
                 )

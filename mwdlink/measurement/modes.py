@@ -20,6 +20,9 @@ PER_DECADE = 8
 # Decades of tau beyond 1/omega_max and 1/omega_min: a mode that far outside acts as a pure
 # viscosity (below) or a pure elastic modulus (above) to within 1 %.
 MARGIN = 2.0
+# A short list of modes is to be read: times the window cannot tell from longer or shorter ones
+# have no place in it.
+CLOSE_MARGIN = 0.5
 
 
 @dataclass(frozen=True)
@@ -264,8 +267,8 @@ def parsimonious(
             f"{modes} modes cannot be had from {omega.size} frequencies.",
             remedy=f"Ask for 1 to {omega.size}.",
         )
-    dense = fit_on_grid(omega, storage, loss, up, out)
-    span = mode_grid(omega)
+    span = mode_grid(omega, margin=CLOSE_MARGIN)
+    dense = fit_on_grid(omega, storage, loss, up, out, span)
     fit_at = _fitter(omega, storage, loss, up, out, (np.log(span[0]), np.log(span[-1])))
     tau, g = _merge_touching(dense.tau, dense.strength, PER_DECADE)
     while tau.size > omega.size:
