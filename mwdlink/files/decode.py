@@ -12,7 +12,7 @@ from typing import Any
 
 from mwdlink.errors import Caution, InputError
 
-MAX_BYTES = 512 * 1024 * 1024
+MAX_BYTES = 256 * 1024 * 1024
 MAX_ROWS = 2_000_000
 MAX_LINE = 1_000_000
 

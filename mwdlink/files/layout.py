@@ -22,8 +22,8 @@ from mwdlink.files.split import (
 )
 from mwdlink.files.units import is_any_unit, is_empty
 
-# rows of text tried as headers before a file is given up: a book is no table
-_MAX_TRIED = 20_000
+# cells of text tried as headers before a file is given up: a book is no table
+_MAX_TRIED = 200_000
 
 
 @dataclass(frozen=True)
@@ -207,9 +207,9 @@ def _find_headers(
         below = _next_data(rows, kinds, i)
         if below is None:
             continue
-        tried += 1
         cells = _trim(split_header(row.text, delimiter, len(_trim(rows[below].cells)))  # type: ignore[union-attr]
                       if delimiter == " " else row.cells)  # fmt: skip
+        tried += len(cells)
         have = {c.strip().casefold() for c in cells}
         if (
             count_known(cells) >= 2

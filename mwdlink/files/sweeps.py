@@ -120,7 +120,7 @@ def read_segments(
             exact_mean(t[part]),
             {k: v[part] for k, v in columns.items()},
             rows[part],
-            notes,
+            (*notes, *_wobble(t[part])),
             comments,
         )
         for part in parts
@@ -387,6 +387,8 @@ def parse_temperature(line: str) -> float | None:
     The line must be a name of the temperature, then a number, then perhaps a unit (which may also
     stand with the name). Without a unit only values that cannot be kelvin count.
     """
+    if len(line) > 200:
+        return None
     match = re.fullmatch(
         r"[\"'\s]*(?P<name>[^\d:=;,\t\"]*?(?:\[[^\]]*\]|\([^)]*\))?)\"?\s*[:=;,\t ]\s*\"?"
         r"(?P<value>[+\-−]?\d+(?:[.,]\d+)?)\"?\s*[;,\t ]?\s*\"?(?P<unit>[^\d;,\t\"]*?)[\";,\t\s]*",
@@ -432,14 +434,6 @@ def _steps(picker: Picker, t: np.ndarray, rows: np.ndarray, same: float) -> list
                 remedy="Give sweeps at constant temperature, or take more as one with "
                 "--same-temperature.",
             )
-        if np.ptp(spread) > _NOTED:
-            picker.notes.append(
-                Caution(
-                    "temperatures_joined",
-                    f"Rows at {spread.min():.6g} to {spread.max():.6g} C were taken as one "
-                    "temperature.",
-                )
-            )
     cuts = np.flatnonzero(np.diff(group) != 0) + 1
     if cuts.size > _MOST_STEPS:
         raise InputError(
@@ -450,6 +444,14 @@ def _steps(picker: Picker, t: np.ndarray, rows: np.ndarray, same: float) -> list
             remedy="Order the rows by temperature.",
         )
     return [p for p in np.split(np.arange(t.size), cuts) if p.size]
+
+
+def _wobble(t: np.ndarray) -> tuple[Caution, ...]:
+    """What is said of the temperatures within one step."""
+    if np.ptp(t) <= _NOTED:
+        return ()
+    text = f"Rows at {t.min():.6g} to {t.max():.6g} C were taken as one temperature."
+    return (Caution("temperatures_joined", text),)
 
 
 def join_segments(segments: list[Segment], same: float) -> list[Segment]:
