@@ -81,8 +81,8 @@ def verdict_of(
     good = [d for d in error.decades if d.trusted]
     if good and judged:
         out.append(
-            f"The rule may be trusted from {good[0].low:.2g} to {good[-1].high:.2g} rad/s (error at most "
-            f"{trusted:.2g} decades in each decade of frequency)"
+            f"The rule may be trusted from {good[0].low:.2g} to {good[-1].high:.2g} rad/s "
+            f"(error at most {trusted:.2g} decades in each decade of frequency)"
         )
     elif judged:
         out.append("In no decade of frequency is its error below the limit of trust")

@@ -18,7 +18,7 @@ import numpy as np
 from mwdlink.chains.distribution import Distribution
 from mwdlink.chains.melt import Melt
 from mwdlink.decisions.properties import Curves
-from mwdlink.relaxation.kernels import get_kernel
+from mwdlink.relaxation.kernels import get_kernel, power_law_decay, tube_survival
 from mwdlink.relaxation.mixing import Model, in_network, relaxation_times
 from mwdlink.relaxation.operator import exponential_fit, log_grid
 from mwdlink.relaxation.rouse import rouse_modes
@@ -142,6 +142,14 @@ def _cubic_rows(x: np.ndarray, y: np.ndarray, at: np.ndarray) -> np.ndarray:
     return sum(y[:, i + j] * c[j] for j in range(4))  # type: ignore[return-value]
 
 
+@lru_cache(maxsize=8)
+def _ln_table(kernel: str, n: float) -> tuple[np.ndarray, np.ndarray]:
+    """ln of a kernel's decay over ln(t/tau), for interpolation (to 7e-5 t/tau of itself)."""
+    x = np.geomspace(1e-18, 690.0, 2100)
+    decay = tube_survival(x) if kernel == "reptation" else power_law_decay(x, n)
+    return np.log(x), np.log(np.maximum(decay, 1e-305))
+
+
 def even_times(low: float, high: float) -> np.ndarray:
     """Times from low to beyond high [s], always the same step and few different lengths.
 
@@ -161,16 +169,16 @@ def _fit_matrix(count: int, step: float, modes: int) -> np.ndarray:
     return fit
 
 
-def lean(distribution: Distribution) -> Distribution:
+def lean(distribution: Distribution, most: int = MOST_NODES) -> Distribution:
     """The distribution without empty ends; very long tables merged to fewer cells."""
     d = distribution.compact(1e-18)
-    if d.molar_mass.size <= MOST_NODES:
+    if d.molar_mass.size <= most:
         return d
-    edges = np.geomspace(d.edges[0], d.edges[-1], MOST_NODES + 1)
-    cell = np.clip(np.searchsorted(edges, d.molar_mass, side="right") - 1, 0, MOST_NODES - 1)
-    mass = np.bincount(cell, d.mass, MOST_NODES)
+    edges = np.geomspace(d.edges[0], d.edges[-1], most + 1)
+    cell = np.clip(np.searchsorted(edges, d.molar_mass, side="right") - 1, 0, most - 1)
+    mass = np.bincount(cell, d.mass, most)
     # of each cell the weight and the mean of M^3.5, which the viscosity feels
-    node = np.bincount(cell, d.mass * d.molar_mass**3.5, MOST_NODES)
+    node = np.bincount(cell, d.mass * d.molar_mass**3.5, most)
     held = mass > 0
     return Distribution.from_nodes((node[held] / mass[held]) ** (1 / 3.5), mass[held])
 
@@ -227,21 +235,25 @@ class Bank:
             for d, tau, mask in zip(self.components, taus, held, strict=True):
                 log_f = np.full((t.size, d.molar_mass.size), -np.inf)
                 if np.any(mask):
-                    share = get_kernel(kernel, melt).survival(
-                        t[:, None] / tau[mask], reference, melt, d.molar_mass[mask]
+                    log_f[:, mask] = self._ln_survival(
+                        kernel, t[:, None] / tau[mask], reference, melt, d.molar_mass[mask]
                     )
-                    with np.errstate(divide="ignore"):
-                        log_f[:, mask] = np.log(np.maximum(share, 0.0)) * self._power(
-                            kernel, reference
-                        )
                 columns.append(log_f)
             self._decay[key] = (t, columns)
         return self._decay[key]
 
     @staticmethod
-    def _power(kernel: str, exponent: float) -> float:
-        # survival gives F^(1/beta) of a kernel defined by F, or mu itself, whose beta-th power F is
-        return exponent if kernel in ("power-law", "exponential") else 1.0
+    def _ln_survival(
+        kernel: str, x: np.ndarray, exponent: float, melt: Melt, molar_mass: np.ndarray
+    ) -> np.ndarray:
+        """ln F (kernels defined by F) or ln mu (kernels of a tube survival) at x = t/tau."""
+        if kernel == "exponential":
+            return -x
+        if kernel in ("reptation", "power-law"):
+            at, table = _ln_table(kernel, melt.power_law_n)
+            return np.interp(np.log(x), at, table)
+        mu = get_kernel(kernel, melt).survival(x, exponent, melt, molar_mass)
+        return np.log(np.maximum(mu, 1e-300))
 
     def survivals(
         self, kernel: str, exponent: float, plateau: float | None = None
