@@ -89,7 +89,16 @@ def log_evidence(problem: Problem, fit: Fit) -> float:
     return float(-0.5 * fit.objective + 0.5 * a - 0.5 * b)
 
 
-def scan(problem: Problem, u0: np.ndarray | None = None, values: np.ndarray = SCAN) -> Scan:
+# along the scan a fit may stop this early; the one chosen is finished
+ALONG = 2e-3
+
+
+def scan(
+    problem: Problem,
+    u0: np.ndarray | None = None,
+    values: np.ndarray = SCAN,
+    tolerance: float = ALONG,
+) -> Scan:
     """Fit at each lambda, each started from its neighbour; from the middle both ways.
 
     A fit forced to be too smooth for the data is the hard one: it is met last, from a good start.
@@ -98,12 +107,15 @@ def scan(problem: Problem, u0: np.ndarray | None = None, values: np.ndarray = SC
     first = int(order[0])
     fits: dict[int, Fit] = {}
     start_u = good_start(problem) if u0 is None else u0
-    fits[first] = minimise(problem, start_u, float(values[first]))
+    fits[first] = minimise(problem, start_u, float(values[first]), tolerance=tolerance)
     for direction in (range(first + 1, len(values)), range(first - 1, -1, -1)):
         u = fits[first].u
         for i in direction:
-            fits[i] = minimise(problem, u, float(values[i]))
+            fits[i] = minimise(problem, u, float(values[i]), tolerance=tolerance)
             u = fits[i].u
+    evidence = [log_evidence(problem, fits[i]) for i in range(len(values))]
+    best = int(np.argmax(evidence))
+    fits[best] = minimise(problem, fits[best].u, float(values[best]))
     ordered = tuple(fits[i] for i in range(len(values)))
     rough = [float(np.sum((problem.prior.third @ f.u) ** 2)) for f in ordered]
     return Scan(

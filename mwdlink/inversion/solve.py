@@ -76,7 +76,11 @@ def draw_shift(problem: Problem, rng: np.random.Generator) -> Shift:
 
 
 def minimise(
-    problem: Problem, u0: np.ndarray, smoothing: float, shift: Shift | None = None
+    problem: Problem,
+    u0: np.ndarray,
+    smoothing: float,
+    shift: Shift | None = None,
+    tolerance: float = TOLERANCE,
 ) -> Fit:
     """Minimise |misfit|^2 + lambda |third u|^2 + weak prior from a start.
 
@@ -89,6 +93,8 @@ def minimise(
         lambda > 0.
     shift : Shift, optional
         Perturbation of data and prior (randomise, then optimise).
+    tolerance : float
+        The last step promised less than this much of the objective.
 
     Returns
     -------
@@ -150,7 +156,7 @@ def minimise(
                 promised = -float(gradient @ step)
                 if new <= value + 1e-12 * abs(value):
                     break
-                if promised < TOLERANCE:
+                if promised < tolerance:
                     converged = True
                     break
             damping = max(damping * 6.0, 1e-6)
@@ -161,7 +167,7 @@ def minimise(
         gain = value - new
         u, value, chi2 = trial - trial.max(), new, new_chi2
         damping = max(damping * (0.15 if gain > 0.25 * promised else 2.0), 1e-9)
-        if promised < TOLERANCE * (1.0 + 1e-3 * value):
+        if promised < tolerance * (1.0 + 1e-3 * value):
             converged = True
             break
     return Fit(u, smoothing, value, chi2, converged, steps, hessian)
