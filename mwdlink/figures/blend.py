@@ -430,7 +430,7 @@ def plot_rules(rules: Sequence[Mapping[str, Any]], *, ax: Axes | None = None) ->
     ax.set_ylim(len(shown) - 0.5, -0.5)
     ax.tick_params(axis="y", which="both", length=0)
     ax.set_xlim(0, 1.12 * max(values))
-    ax.set_xlabel("scatter on a blend left out / decades (filled: least)")
+    ax.set_xlabel("scatter, blend left out / decades")
     return ax
 
 

@@ -9,7 +9,15 @@ import numpy as np
 
 from mwdlink.figures import shading, style
 from mwdlink.figures.columns import Absent, find, numbers, positive
-from mwdlink.figures.words import interval_of, number, short, upper_first, value_of, with_interval
+from mwdlink.figures.words import (
+    interval_of,
+    number,
+    short,
+    split_unit,
+    upper_first,
+    value_of,
+    with_interval,
+)
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -105,7 +113,7 @@ def plot_smoothing(
             if style.decades_between(y[good].min(), y[good].max()) > 1.0:
                 style.log_axis(right.yaxis)
             else:
-                right.set_ylim(0.0, None)
+                right.set_ylim(0.0, 1.2 * float(y[good].max()))
             right.set_ylabel("χ² per point")
             ax.tick_params(axis="y", which="both", right=False)
             handles += right.get_legend_handles_labels()[0]
@@ -150,6 +158,16 @@ def describe_smoothing(table: DataFrame, chosen: float | None = None) -> str:
     return f"{text} The value used is {number(chosen)}." if chosen else text
 
 
+def kernel_interval(entry: Mapping[str, Any], key: str) -> tuple[float, float] | None:
+    """Interval of a kernel's answer: its own, or the keys `Mw_low_g_per_mol` and `... high ...`."""
+    name, unit = split_unit(key)
+    end = key.removeprefix(name) if unit else ""
+    low, high = value_of(entry.get(f"{name}_low{end}")), value_of(entry.get(f"{name}_high{end}"))
+    if low is not None and high is not None:
+        return low, high
+    return interval_of(entry[key])
+
+
 @style.styled
 def plot_kernels(
     kernels: Sequence[Mapping[str, Any]],
@@ -173,7 +191,7 @@ def plot_kernels(
         good = bool(entry.get("admissible", True))
         x = float(value_of(entry[key]) or 0.0)
         color = style.BLUE if good else style.SOFT
-        between = interval_of(entry[key])
+        between = kernel_interval(entry, key)
         xs.append(x)
         if between is not None:
             ax.plot(
@@ -199,8 +217,10 @@ def plot_kernels(
         ax.set_xlim(*shading.span_of(xs, 0.12))
     elif xs:
         style.linear_axis(ax.xaxis)
-        aside = 0.12 * (max(xs) - min(xs) or abs(xs[0]))
-        ax.set_xlim(min(xs) - aside, max(xs) + aside)
+        # a difference of a per cent should look like one
+        middle = 0.5 * (min(xs) + max(xs))
+        half = max(0.62 * (max(xs) - min(xs)), 0.1 * abs(middle))
+        ax.set_xlim(middle - half, middle + half)
     ax.set_xlabel(label)
     return ax
 
@@ -209,8 +229,17 @@ def describe_kernels(
     kernels: Sequence[Mapping[str, Any]], key: str = "Mw_g_per_mol", unit: str = "g/mol"
 ) -> str:
     """The picture in words."""
+
+    def whole(k: Mapping[str, Any]) -> Any:
+        between = kernel_interval(k, key)
+        return (
+            k[key]
+            if between is None
+            else {"value": value_of(k[key]), "low": between[0], "high": between[1]}
+        )
+
     parts = [
-        f"{k.get('kernel')} {with_interval(k[key], unit)}{'' if k.get('admissible', True) else ' (rejected by its misfit)'}"
+        f"{k.get('kernel')} {with_interval(whole(k), unit)}{'' if k.get('admissible', True) else ' (rejected by its misfit)'}"
         for k in kernels
         if value_of(k.get(key)) is not None
     ]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import TYPE_CHECKING
 
 from mwdlink.figures import style
@@ -38,6 +39,11 @@ class Picture:
 
     def svg(self) -> bytes:
         """SVG, byte-identical for the same content."""
+        return self._svg
+
+    @cached_property
+    def _svg(self) -> bytes:
+        # wanted twice, for its own file and inside the page, and drawing is the slow part
         return style.save_svg(self.figure, title=self.title, description=self.description)
 
     def png(self) -> bytes:

@@ -201,6 +201,11 @@ class DecadeFormatter(Formatter):
         room = 0.34 if self.axis.axis_name == "x" else 0.19
         return max(1, math.ceil(decades * room / inches))
 
+    def _plain(self) -> bool:
+        """Whether the axis is short enough, and its numbers small enough, for plain figures."""
+        low, high = sorted(self.axis.get_view_interval())
+        return self._span()[0] < 2.2 and low > 9e-3 and high < 9.9e4
+
     def __call__(self, x: float, pos: int | None = None) -> str:
         if not x > 0:
             return ""
@@ -209,17 +214,15 @@ class DecadeFormatter(Formatter):
         if not self.minor:
             if abs(mantissa - 1.0) > 1e-6 or exponent % self.step():
                 return ""
-            if self._span()[0] < 2.2 and -2 <= exponent <= 4:
-                return f"{10.0**exponent:g}"
-            return f"10{superscript(exponent)}"
+            return grouped(10.0**exponent) if self._plain() else f"10{superscript(exponent)}"
         decades, inches = self._span()
         per_decade = inches / max(decades, 1e-6)
         digit = round(mantissa)
         wanted = {2, 5} if decades > 0.75 else {2, 3, 4, 5, 7}
         if decades > 2.2 or per_decade < 0.9 or digit not in wanted:
             return ""
-        if -2 <= exponent <= 4:
-            return f"{digit * 10.0**exponent:g}"
+        if self._plain():
+            return grouped(round(digit * 10.0**exponent, 9))
         return f"{digit}×10{superscript(exponent)}"
 
 
@@ -254,7 +257,7 @@ def decades_between(low: float, high: float) -> float:
     return math.log10(high / low)
 
 
-def equal_decades(ax: Axes, *, own_figure: bool, least: float = 62.0, most: float = 150.0) -> None:
+def equal_decades(ax: Axes, *, own_figure: bool, least: float = 50.0, most: float = 150.0) -> None:
     """Give a decade the same length on both log axes.
 
     In a figure of our own the height follows from the spans, so that nothing is left blank; on

@@ -56,6 +56,7 @@ from typing import Any
 import numpy as np
 
 from mwdlink.errors import ModelError
+from mwdlink.figures.blend import property_words
 from mwdlink.figures.words import short, upper_first
 from mwdlink.quantity import to_plain
 
@@ -146,6 +147,8 @@ def check(data: Mapping[str, Any]) -> dict[str, Any]:
     plain = to_plain(data)
     plain.setdefault("fraction", 0.5)
     plain.setdefault("properties", [])
+    for p in plain["properties"]:
+        p["label"] = property_words(str(p.get("label", p.get("key"))))
     return plain  # type: ignore[no-any-return]
 
 

@@ -83,6 +83,9 @@ STATUS = {
     "assumed": "assumed, not from the data",
 }
 
+MOST_ENTRIES = 24
+"""Entries of a list shown in a table."""
+
 LEFT_OUT = frozenset(
     {
         "schema",
@@ -101,6 +104,7 @@ LEFT_OUT = frozenset(
         "settings",
         "omitted",
         "noise",
+        "central_model",
     }
 )
 
@@ -108,12 +112,15 @@ LEFT_OUT = frozenset(
 def name_and_unit(key: str) -> tuple[str, str]:
     """Words and unit of a key: `eta0_Pa_s` is (zero-shear viscosity η₀, Pa s)."""
     end = ""
-    for suffix, spoken in (("_low", ", low"), ("_high", ", high")):
+    for suffix, side in (("_low", ", low"), ("_high", ", high")):
         if key.endswith(suffix) and key not in WORDS:
-            key, end = key.removesuffix(suffix), spoken
+            key, end = key.removesuffix(suffix), side
             break
     key, unit = split_unit(key)
     unit = PRINTED.get(unit, unit)
+    if not end and key not in WORDS and key.endswith(("_low", "_high")):
+        key, _, side = key.rpartition("_")
+        end = f", {side}"
     if key in WORDS:
         return WORDS[key] + end, unit
     at = re.fullmatch(r"(eta|tan_delta|thinning)_([\d.eE+-]+)(?:_([\d.eE+-]+))?", key)
@@ -234,7 +241,7 @@ def _walk(entry: Mapping[str, Any], bands: Any, before: str = "") -> list[tuple[
             if key.startswith("budget"):
                 continue
             rows += _walk(x, band, f"{before}{name_and_unit(str(key))[0]}: ")
-        else:
+        elif x is not None:
             rows.append(_quantity_row(str(key), x, band, before))
     return rows
 
@@ -269,7 +276,9 @@ def _list_block(caption: str, entries: Sequence[Mapping[str, Any]], bands: Any) 
                 text += f" ({interval_words(band[k])})"
             row.append(text)
         rows.append(tuple(row))
-    return Block(caption, tuple(heading(k) for k in keys), tuple(rows))
+    if len(rows) > MOST_ENTRIES:
+        caption += f" (the first {MOST_ENTRIES} of {len(rows)}; all in result.json)"
+    return Block(caption, tuple(heading(k) for k in keys), tuple(rows[:MOST_ENTRIES]))
 
 
 def blocks(record: Mapping[str, Any]) -> list[Block]:
@@ -297,7 +306,7 @@ def blocks(record: Mapping[str, Any]) -> list[Block]:
         elif x != [] and x != {}:
             single.append(_quantity_row(str(key), x, band))
     if single:
-        out.append(_trimmed("Single numbers", single))
+        out.append(_trimmed("Other numbers", single))
     return out
 
 

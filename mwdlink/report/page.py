@@ -257,6 +257,7 @@ def _how(record: Mapping[str, Any], command_line: str | None) -> str:
     else:
         put("Mixing exponent", exponent)
     put("Rouse part", model.get("rouse"))
+    put("Central model", record.get("central_model"))
     put("Method", fit.get("method"))
     put("Smoothing λ", fit.get("smoothing"))
     put("Noise, relative", record.get("noise", fit.get("noise")))

@@ -535,7 +535,7 @@ def blendcheck() -> MadeUp:
             ("reptation", 2.0, 0.03),
             ("power-law", 2.25, 0.034),
             ("exponential", 2.0, 0.06),
-            ("log-additive", None, 0.3),
+            ("measured spectra, log-additive", None, 0.3),
         )
     ]
     record = {
