@@ -24,6 +24,12 @@ TIME, EXPONENT, CALIBRATION, MODULUS, BASELINE = range(5)
 PINNED = 1e-3
 # ln of the weight beyond the sweep's reach: centre and spread of a weak prior
 TOP_CENTRE, TOP_SPREAD = float(np.log(1e-4)), 3.0
+# where the curve is the smooth continuation of the GPC's the lump is empty
+EMPTY_CENTRE, EMPTY_SPREAD = -16.0, 1.0
+# near the GPC's end lambda falls to a part of itself (from here, over so many decades of M)
+TAIL_FROM, TAIL_RAMP, TAIL_FREEDOM = -0.6, 0.4, 3e-4
+# lambda of a curve that may only go on smoothly there
+STIFF = 3.0
 MAX_STEPS = 60
 TOLERANCE = 1e-3
 
@@ -37,14 +43,19 @@ class Priors:
     centre, spread : ndarray of shape (5,)
         Of ln time-law factor, exponent, ln GPC factor on M, ln level of the moduli, GPC baseline
         (in parts of the peak).
-    stiff_from : float or None
-        log10 M above which the curve must be the smooth continuation of what is below; None
-        leaves it free.
+    tail_free : bool
+        True where the curve may turn as it likes near the end of the GPC's range; False where it
+        has to be the smooth continuation of what is below.
     """
 
     centre: np.ndarray
     spread: np.ndarray
-    stiff_from: float | None = None
+    tail_free: bool = True
+
+    @property
+    def lump(self) -> tuple[float, float]:
+        """Centre and spread of ln of the weight beyond the sweep's reach."""
+        return (TOP_CENTRE, TOP_SPREAD) if self.tail_free else (EMPTY_CENTRE, EMPTY_SPREAD)
 
     def with_(self, index: int, spread: float) -> Priors:
         """The same with another spread of one unknown."""
@@ -126,10 +137,13 @@ class JointProblem:
         n, size = self.n, self.size
         base = roughness(n, self.spacing)
         third = np.sqrt(smoothing) * base.third[:, :n]
-        if self.priors.stiff_from is not None:
-            # where no row of data keeps the curve in hand, only its smooth continuation is left
-            last = self.x[3:] > self.priors.stiff_from
-            third[last] *= np.sqrt(max(STIFF / smoothing, 1.0))
+        middle = self.x[1:-2] + 0.5 * self.spacing - self.gpc.position[-1]
+        if self.priors.tail_free:
+            # a tail is a part of its own: where the GPC ends, the curve may turn as it likes
+            ramp = np.clip((middle - TAIL_FROM) / TAIL_RAMP, 0.0, 1.0)
+            third *= np.sqrt(TAIL_FREEDOM**ramp)[:, None]
+        else:
+            third[middle > TAIL_FROM] *= np.sqrt(max(STIFF / smoothing, 1.0))
         rows = np.zeros((third.shape[0] + 3 + size - n - 1, size))
         target = np.zeros(rows.shape[0])
         rows[: n - 3, :n] = third
@@ -181,20 +195,19 @@ class JointProblem:
         slope[middle, :n] = dg_u / self.gpc.sigma[:, None]
         slope[middle, n + 1 + CALIBRATION] = dg_c / self.gpc.sigma
         slope[middle, n + 1 + BASELINE] = dg_b / self.gpc.sigma
-        slope[-1, : n + 1] = -w / TOP_SPREAD
-        slope[-1, n] += 1.0 / TOP_SPREAD
+        centre, spread = self.priors.lump
+        slope[-1, : n + 1] = -w / spread
+        slope[-1, n] += 1.0 / spread
         r = np.concatenate(
             [
                 (log_y - self.data) / self.sigma,
                 (g - self.gpc.density) / self.gpc.sigma,
-                [(np.log(max(w[n], 1e-300)) - TOP_CENTRE) / TOP_SPREAD],
+                [(np.log(max(w[n], 1e-300)) - centre) / spread],
             ]
         )
         return r, slope, w
 
 
-# how stiff the curve is beyond what the data may shape
-STIFF = 3.0
 
 
 def weights(u: np.ndarray) -> np.ndarray:
@@ -263,7 +276,7 @@ def start(problem: JointProblem, u: np.ndarray) -> np.ndarray:
     """A start from the GPC's own curve on the nodes, everything else at its prior."""
     z = np.zeros(problem.size)
     z[: problem.n] = u
-    z[problem.n] = np.log(np.exp(u).sum()) + TOP_CENTRE
+    z[problem.n] = np.log(np.exp(u).sum()) + problem.priors.lump[0]
     z[problem.n + 1 : problem.n + 1 + len(NUISANCE)] = problem.priors.centre
     if problem.extra is not None:
         z[problem.n + 1 + len(NUISANCE) :] = problem.extra.centre
@@ -364,7 +377,7 @@ def _log_evidence(
 ) -> float:
     rows, _ = problem.prior_rows(smoothing)
     prior = rows.T @ rows
-    prior[problem.n, problem.n] += 1.0 / TOP_SPREAD**2
+    prior[problem.n, problem.n] += 1.0 / problem.priors.lump[1] ** 2
     floor = 1e-9 * np.eye(problem.size)
     a = np.linalg.slogdet(prior + floor)[1]
     b = np.linalg.slogdet(hessian + floor)[1]

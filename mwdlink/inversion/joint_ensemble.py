@@ -28,8 +28,9 @@ CALIBRATION_SPREAD = {"absolute": 0.01, "universal": 0.02, "equivalent": 0.05, "
 MODULUS_SPREAD = 0.03
 BASELINE_SPREAD = 0.002
 # kernels whose evidence is this many e-folds below the best are impossible; the others share the
-# members, as none of them is the truth
-ADMISSIBLE = 8.0
+# members by evidence to the power 1/TEMPER, as none of them is the truth
+ADMISSIBLE = 10.0
+TEMPER = 2.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -119,7 +120,8 @@ def settle(
     width = float(np.sqrt(max(share @ (logs - share @ logs) ** 2, 0.0)))
     spacing = float(np.clip(width / 4.0, 0.02, SPACING))
     first = np.log10(low) - 4 * spacing
-    last = max(np.log10(reach), np.log10(high) + 0.25)
+    # far enough for the smooth continuation of any curve to have ended
+    last = max(np.log10(reach), np.log10(high) + 1.0)
     count = int(np.ceil((last - first) / spacing)) + 1
     if count > 140:
         spacing, count = (last - first) / 139, 140
@@ -145,12 +147,38 @@ def settle(
 
 @dataclass(frozen=True, eq=False)
 class KernelScan:
-    """One kernel's scan and its standing among the others."""
+    """One kernel's fits and its standing among the others.
+
+    Attributes
+    ----------
+    kernel : str
+    free, smooth : JointScan
+        The curve free beyond the GPC, and only its smooth continuation there.
+    window : Window
+    share : float
+        Share of the members.
+    """
 
     kernel: str
-    scan: JointScan
+    free: JointScan
+    smooth: JointScan
     window: Window
-    admissible: bool
+    share: float = 0.0
+
+    @property
+    def tail_odds(self) -> float:
+        """Probability of a tail of its own against a smooth continuation, both equal before."""
+        return float(1.0 / (1.0 + np.exp(np.clip(self.smooth.total - self.free.total, -700, 700))))
+
+    @property
+    def total(self) -> float:
+        """ln of the evidence, over both."""
+        return float(np.logaddexp(self.free.total, self.smooth.total) - np.log(2.0))
+
+    @property
+    def best(self) -> JointFit:
+        """The fit of highest evidence."""
+        return (self.free if self.tail_odds > 0.5 else self.smooth).best
 
 
 @dataclass(frozen=True, eq=False)
@@ -169,8 +197,12 @@ class Joint:
     alone_w : ndarray of shape (m, n)
         The smooth continuation of each member's GPC curve.
     nuisance : ndarray of shape (m, 5)
-    kernel, smoothing : ndarray of int of shape (m,)
-        Which kernel and which lambda each member was drawn with.
+    kernel : ndarray of int of shape (m,)
+        Which kernel each member was drawn with.
+    smoothing : ndarray of shape (m,)
+        lambda of each member.
+    tail_free : ndarray of bool of shape (m,)
+        Whether the member's curve was free beyond the GPC.
     unsettled : int
         Members that did not converge and were left out.
     """
@@ -183,12 +215,13 @@ class Joint:
     nuisance: np.ndarray
     kernel: np.ndarray
     smoothing: np.ndarray
+    tail_free: np.ndarray
     unsettled: int = 0
 
     @property
     def best(self) -> JointFit:
         """The fit of highest evidence."""
-        return self.kernels[0].scan.best
+        return self.kernels[0].best
 
 
 def infer(setting: Setting, kernels: tuple[str, ...], members: int, seed: int) -> Joint:
@@ -198,27 +231,35 @@ def infer(setting: Setting, kernels: tuple[str, ...], members: int, seed: int) -
     (randomise, then optimise); each has its own child seed.
     """
     alone = smooth_curve(setting.x, setting.gpc)
-    scans = []
+    found = []
     for kernel in kernels:
         problem, window = setting.problem(kernel)
-        found = joint.scan(problem, joint.start(problem, alone.u), SMOOTHING)
-        scans.append((kernel, found, window))
-    top = max(s.total for _, s, _ in scans)
-    scans.sort(key=lambda s: -s[1].total)
-    ranked = tuple(KernelScan(k, s, v, s.total > top - ADMISSIBLE) for k, s, v in scans)
+        stiff = problem.with_priors(replace(problem.priors, tail_free=False))
+        smooth = joint.scan(stiff, joint.start(stiff, alone.u), SMOOTHING)
+        first = smooth.best.z.copy()
+        first[problem.n] = problem.priors.lump[0]
+        found.append(KernelScan(kernel, joint.scan(problem, first, SMOOTHING), smooth, window))
+    found.sort(key=lambda k: -k.total)
+    gap = np.array([k.total - found[0].total for k in found])
+    weight = np.where(gap > -ADMISSIBLE, np.exp(gap / TEMPER), 0.0)
+    ranked = tuple(
+        replace(k, share=float(v)) for k, v in zip(found, weight / weight.sum(), strict=True)
+    )
     return _draw(setting, alone, ranked, members, seed)
 
 
 def _draw(
     setting: Setting, alone: AloneFit, ranked: tuple[KernelScan, ...], members: int, seed: int
 ) -> Joint:
-    held = [k for k in ranked if k.admissible]
     seeds = np.random.SeedSequence(seed).spawn(members)
-    fits, pushes, kernel, smooth = [], [], [], []
+    # as many members of each kernel as its share, the odd ones to the best
+    edges = np.cumsum([k.share for k in ranked])
+    fits, pushes, kernel, smoothing, tail = [], [], [], [], []
     for i, child in enumerate(seeds):
         rng = np.random.default_rng(child)
-        j = i % len(held)
-        chosen = held[j].scan
+        j = min(int(np.searchsorted(edges, (i + 0.5) / members)), len(ranked) - 1)
+        free = bool(rng.random() < ranked[j].tail_odds)
+        chosen = ranked[j].free if free else ranked[j].smooth
         k = int(rng.choice(len(chosen.fits), p=chosen.weights))
         noise = joint.draw_noise(chosen.problem, rng)
         first = chosen.fits[k]
@@ -229,7 +270,8 @@ def _draw(
             # the same error of the GPC pushes its own curve
             pushes.append((noise.data[chosen.problem.data.size : -1], own))
             kernel.append(j)
-            smooth.append(k)
+            smoothing.append(first.smoothing)
+            tail.append(free)
     n = setting.x.size
     return Joint(
         setting,
@@ -239,7 +281,8 @@ def _draw(
         alone.drawn(pushes),
         np.array([f.nuisance for f in fits]).reshape(-1, len(joint.NUISANCE)),
         np.array(kernel, dtype=int),
-        np.array(smooth, dtype=int),
+        np.array(smoothing, dtype=float),
+        np.array(tail, dtype=bool),
         members - len(fits),
     )
 
