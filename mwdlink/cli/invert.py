@@ -39,6 +39,20 @@ from mwdlink.cli.options import (
     help="Say which measurement brings a quantity to this relative precision, as in Mz=0.1.",
 )
 @click.option(
+    "--method",
+    type=click.Choice(["smooth", "tikhonov", "mixture", "generalised-exponential"]),
+    default="smooth",
+    show_default=True,
+    help="How the distribution is sought.",
+)
+@click.option(
+    "--choose",
+    type=click.Choice(["evidence", "gcv", "l-curve", "discrepancy"]),
+    default="evidence",
+    show_default=True,
+    help="How tikhonov chooses its smoothing.",
+)
+@click.option(
     "--smoothing", type=Number("LAMBDA", 0), help="A fixed smoothing. Default: by the evidence."
 )
 @ensemble_options
@@ -55,6 +69,8 @@ def command(
     noise: float | None,
     above: tuple[float, ...],
     want: tuple[tuple[str, float], ...],
+    method: str,
+    choose: str,
     smoothing: float | None,
     members: int,
     seed: int,
@@ -89,6 +105,8 @@ def command(
             seed=seed,
             temperature_C=temperature,
             noise=noise,
+            method=method,
+            choose=choose,
             smoothing=smoothing,
             want=dict(want) or None,
         )

@@ -147,10 +147,20 @@ def make_advice(
     InputError
         If a quantity or precision cannot be understood.
     """
-    for name, precision in want.items():
-        _understand(name, precision)
+    check_wanted(want)
     lab = Laboratory(problem, fit, melt, model, np.asarray(omega, float), np.asarray(sigma, float))
     return tuple(_advise_one(lab, name, float(p), polymer) for name, p in want.items())
+
+
+def check_wanted(want: Mapping[str, float]) -> None:
+    """Refuse wishes that cannot be understood, before any computation.
+
+    Raises
+    ------
+    InputError
+    """
+    for name, precision in want.items():
+        _understand(name, precision)
 
 
 def _understand(name: str, precision: float) -> None:

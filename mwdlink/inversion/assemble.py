@@ -13,6 +13,7 @@ from mwdlink.chains.melt import Melt
 from mwdlink.chains.polymer import Polymer
 from mwdlink.errors import Caution, merge_cautions
 from mwdlink.inversion import closed_form
+from mwdlink.inversion.advice import advise
 from mwdlink.inversion.budget import variance_shares
 from mwdlink.inversion.ensemble import Branch, ExponentPrior, Members, prior_weights
 from mwdlink.inversion.inversion_result import Inversion
@@ -25,6 +26,8 @@ from mwdlink.relaxation.kernels import DEFAULT_KERNEL
 from mwdlink.relaxation.validity import frequency_cautions
 
 PRIOR_DRAWS = 200
+# what is advised on when nobody asks
+DEFAULT_WANT = {"Mz": 0.1}
 # a lambda this near an end of the scan was chosen by the scan, not by the data
 AT_END_ROUGH, AT_END_SMOOTH = 1, 0
 
@@ -134,7 +137,7 @@ def assemble(
     )
     notes = merge_cautions(notes, _fit_cautions(centre, method), check_notes, _sweep_cautions(sweep, melt))
     notes = notes + _bound_cautions(averages, outside)
-    advice = _advice(centre, sweep, polymer, want, averages, outside)
+    advice = _advice(centre, sweep, polymer, want)
     return Inversion(
         molar_mass=readonly(grid),
         density=readonly(density),
@@ -379,14 +382,23 @@ def _bound_cautions(
 
 
 def _advice(
-    centre: Branch,
-    sweep: Any,
-    polymer: Polymer,
-    want: Mapping[str, float] | None,
-    averages: Mapping[str, Uncertain],
-    outside: Mapping[str, Uncertain],
+    centre: Branch, sweep: Any, polymer: Polymer, want: Mapping[str, float] | None
 ) -> tuple[str, ...] | None:
-    return None
+    """What to measure next, for what was asked; without a wish, for Mz to 10 %."""
+    if not isinstance(sweep, Sweep) or centre.build is not None:
+        return None
+    return tuple(
+        advise(
+            centre.problem,
+            centre.fit,
+            centre.melt,
+            centre.model,
+            sweep.omega,
+            centre.problem.sigma,
+            want or DEFAULT_WANT,
+            polymer,
+        )
+    )
 
 
 def _peak_row(peak: Any) -> dict[str, Any]:
@@ -423,6 +435,8 @@ def _fit_table(sweep: Any, centre: Branch) -> dict[str, np.ndarray]:
 
 def _smoothing_table(centre: Branch) -> dict[str, np.ndarray]:
     scan = centre.scan
+    if centre.curve is not None:
+        return dict(centre.curve)
     return {
         "smoothing [-]": scan.smoothing,
         "chi2 per point [-]": np.array([f.chi2 for f in scan.fits]) / centre.problem.data.size,

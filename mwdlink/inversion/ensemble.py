@@ -7,21 +7,23 @@ members draw an exponent, a lambda and perturbations of data and prior, and are 
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
 
 from mwdlink.chains.melt import Melt
-from mwdlink.errors import MwdlinkError
+from mwdlink.errors import Caution, MwdlinkError
 from mwdlink.inversion.many import Copies, minimise_many
 from mwdlink.inversion.objective import (
     LUMP_CENTRE,
     LUMP_SPREAD,
+    Forward,
     Problem,
     time_columns,
     weights,
 )
+from mwdlink.inversion.other_inputs import minimise_copies
 from mwdlink.inversion.roughness import relieved
 from mwdlink.inversion.smoothing import SCAN, Scan, scan
 from mwdlink.inversion.solve import Fit
@@ -63,6 +65,9 @@ class Branch:
     scan : Scan
     plateau_factor : float
         Factor on the card's plateau modulus.
+    build, curve, notes : optional
+        Of a method that is not the smooth one: what builds its problems at other exponents, its
+        own scan as columns, its cautions.
     """
 
     kernel: str
@@ -72,6 +77,9 @@ class Branch:
     problem: Problem
     scan: Scan
     plateau_factor: float = 1.0
+    build: BranchBuilder | None = None
+    curve: Mapping[str, np.ndarray] | None = None
+    notes: tuple[Caution, ...] = ()
 
     @property
     def fit(self) -> Fit:
@@ -235,7 +243,10 @@ def draw_members(branch: Branch, count: int, seed: np.random.SeedSequence, scatt
         exponent if branch.exponent_spread > 0 else None,
     )
     ln_time = scatter * rng.standard_normal(count)
-    u, ok = minimise_many(problem, copies)
+    if type(problem.forward) is Forward:
+        u, ok = minimise_many(problem, copies)
+    else:  # rows that are not linear in G(t) have no stacked form
+        u, ok = minimise_copies(problem, copies)
     e = np.exp(u - u.max(axis=1, keepdims=True))
     return Members(e / e.sum(axis=1, keepdims=True), exponent, ln_time, index, ok)
 

@@ -11,6 +11,7 @@ import numpy as np
 from mwdlink.chains.melt import Melt
 from mwdlink.chains.polymer import Polymer
 from mwdlink.errors import Caution, InputError, MwdlinkError, NotConverged, merge_cautions
+from mwdlink.inversion.advice import check_wanted
 from mwdlink.inversion.assemble import assemble
 from mwdlink.inversion.ensemble import (
     Branch,
@@ -22,8 +23,9 @@ from mwdlink.inversion.ensemble import (
     fit_branch,
 )
 from mwdlink.inversion.inversion_result import Inversion
-from mwdlink.inversion.methods import METHODS
+from mwdlink.inversion.methods import CHOICES, METHODS, method_branch, method_members
 from mwdlink.inversion.objective import Problem, sweep_problem
+from mwdlink.inversion.other_inputs import curve_cautions, curve_maker
 from mwdlink.inversion.smoothing import scan
 from mwdlink.inversion.window import Window
 from mwdlink.measurement.noise import chi2_in_words, noise_of
@@ -103,7 +105,9 @@ def invert(
     NotConverged
         If no kernel's fit converged; carries the best Inversion so far as `partial`.
     """
-    _check(sweep, members, above, method, level)
+    _check(sweep, members, above, method, choose, level)
+    if want:
+        check_wanted(want)
     temperature, notes = _temperature(sweep, polymer, temperature_C)
     melt = polymer.melt(temperature)
     if kernels is None:
@@ -114,6 +118,8 @@ def invert(
             get_kernel(k, melt)
     prior, fixed = exponent_prior(exponent, melt)
     make, points, weights = _problem_maker(sweep, noise)
+    if not isinstance(sweep, Sweep):
+        notes += curve_cautions(sweep)
     tasks = [(make, melt, rouse, k, prior, smoothing, method, choose) for k in names]
     mapper: Callable[..., Any] = map if executor is None else executor.map
     outcome = list(mapper(_run_kernel, tasks))
@@ -126,6 +132,7 @@ def invert(
     allowed = admissible(branches)
     branches, inflation = _inflate(branches, allowed, weights.source)
     used = [b for b, ok in zip(branches, allowed, strict=True) if ok]
+    notes += tuple(n for b in used for n in b.notes)
     scatter = melt.scatter_decades * float(np.log(10.0))
     seeds = np.random.SeedSequence(seed).spawn(len(KERNEL_NAMES) + 1)
     shares = _split(members, len(used))
@@ -202,7 +209,9 @@ def exponent_prior(
     return ExponentPrior(middle, (high - low) / (2 * 1.6449)), False
 
 
-def _check(sweep: Any, members: int, above: Sequence[float], method: str, level: float) -> None:
+def _check(
+    sweep: Any, members: int, above: Sequence[float], method: str, choose: str, level: float
+) -> None:
     if not isinstance(sweep, (Sweep, RelaxationCurve, FlowCurve)):
         raise InputError(f"invert needs a sweep, relaxation or flow curve, not {type(sweep).__name__}")
     if len(sweep) < LEAST_POINTS:
@@ -217,6 +226,8 @@ def _check(sweep: Any, members: int, above: Sequence[float], method: str, level:
         raise InputError("molar masses for the weight above must be positive")
     if method not in METHODS:
         raise InputError(f"unknown method {method!r}.", remedy="Use one of " + ", ".join(METHODS) + ".")
+    if choose not in CHOICES:
+        raise InputError(f"unknown choice {choose!r}.", remedy="Use one of " + ", ".join(CHOICES) + ".")
     if not 0 < level < 1:
         raise InputError("the level of the intervals must lie between 0 and 1")
 
@@ -262,8 +273,6 @@ def _problem_maker(sweep: Any, noise: float | None) -> tuple[Any, int, Any]:
         weights = noise_of(sweep, noise)
         sigma = np.concatenate([weights.sigma_storage, weights.sigma_loss])
         return _SweepMaker(sweep, np.maximum(sigma, 1e-3)), 2 * len(sweep), weights
-    from mwdlink.inversion.other_inputs import curve_maker
-
     return curve_maker(sweep, noise)
 
 
@@ -271,14 +280,18 @@ def _run_kernel(task: tuple[Any, ...]) -> Branch | MwdlinkError:
     make, melt, rouse, kernel, prior, smoothing, method, choose = task
     try:
         build = BranchBuilder(make, melt, rouse)
-        return fit_branch(build, kernel, prior, smoothing)
+        if method == "smooth":
+            return fit_branch(build, kernel, prior, smoothing)
+        return method_branch(build, kernel, prior, method, choose, smoothing)
     except MwdlinkError as error:
         return error
 
 
 def _run_members(job: tuple[Any, ...]) -> Members:
     branch, count, seed, scatter, method, choose = job
-    return draw_members(branch, count, seed, scatter)
+    if method == "smooth":
+        return draw_members(branch, count, seed, scatter)
+    return method_members(branch, count, seed, scatter, method, choose)
 
 
 def _inflate(
@@ -293,10 +306,13 @@ def _inflate(
     scale = float(np.sqrt(factor))
     out = []
     for branch, ok in zip(branches, allowed, strict=True):
-        if ok:
+        if ok and branch.build is None:
             problem = replace(branch.problem, sigma=branch.problem.sigma * scale)
             found = scan(problem, branch.fit.u, branch.scan.smoothing)
             branch = replace(branch, problem=problem, scan=found)
+        elif ok:
+            problem = replace(branch.problem, sigma=branch.problem.sigma * scale)
+            branch = replace(branch, problem=problem)
         out.append(branch)
     return out, scale
 
