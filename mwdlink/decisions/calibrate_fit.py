@@ -27,8 +27,8 @@ MODEL_ERROR = 0.04
 INDEPENDENT = 8
 ETA0_ERROR = 0.05
 NODES = 90
-STEPS = (0.0, 0.03, 0.05, 0.06)
-MAX_ROUNDS = 12
+STEPS = (0.0, 0.01, 0.02, 0.02)
+MAX_ROUNDS = 20
 
 
 @dataclass(frozen=True, eq=False)
@@ -198,7 +198,7 @@ def fit(
             break
         gain, p, d, state, cost = cost - new, q, e, (rs, trial), new
         damping *= 0.2
-        if gain < 1e-2 + 1e-4 * cost:
+        if gain < 0.02 + 5e-4 * cost:
             converged = True
             break
     assert state is not None  # the loop ran

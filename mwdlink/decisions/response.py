@@ -24,7 +24,7 @@ from mwdlink.relaxation.operator import exponential_fit, log_grid
 from mwdlink.relaxation.rouse import rouse_modes
 
 TIMES_PER_DECADE = 10
-MODES_PER_DECADE = 6
+MODES_PER_DECADE = 8
 FREQUENCIES_PER_DECADE = 10
 ROUSE_PER_DECADE = 20
 MOST_NODES = 240
