@@ -2,8 +2,8 @@
 
 The unknown is u = ln H on a uniform grid of ln tau, so positivity is built in, and its roughness is
 the integral of the squared third derivative of u: a log-normal spectrum, and with it every power
-law, costs nothing. The smoothing weight is chosen by the evidence (Laplace approximation), its
-whole curve is kept, and the band comes from refits with data and prior perturbed by their own
+law, costs nothing. The curve is the average over smoothing weights by their evidence (Laplace
+approximation), whose whole curve is kept, and the band comes from refits with data and prior perturbed by their own
 spread at smoothing weights drawn by their evidence.
 """
 
@@ -28,6 +28,9 @@ BEND = 12.0
 # decade: melts flow in the end, and a second, slower process that no point has seen is not to be
 # made up by the smoothing prior.
 RISE = 1.0
+# Spectra of melts that need lambda far below one are rare, chance evidence for it is not: decades
+# below one cost as a normal law of this width would have it.
+ROUGH_DECADES = 2.0
 LEVEL = 0.9
 
 
@@ -50,11 +53,11 @@ class Continuous:
         Fitted moduli [Pa].
     chi2 : float
     smoothing : float
-        The chosen weight lambda of the squared third derivative [-].
+        The most likely weight lambda of the squared third derivative [-].
     scan : ndarray of shape (q, 3)
         lambda, log evidence, chi2 of every weight tried.
     effective_parameters : float
-        Trace of the resolution at the chosen weight [-].
+        Trace of the resolution, averaged over the weights [-].
     """
 
     tau: np.ndarray
@@ -206,7 +209,8 @@ class _Problem:
         _, logdet = np.linalg.slogdet(M)
         _, prior = np.linalg.slogdet(P + 1e-9 * np.eye(P.shape[0]))
         trace = float(np.trace(np.linalg.solve(M, N)))
-        return -0.5 * (cost + logdet - prior), trace
+        rough = min(np.log10(lam), 0.0) / ROUGH_DECADES
+        return -0.5 * (cost + logdet - prior + rough * rough), trace
 
 
 def fit_continuous(
@@ -270,9 +274,14 @@ def fit_continuous(
         raise NotConverged("The continuous spectrum did not converge at any smoothing weight.")
     scan = np.array([f[:3] for f in fits])
     best = int(np.argmax(scan[:, 1]))
-    lam, _, chi2, trace, u = fits[best]
+    lam = fits[best][0]
     weight = np.exp(scan[:, 1] - scan[:, 1].max())
     weight /= weight.sum()
+    # averaged over the weights by their evidence: the single best one jumps from sweep to sweep
+    u = np.asarray(sum(w * f[4] for w, f in zip(weight, fits, strict=True)))
+    trace = float(sum(w * f[3] for w, f in zip(weight, fits, strict=True)))
+    r = (np.log(problem.A @ np.exp(u)) - problem.y) * problem.w
+    chi2 = float(r @ r)
     rows = []
     for child in np.random.SeedSequence(seed).spawn(members):
         rng = np.random.default_rng(child)
