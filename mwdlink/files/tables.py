@@ -175,6 +175,7 @@ def read_sweeps(
     suited = [p for p in pickers if make.is_sweep(p)]
     if block is not None or not suited:
         suited = [_choose(pickers, suited, block, "sweep")]
+    aside = _left_aside(pickers, suited, "sweep")
     segments = []
     for picker in suited:
         segments += make.read_segments(
@@ -191,7 +192,7 @@ def read_sweeps(
                  for s in found]  # fmt: skip
     return [
         s.with_(
-            warnings=merge_cautions(source.notes, s.warnings),
+            warnings=merge_cautions(source.notes, aside, s.warnings),
             comments=(*(c for c in source.layout.comments if c not in s.comments), *s.comments),
         )
         for s in found
@@ -356,7 +357,18 @@ def _choose(pickers: list[Picker], suited: list[Picker], block: int | None, kind
             row=rows[1],
             remedy="Keep one of them in the file, or leave the others' rows out with --omit.",
         )
+    suited[0].notes += _left_aside(pickers, suited, kind)
     return suited[0]
+
+
+def _left_aside(pickers: list[Picker], used: list[Picker], kind: str) -> tuple[Caution, ...]:
+    """What is said of the tables of a file that were not read."""
+    rest = [p for p in pickers if not any(p is q for q in used)]
+    if not rest or not used:
+        return ()
+    rows = ", ".join(str(p.block.header_row or p.block.rows[0]) for p in rest[:6])
+    text = f"{len(rest)} further tables of the file (row {rows}) are no {kind}: left aside."
+    return (Caution("tables_left_aside", text),)
 
 
 def _no_kind(pickers: list[Picker], kind: str, accepted: str) -> InputError:

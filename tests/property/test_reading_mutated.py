@@ -143,8 +143,38 @@ def bases() -> list[Base]:
             [[repr(math.log10(m)), repr(c)] for m, c in zip(MASS, CURVE, strict=True)],
             [(m,) for m in MASS],
         ),
+        _table(
+            "temperatures",
+            ["T [C]", "omega [rad/s]", "G' [Pa]", "G'' [Pa]"],
+            [[repr(t), repr(w), repr(a + t), repr(b)] for t in (150.0, 170.0) for w, a, b in sweep],
+            [(w, a + t, b) for t in (150.0, 170.0) for w, a, b in sweep],
+        ),
+        _table(
+            "both axes",
+            ["M [g/mol]", "log M", "dW/dlogM", "Cum. W [%]"],
+            [
+                [repr(m), repr(round(math.log10(m), 5)), repr(c), repr(w)]
+                for m, c, w in zip(MASS, CURVE, np.cumsum(CURVE).round(3).tolist(), strict=True)
+            ],
+            [(m,) for m in MASS],
+            delimiter="\t",
+        ),
+        _blocks(),
     ]
     return out
+
+
+def _blocks() -> Base:
+    """Two tables in one file, quoted, each with its own header and temperature."""
+    head = '"omega [rad/s]","G\' [kPa]","G\'\' [kPa]"'
+    lines, expected = [], {}
+    for t in (150, 170):
+        lines += ["" if lines else "Invented", f"Temperature: {t} C", head]
+        for w, a, b in zip(OMEGA, STORAGE, LOSS, strict=True):
+            line = f'"{w!r}","{a + t!r}","{b!r}"'
+            lines.append(line)
+            expected[line] = (w, (a + t) * 1e3, b * 1e3)
+    return Base("blocks", "\n".join(lines).encode(), "utf-8", (head, head), expected)
 
 
 def mutate(data: bytes, rng: np.random.Generator, encoding: str) -> bytes:
@@ -234,7 +264,7 @@ def check(base: Base, data: bytes, path: Path) -> str:
     results = found if isinstance(found, list) else [found]
     text = data.decode(base.encoding, errors="replace")
     lines = text.replace("\r\n", "\n").replace("\r", "\n").split("\n")
-    whole_header = all(h in lines for h in base.header_lines)
+    whole_header = all(lines.count(h) >= base.header_lines.count(h) for h in base.header_lines)
     for result in results:
         for array in arrays(result):
             assert np.all(np.isfinite(array)), "a number that is not finite"
@@ -242,7 +272,8 @@ def check(base: Base, data: bytes, path: Path) -> str:
             w.code for w in getattr(result, "warnings", ())
         }:
             _check_rows(base, lines, result)
-    if whole_header:
+    aside = any(w.code == "tables_left_aside" for r in results for w in getattr(r, "warnings", ()))
+    if whole_header and not aside:
         abscissa = np.concatenate([arrays(r)[0] for r in results])
         for line, numbers in base.expected.items():
             if line in lines:
