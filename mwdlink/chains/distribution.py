@@ -18,6 +18,9 @@ from mwdlink.chains import tables
 from mwdlink.errors import Caution, InputError, merge_cautions
 from mwdlink.quantity import readonly
 
+# up to this many nodes are separate chains, not points of a curve
+DISCRETE = 7
+MOST_CELLS = 2000
 CALIBRATIONS = ("absolute", "universal", "equivalent", "unstated")
 
 
@@ -232,9 +235,7 @@ class Distribution:
                     "Convert them before relaxation times are read from them.",
                 )
             )
-        return cls(
-            m, mass, edges, label=label, calibration=calibration, warnings=tuple(cautions)
-        )
+        return cls(m, mass, edges, label=label, calibration=calibration, warnings=tuple(cautions))
 
     @classmethod
     def from_averages(
@@ -264,14 +265,13 @@ class Distribution:
         parts : iterable of (Distribution, float)
             Components and their weight fractions [-], >= 0, any sum (normalised).
         points : int
-            Cells per decade where the components' own nodes differ.
+            Least number of cells per decade where the components' own nodes differ.
 
         Returns
         -------
         Distribution
-            On the common nodes if all components share them; otherwise all nodes together, each
-            with its own weight (exact for relaxation and averages), merged to `points` cells per
-            decade when they are many.
+            On the common nodes if all components share them; otherwise the components' curves
+            resampled on even cells of log M, fine enough for the narrowest of them.
 
         Raises
         ------
@@ -287,28 +287,33 @@ class Distribution:
         cautions = merge_cautions(*(d.warnings for d, _ in used))
         kinds = {d.calibration for d, _ in used}
         calibration = kinds.pop() if len(kinds) == 1 else "unstated"
-        if all(np.array_equal(d.edges, first.edges) for d, _ in used):
-            mass = sum(f * d.mass for d, f in used)
+        if all(
+            np.array_equal(d.edges, first.edges) and np.array_equal(d.molar_mass, first.molar_mass)
+            for d, _ in used
+        ):
+            mass = np.sum([f * d.mass for d, f in used], axis=0)
             return cls(first.molar_mass, mass, first.edges, label, calibration, cautions)
-        low = min(d.edges[0] for d, _ in used)
-        high = max(d.edges[-1] for d, _ in used)
-        count = max(int(np.ceil(np.log10(high / low) * points)), 2)
-        edges = np.geomspace(low, high, count + 1)
+        edges = _even_edges([d for d, _ in used], points)
+        count = edges.size - 1
+        nodes = np.sqrt(edges[:-1] * edges[1:])
         mass = np.zeros(count)
         moved = np.zeros(count)
         for d, f in used:
-            # nodes keep their molar mass in the mean: each cell's node is the weighted mean of log M
-            cell = np.clip(np.searchsorted(edges, d.molar_mass, side="right") - 1, 0, count - 1)
-            np.add.at(mass, cell, f * d.mass)
-            np.add.at(moved, cell, f * d.mass * np.log(d.molar_mass))
-        nodes = np.sqrt(edges[:-1] * edges[1:])
+            if d.molar_mass.size <= DISCRETE:
+                # a few chains, not a curve: each keeps its molar mass as far as the cell allows
+                cell = np.clip(np.searchsorted(edges, d.molar_mass, side="right") - 1, 0, count - 1)
+                np.add.at(mass, cell, f * d.mass)
+                np.add.at(moved, cell, f * d.mass * np.log(d.molar_mass / nodes[cell]))
+            else:
+                curve = tables.resampled(d.molar_mass, d.density, nodes)
+                mass += f * curve / curve.sum()
         held = mass > 0
-        nodes[held] = np.exp(moved[held] / mass[held])
+        nodes[held] *= np.exp(moved[held] / mass[held])
         nodes = np.clip(nodes, edges[:-1] * (1 + 1e-12), edges[1:] * (1 - 1e-12))
         return cls(nodes, mass, edges, label, calibration, cautions)
 
     def to_frame(self) -> Any:
-        """Table with `M [g/mol]`, `dW/dlog10M` and `cumulative W` at the nodes."""
+        """Table with `M [g/mol]` and `dW/dlog10M` at the nodes."""
         import pandas as pd
 
         return pd.DataFrame(
@@ -323,3 +328,16 @@ class Distribution:
         import importlib
 
         return importlib.import_module("mwdlink.figures").plot_result(self, ax)
+
+
+def _even_edges(parts: list[Distribution], points: int) -> np.ndarray:
+    """Cells even in log M over all parts, fine enough for the narrowest curve among them."""
+    low = min(d.edges[0] for d in parts)
+    high = max(d.edges[-1] for d in parts)
+    step = 1.0 / points
+    for d in parts:
+        if d.molar_mass.size > DISCRETE:
+            step = min(step, 2.0 * float(np.median(np.diff(np.log10(d.molar_mass)))))
+    decades = float(np.log10(high / low))
+    count = int(np.clip(np.ceil(decades / step), 2, MOST_CELLS))
+    return np.geomspace(low, high, count + 1)

@@ -1,7 +1,8 @@
 """Families of distributions with known averages: log-normal, Schulz-Zimm, generalised exponential.
 
-Each is given on nodes equally spaced in log M, where the trapezoid rule reproduces the averages to
-rounding, over the range that holds all but 1e-12 of the second moment on either side.
+Each is given on nodes equally spaced in log M, where the trapezoid rule reproduces the averages
+closely, over the range that holds them. Where a family has countless chains of next to no mass
+(Schulz-Zimm of high dispersity), these stand together in one node that keeps Mn.
 """
 
 from __future__ import annotations
@@ -15,7 +16,11 @@ from scipy import optimize, special
 from mwdlink.chains.distribution import Distribution
 from mwdlink.errors import ModelError
 
+# lowest node of a family, in units of its own scale
+LEAST_RATIO = 1e-6
 FAMILIES = ("log-normal", "schulz-zimm", "generalised-exponential")
+# ln a and ln b of the generalised exponential
+GEX_BOUNDS = ([-6.0, -3.2], [7.0, 4.0])
 
 
 def lognormal(Mw: float, dispersity: float, points: int | None = None, **more: Any) -> Distribution:
@@ -105,9 +110,7 @@ def mixture_of_lognormals(
     if points is None:
         points = int(np.clip(np.ceil((high - low) / (0.12 * sigma.min())), 120, 1200))
     x = np.linspace(low, high, points)
-    w = np.sum(
-        shares * np.exp(-0.5 * ((x[:, None] - centre) / sigma) ** 2) / sigma, axis=1
-    )
+    w = np.sum(shares * np.exp(-0.5 * ((x[:, None] - centre) / sigma) ** 2) / sigma, axis=1)
     return Distribution.from_nodes(np.exp(x), w, **more)
 
 
@@ -172,14 +175,13 @@ def gex_from_averages(Mn: float, Mw: float, Mz: float) -> tuple[float, float, fl
         n, w, z = gex_averages(a, b, 1.0)
         return np.log([w / n, z / w]) - want
 
-    best = None
-    for start in ((1.0, 1.0), (2.0, 0.5), (5.0, 0.3), (0.3, 2.0), (20.0, 0.15)):
-        found = optimize.least_squares(miss, np.log(start), bounds=([-6, -3.2], [7, 4]))
-        if best is None or found.cost < best.cost:
-            best = found
+    starts = np.log([(1.0, 1.0), (2.0, 0.5), (5.0, 0.3), (0.3, 2.0), (20.0, 0.15)])
+    best = optimize.least_squares(miss, starts[0], bounds=GEX_BOUNDS)
+    for start in starts[1:]:
         if best.cost < 1e-18:
             break
-    assert best is not None  # the loop ran
+        found = optimize.least_squares(miss, start, bounds=GEX_BOUNDS)
+        best = found if found.cost < best.cost else best
     if best.cost > 1e-9:
         raise ModelError(
             f"no generalised exponential has Mw/Mn {Mw / Mn:.3g} with Mz/Mw {Mz / Mw:.3g}"
@@ -204,13 +206,21 @@ def _on_nodes(x: np.ndarray, log_density: np.ndarray, **more: Any) -> Distributi
     return Distribution.from_nodes(np.exp(x), w, **more)
 
 
-def _gamma_like(
-    a: float, b: float, scale: float, points: int | None, **more: Any
-) -> Distribution:
+def _gamma_like(a: float, b: float, scale: float, points: int | None, **more: Any) -> Distribution:
     # per ln M the density is M^(a+1) exp(-(M/M0)^b): (M/M0)^b follows a gamma law of order (a+1)/b
-    low = special.gammaincinv((a + 1) / b, 1e-13)
-    high = special.gammainccinv((a + 4) / b, 1e-15)
-    low = max(float(low), 1e-280)
-    x = _nodes(np.log(scale) + np.log(low) / b, np.log(scale) + np.log(high) / b, points or 240)
-    r = x - np.log(scale)
-    return _on_nodes(x, (a + 1) * r - np.exp(b * r), **more)
+    # by weight and a/b by number
+    low = max(float(special.gammaincinv(a / b, 1e-13)), LEAST_RATIO**b)
+    high = float(special.gammainccinv((a + 4) / b, 1e-15))
+    x = _nodes(np.log(low) / b, np.log(high) / b, points or 240)
+    w = np.exp((a + 1) * x - np.exp(b * x))
+    below = float(special.gammainc(a / b, low))
+    if below < 1e-9:
+        return Distribution.from_nodes(scale * np.exp(x), w, **more)
+    # the chains below the first node, by weight exactly, at the mass that gives the whole its Mn
+    w[0] *= 0.5
+    share = float(special.gammainc((a + 1) / b, low))
+    w *= (1.0 - share) / w.sum()
+    number = np.exp(special.gammaln(a / b) - special.gammaln((a + 1) / b))
+    mass = share / (number - float(np.sum(w * np.exp(-x))))
+    nodes = np.concatenate([[mass], np.exp(x)])
+    return Distribution.from_nodes(scale * nodes, np.concatenate([[share], w]), **more)

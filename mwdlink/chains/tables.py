@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
+from scipy.interpolate import PchipInterpolator
 
 from mwdlink.errors import Caution, InputError
 
@@ -42,6 +43,20 @@ def edges_between(molar_mass: np.ndarray) -> np.ndarray:
     first = x[0] - (middle[0] - x[0])
     last = x[-1] + (x[-1] - middle[-1])
     return np.exp(np.concatenate([[first], middle, [last]]))
+
+
+def resampled(molar_mass: np.ndarray, density: np.ndarray, at: np.ndarray) -> np.ndarray:
+    """A curve at other molar masses, >= 0 and without overshoot, zero beyond its ends.
+
+    Parameters
+    ----------
+    molar_mass, density : ndarray of shape (n,)
+        [g/mol], [-]
+    at : ndarray of shape (m,)
+        [g/mol]
+    """
+    curve = PchipInterpolator(np.log(molar_mass), density, extrapolate=False)
+    return np.nan_to_num(curve(np.log(at)), nan=0.0)
 
 
 def weights_from_table(
@@ -177,14 +192,15 @@ def _from_differential(
 def _judge_area(area: float, kind: str, notes: list[Caution]) -> None:
     for scale in (1.0, 100.0):
         a = area / scale
-        if abs(a - LN10) < 0.12 or abs(a - 1 / LN10) < 0.03:
+        near = abs(a - LN10) < 0.12 or abs(a - 1 / LN10) < 0.03
+        if near and kind != "dW/dM":
             other = "ln" if kind == "dW/dlog10M" else "log10"
             notes.append(
                 Caution(
                     "ln_log10_mixup",
-                    f"The area under {kind} is {a:.3f}, not 1: that is ln 10 or its inverse, so the "
-                    f"column may be per {other} M. Normalised as labelled; a constant factor does "
-                    "not change the curve, a wrong label of dW/dM would.",
+                    f"The area under {kind} is {a:.3f}, not 1: that is ln 10 or its inverse, so "
+                    f"the column may be per {other} M. It makes no difference here: the curve is "
+                    "normalised, and both have the same shape.",
                 )
             )
             return
@@ -192,9 +208,7 @@ def _judge_area(area: float, kind: str, notes: list[Caution]) -> None:
             if scale == 100.0:
                 notes.append(Caution("percent", "The curve sums to 100: read as percent."))
             return
-    notes.append(
-        Caution("normalised", f"The area under {kind} is {area:.4g}; normalised to 1.")
-    )
+    notes.append(Caution("normalised", f"The area under {kind} is {area:.4g}; normalised to 1."))
 
 
 def _judge_ends(mass: np.ndarray, notes: list[Caution]) -> None:
@@ -217,7 +231,12 @@ def _from_cumulative(
     if not span > 0:
         raise InputError("the cumulative curve does not rise")
     if v[0] > v[-1]:
-        v = v.max() - v if abs(v.min()) < 0.02 * span else v.max() + v.min() - v
+        # weight above M: what lies beyond the rows shows only against the whole, 1 or 100
+        whole = float(v.max())
+        for total in (1.0, 100.0):
+            if 0.5 * total < whole <= 1.005 * total:
+                whole = max(whole, total)
+        v = whole - v
         notes.append(
             Caution("cumulative_falls", "The cumulative curve falls with M: read as weight above.")
         )

@@ -64,7 +64,8 @@ def volume_flow(viscosity: Callable[[np.ndarray], np.ndarray], stress: float) ->
     tau = np.maximum.accumulate(tau)
     if tau[0] > stress or tau[-1] < stress:
         raise InputError(
-            f"the flow curve never reaches a wall stress of {stress:.3g} Pa between 1e-8 and 1e7 1/s"
+            f"the flow curve never reaches a wall stress of {stress:.3g} Pa between 1e-8 and "
+            "1e7 1/s"
         )
     keep = np.concatenate([[True], np.diff(tau) > 0])
     rate, tau = rate[keep], tau[keep]
@@ -73,7 +74,10 @@ def volume_flow(viscosity: Callable[[np.ndarray], np.ndarray], stress: float) ->
     x = np.append(tau[below], stress)
     y = np.append(rate[below], wall_rate)
     f = x**3 * y  # integrand in d ln tau
-    integral = float(np.sum(0.5 * (f[1:] + f[:-1]) * np.diff(np.log(x))))
+    # the logarithmic mean: exact where the flow curve is a power law between two points
+    ratio = np.log(f[1:] / f[:-1])
+    mean = np.where(np.abs(ratio) > 1e-6, (f[1:] - f[:-1]) / np.where(ratio == 0, 1, ratio), f[1:])
+    integral = float(np.sum(mean * np.diff(np.log(x))))
     # below the first point the melt is Newtonian: int tau^2 rate dtau = tau^3 rate/4
     integral += float(x[0] ** 3 * y[0] / 4.0)
     return float(np.pi * DIE_RADIUS**3 / stress**3 * integral)

@@ -18,17 +18,25 @@ from scipy import special
 
 from mwdlink.chains.melt import Melt
 from mwdlink.errors import ModelError
+from mwdlink.relaxation.lattice import POINTS, stencil
+
+# lattice of ln(M1/M) of the fluctuation kernel
+RATIO_STEP = 0.1
 
 
 class Kernel(Protocol):
     """What a kernel must offer. `survival` is F^(1/beta), the quantity the mixing rule sums."""
 
     name: str
+    scale_free: bool
+    """Whether F depends on M through t/tau(M) only: one curve serves every chain."""
 
     def available(self, melt: Melt) -> bool:
         """Whether the card has the constants this kernel needs."""
 
-    def survival(self, s: np.ndarray, beta: float, melt: Melt, molar_mass: np.ndarray) -> np.ndarray:
+    def survival(
+        self, s: np.ndarray, beta: float, melt: Melt, molar_mass: np.ndarray
+    ) -> np.ndarray:
         """F^(1/beta) at s = t/tau.
 
         Parameters
@@ -54,11 +62,14 @@ class Exponential:
     """F = exp(-s); c = 1; Je0 G_N = 1."""
 
     name = "exponential"
+    scale_free = True
 
     def available(self, melt: Melt) -> bool:
         return True
 
-    def survival(self, s: np.ndarray, beta: float, melt: Melt, molar_mass: np.ndarray) -> np.ndarray:
+    def survival(
+        self, s: np.ndarray, beta: float, melt: Melt, molar_mass: np.ndarray
+    ) -> np.ndarray:
         return np.exp(-s / beta)
 
     def constant(self, beta: float, melt: Melt, molar_mass: np.ndarray) -> np.ndarray:
@@ -77,11 +88,14 @@ class Reptation:
     """
 
     name = "reptation"
+    scale_free = True
 
     def available(self, melt: Melt) -> bool:
         return True
 
-    def survival(self, s: np.ndarray, beta: float, melt: Melt, molar_mass: np.ndarray) -> np.ndarray:
+    def survival(
+        self, s: np.ndarray, beta: float, melt: Melt, molar_mass: np.ndarray
+    ) -> np.ndarray:
         return tube_survival(s)
 
     def constant(self, beta: float, melt: Melt, molar_mass: np.ndarray) -> np.ndarray:
@@ -99,11 +113,14 @@ class PowerLaw:
     """
 
     name = "power-law"
+    scale_free = True
 
     def available(self, melt: Melt) -> bool:
         return 0 < melt.power_law_n < 1
 
-    def survival(self, s: np.ndarray, beta: float, melt: Melt, molar_mass: np.ndarray) -> np.ndarray:
+    def survival(
+        self, s: np.ndarray, beta: float, melt: Melt, molar_mass: np.ndarray
+    ) -> np.ndarray:
         return power_law_decay(s, melt.power_law_n) ** (1.0 / beta)
 
     def constant(self, beta: float, melt: Melt, molar_mass: np.ndarray) -> np.ndarray:
@@ -123,25 +140,25 @@ class Fluctuation:
     """
 
     name = "fluctuation"
+    scale_free = False
 
     def available(self, melt: Melt) -> bool:
         return melt.fluctuation_molar_mass is not None
 
-    def survival(self, s: np.ndarray, beta: float, melt: Melt, molar_mass: np.ndarray) -> np.ndarray:
+    def survival(
+        self, s: np.ndarray, beta: float, melt: Melt, molar_mass: np.ndarray
+    ) -> np.ndarray:
         ratio = self._ratio(melt, molar_mass)
         return tube_survival(s + ratio * fluctuation_sum(s / ratio))
 
     def constant(self, beta: float, melt: Melt, molar_mass: np.ndarray) -> np.ndarray:
-        # int F ds by the trapezoid rule in ln s, smooth and vanishing at both ends
-        x = np.linspace(np.log(1e-16), np.log(80.0), 1200)
-        s = np.exp(x)[:, None]
+        # c is a smooth curve of ln(M1/M): on a lattice, and interpolated
         ratio = self._ratio(melt, np.atleast_1d(molar_mass))
-        grid = np.geomspace(ratio.min(), ratio.max(), 80) if ratio.size > 80 else ratio
-        f = tube_survival(s + grid * fluctuation_sum(s / grid)) ** beta * s
-        c = f.sum(axis=0) * (x[1] - x[0])
-        if grid is ratio:
-            return c
-        return np.exp(np.interp(np.log(ratio), np.log(grid), np.log(c)))
+        position = np.log(ratio) / RATIO_STEP
+        first, weight = stencil(position)
+        lattice = np.arange(int(first.min()), int(first.max()) + POINTS)
+        table = _fluctuation_constants(int(lattice[0]), lattice.size, float(beta))
+        return np.exp(np.sum(table[first[:, None] - lattice[0] + np.arange(POINTS)] * weight, 1))
 
     def _ratio(self, melt: Melt, molar_mass: np.ndarray) -> np.ndarray:
         if melt.fluctuation_molar_mass is None:
@@ -182,20 +199,17 @@ def available_kernels(melt: Melt) -> tuple[str, ...]:
 def tube_survival(u: Any) -> np.ndarray:
     """mu(u) = (8/pi^2) sum_{p odd} p^-2 exp(-p^2 u), to 1e-15 of its value at 0.
 
-    Below u = 0.01 the equivalent 1 - 4 sqrt(u)/pi^1.5 (its error is exp(-pi^2/(4u)), nothing).
+    Below u = 0.06 the equivalent 1 - 4 sqrt(u)/pi^1.5: what it leaves out is of the order of
+    exp(-pi^2/(4 u)), 1e-18.
     """
     u = np.asarray(u, dtype=float)
     v = np.minimum(u, 700.0)
-    e = np.exp(-v)
-    total = np.zeros_like(v)
-    # at u = 0.01 the term p = 63 is exp(-39.7)/63^2: 1e-21
-    for p in range(1, 64, 2):
-        if p == 1:
-            total += e
-            continue
+    total = np.exp(-v)
+    # at u = 0.06 the first term left out, p = 25, is exp(-37.5)/25^2: 1e-19
+    for p in range(3, 25, 2):
         total += np.exp(-np.minimum(p * p * v, 745.0)) / (p * p)
-    small = 1.0 - 4.0 * np.sqrt(np.minimum(u, 0.01)) / np.pi**1.5
-    return np.where(u < 0.01, small, 8.0 / np.pi**2 * total)
+    small = 1.0 - 4.0 * np.sqrt(np.minimum(u, 0.06)) / np.pi**1.5
+    return np.where(u < 0.06, small, 8.0 / np.pi**2 * total)
 
 
 def power_law_decay(z: Any, n: float) -> np.ndarray:
@@ -236,22 +250,35 @@ def power_law_decay(z: Any, n: float) -> np.ndarray:
 
 
 def fluctuation_sum(x: Any) -> np.ndarray:
-    """g(x) = sum_{n>=1} (1 - exp(-n^2 x))/n^2, to 5e-7.
+    """g(x) = sum_{n>=1} (1 - exp(-n^2 x))/n^2, to 1e-14.
 
-    Up to x = 0.8 its small-x form sqrt(pi x) - x/2, above the direct sum of five terms.
+    Up to x = 0.3 its small-x form sqrt(pi x) - x/2, which leaves out terms of the order of
+    exp(-pi^2/x); above, pi^2/6 less the direct sum of eleven terms.
     """
     x = np.asarray(x, dtype=float)
     v = np.minimum(x, 700.0)
     tail = np.zeros_like(v)
-    for k in range(1, 6):
+    for k in range(1, 12):
         tail += np.exp(-np.minimum(k * k * v, 745.0)) / (k * k)
-    low = np.minimum(x, 0.8)
-    return np.where(x <= 0.8, np.sqrt(np.pi * low) - 0.5 * low, np.pi**2 / 6 - tail)
+    low = np.minimum(x, 0.3)
+    return np.where(x <= 0.3, np.sqrt(np.pi * low) - 0.5 * low, np.pi**2 / 6 - tail)
+
+
+# ln s for the integrals of F over ln s: the trapezoid rule is exponentially accurate there, as the
+# integrands are smooth and vanish at both ends
+_LN_S = np.linspace(np.log(1e-18), np.log(80.0), 461)
 
 
 @lru_cache(maxsize=256)
 def _reptation_constant(beta: float) -> float:
-    # trapezoid in ln s: exponentially accurate, both ends vanish
-    x = np.linspace(np.log(1e-18), np.log(80.0), 4000)
-    s = np.exp(x)
-    return float(np.sum(tube_survival(s) ** beta * s) * (x[1] - x[0]))
+    s = np.exp(_LN_S)
+    return float(np.sum(tube_survival(s) ** beta * s) * (_LN_S[1] - _LN_S[0]))
+
+
+@lru_cache(maxsize=64)
+def _fluctuation_constants(start: int, count: int, beta: float) -> np.ndarray:
+    """ln c at ln(M1/M) = RATIO_STEP (start + k), k = 0 ... count - 1."""
+    s = np.exp(_LN_S)[:, None]
+    ratio = np.exp(RATIO_STEP * (start + np.arange(count)))
+    f = tube_survival(s + ratio * fluctuation_sum(s / ratio)) ** beta * s
+    return np.log(f.sum(axis=0) * (_LN_S[1] - _LN_S[0]))

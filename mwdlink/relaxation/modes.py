@@ -8,14 +8,18 @@ import numpy as np
 from scipy.optimize import nnls
 
 from mwdlink.relaxation.operator import log_grid
-from mwdlink.relaxation.rouse import rouse_modes
+from mwdlink.relaxation.rouse import rouse_mode_table
 from mwdlink.relaxation.spectrum import Spectrum
 
 if TYPE_CHECKING:
     from mwdlink.relaxation.melt_response import Relaxation
 
 MODES_PER_DECADE = 6
-TIMES_PER_DECADE = 20
+# a narrow melt ends in one exponential: modes stand close together in the last decade
+LAST_MODES_PER_DECADE = 24
+TIMES_PER_DECADE = 24
+# where G has fallen to this share of G(0) the fit ends
+LEAST_SEEN = 1e-26
 
 
 def positive_modes(times: np.ndarray, values: np.ndarray, tau: np.ndarray) -> np.ndarray:
@@ -33,7 +37,7 @@ def positive_modes(times: np.ndarray, values: np.ndarray, tau: np.ndarray) -> np
         [s]
     """
     top = float(values.max())
-    weight = 1.0 / np.maximum(values, 1e-20 * top)
+    weight = 1.0 / np.maximum(values, LEAST_SEEN * top)
     e = np.exp(-np.outer(times, 1.0 / tau)) * weight[:, None]
     scale = np.sqrt(np.sum(e * e, axis=0))
     try:
@@ -45,35 +49,61 @@ def positive_modes(times: np.ndarray, values: np.ndarray, tau: np.ndarray) -> np
 
 def spectrum_of(relaxation: Relaxation, tau_low: float | None = None) -> Spectrum:
     """Positive modes of the network part plus the Rouse part's own modes, on one list of times."""
-    d = relaxation.distribution
+    d, melt, model = relaxation.distribution, relaxation.melt, relaxation.model
     carried = relaxation.times[np.cumsum(d.mass) > 1e-4]
-    low = float(carried.min()) * 1e-2 if tau_low is None else float(tau_low)
+    low = float(carried.min()) * 1e-3 if tau_low is None else float(tau_low)
     high = float(relaxation.times.max()) * 100.0
     low = min(low, high / 1e4)
     t = log_grid(low * 1e-2, high, TIMES_PER_DECADE)
     g = relaxation.network_modulus(t)
-    held = g > 1e-20 * g[0]
-    # beyond about a twentieth of the time where G has fallen to 1e-20 no mode can be seen
-    tau = log_grid(low, float(t[held][-1]) / 30.0, MODES_PER_DECADE)
-    strength = positive_modes(t[held], g[held], tau)
-    if relaxation.model.rouse:
-        strength = strength + _rouse_on_grid(relaxation, tau)
+    held = g > max(LEAST_SEEN * g[0], 1e-250)
+    if np.any(held):
+        t, g = t[held], g[held]
+        # the slowest mode that can be seen: the decay at the very end
+        slowest = -(t[-1] - t[-2]) / np.log(g[-1] / g[-2])
+        last = slowest * 10.0 ** (-np.arange(LAST_MODES_PER_DECADE, -1, -1) / LAST_MODES_PER_DECADE)
+        tau = log_grid(low, max(last[0], 2.0 * low), MODES_PER_DECADE)
+        tau = np.concatenate([tau[tau < 0.95 * last[0]], last])
+        strength = positive_modes(t, g, tau)
+    else:
+        tau, strength = np.array([low]), np.zeros(1)
+    if model.rouse:
+        # the list goes on where Rouse modes are slower than the network, as in unentangled melts
+        modes, times = rouse_mode_table(d.molar_mass, melt, 1.0 / tau[0])
+        modes = (modes * d.mass[:, None]).ravel()
+        times = times.ravel()
+        seen = modes > 1e-12 * modes.max()
+        slowest = float(times[seen].max())
+        if slowest > tau[-1]:
+            more = log_grid(tau[-1], 1.01 * slowest, MODES_PER_DECADE)[1:]
+            tau = np.concatenate([tau, more])
+            strength = np.concatenate([strength, np.zeros(more.size)])
+        strength = strength + shared_by_neighbours(tau, times, modes)
     keep = strength > 0
     return Spectrum(tau[keep], strength[keep])
 
 
-def _rouse_on_grid(relaxation: Relaxation, tau: np.ndarray) -> np.ndarray:
-    """Rouse modes moved to the grid, each shared by two neighbours so that g and g tau are kept."""
-    out = np.zeros_like(tau)
-    d = relaxation.distribution
-    for m, w in zip(d.molar_mass, d.mass, strict=True):
-        if w < 1e-12:
-            continue
-        g, times = rouse_modes(float(m), relaxation.melt, 1.0 / tau[0])
-        inside = (times >= tau[0]) & (times <= tau[-1])
-        g, times = g[inside], times[inside]
-        i = np.clip(np.searchsorted(tau, times) - 1, 0, tau.size - 2)
-        upper = (times - tau[i]) / (tau[i + 1] - tau[i])
-        np.add.at(out, i, w * g * (1 - upper))
-        np.add.at(out, i + 1, w * g * upper)
-    return out
+def shared_by_neighbours(tau: np.ndarray, times: np.ndarray, modes: np.ndarray) -> np.ndarray:
+    """Modes moved to a list of times, each shared by two neighbours so that g and g tau are kept.
+
+    Parameters
+    ----------
+    tau : ndarray of shape (n_k,)
+        [s], ascending.
+    times, modes : ndarray of shape (n,)
+        Times [s] and strengths [Pa]; modes outside the list are left out.
+
+    Returns
+    -------
+    ndarray of shape (n_k,)
+        [Pa], >= 0.
+    """
+    inside = (times >= tau[0]) & (times <= tau[-1]) & (modes > 0)
+    times, modes = times[inside], modes[inside]
+    if tau.size < 2:
+        return np.array([modes.sum()])
+    i = np.clip(np.searchsorted(tau, times) - 1, 0, tau.size - 2)
+    upper = (times - tau[i]) / (tau[i + 1] - tau[i])
+    return np.bincount(i, modes * (1.0 - upper), tau.size) + np.bincount(
+        i + 1, modes * upper, tau.size
+    )

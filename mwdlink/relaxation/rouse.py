@@ -8,21 +8,27 @@ from __future__ import annotations
 from functools import lru_cache
 
 import numpy as np
+from scipy.special import polygamma
 
 from mwdlink.chains.melt import Melt
+from mwdlink.relaxation.lattice import POINTS, spread
 
-# modes up to here one by one, then bundles of modes this much wider in p (error of a bundle about
-# width^2/12 of itself: 1e-4 of a part that is itself a small part of the moduli)
-SINGLE_MODES = 48
-BUNDLE = 1.05
+# modes up to here one by one; a longer run of modes is an integral over p, by Gauss's rule in ln p
+SINGLE_MODES = 12
+# lattice on which the modes of many chains are gathered, per decade of tau
+LATTICE_PER_DECADE = 20
+UNKNOWN_REPEAT_UNIT = 100.0
 
 
-def rouse_modes(molar_mass: float, melt: Melt, omega_max: float | None) -> tuple[np.ndarray, np.ndarray]:
+def rouse_modes(
+    molar_mass: float, melt: Melt, omega_max: float | None
+) -> tuple[np.ndarray, np.ndarray]:
     """Strengths and times of the Rouse modes of a melt of one molar mass.
 
     Per chain tau_R = tau_e Z^2; mode p adds (G_e/Z)[s_p (1/5) exp(-p^2 t/tau_R) + (1 - s_p)
     exp(-2 p^2 t/tau_R)], s_p = clip(Z - p, 0, 1), G_e/Z = G_N M_e/M, p from 1 to the number of
-    repeat units; cut where tau_R/(2 p^2) < 0.01/omega_max.
+    repeat units; cut where tau_R/(2 p^2) < 0.01/omega_max. Long runs of modes are gathered into
+    fewer, with their viscosity kept.
 
     Parameters
     ----------
@@ -40,41 +46,33 @@ def rouse_modes(molar_mass: float, melt: Melt, omega_max: float | None) -> tuple
     References
     ----------
     .. [1] A. E. Likhtman, T. C. B. McLeish, Macromolecules 35 (2002) 6332, last two sums of the
-       relaxation modulus (recalled).
+      relaxation modulus (recalled).
     """
-    z = float(melt.Z(molar_mass))
-    tau_r = melt.equilibration_time * z * z
-    unit = melt.repeat_unit or 100.0
-    last = max(int(molar_mass // unit), 1)
+    strength, tau = rouse_mode_table(np.array([molar_mass], dtype=float), melt, omega_max)
+    held = strength[0] > 0
+    return strength[0][held], tau[0][held]
+
+
+def rouse_mode_table(
+    molar_mass: np.ndarray, melt: Melt, omega_max: float | None
+) -> tuple[np.ndarray, np.ndarray]:
+    """Rouse modes of many chains at once; see `rouse_modes`.
+
+    Returns
+    -------
+    strength, tau : ndarray of shape (n_M, k)
+        [Pa] (0 where a chain does not use the place), [s].
+    """
+    z, tau_r, front, last = _chain(molar_mass, melt)
     if omega_max is not None:
-        last = min(last, max(int(np.sqrt(50.0 * tau_r * omega_max)), 1))
-    p, width = _mode_list(last)
-    share = np.clip(z - p, 0.0, 1.0)
-    front = melt.plateau_modulus * melt.entanglement_molar_mass / molar_mass
-    strength = np.concatenate([front * width * share / 5.0, front * width * (1.0 - share)])
-    tau = np.concatenate([tau_r / p**2, tau_r / (2.0 * p**2)])
-    held = strength > 0
-    return strength[held], tau[held]
-
-
-@lru_cache(maxsize=512)
-def _mode_list(last: int) -> tuple[np.ndarray, np.ndarray]:
-    """Mode numbers and how many modes each stands for."""
-    if last <= SINGLE_MODES:
-        p = np.arange(1.0, last + 1)
-        return p, np.ones_like(p)
-    edges = [SINGLE_MODES + 1]
-    while edges[-1] <= last:
-        edges.append(max(int(edges[-1] * BUNDLE), edges[-1] + 1))
-    edges[-1] = last + 1
-    if len(edges) > 1 and edges[-1] <= edges[-2]:
-        edges.pop(-2)
-    e = np.asarray(edges, dtype=float)
-    single = np.arange(1.0, SINGLE_MODES + 1)
-    middle = np.sqrt(e[:-1] * (e[1:] - 1))
-    return np.concatenate([single, middle]), np.concatenate(
-        [np.ones_like(single), np.diff(e)]
-    )
+        last = np.minimum(last, np.maximum(np.floor(np.sqrt(50.0 * tau_r * omega_max)), 1.0))
+    strength, tau = [], []
+    for first, end, share, fold in _runs(z, last):
+        if np.any(end >= first):
+            p, count = _quadrature(first, end)
+            strength.append((front * share)[:, None] * count)
+            tau.append(tau_r[:, None] / (fold * p * p))
+    return np.concatenate(strength, axis=1), np.concatenate(tau, axis=1)
 
 
 def rouse_moduli(omega: np.ndarray, molar_mass: np.ndarray, melt: Melt) -> np.ndarray:
@@ -93,41 +91,79 @@ def rouse_moduli(omega: np.ndarray, molar_mass: np.ndarray, melt: Melt) -> np.nd
         [Pa] for a melt of that molar mass alone; multiply by weight fractions.
     """
     w = np.asarray(omega, dtype=float)
-    out = np.empty((w.size, np.size(molar_mass)), dtype=complex)
-    top = float(w.max())
-    for j, m in enumerate(np.atleast_1d(molar_mass)):
-        g, tau = rouse_modes(float(m), melt, top)
-        x = np.outer(w, tau)
-        d = 1.0 / (1.0 + x * x)
-        out[:, j] = (x * x * d) @ g + 1j * ((x * d) @ g)
-    return out
+    m = np.atleast_1d(np.asarray(molar_mass, dtype=float))
+    tau, strength = rouse_on_lattice(m, None, melt, float(w.max()))
+    x = np.outer(w, tau)
+    d = 1.0 / (1.0 + x * x)
+    return (x * x * d) @ strength + 1j * ((x * d) @ strength)
+
+
+def rouse_on_lattice(
+    molar_mass: np.ndarray, mass: np.ndarray | None, melt: Melt, omega_max: float | None
+) -> tuple[np.ndarray, np.ndarray]:
+    """Modes of many chains gathered on one even list of ln tau.
+
+    The strengths reproduce moduli to about 1e-8 of the part; they may be of either sign.
+
+    Parameters
+    ----------
+    molar_mass : ndarray of shape (n_M,)
+        [g/mol]
+    mass : ndarray of shape (n_M,) or None
+        Weight fractions [-]; None keeps the chains apart.
+    melt : Melt
+    omega_max : float or None
+        [rad/s]; see `rouse_modes`.
+
+    Returns
+    -------
+    tau : ndarray of shape (n_k,)
+        [s]
+    strength : ndarray of shape (n_k,) or (n_k, n_M)
+        [Pa]
+    """
+    strength, tau = rouse_mode_table(molar_mass, melt, omega_max)
+    if mass is not None:
+        strength = strength * mass[:, None]
+    held = np.flatnonzero(strength > 0)
+    amount = strength.ravel()[held]
+    position = np.log10(tau.ravel()[held]) * LATTICE_PER_DECADE
+    start = np.floor(position.min()) - POINTS / 2
+    size = int(np.ceil(position.max()) - start) + POINTS // 2
+    grid = 10.0 ** ((start + np.arange(size)) / LATTICE_PER_DECADE)
+    if mass is not None:
+        return grid, spread(position - start, amount, size, POINTS)
+    # one long lattice for all chains, each its own stretch
+    chain = held // strength.shape[1]
+    flat = spread(position - start + chain * size, amount, size * molar_mass.size, POINTS)
+    return grid, flat.reshape(molar_mass.size, size).T
 
 
 def rouse_relaxation(
     t: np.ndarray, molar_mass: np.ndarray, melt: Melt, omega_max: float | None = None
 ) -> np.ndarray:
-    """Relaxation modulus of the Rouse part [Pa], shape (n_t, n_M); see `rouse_moduli`."""
+    """Relaxation modulus of the Rouse part [Pa], shape (n_t, n_M); see `rouse_moduli`.
+
+    Unless `omega_max` is given, modes faster than the shortest time are left out.
+    """
     t = np.asarray(t, dtype=float)
-    out = np.empty((t.size, np.size(molar_mass)))
+    m = np.atleast_1d(np.asarray(molar_mass, dtype=float))
     top = 1.0 / float(t[t > 0].min()) if omega_max is None and np.any(t > 0) else omega_max
-    for j, m in enumerate(np.atleast_1d(molar_mass)):
-        g, tau = rouse_modes(float(m), melt, top)
-        out[:, j] = np.exp(-np.outer(t, 1.0 / tau)) @ g
-    return out
+    tau, strength = rouse_on_lattice(m, None, melt, top)
+    return np.exp(-np.outer(t, 1.0 / tau)) @ strength
 
 
 def rouse_viscosity(molar_mass: np.ndarray, melt: Melt) -> np.ndarray:
-    """Zero-shear viscosity of the Rouse part [Pa s] of each molar mass, shape (n_M,)."""
-    return np.array([g @ tau for g, tau in _all_modes(molar_mass, melt)])
+    """Zero-shear viscosity of the Rouse part [Pa s] of each molar mass, shape (n_M,).
+
+    Exact: the sums over p of p^-2 are differences of trigamma functions.
+    """
+    return _moment(molar_mass, melt, 1)
 
 
 def rouse_second_moment(molar_mass: np.ndarray, melt: Melt) -> np.ndarray:
-    """Sum of g tau^2 of the Rouse part [Pa s^2] of each molar mass, shape (n_M,)."""
-    return np.array([g @ tau**2 for g, tau in _all_modes(molar_mass, melt)])
-
-
-def _all_modes(molar_mass: np.ndarray, melt: Melt) -> list[tuple[np.ndarray, np.ndarray]]:
-    return [rouse_modes(float(m), melt, None) for m in np.atleast_1d(molar_mass)]
+    """Sum of g tau^2 of the Rouse part [Pa s^2] of each molar mass, shape (n_M,), exact."""
+    return _moment(molar_mass, melt, 2)
 
 
 def tube_disengagement_time(z: np.ndarray, equilibration_time: float) -> np.ndarray:
@@ -139,3 +175,71 @@ def tube_disengagement_time(z: np.ndarray, equilibration_time: float) -> np.ndar
     """
     z = np.asarray(z, dtype=float)
     return 3 * equilibration_time * z**3 * (1 - 3.38 / np.sqrt(z) + 4.17 / z - 1.55 / z**1.5)
+
+
+def _chain(
+    molar_mass: np.ndarray, melt: Melt
+) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """Of each chain: Z, tau_R [s], G_e/Z [Pa] and its number of repeat units."""
+    m = np.atleast_1d(np.asarray(molar_mass, dtype=float))
+    z = np.asarray(melt.Z(m), dtype=float)
+    last = np.maximum(np.floor(m / (melt.repeat_unit or UNKNOWN_REPEAT_UNIT)), 1.0)
+    front = melt.plateau_modulus * melt.entanglement_molar_mass / m
+    return z, melt.equilibration_time * z * z, front, last
+
+
+def _runs(z: np.ndarray, last: np.ndarray) -> list[tuple[np.ndarray, np.ndarray, np.ndarray, int]]:
+    """The modes as runs (first p, last p, share, times p^2 per 1/tau_R); last < first is empty.
+
+    With k = floor(Z), s_p is 1 up to k - 1, Z - k at k, and 0 beyond.
+    """
+    k = np.floor(z)
+    one, at = np.ones_like(z), np.where(k >= 1, np.minimum(k, last + 1), 1.0)
+    single = np.where((k >= 1) & (k <= last), k, at - 1)  # empty when there is no mode k
+    return [
+        (one, np.minimum(k - 1, last), one / 5, 1),
+        (at, single, (z - k) / 5, 1),
+        (at, single, 1 - (z - k), 2),
+        (np.maximum(k + 1, 1), last, one, 2),
+    ]
+
+
+def _power_sum(first: np.ndarray, last: np.ndarray, power: int) -> np.ndarray:
+    """Sum of p^-2 (power 1) or p^-4 (power 2) over p = first ... last; 0 when last < first."""
+    order = 2 * power - 1
+    factor = 1.0 if power == 1 else 6.0
+    value = (polygamma(order, first) - polygamma(order, np.maximum(last, first - 1) + 1)) / factor
+    return np.where(last >= first, value, 0.0)
+
+
+def _moment(molar_mass: np.ndarray, melt: Melt, power: int) -> np.ndarray:
+    z, tau_r, front, last = _chain(molar_mass, melt)
+    total = np.zeros_like(z)
+    for first, end, share, fold in _runs(z, last):
+        total += share * _power_sum(first, end, power) / fold**power
+    return front * tau_r**power * total
+
+
+def _quadrature(first: np.ndarray, last: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Mode numbers and how many modes each stands for, over runs first ... last, shape (n, k)."""
+    single = np.arange(1.0, SINGLE_MODES + 1)
+    single = single[(single >= first.min()) & (single <= last.max())]
+    count = ((single >= first[:, None]) & (single <= last[:, None])).astype(float)
+    p = np.broadcast_to(single, count.shape)
+    begin = np.maximum(first, SINGLE_MODES + 1.0)
+    long = last >= begin
+    if not np.any(long):
+        return p, count
+    # ends of the integral such that int p^-2 dp is the sum of p^-2, near begin - 1/2 and last + 1/2
+    low = 1.0 / polygamma(1, begin)
+    high = 1.0 / polygamma(1, np.maximum(last, begin) + 1.0)
+    half = 0.5 * np.log(high / low)
+    x, weight = _gauss(int(6 + np.ceil(8 * half[long].max())))
+    run = low[:, None] * np.exp(half[:, None] * (1.0 + x))
+    run_count = np.where(long[:, None], run * weight * half[:, None], 0.0)
+    return np.concatenate([p, run], axis=1), np.concatenate([count, run_count], axis=1)
+
+
+@lru_cache(maxsize=64)
+def _gauss(points: int) -> tuple[np.ndarray, np.ndarray]:
+    return np.polynomial.legendre.leggauss(points)

@@ -11,6 +11,13 @@ from mwdlink.relaxation.mixing import Model
 
 # published: Park and Larson, Macromolecules 37 (2004) 597
 DILATED_TUBE_GR = 0.064
+# published: Watanabe et al., Macromolecules 37 (2004) 1937
+CONSTRAINT_RELEASE_GR = 0.5
+# two peaks count as two parts when this far apart, this high and this deep between them
+APART_DECADES = 0.5
+LEAST_HEIGHT = 0.03
+DEEPEST_VALLEY = 0.7
+SMOOTH_DECADES = 0.06
 
 
 def struglinski_graessley(m_long: float, m_short: float, entanglement: float) -> float:
@@ -54,17 +61,20 @@ def cautions(distribution: Distribution, melt: Melt, model: Model) -> tuple[Caut
                     "al., published), which is not in the model.",
                 )
             )
-    gr = _gr_of(distribution, melt)
+    gr = two_part_ratio(distribution, melt)
     if gr is not None and gr > DILATED_TUBE_GR:
-        out.append(
-            Caution(
-                "dilated_tube",
-                f"Gr = {gr:.2g} is above {DILATED_TUBE_GR}: the long chains reptate in a tube "
-                "dilated by the short ones (Park and Larson 2004, published), and double reptation "
-                "misplaces their relaxation.",
-            )
+        text = (
+            f"Gr = {gr:.2g} is above {DILATED_TUBE_GR}: the long chains reptate in a tube "
+            "dilated by the short ones (Park and Larson 2004, published), and double reptation "
+            "misplaces their relaxation."
         )
-    if model.kernel != "fluctuation" and not model.rouse:
+        if gr > CONSTRAINT_RELEASE_GR:
+            text += (
+                f" Above about {CONSTRAINT_RELEASE_GR:g} constraint release rules a dilute long "
+                "component altogether (Watanabe et al. 2004, published)."
+            )
+        out.append(Caution("dilated_tube", text))
+    if not model.rouse:
         out.append(
             Caution(
                 "rouse_off",
@@ -88,22 +98,43 @@ def frequency_cautions(omega_max: float, melt: Melt) -> tuple[Caution, ...]:
     return ()
 
 
-def _gr_of(distribution: Distribution, melt: Melt) -> float | None:
-    """Gr of a clearly two-part distribution: a valley between two peaks decides the parts."""
-    w = distribution.density
+def two_part_ratio(distribution: Distribution, melt: Melt) -> float | None:
+    """Gr of a clearly two-part distribution, from its two peaks; None for any other.
+
+    The curve is smoothed a little first, so that noise makes no parts.
+    """
+    if distribution.molar_mass.size < 8:
+        return _ratio_of_two_chains(distribution, melt)
     x = np.log10(distribution.molar_mass)
-    if w.size < 20:
-        return None
+    even = np.linspace(x[0], x[-1], max(int((x[-1] - x[0]) / (SMOOTH_DECADES / 3)), 20))
+    w = np.interp(even, x, distribution.density)
+    reach = np.arange(-9, 10)
+    bell = np.exp(-0.5 * (reach * (even[1] - even[0]) / SMOOTH_DECADES) ** 2)
+    w = np.convolve(w, bell / bell.sum(), mode="same")
     inner = w[1:-1]
-    tops = np.flatnonzero((inner > w[:-2]) & (inner >= w[2:]) & (inner > 0.03 * w.max())) + 1
+    tops = np.flatnonzero((inner > w[:-2]) & (inner >= w[2:])) + 1
     if tops.size < 2:
         return None
-    first, last = tops[0], tops[-1]
-    valley = w[first : last + 1].min()
-    if valley > 0.7 * min(w[first], w[last]) or x[last] - x[first] < 0.5:
+    main = int(tops[np.argmax(w[tops])])
+    best: tuple[float, int] | None = None
+    for i in tops.tolist():
+        a, b = min(i, main), max(i, main)
+        deep = w[a : b + 1].min() < DEEPEST_VALLEY * w[i]
+        if i != main and deep and w[i] > LEAST_HEIGHT * w[main]:
+            if even[b] - even[a] >= APART_DECADES and (best is None or w[i] > best[0]):
+                best = float(w[i]), i
+    if best is None:
+        return None
+    low, high = sorted((10.0 ** even[main], 10.0 ** even[best[1]]))
+    return struglinski_graessley(float(high), float(low), 0.8 * melt.entanglement_molar_mass)
+
+
+def _ratio_of_two_chains(distribution: Distribution, melt: Melt) -> float | None:
+    """Gr of a handful of separate chains: the longest against the shortest that entangles."""
+    held = (distribution.mass > LEAST_HEIGHT / 2) & (melt.Z(distribution.molar_mass) >= 1)
+    chains = distribution.molar_mass[held]
+    if chains.size < 2 or chains[-1] / chains[0] < 10**APART_DECADES:
         return None
     return struglinski_graessley(
-        float(distribution.molar_mass[last]),
-        float(distribution.molar_mass[first]),
-        0.8 * melt.entanglement_molar_mass,
+        float(chains[-1]), float(chains[0]), 0.8 * melt.entanglement_molar_mass
     )
