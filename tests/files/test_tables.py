@@ -582,3 +582,15 @@ def test_hostile_tables_are_refused(write: Write) -> None:
                 + "".join(f"{150 + 20 * (k % 2)},{k + 1},1,2\n" for k in range(3000))
             )
         )
+
+
+def test_the_tables_shown_on_the_page_are_read(write: Write) -> None:
+    """Both examples of docs/file-formats.md are the same sweep, to the digits printed there."""
+    import re
+
+    page = Path(__file__).parents[2] / "docs" / "file-formats.md"
+    shown = re.findall(r"```text\n(.*?)```", page.read_text(encoding="utf-8"), re.DOTALL)
+    plain, foreign = (read_sweep(write(text)) for text in shown)
+    assert np.allclose(plain.omega, foreign.omega, rtol=1e-4)
+    assert np.allclose(plain.storage, foreign.storage) and np.allclose(plain.loss, foreign.loss)
+    assert foreign.temperature_C == 190
