@@ -17,6 +17,7 @@ from mwdlink.decisions.calibrate_fit import (
     MODEL_ERROR,
     NAMES,
     PRIOR,
+    SAMPLE_SHIFT,
     Fitted,
     Sample,
     changed,
@@ -233,6 +234,15 @@ def calibrate(
                 f"with --kernel {better} and use the card with it.",
             )
         )
+    for s, shift in zip(samples, first.shifts, strict=True):
+        if abs(shift) > 3.0 * SAMPLE_SHIFT:
+            notes.append(
+                Caution(
+                    "sample_odd",
+                    f"The times of {s.name} lie a factor {np.exp(shift):.2g} from the law of the "
+                    "others: a GPC error, a wrong label or another polymer. Leave it out and see.",
+                )
+            )
     spread = _spread(first, admissible)
     viscosity, network, exponent = _quantities(
         first, spread, melt, study.polymer, pivot, kept, samples

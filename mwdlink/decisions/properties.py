@@ -149,7 +149,8 @@ def melt_flow_rates(
 
 
 def _log_mean(a: np.ndarray, b: np.ndarray) -> np.ndarray:
-    r = np.log(b / a)
+    tiny = 1e-300
+    r = np.log(np.maximum(b, tiny) / np.maximum(a, tiny))
     small = np.abs(r) < 1e-8
     return np.where(small, 0.5 * (a + b), (b - a) / np.where(small, 1.0, r))
 
