@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from mwdlink.figures import shading, style
-from mwdlink.figures.columns import Absent, band, bare, find, numbers, positive, unit, words
+from mwdlink.figures.columns import Absent, band, bare, numbers, positive, unit, words
 from mwdlink.figures.words import interval_of, listed, number, percent, short, upper_first, value_of
 
 if TYPE_CHECKING:
@@ -35,7 +35,7 @@ def fraction_header(table: DataFrame) -> str | None:
 
 
 def property_headers(table: DataFrame) -> list[str]:
-    """Headers of the properties: all number columns but fractions, lows, highs and plain averages."""
+    """Headers of the properties: all number columns but fractions, lows and highs."""
     out = []
     for h in map(str, table.columns):
         name = bare(h)
@@ -88,7 +88,7 @@ def plot_property(
     level: float = 0.9,
     ax: Axes | None = None,
 ) -> Axes:
-    """A property against the fraction with its band, the target's line and the fractions that meet it.
+    """A property against the fraction: band, target's line, and the fractions that meet it.
 
     Parameters
     ----------
@@ -218,7 +218,7 @@ def describe_property(
 def plot_recovered(
     blends: Sequence[Mapping[str, Any]], *, component: str | None = None, ax: Axes | None = None
 ) -> Axes:
-    """Fraction recovered from the rheology against the fraction weighed, with the line of agreement.
+    """Fraction recovered from the rheology against the fraction weighed, and the agreement.
 
     Parameters
     ----------
@@ -296,11 +296,11 @@ def describe_recovered(blends: Sequence[Mapping[str, Any]]) -> str:
         y = value_of((entry.get("recovered") or {}).get(component))
         if x is None or y is None:
             continue
-        verdict = {True: "agrees", False: "does not agree"}.get(
-            entry.get("agrees"), "cannot be judged"
-        )
+        verdicts: dict[Any, str] = {True: "agrees", False: "does not agree"}
+        verdict = verdicts.get(entry.get("agrees"), "cannot be judged")
         parts.append(
-            f"{entry.get('name')}: {percent(x)} {component} weighed, {percent(y)} recovered, {verdict}"
+            f"{entry.get('name')}: {percent(x)} {component} weighed, {percent(y)} recovered, "
+            f"{verdict}"
         )
     return f"{'; '.join(parts)}." if parts else ""
 
@@ -396,7 +396,8 @@ def describe_blend_residuals(table: DataFrame) -> str:
         )
         if bias is not None:
             parts.append(
-                f"{spoken}: mean {number(np.nanmean(bias), 2)}, largest {number(np.nanmax(np.abs(bias)), 2)} decades"
+                f"{spoken}: mean {number(np.nanmean(bias), 2)}, "
+                f"largest {number(np.nanmax(np.abs(bias)), 2)} decades"
             )
     return f"{upper_first('; '.join(parts))}." if parts else ""
 
@@ -446,7 +447,3 @@ def describe_rules(rules: Sequence[Mapping[str, Any]]) -> str:
         f"({number(value_of(best['scatter_decades']), 2)} decades), most with {rule_label(worst)} "
         f"({number(value_of(worst['scatter_decades']), 2)} decades)."
     )
-
-
-def has_frequency(table: DataFrame) -> bool:
-    return find(table, "omega", "omega low", "omega centre", "omega from") is not None

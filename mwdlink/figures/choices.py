@@ -154,7 +154,10 @@ def describe_smoothing(table: DataFrame, chosen: float | None = None) -> str:
     lam = numbers(table, *LAMBDA)
     if lam is None:
         return ""
-    text = f"Scan of the smoothing parameter, {len(set(lam.tolist()))} values from {short(lam.min())} to {short(lam.max())}."
+    text = (
+        f"Scan of the smoothing parameter, {len(set(lam.tolist()))} values from "
+        f"{short(lam.min())} to {short(lam.max())}."
+    )
     return f"{text} The value used is {number(chosen)}." if chosen else text
 
 
@@ -239,7 +242,8 @@ def describe_kernels(
         )
 
     parts = [
-        f"{k.get('kernel')} {with_interval(whole(k), unit)}{'' if k.get('admissible', True) else ' (rejected by its misfit)'}"
+        f"{k.get('kernel')} {with_interval(whole(k), unit)}"
+        f"{'' if k.get('admissible', True) else ' (rejected by its misfit)'}"
         for k in kernels
         if value_of(k.get(key)) is not None
     ]
@@ -302,6 +306,7 @@ def describe_budget(budgets: Mapping[str, Mapping[str, float]]) -> str:
     for name, shares in budgets.items():
         largest = max(shares, key=lambda p: shares.get(p) or 0.0)
         parts.append(
-            f"{name} mostly {BUDGET_WORDS.get(largest, largest)} ({100 * float(shares[largest] or 0):.0f} %)"
+            f"{name} mostly {BUDGET_WORDS.get(largest, largest)} "
+            f"({100 * float(shares[largest] or 0):.0f} %)"
         )
     return f"Shares of the variance: {'; '.join(parts)}." if parts else ""

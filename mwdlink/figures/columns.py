@@ -46,7 +46,7 @@ def find(table: DataFrame | None, *names: str) -> str | None:
     if table is None:
         return None
     headers = [str(h) for h in table.columns]
-    exact = {}
+    exact: dict[str, str] = {}
     for h in headers:
         exact.setdefault(bare(h), h)
     for name in names:
@@ -90,18 +90,6 @@ def band(table: DataFrame | None, *names: str) -> tuple[np.ndarray, np.ndarray] 
         if low is not None and high is not None:
             return low, high
     return None
-
-
-def beginning(table: DataFrame | None, start: str) -> list[str]:
-    """Headers that begin with the given word, without their low and high companions."""
-    if table is None:
-        return []
-    out = []
-    for h in map(str, table.columns):
-        name = _loose(h)
-        if name.startswith(start.casefold()) and not name.endswith((" low", " high")):
-            out.append(h)
-    return out
 
 
 def unit(header: str) -> str:

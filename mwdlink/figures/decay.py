@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from mwdlink.figures import shading, style
-from mwdlink.figures.columns import Absent, band, beginning, numbers, positive
+from mwdlink.figures.columns import Absent, band, numbers, positive
 from mwdlink.figures.moduli import measured, modelled
 from mwdlink.figures.words import interval_of, number, short, upper_first, value_of
 
@@ -68,8 +68,8 @@ def plot_relaxation(table: DataFrame, *, level: float = 0.9, ax: Axes | None = N
     ax.set_ylim(*shading.span_of(ys, 0.04))
     ax.set_xlabel("time t / s")
     ax.set_ylabel("relaxation modulus G / Pa")
-    style.legend_above(ax)
-    style.equal_decades(ax, own_figure=own)
+    rows = style.legend_above(ax)
+    style.equal_decades(ax, own_figure=own, rows=rows)
     return ax
 
 
@@ -80,7 +80,10 @@ def describe_relaxation(table: DataFrame) -> str:
         return ""
     good = positive(time, modulus)
     t, g = time[good], modulus[good]
-    text = f"Falling from {number(g[0])} Pa at {short(t[0])} s to {number(g[-1])} Pa at {short(t[-1])} s."
+    text = (
+        f"Falling from {number(g[0])} Pa at {short(t[0])} s to {number(g[-1])} Pa at "
+        f"{short(t[-1])} s."
+    )
     hundredth = np.flatnonzero(g < 0.01 * g[0])
     if hundredth.size:
         text += f" It is below a hundredth of its first value after {number(t[hundredth[0]])} s."
@@ -148,10 +151,10 @@ def plot_rest(
         if x is None or level is None:
             continue
         i = 0 if entry.get("after") == "step" else 1
-        between = interval_of(entry.get("time_s"))
-        if between is not None:
+        span = interval_of(entry.get("time_s"))
+        if span is not None:
             ax.plot(
-                between,
+                span,
                 [level, level],
                 color=style.SERIES[i],
                 linewidth=3.0,
@@ -220,9 +223,3 @@ def describe_rest(rest: Sequence[Mapping[str, Any]]) -> str:
         if value_of(r.get("time_s")) is not None and r.get("residual") is not None
     ]
     return f"{upper_first('; '.join(parts))}." if parts else "Two curves of decay."
-
-
-def has_rest_columns(table: DataFrame) -> bool:
-    return any(numbers(table, *names) is not None for names, _ in REST_COLUMNS) or bool(
-        beginning(table, "after")
-    )

@@ -90,7 +90,7 @@ def plot_flow(
     )
     xs += [rate[good].min(), rate[good].max()]
     ys += [line[good].min(), line[good].max()]
-    sets = [(rate, points)]
+    sets: list[tuple[np.ndarray | None, np.ndarray | None]] = [(rate, points)]
     if data is not None:
         sets.append((numbers(data, *RATE), numbers(data, *VISCOSITY)))
     for x, y in sets:
@@ -123,8 +123,8 @@ def plot_flow(
     ax.set_ylim(low, high)
     ax.set_xlabel(r"shear rate $\dot\gamma$ / s$^{-1}$")
     ax.set_ylabel("viscosity η / Pa s")
-    style.legend_above(ax)
-    style.equal_decades(ax, own_figure=own)
+    rows = style.legend_above(ax)
+    style.equal_decades(ax, own_figure=own, rows=rows)
     return ax
 
 

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Callable, Iterator, Mapping, Sequence
+from functools import partial
 from typing import TYPE_CHECKING, Any
 
 import pandas as pd
@@ -439,14 +440,15 @@ def _fractions(shelf: _Shelf) -> None:
             name,
             f"{upper_first(blend.property_words(header))} against the fraction",
             table[keep],
-            lambda header=header, wanted=wanted: blend.plot_property(
+            partial(
+                blend.plot_property,
                 table,
                 header,
                 target=wanted,
-                fraction=first,  # type: ignore[misc]
+                fraction=first,
                 level=level_of(shelf.record),
             ),
-            lambda header=header, wanted=wanted: blend.describe_property(table, header, wanted),  # type: ignore[misc]
+            partial(blend.describe_property, table, header, wanted),
         )
 
 
@@ -564,9 +566,9 @@ def _batch(shelf: _Shelf) -> None:
             f"trend-{name.casefold()}",
             f"{name} over the lots",
             table,
-            lambda header=header, own=own: trend.plot_trend(table, header, limits=own),  # type: ignore[misc]
-            lambda header=header, own=own: trend.describe_trend(table, header, own),
-        )  # type: ignore[misc]
+            partial(trend.plot_trend, table, header, limits=own),
+            partial(trend.describe_trend, table, header, own),
+        )
 
 
 _BY_COMMAND: dict[str, Callable[[_Shelf], None]] = {

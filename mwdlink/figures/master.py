@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
@@ -85,8 +84,8 @@ def plot_master(
     at = "" if reference_C is None else f" (at {reference_C:g} °C)"
     ax.set_xlabel(rf"$\omega\, a_T$ / rad s$^{{-1}}${at}")
     ax.set_ylabel("G′, G″ / Pa")
-    style.legend_above(ax)
-    style.equal_decades(ax, own_figure=own)
+    rows = style.legend_above(ax)
+    style.equal_decades(ax, own_figure=own, rows=rows)
     return ax
 
 
@@ -214,7 +213,7 @@ def describe_shifts(table: DataFrame, shift: Mapping[str, Any] | None = None) ->
         return ""
     k, m = int(np.nanargmin(temperature)), int(np.nanargmax(temperature))
     text = (
-        f"Shift factors from {number(shifts[k])} at {temperature[k]:g} °C to {number(shifts[m])} at "
+        f"From {number(shifts[k])} at {temperature[k]:g} °C to {number(shifts[m])} at "
         f"{temperature[m]:g} °C."
     )
     if shift:
@@ -225,7 +224,3 @@ def describe_shifts(table: DataFrame, shift: Mapping[str, Any] | None = None) ->
                 f" WLF c1 {with_interval(shift['c1'])}, c2 {with_interval(shift.get('c2_K'), 'K')}."
             )
     return text
-
-
-def decades_text(x: float) -> str:
-    return f"{math.log10(x):+.2f} decades"

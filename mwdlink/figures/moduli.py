@@ -175,15 +175,15 @@ def plot_moduli(
         ax.set_ylim(*shading.span_of([bottom, top], 0.03))
     ax.set_xlabel(X_LABEL)
     ax.set_ylabel("G′, G″ / Pa")
-    found, labels = ax.get_legend_handles_labels()
+    handles, labels = ax.get_legend_handles_labels()
     rank = ("measured", "model")
     order = sorted(
-        range(len(found)),
+        range(len(handles)),
         key=lambda i: next((r for r, w in enumerate(rank) if labels[i].endswith(w)), len(rank)),
     )
-    style.legend_above(ax, handles=[found[i] for i in order])
+    rows = style.legend_above(ax, handles=[handles[i] for i in order])
     if seen_x:
-        style.equal_decades(ax, own_figure=own)
+        style.equal_decades(ax, own_figure=own, rows=rows)
     return ax
 
 
@@ -348,5 +348,6 @@ def describe_phase_angle(curves: dict[str, DataFrame]) -> str:
     """The picture in words."""
     return (
         f"Curves for {', '.join(curves)}. "
-        "Where all points fall on one curve, one shift in frequency brings the temperatures together."
+        "Where all points fall on one curve, one shift in frequency brings the temperatures "
+        "together."
     )

@@ -4,8 +4,10 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
+from typing import Any
 
 from matplotlib.axes import Axes
+from matplotlib.figure import Figure
 
 from mwdlink.figures import style
 
@@ -21,8 +23,8 @@ def _fraction(ax: Axes, x: float) -> float:
 
 
 def _axes_width_mm(ax: Axes) -> float:
-    figure = ax.get_figure()
-    width = style.WIDTH if figure is None else figure.get_figwidth() / style.MM
+    figure = ax.get_figure(root=True)
+    width = figure.get_figwidth() / style.MM if isinstance(figure, Figure) else style.WIDTH
     return 0.8 * float(width) * min(1.0, ax.get_position().width / 0.775)
 
 
@@ -40,11 +42,11 @@ def _wrapped(words: str, width: int) -> str | None:
 
 
 def name_range(ax: Axes, low: float, high: float, words: str, *, top: float = 0.97) -> None:
-    """Write words at the top of the range low to high (data units): across, or upright if narrow."""
+    """Write words at the top of the range low to high (data units), upright where it is narrow."""
     left, right = (min(max(_fraction(ax, v), 0.0), 1.0) for v in (low, high))
     width = (right - left) * _axes_width_mm(ax)
     centre = 0.5 * (left + right)
-    look = {
+    look: dict[str, Any] = {
         "transform": ax.transAxes,
         "color": style.SOFT,
         "fontsize": 8.0,

@@ -129,5 +129,8 @@ def describe_spectrum(
             f"{int(good.sum())} modes from {short(tau[good].min())} to {short(tau[good].max())} s."
         )
     if supported and None not in supported:
-        text += f"{' ' if text else ''}The data support relaxation times from {number(supported[0])} to {number(supported[1])} s."
+        text = (
+            f"{text} The data support relaxation times from {number(supported[0])} to "
+            f"{number(supported[1])} s."
+        ).strip()
     return text

@@ -22,9 +22,8 @@ from xml.sax.saxutils import escape
 
 import matplotlib
 from matplotlib.axes import Axes
-from matplotlib.axis import Axis
 from matplotlib.figure import Figure
-from matplotlib.ticker import Formatter, FuncFormatter, LogLocator, MaxNLocator, NullFormatter
+from matplotlib.ticker import Formatter, FuncFormatter, LogLocator, MaxNLocator
 
 P = ParamSpec("P")
 R = TypeVar("R")
@@ -107,8 +106,8 @@ def context() -> AbstractContextManager[None]:
 
     It starts from matplotlib's defaults, so that a user's settings file cannot change a picture.
     """
-    merged = {k: v for k, v in matplotlib.rcParamsDefault.items() if k not in _KEEP}
-    return matplotlib.rc_context({**merged, **_RC})
+    merged: dict[Any, Any] = {k: v for k, v in matplotlib.rcParamsDefault.items() if k not in _KEEP}
+    return matplotlib.rc_context(merged | _RC)
 
 
 # settings that are about the process and not about the look: changing them has side effects
@@ -157,19 +156,6 @@ def new_axes(ax: Axes | None = None, *, height: float = 82.0, width: float = WID
     return figure.add_subplot()
 
 
-def new_stack(
-    ratios: tuple[float, ...] = (1.0, 1.0),
-    *,
-    height: float = 104.0,
-    width: float = WIDTH,
-    sharex: bool = False,
-) -> list[Axes]:
-    """Axes above one another in one new figure."""
-    figure = Figure(figsize=(width * MM, height * MM), layout="constrained")
-    grid = figure.subplots(len(ratios), 1, sharex=sharex, height_ratios=list(ratios), squeeze=False)
-    return [row[0] for row in grid]
-
-
 def superscript(exponent: int) -> str:
     """An integer in raised figures: plain text, which every font and screen can show."""
     return str(exponent).translate(str.maketrans("0123456789-", "⁰¹²³⁴⁵⁶⁷⁸⁹⁻"))
@@ -181,6 +167,8 @@ class DecadeFormatter(Formatter):
     The tick stays at every decade; only its label is left out where labels would touch. On a span
     of less than about two decades 2 and 5 are labelled too, on a very short one every digit.
     """
+
+    axis: Any
 
     def __init__(self, minor: bool = False) -> None:
         self.minor = minor
@@ -226,7 +214,7 @@ class DecadeFormatter(Formatter):
         return f"{digit}×10{superscript(exponent)}"
 
 
-def log_axis(axis: Axis) -> None:
+def log_axis(axis: Any) -> None:
     """Make an axis logarithmic with a tick at every decade and at 2 to 9, whatever the span."""
     name = axis.axis_name
     if name == "x":
@@ -247,17 +235,14 @@ def log_axes(ax: Axes, which: str = "xy") -> None:
         log_axis(ax.yaxis)
 
 
-def no_minor_labels(axis: Axis) -> None:
-    """Leave the minor ticks, drop their labels."""
-    axis.set_minor_formatter(NullFormatter())
-
-
 def decades_between(low: float, high: float) -> float:
     """Decades between two positive numbers."""
     return math.log10(high / low)
 
 
-def equal_decades(ax: Axes, *, own_figure: bool, least: float = 50.0, most: float = 150.0) -> None:
+def equal_decades(
+    ax: Axes, *, own_figure: bool, rows: int = 1, least: float = 50.0, most: float = 150.0
+) -> None:
     """Give a decade the same length on both log axes.
 
     In a figure of our own the height follows from the spans, so that nothing is left blank; on
@@ -265,6 +250,8 @@ def equal_decades(ax: Axes, *, own_figure: bool, least: float = 50.0, most: floa
 
     Parameters
     ----------
+    rows : int
+        Rows of the legend above the axes.
     least, most : float
         Bounds of the figure's height [mm].
     """
@@ -273,16 +260,14 @@ def equal_decades(ax: Axes, *, own_figure: bool, least: float = 50.0, most: floa
     ax.set_aspect("equal", adjustable="box")
     ax.set_anchor("N")
     if own_figure and x > 0:
-        legend = ax.get_legend()
-        rows = 0 if legend is None else math.ceil(len(legend.get_texts()) / legend._ncols)
         beside, around = 19.0, 17.0 + 4.6 * rows
         height = (WIDTH - beside) * y / x + around
-        figure = ax.get_figure()
-        if figure is not None:
+        figure = ax.get_figure(root=True)
+        if isinstance(figure, Figure):
             figure.set_size_inches(WIDTH * MM, min(max(height, least), most) * MM)
 
 
-def linear_axis(axis: Axis) -> None:
+def linear_axis(axis: Any) -> None:
     """Numbers on a linear axis in groups of three figures, powers of ten where they are long."""
     axis.set_major_formatter(FuncFormatter(lambda x, _: grouped(x)))
     axis.set_major_locator(
@@ -311,7 +296,7 @@ def by_rows(items: list[Any], columns: int) -> list[Any]:
     return [items[r * columns + c] for c in range(columns) for r in range(heights[c])]
 
 
-def legend_above(ax: Axes, *, handles: list[Any] | None = None, over_figure: bool = False) -> None:
+def legend_above(ax: Axes, *, handles: list[Any] | None = None, over_figure: bool = False) -> int:
     """The legend over the axes, where it can hide nothing.
 
     It starts at the axes' left edge; where it is too wide for that it ends at their right edge.
@@ -322,13 +307,18 @@ def legend_above(ax: Axes, *, handles: list[Any] | None = None, over_figure: boo
         What to name, in reading order; everything labelled unless given.
     over_figure : bool
         Start at the figure's left edge: for pictures with long names beside the axes.
+
+    Returns
+    -------
+    int
+        Rows it takes.
     """
     found, labels = ax.get_legend_handles_labels()
     if handles is not None:
         found, labels = handles, [str(h.get_label()) for h in handles]
     if not found:
-        return
-    columns, width = 1, 0.0
+        return 0
+    columns, rows, width = 1, 1, 0.0
     for n in range(min(5, len(found)), 0, -1):
         rows = math.ceil(len(found) / n)
         columns = math.ceil(len(found) / rows)
@@ -348,6 +338,7 @@ def legend_above(ax: Axes, *, handles: list[Any] | None = None, over_figure: boo
         ax.legend(found, labels, loc="lower left", bbox_to_anchor=(0.0, 1.01), **look)
     else:
         ax.legend(found, labels, loc="lower right", bbox_to_anchor=(1.0, 1.01), **look)
+    return rows
 
 
 def series_look(i: int) -> dict[str, Any]:

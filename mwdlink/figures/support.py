@@ -1,4 +1,4 @@
-"""Rival explanations side by side, and measured against predicted numbers on one line of equality."""
+"""Rival explanations side by side, and measured against fitted numbers on one line."""
 
 from __future__ import annotations
 
@@ -60,10 +60,10 @@ def plot_explanations(explanations: Sequence[Mapping[str, Any]], *, ax: Axes | N
 
 def describe_explanations(explanations: Sequence[Mapping[str, Any]]) -> str:
     """The picture in words."""
-    parts = [
-        f"{e.get('name')} {number(value_of(e.get('support')), 2) if value_of(e.get('support')) is not None else 'not weighed'}"
-        for e in explanations
-    ]
+    parts = []
+    for e in explanations:
+        share = value_of(e.get("support"))
+        parts.append(f"{e.get('name')} {'not weighed' if share is None else number(share, 2)}")
     return f"Support of each explanation by the data: {'; '.join(parts)}." if parts else ""
 
 
@@ -130,5 +130,8 @@ def describe_parity(table: DataFrame) -> str:
         x, y = numbers(table, *fitted), numbers(table, *measured)
         if x is not None and y is not None:
             off = np.log10(y[positive(x, y)] / x[positive(x, y)])
-            return f"Measured against fitted for {len(off)} samples; largest distance {number(np.abs(off).max(), 2)} decades."
+            return (
+                f"Measured against fitted for {len(off)} samples; largest distance "
+                f"{number(np.abs(off).max(), 2)} decades."
+            )
     return ""

@@ -38,7 +38,8 @@ def plot_trend(
     Parameters
     ----------
     table : DataFrame
-        One row a lot: `lot`, the quantity with low and high where known, and `outlying` where judged.
+        One row a lot: `lot`, the quantity with low and high where known, and `outlying` where
+        judged.
     limits : mapping, optional
         `centre`, `low`, `high`: the control limits, in the column's unit.
     """

@@ -195,7 +195,8 @@ def section(data: Mapping[str, Any]) -> str:
         (p for p in properties if p.get("key") == aimed), properties[0] if properties else None
     )
     rows = "".join(
-        f'<tr data-key="{escape(str(p.get("key")))}"><th scope="row">{escape(str(p.get("label", p.get("key"))))}'
+        f'<tr data-key="{escape(str(p.get("key")))}">'
+        f'<th scope="row">{escape(str(p.get("label", p.get("key"))))}'
         f"{'' if not p.get('unit') else ' / ' + escape(str(p['unit']))}</th>"
         '<td class="n" data-role="value">–</td><td class="n" data-role="interval">–</td>'
         '<td class="n" data-role="target">–</td></tr>'
@@ -219,14 +220,16 @@ def section(data: Mapping[str, Any]) -> str:
 <div class="controls">
 <label for="live-slider">Fraction of {first} / wt%</label>
 <input id="live-slider" type="range" min="0" max="100" step="0.5" value="{start}">
-<input id="live-number" type="number" min="0" max="100" step="0.1" value="{start}" aria-label="Fraction of {first} in weight percent">
+<input id="live-number" type="number" min="0" max="100" step="0.1" value="{start}"
+aria-label="Fraction of {first} in weight percent">
 <button id="live-reset" type="button">Back to {start} %</button>
 </div>
 <p id="live-said" role="status"></p>
 <div class="figures">{charts}</div>
 <div class="scroll" tabindex="0" role="region" aria-label="Properties at this fraction">
 <table id="live-table"><caption>Properties at this fraction</caption>
-<thead><tr><th scope="col">Property</th><th scope="col" class="n">Value</th><th scope="col" class="n">Interval</th><th scope="col" class="n">Target</th></tr></thead>
+<thead><tr><th scope="col">Property</th><th scope="col" class="n">Value</th>
+<th scope="col" class="n">Interval</th><th scope="col" class="n">Target</th></tr></thead>
 <tbody>{rows}</tbody></table></div>
 <p class="small">{exact} Bands are the trust band of the prediction.</p>
 </section>"""

@@ -56,7 +56,8 @@ def inline_svg(svg: bytes, *, prefix: str, title: str, description: str) -> str:
     head = (
         f'<svg xmlns="http://www.w3.org/2000/svg" viewBox="{box[1] if box else "0 0 300 200"}" '
         f'role="img" aria-labelledby="{prefix}-t {prefix}-d" stroke-linejoin="round">'
-        f'<title id="{prefix}-t">{escape(title)}</title><desc id="{prefix}-d">{escape(description)}</desc>'
+        f'<title id="{prefix}-t">{escape(title)}</title>'
+        f'<desc id="{prefix}-d">{escape(description)}</desc>'
     )
     body = _HEX.sub(_themed, text[opening.end() :])
     # trailing blanks and the line breaks between elements are dead weight in a page

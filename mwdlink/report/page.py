@@ -88,8 +88,8 @@ def render(
         _card(record),
         _cautions(record),
         "</main>",
-        f"<footer><p>Made by mwdlink {escape(str(record.get('version', '')))}. This page loads nothing and "
-        "sends nothing.</p></footer>",
+        f"<footer><p>Made by mwdlink {escape(str(record.get('version', '')))}. "
+        "This page loads nothing and sends nothing.</p></footer>",
         ""
         if live is None
         else f"{blend_live.data_block(live)}<script>{blend_live.script()}</script>",
@@ -109,7 +109,10 @@ def document(title: str, body: str, *, with_script: bool = False) -> str:
     with_script : bool
         Allow the live page's script, by its hash and no other.
     """
-    policy = "default-src 'none'; style-src 'unsafe-inline'; img-src data:; base-uri 'none'; form-action 'none'"
+    policy = (
+        "default-src 'none'; style-src 'unsafe-inline'; img-src data:; base-uri 'none'; "
+        "form-action 'none'"
+    )
     if with_script:
         policy += f"; script-src {blend_live.script_hash()}"
     return (
@@ -118,7 +121,8 @@ def document(title: str, body: str, *, with_script: bool = False) -> str:
         '<meta name="viewport" content="width=device-width, initial-scale=1">\n'
         '<meta name="color-scheme" content="light dark">\n<link rel="icon" href="data:,">\n'
         f"<title>{escape(title)}</title>\n<style>{_css()}</style>\n</head>\n<body>\n"
-        f'<div class="page">\n<a class="skip" href="#answer">Skip to the answer</a>\n{body}\n</div>\n</body>\n</html>\n'
+        f'<div class="page">\n<a class="skip" href="#answer">Skip to the answer</a>\n{body}\n'
+        "</div>\n</body>\n</html>\n"
     )
 
 
@@ -129,7 +133,10 @@ def _css() -> str:
 
 def _section(title: str, content: str, name: str, classes: str = "") -> str:
     of_class = f' class="{classes}"' if classes else ""
-    return f'<section{of_class} aria-labelledby="{name}"><h2 id="{name}">{escape(title)}</h2>{content}</section>'
+    return (
+        f'<section{of_class} aria-labelledby="{name}"><h2 id="{name}">{escape(title)}</h2>'
+        f"{content}</section>"
+    )
 
 
 def _list_section(title: str, items: Sequence[Any], name: str) -> str:
@@ -167,9 +174,11 @@ def _figure(picture: Picture, prefix: str) -> str:
         picture.svg(), prefix=prefix, title=picture.title, description=picture.description
     )
     return (
-        f'<figure id="{prefix}"><div class="whole">{svg}<figcaption><strong>{escape(picture.title)}.</strong> '
+        f'<figure id="{prefix}"><div class="whole">{svg}'
+        f"<figcaption><strong>{escape(picture.title)}.</strong> "
         f"{escape(picture.description)}</figcaption></div>"
-        f"<details><summary>Table behind this figure</summary>{_frame(picture.data, picture)}</details></figure>"
+        "<details><summary>Table behind this figure</summary>"
+        f"{_frame(picture.data, picture)}</details></figure>"
     )
 
 
@@ -187,7 +196,8 @@ def _frame(data: DataFrame, picture: Picture) -> str:
         rows.append(f"<tr>{''.join(cells)}</tr>")
     part = f"Every {_nth(step)} of {len(data)} rows; all" if step > 1 else "The same numbers"
     return (
-        f"{_scroll(f'Table behind the figure {picture.title}')}<table><thead><tr>{head}</tr></thead>"
+        f"{_scroll(f'Table behind the figure {picture.title}')}"
+        f"<table><thead><tr>{head}</tr></thead>"
         f"<tbody>{''.join(rows)}</tbody></table></div>"
         f'<p class="small">{part} in figures/{escape(picture.name)}.csv.</p>'
     )
@@ -218,7 +228,8 @@ def table(block: Block) -> str:
     """A block as a table in a region that scrolls by itself."""
     head = "".join(f'<th scope="col">{escape(h)}</th>' for h in block.head)
     rows = "".join(
-        f'<tr><th scope="row">{escape(r[0])}</th>{"".join(f"<td>{escape(c)}</td>" for c in r[1:])}</tr>'
+        f'<tr><th scope="row">{escape(r[0])}</th>'
+        f"{''.join(f'<td>{escape(c)}</td>' for c in r[1:])}</tr>"
         for r in block.rows
     )
     return (
@@ -284,7 +295,8 @@ def _how(record: Mapping[str, Any], command_line: str | None) -> str:
             for i in inputs
         )
         content += (
-            f'{_scroll("Input files")}<table><caption>Input files</caption><thead><tr><th scope="col">File</th>'
+            f"{_scroll('Input files')}<table><caption>Input files</caption>"
+            '<thead><tr><th scope="col">File</th>'
             f'<th scope="col">SHA-256</th></tr></thead><tbody>{lines}</tbody></table></div>'
         )
     return _section("How it was done", content, "s-how")
@@ -324,5 +336,8 @@ def index_page(title: str, intro: Sequence[str], entries: Sequence[tuple[str, st
         f'<li><a href="{escape(href)}">{escape(name)}</a><br>{escape(sentence)}</li>'
         for href, name, sentence in entries
     )
-    body = f'<header><h1>{escape(title)}</h1></header><main id="answer" tabindex="-1"><section>{paragraphs}<ol>{rows}</ol></section></main>'
+    body = (
+        f'<header><h1>{escape(title)}</h1></header><main id="answer" tabindex="-1">'
+        f"<section>{paragraphs}<ol>{rows}</ol></section></main>"
+    )
     return document(title, body)

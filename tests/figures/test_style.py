@@ -1,4 +1,4 @@
-"""The one hand of the pictures: axes, colours, files. Compared with the rules stated in style.py."""
+"""The one hand of the pictures: axes, colours, files, against the rules stated in style.py."""
 
 from __future__ import annotations
 
@@ -131,7 +131,8 @@ def test_files_are_the_same_bytes_every_time(made_up, tmp_path):
     assert figures_for(made_up.invert())["distribution"].svg() == here
     code = (
         "import sys, hashlib, importlib.util as u\n"
-        f"s = u.spec_from_file_location('m', {made_up.__file__!r}); m = u.module_from_spec(s); s.loader.exec_module(m)\n"
+        f"s = u.spec_from_file_location('m', {made_up.__file__!r})\n"
+        "m = u.module_from_spec(s); s.loader.exec_module(m)\n"
         "from mwdlink.figures import figures_for\n"
         "p = figures_for(m.invert())['distribution']\n"
         "sys.stdout.buffer.write(p.svg())"

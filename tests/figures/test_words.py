@@ -15,10 +15,21 @@ from mwdlink.figures.words import listed, number, percent, short, split_unit, wi
 @pytest.mark.parametrize(
     ("x", "text"),
     [
-        (0.01234, "0.0123"), (12.34, "12.3"), (1234.5, "1230"), (12345, "12\u202f300"), (99999, "1.00×10⁵"), (1.234e6, "1.23×10⁶"),
-        (1.234e-7, "1.23×10⁻⁷"), (-5.0, "−5.00"), (0, "0"), (None, "not known"), (float("nan"), "not known"), (0.99951, "1.00"), (True, "yes"),
+        (0.01234, "0.0123"),
+        (12.34, "12.3"),
+        (1234.5, "1230"),
+        (12345, "12\u202f300"),
+        (99999, "1.00×10⁵"),
+        (1.234e6, "1.23×10⁶"),
+        (1.234e-7, "1.23×10⁻⁷"),
+        (-5.0, "−5.00"),
+        (0, "0"),
+        (None, "not known"),
+        (float("nan"), "not known"),
+        (0.99951, "1.00"),
+        (True, "yes"),
     ],
-)  # fmt: skip
+)
 def test_three_figures(x, text):
     assert number(x) == text
 

@@ -16,9 +16,17 @@ from queue import Empty, Queue
 from typing import Any
 
 FLAGS = (
-    "--headless", "--no-sandbox", "--disable-gpu", "--disable-quic", "--no-first-run", "--disable-background-networking",
-    "--disable-component-update", "--disable-sync", "--disable-dev-shm-usage", "--remote-debugging-pipe",
-)  # fmt: skip
+    "--headless",
+    "--no-sandbox",
+    "--disable-gpu",
+    "--disable-quic",
+    "--no-first-run",
+    "--disable-background-networking",
+    "--disable-component-update",
+    "--disable-sync",
+    "--disable-dev-shm-usage",
+    "--remote-debugging-pipe",
+)
 
 
 class Browser:
@@ -39,8 +47,12 @@ class Browser:
 
         self._process = subprocess.Popen(
             [program, *FLAGS, f"--user-data-dir={self._home}", "about:blank"],
-            preexec_fn=hand_over, pass_fds=(3, 4), stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL, start_new_session=True,
-        )  # fmt: skip
+            preexec_fn=hand_over,
+            pass_fds=(3, 4),
+            stdout=subprocess.DEVNULL,
+            stderr=subprocess.DEVNULL,
+            start_new_session=True,
+        )
         os.close(theirs_in)
         os.close(theirs_out)
         self._out = os.fdopen(ours_out, "wb", buffering=0)
@@ -99,8 +111,16 @@ class Browser:
             raise RuntimeError(f"{method}: {answer['error']}")
         return answer.get("result", {})
 
-    def open(self, path: Path, *, width: int = 1000, height: int = 900, dark: bool = False, media: str = "",
-             script: bool = True) -> None:  # fmt: skip
+    def open(
+        self,
+        path: Path,
+        *,
+        width: int = 1000,
+        height: int = 900,
+        dark: bool = False,
+        media: str = "",
+        script: bool = True,
+    ) -> None:
         """Open a file in a window of the given size [px] and wait until it is loaded."""
         self.events.clear()
         self.call("Emulation.setScriptExecutionDisabled", value=not script)

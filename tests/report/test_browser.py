@@ -53,23 +53,28 @@ def test_narrow_screens_do_not_scroll_sideways(chromium, files, name):
     # letters in the figures stay readable: at least 9 px high on a phone
     small = chromium.run(
         "Math.min(...[...document.querySelectorAll('figure svg text')].map(t => {"
-        " const m = t.getScreenCTM(); return parseFloat(getComputedStyle(t).fontSize) * Math.hypot(m.a, m.b); }))"
+        " const m = t.getScreenCTM(); "
+        "return parseFloat(getComputedStyle(t).fontSize) * Math.hypot(m.a, m.b); }))"
     )
     assert small >= 8.0
 
 
 CONTRAST = """
 (() => {
-  const lum = c => { const v = c.map(x => { x /= 255; return x <= 0.04045 ? x / 12.92 : Math.pow((x + 0.055) / 1.055, 2.4); });
+  const lum = c => { const v = c.map(x => { x /= 255;
+    return x <= 0.04045 ? x / 12.92 : Math.pow((x + 0.055) / 1.055, 2.4); });
     return 0.2126 * v[0] + 0.7152 * v[1] + 0.0722 * v[2]; };
-  const rgb = s => { const m = s.match(/[\\d.]+/g).map(Number); return m.length > 3 && m[3] === 0 ? null : m.slice(0, 3); };
-  const ground = e => { for (let n = e; n; n = n.parentElement) { const c = rgb(getComputedStyle(n).backgroundColor); if (c) return c; }
+  const rgb = s => { const m = s.match(/[\\d.]+/g).map(Number);
+    return m.length > 3 && m[3] === 0 ? null : m.slice(0, 3); };
+  const ground = e => { for (let n = e; n; n = n.parentElement) {
+      const c = rgb(getComputedStyle(n).backgroundColor); if (c) return c; }
     return [255, 255, 255]; };
   const bad = [];
   const walk = document.createTreeWalker(document.body, NodeFilter.SHOW_TEXT);
   while (walk.nextNode()) {
     const e = walk.currentNode.parentElement;
-    if (!walk.currentNode.textContent.trim() || ['SCRIPT', 'STYLE', 'title', 'desc'].includes(e.tagName)) continue;
+    if (!walk.currentNode.textContent.trim()) continue;
+    if (['SCRIPT', 'STYLE', 'title', 'desc'].includes(e.tagName)) continue;
     const style = getComputedStyle(e);
     const inside = e.closest('svg');
     const color = rgb(inside ? style.fill : style.color);
@@ -84,11 +89,14 @@ CONTRAST = """
 NAMES = """
 (() => {
   const bad = [];
-  const label = e => e.getAttribute('aria-label') || (e.getAttribute('aria-labelledby') || '').split(' ')
+  const label = e => e.getAttribute('aria-label') ||
+    (e.getAttribute('aria-labelledby') || '').split(' ')
     .map(i => (document.getElementById(i) || {}).textContent || '').join(' ').trim() ||
     (e.labels && e.labels.length ? e.labels[0].textContent : '') || e.textContent.trim();
-  document.querySelectorAll('a, button, input, summary, [role=img], [role=region], section, table').forEach(e => {
-    const name = e.tagName === 'TABLE' ? (e.caption || e.closest('[aria-label]') || e).textContent : label(e);
+  const all = 'a, button, input, summary, [role=img], [role=region], section, table';
+  document.querySelectorAll(all).forEach(e => {
+    const name = e.tagName === 'TABLE'
+      ? (e.caption || e.closest('[aria-label]') || e).textContent : label(e);
     if (!String(name).trim()) bad.push(e.outerHTML.slice(0, 80));
   });
   return bad;
@@ -99,7 +107,7 @@ NAMES = """
 @pytest.mark.parametrize("dark", [False, True])
 @pytest.mark.parametrize("name", ["invert", "live"])
 def test_contrast_and_names(chromium, files, name, dark):
-    """Published rule (WCAG 2.1 AA): text 4.5 to 1, in both themes and in the figures; all have names."""
+    """Published rule (WCAG 2.1 AA): text 4.5 to 1 in both themes, figures too; all have names."""
     chromium.open(files[name], dark=dark)
     chromium.run("document.querySelectorAll('details').forEach(d => d.open = true)")
     assert chromium.run(CONTRAST) == []
@@ -142,10 +150,12 @@ def parsed(text: str) -> float:
 def slide(chromium, percent: float) -> dict[str, str]:
     """Move the slider and read the table."""
     chromium.run(
-        f"(() => {{ const s = document.getElementById('live-slider'); s.value = {percent}; s.dispatchEvent(new Event('input')); }})()"
+        f"(() => {{ const s = document.getElementById('live-slider'); s.value = {percent}; "
+        "s.dispatchEvent(new Event('input')); })()"
     )
     return chromium.run(
-        "Object.fromEntries([...document.querySelectorAll('#live-table tbody tr')].map(r => [r.dataset.key, r.querySelector('[data-role=value]').textContent]))"
+        "Object.fromEntries([...document.querySelectorAll('#live-table tbody tr')].map("
+        "r => [r.dataset.key, r.querySelector('[data-role=value]').textContent]))"
     )
 
 
@@ -221,7 +231,11 @@ def test_slider_redraws_the_curves(chromium, files, made_up):
 def test_number_box_and_reset(chromium, files):
     """Typing a fraction, nonsense, and going back."""
     chromium.open(files["live"])
-    typed = "(() => {{ const b = document.getElementById('live-number'); b.value = '{}'; b.dispatchEvent(new Event('input')); b.dispatchEvent(new Event('change')); return [b.value, document.getElementById('live-slider').value]; }})()"
+    typed = (
+        "(() => {{ const b = document.getElementById('live-number'); b.value = '{}'; "
+        "b.dispatchEvent(new Event('input')); b.dispatchEvent(new Event('change')); "
+        "return [b.value, document.getElementById('live-slider').value]; }})()"
+    )
     assert chromium.run(typed.format("33.5")) == ["33.5", "33.5"]
     assert chromium.run(typed.format("180")) == ["100", "100"]
     assert chromium.run(typed.format("")) == ["100", "100"]
@@ -231,7 +245,7 @@ def test_number_box_and_reset(chromium, files):
 
 
 def test_target_in_words(chromium, files):
-    """The made-up target 1.5e5 Pa s: below it at 20 %, above it at 90 %, within the interval between."""
+    """The made-up target 1.5e5 Pa s: below it at 20 %, above at 90 %, within in between."""
     chromium.open(files["live"])
     said = "document.getElementById('live-said').textContent"
     slide(chromium, 20)
@@ -284,7 +298,8 @@ def test_printed_page_cuts_no_figure(chromium, files, name):
         files[name], width=round(A4[0] * mm), height=round(A4[1] * mm), media="print", dark=True
     )
     boxes = chromium.run(
-        "[...document.querySelectorAll('.whole, #live figure')].map(e => { const b = e.getBoundingClientRect();"
+        "[...document.querySelectorAll('.whole, #live figure')].map(e => {"
+        " const b = e.getBoundingClientRect();"
         " return [b.height, b.left, b.right, getComputedStyle(e).breakInside]; })"
     )
     assert len(boxes) >= 2
@@ -292,7 +307,8 @@ def test_printed_page_cuts_no_figure(chromium, files, name):
         assert 40 < height < A4[1] * mm and rule == "avoid"
         assert left >= -1 and right <= A4[0] * mm + 1
     closed = chromium.run(
-        "[...document.querySelectorAll('details table')].filter(t => t.getBoundingClientRect().height < 20).length"
+        "[...document.querySelectorAll('details table')].filter("
+        "t => t.getBoundingClientRect().height < 20).length"
     )
     assert closed == 0
     assert chromium.run("getComputedStyle(document.body).backgroundColor") == "rgb(255, 255, 255)"

@@ -113,8 +113,17 @@ def test_hostile_names_in_live_data(made_up):
 def test_order_and_content(page_of):
     """Stated order of the page."""
     page = page_of("invert")
-    order = ["Answer", "To copy", "What the data cannot say", "Figures", "What would help", "Numbers", "How it was done",
-             "Where the material&#x27;s numbers come from", "Cautions"]  # fmt: skip
+    order = [
+        "Answer",
+        "To copy",
+        "What the data cannot say",
+        "Figures",
+        "What would help",
+        "Numbers",
+        "How it was done",
+        "Where the material&#x27;s numbers come from",
+        "Cautions",
+    ]
     places = [page.index(f">{title}</h2>") for title in order]
     assert places == sorted(places)
     live = page_of("live")
@@ -124,15 +133,28 @@ def test_order_and_content(page_of):
         < live.index("Figures</h2>")
     )
     text = " ".join(read(page).text)
-    for words in ("lot", 'L"42', "operator", "2026-03-02", "Mw is 1.20e5 g/mol (1.10e5 to 1.30e5, 90 %).", "Seed", "power-law",
-                  "ab12ab12", "lower bound", "assumed, not from the data", "Raju", "recalled", "smoothing was picked"):  # fmt: skip
+    for words in (
+        "lot",
+        'L"42',
+        "operator",
+        "2026-03-02",
+        "Mw is 1.20e5 g/mol (1.10e5 to 1.30e5, 90 %).",
+        "Seed",
+        "power-law",
+        "ab12ab12",
+        "lower bound",
+        "assumed, not from the data",
+        "Raju",
+        "recalled",
+        "smoothing was picked",
+    ):
         assert words in text, words
     # cautions once
     assert text.count("The smoothing was picked at the end of its scan.") == 1
 
 
 def test_document_basics(page_of):
-    """Published practice (WCAG 2.1, HTML): language, viewport, one h1, headings in steps, named regions."""
+    """Published practice (WCAG 2.1): language, viewport, one h1, headings in steps, names."""
     page = page_of("invert")
     reader = read(page)
     assert (
@@ -200,7 +222,7 @@ def test_keys_in_words():
 
 
 def test_plain_numbers_take_their_bands(made_up):
-    """Documented: in predict, blend and spectrum the intervals stand in the parallel key `bands`."""
+    """Documented: the intervals of predict, blend and spectrum stand in the key `bands`."""
     found = {b.caption: b for b in blocks(made_up.predict().to_dict())}
     row = next(r for r in found["Terminal properties"].rows if "η₀" in r[0])
     assert row[1:4] == ("91\u202f000", "63\u202f700 to 1.18×10⁵", "90 %")
