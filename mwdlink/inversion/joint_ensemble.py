@@ -10,13 +10,14 @@ from mwdlink.chains.distribution import Distribution
 from mwdlink.chains.melt import Melt
 from mwdlink.inversion import joint
 from mwdlink.inversion.joint import JointFit, JointProblem, JointScan, Priors
-from mwdlink.inversion.joint_alone import AloneFit, smooth_curve
+from mwdlink.inversion.joint_alone import AloneFit, fit_alone, smooth_curve
 from mwdlink.inversion.joint_data import GpcRows, gpc_rows, supported_range
 from mwdlink.inversion.joint_response import sweep_response
 from mwdlink.inversion.window import Window, find_window
 from mwdlink.relaxation.mixing import Model, relaxation_times
 
 SMOOTHING = np.geomspace(3.0, 1e-5, 9)
+FREE = 1e-5
 SPACING = 0.065
 # exponent unless card or user says otherwise: centre and spread of the prior
 EXPONENT_PRIOR = (2.0, 0.2)
@@ -51,6 +52,8 @@ class Setting:
     rouse : bool
     windows : dict of str to Window
         What the sweep sees, by kernel.
+    gpc_scale : float
+        Factor the GPC's assumed errors were raised by, because its curve is rougher.
     """
 
     omega: np.ndarray
@@ -63,6 +66,7 @@ class Setting:
     priors: Priors
     rouse: bool
     windows: dict[str, Window]
+    gpc_scale: float = 1.0
 
     @property
     def nodes(self) -> np.ndarray:
@@ -127,6 +131,10 @@ def settle(
         spacing, count = (last - first) / 139, 140
     x = first + spacing * np.arange(count)
     rows = gpc_rows(distribution, trust_range, spacing)
+    # a curve rougher than its assumed errors even for the most willing smooth one has larger ones
+    rough = np.sqrt(fit_alone(x, rows, FREE).chi2 / rows.size)
+    scale = float(rough) if rough > 1.0 else 1.0
+    rows = replace(rows, sigma=rows.sigma * scale)
     plateau = MODULUS_SPREAD
     if melt.plateau_range is not None:
         a, b = melt.plateau_range
