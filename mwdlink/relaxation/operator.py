@@ -72,8 +72,8 @@ def time_operator(
 
     It knows nothing of the melt. Measured where |G*| > 1e-4 of G(0), over six decades: |G*| to
     6e-7 for a single exponential, the hardest case (G' and G'' each to 3e-3, where they are a
-    small part of |G*|), to 1e-10 from dispersity 1.05 upwards. `melt_fit` does better where the
-    longest time is known.
+    small part of |G*|), to 1e-10 from dispersity 1.05 upwards as long as the melt's times lie
+    within its reach. `melt_fit` does better where the longest time is known.
 
     Parameters
     ----------
