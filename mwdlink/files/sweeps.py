@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-import re
 from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
@@ -12,10 +11,11 @@ import numpy as np
 
 from mwdlink.errors import Caution, InputError, merge_cautions
 from mwdlink.files.columns import Picker
-from mwdlink.files.headers import Column, recognise
+from mwdlink.files.headers import Column
 from mwdlink.files.numbers import read_number
 from mwdlink.files.source import rows_text
-from mwdlink.files.units import conversion, find_unit
+from mwdlink.files.temperature import celsius, preamble_temperature, split_steps, wobble
+from mwdlink.files.units import find_unit
 from mwdlink.measurement.sweep import Sweep, exact_mean
 
 ACCEPTED = (
@@ -23,13 +23,8 @@ ACCEPTED = (
     "delta [deg|rad], or eta' and eta''"
 )
 MIN_POINTS = 3
-# above this a bare temperature cannot be told between C and K
-_SURELY_C = 250.0
 # two ways to the same modulus may differ by this (natural logarithm, median)
 _AGREE = 0.05
-# a wobble below this is not worth a word [K]
-_NOTED = 0.2
-_MOST_STEPS = 2000
 
 # the pairs of columns that give both moduli, in order of preference
 _ROUTES = (
@@ -109,7 +104,7 @@ def read_segments(
     if temperature is not None and "T" in values:
         t = celsius(picker, temperature, values["T"], rows)
     stated = None if t is not None else preamble_temperature(picker)
-    parts = [] if t is None else _steps(picker, t, rows, same_temperature)
+    parts = [] if t is None else split_steps(picker, t, rows, same_temperature)
     notes = tuple(picker.notes)
     comments = tuple(picker.block.preamble)
     if t is None:
@@ -120,7 +115,7 @@ def read_segments(
             exact_mean(t[part]),
             {k: v[part] for k, v in columns.items()},
             rows[part],
-            (*notes, *_wobble(t[part])),
+            (*notes, *wobble(t[part])),
             comments,
         )
         for part in parts
@@ -339,119 +334,6 @@ def _cross_check(
                     f"factor of {math.exp(off):.3g} (median). Check the units of both.",
                 )
             )
-
-
-def celsius(picker: Picker, column: Column, t: np.ndarray, rows: np.ndarray) -> np.ndarray:
-    bad = np.flatnonzero(~((t > -273.15) & (t < 2000)))
-    place: dict[str, Any] = {"path": picker.source.path, "column": column.header}
-    if bad.size:
-        raise InputError(
-            f"a temperature of {t[bad[0]]:g} C is impossible.",
-            row=int(rows[bad[0]]),
-            remedy="Write its unit into the header, [C] or [K].",
-            **place,
-        )
-    if column.assumed and np.max(t) > _SURELY_C:
-        raise InputError(
-            f"a temperature of {np.max(t):g} without a unit may be in C or K.",
-            row=int(rows[np.argmax(t)]),
-            remedy=f'Write its unit into the header, or give --column "T={column.header}:C".',
-            **place,
-        )
-    return t
-
-
-def preamble_temperature(picker: Picker) -> float | None:
-    """A temperature stated above the table, as in `Temperature: 190 C`."""
-    found: list[tuple[float, str]] = []
-    for line in picker.block.preamble:
-        value = parse_temperature(line)
-        if value is not None:
-            found.append((value, line))
-    different = {round(value, 6) for value, _ in found}
-    if len(different) != 1:
-        return None
-    value, line = found[-1]
-    picker.notes.append(
-        Caution(
-            "temperature_from_preamble",
-            f"The temperature, {value:g} C, was taken from the line {line.strip()[:80]!r}.",
-        )
-    )
-    return value
-
-
-def parse_temperature(line: str) -> float | None:
-    """The temperature [C] a preamble line states, or None.
-
-    The line must be a name of the temperature, then a number, then perhaps a unit (which may also
-    stand with the name). Without a unit only values that cannot be kelvin count.
-    """
-    if len(line) > 200:
-        return None
-    match = re.fullmatch(
-        r"[\"'\s]*(?P<name>[^\d:=;,\t\"]*?(?:\[[^\]]*\]|\([^)]*\))?)\"?\s*[:=;,\t ]\s*\"?"
-        r"(?P<value>[+\-−]?\d+(?:[.,]\d+)?)\"?\s*[;,\t ]?\s*\"?(?P<unit>[^\d;,\t\"]*?)[\";,\t\s]*",
-        line.strip(),
-    )
-    if match is None:
-        return None
-    name = recognise(match["name"].strip())
-    if name is None or name.role != "T":
-        return None
-    number = read_number(match["value"], "," if "," in match["value"] else ".")
-    if number is None:
-        return None
-    given = match["unit"].strip() or (name.unit or "")
-    if given:
-        unit = find_unit(given, "temperature")
-        if unit is None:
-            return None
-        value = float(conversion(unit, "temperature").convert(np.array(number[0])))
-    elif number[0] < _SURELY_C:
-        value = number[0]
-    else:
-        return None
-    return value if -273.15 < value < 2000 else None
-
-
-def _steps(picker: Picker, t: np.ndarray, rows: np.ndarray, same: float) -> list[np.ndarray]:
-    """Index arrays of the runs of one temperature, in the order of the file."""
-    order = np.argsort(t, kind="stable")
-    gaps = np.diff(t[order]) > same
-    group = np.empty(t.size, dtype=int)
-    group[order] = np.concatenate([[0], np.cumsum(gaps)])
-    for g in range(int(group.max()) + 1):
-        spread = t[group == g]
-        if np.ptp(spread) > 2 * same:
-            k = int(np.flatnonzero(group == g)[0])
-            raise InputError(
-                f"the temperature runs from {spread.min():g} to {spread.max():g} C without a step: "
-                "a ramp is no sweep.",
-                path=picker.source.path,
-                row=int(rows[k]),
-                column="T",
-                remedy="Give sweeps at constant temperature, or take more as one with "
-                "--same-temperature.",
-            )
-    cuts = np.flatnonzero(np.diff(group) != 0) + 1
-    if cuts.size > _MOST_STEPS:
-        raise InputError(
-            f"the temperature changes {cuts.size} times.",
-            path=picker.source.path,
-            row=int(rows[cuts[0]]),
-            column="T",
-            remedy="Order the rows by temperature.",
-        )
-    return [p for p in np.split(np.arange(t.size), cuts) if p.size]
-
-
-def _wobble(t: np.ndarray) -> tuple[Caution, ...]:
-    """What is said of the temperatures within one step."""
-    if np.ptp(t) <= _NOTED:
-        return ()
-    text = f"Rows at {t.min():.6g} to {t.max():.6g} C were taken as one temperature."
-    return (Caution("temperatures_joined", text),)
 
 
 def join_segments(segments: list[Segment], same: float) -> list[Segment]:

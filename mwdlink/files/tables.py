@@ -20,6 +20,15 @@ import numpy as np
 
 from mwdlink.errors import Caution, InputError, merge_cautions
 from mwdlink.files.columns import Picker
+from mwdlink.files.kinds import (
+    ACCEPTED,
+    is_flow,
+    is_relaxation,
+    is_spectrum,
+    no_kind,
+    strength_role,
+    tests,
+)
 from mwdlink.files.source import Source, open_source
 from mwdlink.measurement.sweep import FlowCurve, RelaxationCurve, Sweep, exact_mean
 
@@ -214,7 +223,7 @@ def read_relaxation(
     """A relaxation modulus from a table with `t [s]` and `G [Pa]`."""
     source = open_source(path, columns=columns, omit=omit, sheet=sheet)
     pickers = _pickers(source, columns, decimal)
-    picker = _choose(pickers, [p for p in pickers if _is_relaxation(p)], block, "relaxation curve")
+    picker = _choose(pickers, [p for p in pickers if is_relaxation(p)], block, "relaxation curve")
     return _curve(  # type: ignore[return-value]
         RelaxationCurve, picker, ("t", "G"), source, omit_unreadable, temperature_C, label
     )
@@ -235,7 +244,7 @@ def read_flow_curve(
     """A steady flow curve from a table with `rate [1/s]` and `eta [Pa s]`."""
     source = open_source(path, columns=columns, omit=omit, sheet=sheet)
     pickers = _pickers(source, columns, decimal)
-    picker = _choose(pickers, [p for p in pickers if _is_flow(p)], block, "flow curve")
+    picker = _choose(pickers, [p for p in pickers if is_flow(p)], block, "flow curve")
     return _curve(  # type: ignore[return-value]
         FlowCurve, picker, ("rate", "eta"), source, omit_unreadable, temperature_C, label
     )
@@ -256,10 +265,10 @@ def read_spectrum(
 
     source = open_source(path, columns=columns, omit=omit, sheet=sheet)
     pickers = _pickers(source, columns, decimal)
-    picker = _choose(pickers, [p for p in pickers if _is_spectrum(p)], block, "spectrum")
-    strength = _strength_role(picker)
-    needed = [picker.need("tau", _ACCEPTED["spectrum"]),
-              picker.need(strength, _ACCEPTED["spectrum"])]  # fmt: skip
+    picker = _choose(pickers, [p for p in pickers if is_spectrum(p)], block, "spectrum")
+    strength = strength_role(picker)
+    needed = [picker.need("tau", ACCEPTED["spectrum"]),
+              picker.need(strength, ACCEPTED["spectrum"])]  # fmt: skip
     values, rows = picker.read(needed, positive=("tau",), omit_unreadable=omit_unreadable)
     tau, g = values["tau"], values[strength]
     bad = np.flatnonzero(g < 0)
@@ -315,10 +324,10 @@ def find_kind(
     """
     source = open_source(path, columns=columns, omit=omit, sheet=sheet)
     pickers = _pickers(source, columns, None)
-    for kind, test in _tests().items():
+    for kind, test in tests().items():
         if any(test(p) for p in pickers):
             return kind
-    raise _no_kind(pickers, "table", " | ".join(f"{k}: {v}" for k, v in _ACCEPTED.items()))
+    raise no_kind(pickers, "table", " | ".join(f"{k}: {v}" for k, v in ACCEPTED.items()))
 
 
 def _pickers(
@@ -347,7 +356,7 @@ def _choose(pickers: list[Picker], suited: list[Picker], block: int | None, kind
             )
         return pickers[block - 1]
     if not suited:
-        raise _no_kind(pickers, kind, _ACCEPTED[kind])
+        raise no_kind(pickers, kind, ACCEPTED[kind])
     if len(suited) > 1:
         rows = [p.block.rows[0] for p in suited]
         raise InputError(
@@ -371,82 +380,12 @@ def _left_aside(pickers: list[Picker], used: list[Picker], kind: str) -> tuple[C
     return (Caution("tables_left_aside", text),)
 
 
-def _no_kind(pickers: list[Picker], kind: str, accepted: str) -> InputError:
-    best = max(pickers, key=lambda p: len(p.found) + len(p.chosen))
-    other = next((k for k, test in _tests().items() if k != kind and test(best)), None)
-    error = best.missing(_first_missing(best, kind), accepted)
-    if other is not None and kind != "table":
-        return InputError(
-            f"this is no {kind}: the columns are those of a {other}.",
-            path=error.path,
-            row=error.row,
-            column=error.column,
-            remedy=error.remedy,
-        )
-    return error
-
-
-def _first_missing(picker: Picker, kind: str) -> str:
-    for group in _NEEDED.get(kind, ()):
-        if not any(picker.has(role) for role in group):
-            return group[0]
-    return _NEEDED[kind][0][0] if kind in _NEEDED else "omega"
-
-
-_NEEDED = {
-    "distribution": (("M", "log10 M", "log M", "ln M"), ("dW/dlog10M",)),
-    "sweep": (("omega", "f", "frequency"), ("G'", "|eta*|", "|G*|", "eta'"),
-              ("G''", "tan delta", "delta", "eta''")),
-    "relaxation curve": (("t",), ("G",)),
-    "flow curve": (("rate",), ("eta",)),
-    "spectrum": (("tau",), ("g",)),
-}  # fmt: skip
-
-
-def _is_relaxation(picker: Picker) -> bool:
-    return picker.has("t") and picker.has("G") and not picker.has("omega")
-
-
-def _is_flow(picker: Picker) -> bool:
-    return picker.has("rate") and picker.has("eta")
-
-
-def _is_spectrum(picker: Picker) -> bool:
-    return picker.has("tau") and (picker.has("g") or picker.has("G"))
-
-
-def _strength_role(picker: Picker) -> str:
-    return "g" if picker.has("g") or not picker.has("G") else "G"
-
-
-def _tests() -> dict[str, Any]:
-    from mwdlink.files.gpc import is_distribution
-    from mwdlink.files.sweeps import is_sweep
-
-    return {
-        "distribution": is_distribution,
-        "sweep": is_sweep,
-        "relaxation curve": _is_relaxation,
-        "flow curve": _is_flow,
-        "spectrum": _is_spectrum,
-    }
-
-
 _READERS: dict[str, Callable[..., Any]] = {
     "distribution": read_distribution,
     "sweep": read_sweeps,
     "relaxation curve": read_relaxation,
     "flow curve": read_flow_curve,
     "spectrum": read_spectrum,
-}
-_ACCEPTED = {
-    "distribution": "M [g/mol], log10 M or ln M, with one of dW/dlog10M, dW/dlnM, dW/dM, "
-    "cumulative W, slice weight, dN/dlog10M, dN/dlnM, dN/dM, slice number",
-    "sweep": "omega [rad/s] or f [Hz]; G' [Pa] and G'' [Pa], or |eta*| [Pa s] with tan delta or "
-    "delta [deg|rad], or eta' and eta''",
-    "relaxation curve": "t [s] and G [Pa]",
-    "flow curve": "rate [1/s] and eta [Pa s]",
-    "spectrum": "tau [s] and g [Pa]",
 }
 
 
@@ -459,9 +398,9 @@ def _curve(
     temperature_C: float | None,
     label: str | None,
 ) -> RelaxationCurve | FlowCurve:
-    from mwdlink.files.sweeps import celsius, preamble_temperature
+    from mwdlink.files.temperature import celsius, preamble_temperature
 
-    accepted = _ACCEPTED["relaxation curve" if kind is RelaxationCurve else "flow curve"]
+    accepted = ACCEPTED["relaxation curve" if kind is RelaxationCurve else "flow curve"]
     needed = [picker.need(role, accepted) for role in roles]
     positive = set(roles)
     for role in ("sigma", "T"):

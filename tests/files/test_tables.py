@@ -16,7 +16,7 @@ import pytest
 from mwdlink.chains.distribution import Distribution
 from mwdlink.errors import InputError
 from mwdlink.files.source import parse_rows, rows_text
-from mwdlink.files.sweeps import parse_temperature
+from mwdlink.files.temperature import parse_temperature
 from mwdlink.files.tables import (
     find_kind,
     read_any,
