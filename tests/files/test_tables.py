@@ -16,7 +16,6 @@ import pytest
 from mwdlink.chains.distribution import Distribution
 from mwdlink.errors import InputError
 from mwdlink.files.source import parse_rows, rows_text
-from mwdlink.files.temperature import parse_temperature
 from mwdlink.files.tables import (
     find_kind,
     read_any,
@@ -27,6 +26,7 @@ from mwdlink.files.tables import (
     read_sweep,
     read_sweeps,
 )
+from mwdlink.files.temperature import parse_temperature
 
 Write = Callable[..., Path]
 TWO_PI = 2 * math.pi
