@@ -42,7 +42,6 @@ from mwdlink.decisions.ensemble import (
 from mwdlink.decisions.predict import (
     Outputs,
     Recorder,
-    averages_of,
     frequencies,
     narrow_cautions,
     stack,
@@ -221,7 +220,9 @@ def compute(components: Sequence[Component], phi: np.ndarray, melt: Melt, s: Set
             sampled.get(s.target.key),
             others,
         )
-    averages = {} if mixed is None else averages_of(mixed)
+    averages = {}
+    if known:
+        averages = {k: float(v[0]) for k, v in _averages(components, phi[None, :]).items()}
     classical, columns = _classical(route, phi, melt, inner, terminal, first)
     difference = None
     if measured is not None and known:
@@ -373,6 +374,19 @@ def _noise_marks(bank: MeasuredBank, members: int) -> np.ndarray:
     return np.stack([np.log(m.strength[rows] @ m.tau) for m in bank.components], axis=1)
 
 
+def _averages(components: Sequence[Component], shares: np.ndarray) -> dict[str, np.ndarray]:
+    """Mn, Mw, Mz, dispersity of blends of shares (k, n), from the components' own moments."""
+    d = [c.distribution for c in components]
+    moments = {k: np.array([x.moment(k) for x in d]) for k in (-1, 1, 2)}  # type: ignore[union-attr]
+    mn, mw = 1.0 / (shares @ moments[-1]), shares @ moments[1]
+    return {
+        "Mn_g_per_mol": mn,
+        "Mw_g_per_mol": mw,
+        "Mz_g_per_mol": shares @ moments[2] / mw,
+        "dispersity": mw / mn,
+    }
+
+
 def _average_bands(
     components: Sequence[Component], shares: np.ndarray, averages: Mapping[str, float]
 ) -> dict[str, Uncertain]:
@@ -380,15 +394,7 @@ def _average_bands(
         return {}
     if len(shares) == 0 or np.ptp(shares, axis=0).max() == 0:
         return {k: Uncertain(v, v, v) for k, v in averages.items()}
-    d = [c.distribution for c in components]
-    moments = {k: np.array([x.moment(k) for x in d]) for k in (-1, 1, 2)}  # type: ignore[union-attr]
-    mn, mw = 1.0 / (shares @ moments[-1]), shares @ moments[1]
-    rows = {
-        "Mn_g_per_mol": mn,
-        "Mw_g_per_mol": mw,
-        "Mz_g_per_mol": shares @ moments[2] / mw,
-        "dispersity": mw / mn,
-    }
+    rows = _averages(components, shares)
     return {k: Uncertain.from_samples(rows[k], averages[k]) for k in averages}
 
 
