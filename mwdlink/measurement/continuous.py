@@ -3,8 +3,8 @@
 The unknown is u = ln H on a uniform grid of ln tau, so positivity is built in, and its roughness is
 the integral of the squared third derivative of u: a log-normal spectrum, and with it every power
 law, costs nothing. The curve is the average over smoothing weights by their evidence (Laplace
-approximation), whose whole curve is kept, and the band comes from refits with data and prior perturbed by their own
-spread at smoothing weights drawn by their evidence.
+approximation), whose whole course is kept. The band comes from refits with data and prior perturbed
+by their own spread, at smoothing weights drawn by their evidence.
 """
 
 from __future__ import annotations
@@ -225,6 +225,7 @@ def fit_continuous(
     per_decade: int = PER_DECADE,
     smoothing: float | None = None,
     level: float = LEVEL,
+    noise_freedom: int | None = None,
 ) -> Continuous:
     """Continuous positive spectrum with a band from perturbed refits.
 
@@ -244,6 +245,9 @@ def fit_continuous(
         A fixed lambda instead of the evidence's choice.
     level : float
         Probability of the pointwise band.
+    noise_freedom : int, optional
+        Degrees of freedom the errors were estimated with: every member then takes a noise of its
+        own from what is known of it. None where the errors are given.
 
     Returns
     -------
@@ -287,7 +291,10 @@ def fit_continuous(
         rng = np.random.default_rng(child)
         k = int(rng.choice(weight.size, p=weight))
         member_lam = fits[k][0]
-        y = problem.y + rng.standard_normal(problem.y.size) / problem.w
+        noise = 1.0
+        if noise_freedom is not None:
+            noise = float(np.sqrt(noise_freedom / rng.chisquare(noise_freedom)))
+        y = problem.y + noise * rng.standard_normal(problem.y.size) / problem.w
         pull3 = rng.standard_normal(problem.D3.shape[0]) / np.sqrt(member_lam)
         pull2 = np.asarray(rng.standard_normal(problem.D2.shape[0]))
         try:
