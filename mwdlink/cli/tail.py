@@ -50,7 +50,8 @@ class Span(click.ParamType):
     help="Where the tail begins [g/mol]. Default: the last M that the GPC table supports.",
 )
 @click.option(
-    "--trust",
+    "--gpc-range",
+    "trust",
     type=Span(),
     help="Molar masses [g/mol] over which the GPC is trusted, as in 2e3:1e6.",
 )

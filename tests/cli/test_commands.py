@@ -124,6 +124,14 @@ WRITTEN = {
         "residuals.csv blends.csv",
         "blends exponent left_out rules verdict",
     ),
+    "tail gpc.csv sweep.csv --polymer hdpe --members 0 --kernel power-law --beyond 1e6": (
+        "distribution.csv gpc_only.csv fit.csv",
+        "tail time_law_factor explanations averages advice",
+    ),
+    "calibrate study.toml --kernel power-law": (
+        "residuals.csv",
+        "viscosity network exponent",
+    ),
     "rest gpc.csv --polymer hdpe --members 4 --residual 1%": ("rest.csv", "rest"),
     "spectrum sweep.csv --members 4": (
         "spectrum.csv continuous.csv fit.csv",
@@ -179,6 +187,19 @@ def test_trust_is_carried_on(
     paths = [i["path"] for i in record["inputs"]]
     assert "study.toml" in paths and str(trust) in paths and "b-sweep.csv" in paths
     assert record["blend"]["route"] == "sweeps"
+
+
+def test_own_card_is_used(
+    run: Callable[..., Result], tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Interface: calibrate writes card.toml, which every command takes as --polymer."""
+    no_pictures(monkeypatch)
+    run("calibrate study.toml --kernel power-law --quiet", "--out", str(tmp_path / "own"))
+    card = str(tmp_path / "own" / "card.toml")
+    line = "predict gpc.csv --members 0 --json --quiet --polymer"
+    record = json.loads(run(line, card).stdout)
+    assert record["polymer"]["viscosity"]["coefficient"] > 0
+    assert "plateau modulus" in run("polymers", card).stdout
 
 
 def test_same_input_same_bytes(run: Callable[..., Result], tmp_path: Path) -> None:
