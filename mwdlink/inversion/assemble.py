@@ -116,9 +116,7 @@ def assemble(
     low = max(b.problem.window.low for b in used)
     high = min(b.problem.window.high for b in used)
     single = Cells.make(centre.problem.window.edges, centre.fit.w)
-    prior = Cells.make(
-        centre.problem.window.edges, prior_weights(centre, PRIOR_DRAWS, prior_seed)
-    )
+    prior = Cells.make(centre.problem.window.edges, prior_weights(centre, PRIOR_DRAWS, prior_seed))
     averages = _averages(single, pool, prior, low, high, level)
     outside = {
         "above": _fraction(centre, single, pool, prior, high, level),
@@ -132,10 +130,16 @@ def assemble(
     exponent = _exponent(used, pool, fixed_exponent, exponent_prior, level)
     check, check_notes = _cross_check(sweep, centre, averages, noise, outside["above"])
     found = find_peaks(
-        grid, sampled, density, centre.problem.window, level=level,
+        grid,
+        sampled,
+        density,
+        centre.problem.window,
+        level=level,
         groups=None if pool is None else pool.kernel,
     )
-    notes = merge_cautions(notes, _fit_cautions(centre, method), check_notes, _sweep_cautions(sweep, melt))
+    notes = merge_cautions(
+        notes, _fit_cautions(centre, method), check_notes, _sweep_cautions(sweep, melt)
+    )
     notes = notes + _bound_cautions(averages, outside)
     advice = _advice(centre, sweep, polymer, want)
     return Inversion(
@@ -310,7 +314,9 @@ def _exponent(
     if fixed:
         return Uncertain(prior.mean, None, None, level, "assumed")
     if pool is None:
-        return Uncertain(float(np.mean([b.model.exponent for b in used])), None, None, level, "assumed")
+        return Uncertain(
+            float(np.mean([b.model.exponent for b in used])), None, None, level, "assumed"
+        )
     low, middle, high = quantiles(pool.exponent, [(1 - level) / 2, 0.5, (1 + level) / 2])
     wide = (high - low) > 0.8 * 2 * 1.6449 * prior.spread
     return Uncertain(
@@ -319,7 +325,11 @@ def _exponent(
 
 
 def _cross_check(
-    sweep: Any, centre: Branch, averages: Mapping[str, Uncertain], noise: Mapping[str, Any], beyond: Uncertain
+    sweep: Any,
+    centre: Branch,
+    averages: Mapping[str, Uncertain],
+    noise: Mapping[str, Any],
+    beyond: Uncertain,
 ) -> tuple[Any, tuple[Caution, ...]]:
     if not isinstance(sweep, Sweep):
         return None, ()
@@ -361,21 +371,22 @@ def _bound_cautions(
     averages: Mapping[str, Uncertain], outside: Mapping[str, Uncertain]
 ) -> tuple[Caution, ...]:
     out = []
+    most = outside["above"].high or outside["above"].value or 0.0
     if averages["Mz_g_per_mol"].status == "lower_bound":
         out.append(
             Caution(
                 "weight_above_window",
-                f"Up to {100 * (outside['above'].high or outside['above'].value or 0):.2g} % of the "
-                "weight is in chains too long to be sized: Mz (and Mw where so marked) are lower "
-                "bounds. Long-chain branching or a second phase would look the same.",
+                f"Up to {100 * most:.2g} % of the weight is in chains too long to be sized: Mz "
+                "(and Mw where so marked) are lower bounds. Long-chain branching or a second phase "
+                "would look the same.",
             )
         )
     out.append(
         Caution(
             "branching_rival",
-            "The reading takes linear chains. Long-chain branching changes the low-frequency end as "
-            "a high-molar-mass tail does; a second temperature or the intrinsic viscosity would "
-            "tell them apart.",
+            "The reading takes linear chains. Long-chain branching changes the low-frequency "
+            "end as a high-molar-mass tail does; a second temperature or the intrinsic viscosity "
+            "would tell them apart.",
         )
     )
     return tuple(out)

@@ -13,7 +13,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from mwdlink.chains.melt import Melt
-from mwdlink.errors import Caution, MwdlinkError
+from mwdlink.errors import Caution, ModelError, MwdlinkError
 from mwdlink.inversion.many import Copies, minimise_many
 from mwdlink.inversion.objective import (
     LUMP_CENTRE,
@@ -212,7 +212,9 @@ def _exponent_posterior(
     return max(centre + float(shift), 1.0), float(1.0 / np.sqrt(precision))
 
 
-def draw_members(branch: Branch, count: int, seed: np.random.SeedSequence, scatter: float) -> Members:
+def draw_members(
+    branch: Branch, count: int, seed: np.random.SeedSequence, scatter: float
+) -> Members:
     """Perturbed refits of a branch.
 
     Parameters
@@ -268,15 +270,19 @@ def _survival_of(branch: Branch, exponent: np.ndarray) -> np.ndarray:
     problem = branch.problem
     forward = problem.forward
     times = forward.times
+    if times is None:
+        raise ModelError("these data rows have no list of times to mix on")
     columns = []
-    for b in at:
-        k = time_columns(times, branch.melt, replace(branch.model, exponent=float(b)), problem.window)
+    for value in at:
+        k = time_columns(
+            times, branch.melt, replace(branch.model, exponent=float(value)), problem.window
+        )
         columns.append(np.log(np.maximum(k, 1e-300)))
     x, y = 1.0 / at, 1.0 / exponent
     out = np.zeros((exponent.size, *columns[0].shape))
     for i in range(3):
-        j, k = (i + 1) % 3, (i + 2) % 3
-        lagrange = (y - x[j]) * (y - x[k]) / ((x[i] - x[j]) * (x[i] - x[k]))
+        a, b = (i + 1) % 3, (i + 2) % 3
+        lagrange = (y - x[a]) * (y - x[b]) / ((x[i] - x[a]) * (x[i] - x[b]))
         out += lagrange[:, None, None] * columns[i]
     np.exp(out, out=out)
     dead = columns[1] < -600.0

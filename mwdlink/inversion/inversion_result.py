@@ -186,8 +186,6 @@ def _g(x: float | None) -> str:
     return "unknown" if x is None else f"{x:.3g}"
 
 
-def columns_of_fit(
-    names: Sequence[str], values: Sequence[np.ndarray]
-) -> dict[str, np.ndarray]:
+def columns_of_fit(names: Sequence[str], values: Sequence[np.ndarray]) -> dict[str, np.ndarray]:
     """Columns by name."""
     return dict(zip(names, values, strict=True))

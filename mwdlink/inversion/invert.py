@@ -213,7 +213,9 @@ def _check(
     sweep: Any, members: int, above: Sequence[float], method: str, choose: str, level: float
 ) -> None:
     if not isinstance(sweep, (Sweep, RelaxationCurve, FlowCurve)):
-        raise InputError(f"invert needs a sweep, relaxation or flow curve, not {type(sweep).__name__}")
+        raise InputError(
+            f"invert needs a sweep, relaxation or flow curve, not {type(sweep).__name__}"
+        )
     if len(sweep) < LEAST_POINTS:
         raise InputError(
             f"{len(sweep)} points are too few for a distribution.",
@@ -225,9 +227,13 @@ def _check(
     if any(not (np.isfinite(a) and a > 0) for a in above):
         raise InputError("molar masses for the weight above must be positive")
     if method not in METHODS:
-        raise InputError(f"unknown method {method!r}.", remedy="Use one of " + ", ".join(METHODS) + ".")
+        raise InputError(
+            f"unknown method {method!r}.", remedy="Use one of " + ", ".join(METHODS) + "."
+        )
     if choose not in CHOICES:
-        raise InputError(f"unknown choice {choose!r}.", remedy="Use one of " + ", ".join(CHOICES) + ".")
+        raise InputError(
+            f"unknown choice {choose!r}.", remedy="Use one of " + ", ".join(CHOICES) + "."
+        )
     if not 0 < level < 1:
         raise InputError("the level of the intervals must lie between 0 and 1")
 

@@ -164,7 +164,7 @@ def _stack(problem: Problem, copies: Copies) -> tuple[np.ndarray, np.ndarray]:
             small = promised < TOLERANCE
             taken = who[good]
             gain = value[taken] - new[good]
-            u[taken] = trial[good] - trial[good].max(axis=1, keepdims=True)
+            u[taken] = trial[good]
             value[taken] = new[good]
             better = gain > 0.25 * promised[good]
             damping[taken] = np.maximum(damping[taken] * np.where(better, 0.15, 2.0), 1e-9)

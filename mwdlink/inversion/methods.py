@@ -71,7 +71,12 @@ def method_branch(
 
 
 def method_members(
-    branch: Branch, count: int, seed: np.random.SeedSequence, scatter: float, method: str, choose: str
+    branch: Branch,
+    count: int,
+    seed: np.random.SeedSequence,
+    scatter: float,
+    method: str,
+    choose: str,
 ) -> Members:
     """Perturbed refits by another method; an uncertain exponent is taken at a few values."""
     spread = branch.exponent_spread

@@ -43,9 +43,9 @@ class Roughness:
         return smoothing * self.third.T @ self.third + self.weak.T @ self.weak
 
 
-# where the weight is below this share of its highest, a smooth ln w is a belief, not an observation:
-# the prior is relaxed in proportion (without it a Schulz-Zimm melt's steep end was read as a
-# log-normal's, with too narrow an interval)
+# below this share of its highest weight a smooth ln w is a belief, not an observation: the prior is
+# relaxed in proportion (else a Schulz-Zimm melt's steep end is read as a log-normal's, and its
+# interval is too narrow)
 RELIEF_LEVEL, RELIEF_FLOOR = 0.05, 1e-3
 
 

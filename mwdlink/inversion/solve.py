@@ -68,10 +68,10 @@ class Shift:
 def draw_shift(problem: Problem, rng: np.random.Generator) -> Shift:
     """Standard normal perturbation of every row."""
     return Shift(
-        rng.standard_normal(problem.data.size),
-        rng.standard_normal(problem.prior.third.shape[0]),
-        rng.standard_normal(3),
-        rng.standard_normal(2),
+        rng.standard_normal((problem.data.size,)),
+        rng.standard_normal((problem.prior.third.shape[0],)),
+        rng.standard_normal((3,)),
+        rng.standard_normal((2,)),
     )
 
 
@@ -129,7 +129,8 @@ def minimise(
     converged = False
     hessian = precision
     steps = 0
-    for steps in range(1, MAX_STEPS + 1):
+    while steps < MAX_STEPS:
+        steps += 1
         w = weights(u)
         y, slope = f.values_and_slope(w)
         scaled = slope * (inverse / y)[:, None]
@@ -165,7 +166,7 @@ def minimise(
         if converged or damping > 1e8:
             break
         gain = value - new
-        u, value, chi2 = trial - trial.max(), new, new_chi2
+        u, value, chi2 = trial, new, new_chi2
         damping = max(damping * (0.15 if gain > 0.25 * promised else 2.0), 1e-9)
         if promised < tolerance * (1.0 + 1e-3 * value):
             converged = True

@@ -1,9 +1,9 @@
 """The example scenario: invented from end to end, made by formula and seeded noise.
 
-An invented maker of extruded netting buys two linear polyethylene grades, called here Fell and Tarn
-(invented, like everything in this file). The melts "in nature" follow a kernel and an exponent that
-are not the tool's defaults, and a time law 6 % off the card's, so that the example shows the tool at
-work on a world it does not know. What the laboratory gets: GPC slices with noise, baseline and an
+An invented maker of extruded netting buys two linear polyethylene grades, called here Fell and
+Tarn (invented, like everything in this file). The melts "in nature" follow a kernel and an exponent
+that are not the tool's defaults, and a time law 6 % off the card's, so that the example shows the
+tool at work on a world it does not know. What the laboratory gets: GPC slices with noise, baseline and an
 exclusion limit, sweeps at three temperatures with noise, three weighed blends, a lot with a tail
 that the GPC does not see, and a data sheet with one wrong number.
 """
@@ -101,7 +101,10 @@ def write_scenario(folder: Path, seed: int = 20) -> list[Path]:
             [(every["fell"].chains, share), (every["tarn"].chains, 1 - share)], points=120
         )
         percent = round(100 * share)
-        write(f"blend-{percent}.csv", sweep_text(f"Fell {percent} / Tarn {100 - percent}", chains, polymer, rng()))
+        write(
+            f"blend-{percent}.csv",
+            sweep_text(f"Fell {percent} / Tarn {100 - percent}", chains, polymer, rng()),
+        )
     write("blends.toml", study_text())
     write("fell-sheet.toml", sheet_text(every["fell"], polymer))
     write("READ-ME.txt", _read_me())
@@ -182,7 +185,7 @@ def study_text() -> str:
 
 
 def sheet_text(grade: Grade, polymer: Polymer) -> str:
-    """Data sheet of Fell: true numbers, rounded, but the flow rate at 2.16 kg, five times too high."""
+    """Data sheet of Fell: true numbers, rounded, but MFR 2.16 kg, which is five times too high."""
     melt = true_melt(polymer, 190.0)
     response = Relaxation(grade.chains, melt, TRUE_MODEL)
     spectrum = response.spectrum()
@@ -191,16 +194,20 @@ def sheet_text(grade: Grade, polymer: Polymer) -> str:
     eta0 = response.zero_shear_viscosity
     d = grade.chains
     eta = float(spectrum.complex_viscosity([1.0])[0])
-    return f"""# {MARK}
-polymer = "hdpe"
-[claims]
-Mw_g_per_mol = {{value = {d.Mw:.3g}, tolerance = 0.10}}
-dispersity = {{value = {d.dispersity:.2g}, tolerance = 0.15}}
-eta0_Pa_s = {{value = {eta0:.3g}, tolerance = 0.15, temperature_C = 190}}
-viscosity = [{{omega_rad_per_s = 1.0, value_Pa_s = {eta:.3g}, temperature_C = 190, tolerance = 0.10}}]
-melt_flow = [{{load_kg = 2.16, temperature_C = 190, MFR_g_per_10min = {5 * low:.2g}, tolerance = 0.10}}, {{load_kg = 21.6, temperature_C = 190, MFR_g_per_10min = {high:.3g}, tolerance = 0.10}}]
-long_chain_branching = "none"
-"""
+    claims = [
+        f"Mw_g_per_mol = {{value = {d.Mw:.3g}, tolerance = 0.10}}",
+        f"dispersity = {{value = {d.dispersity:.2g}, tolerance = 0.15}}",
+        f"eta0_Pa_s = {{value = {eta0:.3g}, tolerance = 0.15, temperature_C = 190}}",
+        f"viscosity = [{{omega_rad_per_s = 1.0, value_Pa_s = {eta:.3g}, temperature_C = 190, "
+        "tolerance = 0.10}]",
+        "melt_flow = ["
+        f"{{load_kg = 2.16, temperature_C = 190, MFR_g_per_10min = {5 * low:.2g}, "
+        "tolerance = 0.10}, "
+        f"{{load_kg = 21.6, temperature_C = 190, MFR_g_per_10min = {high:.3g}, "
+        "tolerance = 0.10}]",
+        'long_chain_branching = "none"',
+    ]
+    return "\n".join([f"# {MARK}", 'polymer = "hdpe"', "[claims]", *claims]) + "\n"
 
 
 def _read_me() -> str:

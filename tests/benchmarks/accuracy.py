@@ -14,8 +14,8 @@ from pathlib import Path
 
 import numpy as np
 
-sys.path.insert(0, str(Path(__file__).parents[1] / "inversion"))
-from made import FAMILIES, exact_card, mean_within, measured, melt_of  # noqa: E402
+sys.path.insert(0, str(Path(__file__).parents[1]))
+from melts import FAMILIES, exact_card, mean_within, measured, melt_of  # noqa: E402
 
 from mwdlink.inversion.invert import invert  # noqa: E402
 from mwdlink.relaxation.mixing import Model  # noqa: E402
@@ -59,7 +59,9 @@ def main() -> None:
     chosen = sys.argv[3].split(",") if len(sys.argv) > 3 else FAMILIES
     write = sys.stdout.write
     write(f"{melts} melts a family, kernel {kernel}, 3 % noise, 200 members\n\n")
-    write("| family | quantity | melts | median error | 90th percentile | worst | cover of 90 % |\n")
+    write(
+        "| family | quantity | melts | median error | 90th percentile | worst | cover of 90 % |\n"
+    )
     write("|---|---|---|---|---|---|---|\n")
     for family in chosen:
         found = study(family, melts, kernel)
