@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from mwdlink.figures import shading, style
-from mwdlink.figures.columns import Absent, band, bare, numbers, positive, unit, words
+from mwdlink.figures.columns import Absent, band, bare, find, numbers, positive, unit, words
 from mwdlink.figures.words import interval_of, listed, number, percent, short, upper_first, value_of
 
 if TYPE_CHECKING:
@@ -75,6 +75,32 @@ def property_label(header: str) -> str:
         if of and of not in {"-", "1"}
         else property_words(header)
     )
+
+
+def target_header(table: DataFrame, target: Any) -> str | None:
+    """Header of the column a target speaks of (`viscosity_Pa_s@0.1` is `eta 0.1 [Pa s]`)."""
+    if not isinstance(target, Mapping) or not target.get("quantity"):
+        return None
+    quantity = str(target["quantity"])
+    name, _, at = quantity.partition("@")
+    stems = {
+        "viscosity_Pa_s": ("eta", "viscosity", "|eta*|"),
+        "eta0_Pa_s": ("eta0",),
+        "MFR_g_per_10min": ("MFR",),
+        "tan_delta": ("tan delta", "tan_delta"),
+        "crossover_omega_rad_per_s": ("crossover omega", "omega crossover"),
+    }
+    for stem in stems.get(name, (name,)):
+        ends = ("", " rad/s", " kg")
+        spellings = (
+            [f"{stem}{gap}{at}{end}" for gap in (" ", "@", " at ") for end in ends]
+            if at
+            else [stem]
+        )
+        found = find(table, *spellings)
+        if found is not None:
+            return found
+    return None
 
 
 @style.styled

@@ -245,6 +245,17 @@ def plot_tail(
                 gpc_high = (
                     float(m[np.isfinite(seen) & (w > floor)][-1]) if (w > floor).any() else None
                 )
+    smooth = numbers(joint, "GPC continuation dW/dlog10M", "continuation")
+    if smooth is not None:
+        ax.plot(
+            mass,
+            np.where(smooth > floor / 10, smooth, np.nan),
+            color=style.INK,
+            linewidth=1.0,
+            linestyle=style.DASHES[2],
+            label="continuation of the GPC",
+            zorder=2.6,
+        )
     style.log_axes(ax)
     ax.set_xlim(*limits(mass, tops, keep, share=3e-4))
     ax.set_ylim(floor, 1.6 * top)
@@ -256,7 +267,9 @@ def plot_tail(
         if end > gpc_high:
             shading.blind_range(ax, gpc_high, end, "blind for the GPC")
         if edges[1] is not None and edges[1] < right:
-            shading.blind_range(ax, max(edges[1], gpc_high), right, "blind for both")
+            shading.blind_range(
+                ax, max(edges[1], gpc_high), right, "GPC blind; sweep sees weight, not M"
+            )
     if beyond is not None:
         ax.axvline(beyond, color=style.INK, linewidth=1.0, zorder=2.2)
         said = f"beyond {short(beyond)} g/mol"

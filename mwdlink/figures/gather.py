@@ -6,8 +6,7 @@ can be drawn as well. What is absent is left out without a word.
 
 from __future__ import annotations
 
-import re
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Mapping
 from functools import partial
 from typing import TYPE_CHECKING, Any
 
@@ -28,8 +27,9 @@ from mwdlink.figures import (
     trend,
 )
 from mwdlink.figures.columns import Absent, bare, find, numbers
+from mwdlink.figures.extract import collect_budgets, level_of, table_of
 from mwdlink.figures.picture import Picture
-from mwdlink.figures.words import short, split_unit, upper_first, value_of
+from mwdlink.figures.words import upper_first, value_of
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -38,6 +38,10 @@ if TYPE_CHECKING:
 Tables = Mapping[str, pd.DataFrame]
 Record = Mapping[str, Any]
 MOST_PROPERTIES = 6
+KERNEL_QUANTITIES = (
+    ("Mw_g_per_mol", "weight-average molar mass Mw / g mol⁻¹", "g/mol"),
+    ("fraction", "weight fraction beyond", ""),
+)
 
 
 def _figure(ax: Axes) -> Figure:
@@ -71,100 +75,6 @@ class _Shelf:
         except Absent:
             return
         self.pictures[name] = Picture(name, figure, title, describe(), data)
-
-
-def level_of(record: Record) -> float:
-    """The probability of the result's intervals."""
-
-    def levels(x: Any) -> Iterator[float]:
-        if isinstance(x, Mapping):
-            if "level" in x and "low" in x and isinstance(x["level"], (int, float)):
-                yield float(x["level"])
-            for v in x.values():
-                yield from levels(v)
-        elif isinstance(x, (list, tuple)) and len(x) < 200:
-            for v in x:
-                yield from levels(v)
-
-    return next(levels(record), 0.9)
-
-
-def table_of(entries: Sequence[Mapping[str, Any]]) -> pd.DataFrame:
-    """A list of JSON objects as a table with units in its headers, intervals in columns beside."""
-    rows = []
-    for entry in entries:
-        row: dict[str, Any] = {}
-        for key, x in entry.items():
-            name, unit = split_unit(str(key))
-            name, of = name.replace("_", " "), f" [{unit}]" if unit else ""
-            if isinstance(x, Mapping) and "value" in x:
-                row |= {
-                    f"{name}{of}": x["value"],
-                    f"{name} low{of}": x.get("low"),
-                    f"{name} high{of}": x.get("high"),
-                }
-                if x.get("status"):
-                    row[f"{name} status"] = x["status"]
-            elif isinstance(x, Mapping):
-                for k, v in x.items():
-                    if isinstance(v, Mapping):
-                        row |= {
-                            f"{name} {k}": v.get("value"),
-                            f"{name} {k} low": v.get("low"),
-                            f"{name} {k} high": v.get("high"),
-                        }
-                    else:
-                        row[f"{name} {k}"] = v
-            else:
-                row[f"{name}{of}"] = x
-        rows.append(row)
-    return pd.DataFrame(rows)
-
-
-def collect_budgets(record: Record) -> dict[str, dict[str, float]]:
-    """Name to shares of variance of every quantity that carries a budget."""
-    names = {
-        "Mn": "Mn",
-        "Mw": "Mw",
-        "Mz": "Mz",
-        "Mw_within_window": "Mw in window",
-        "eta0": "η₀",
-        "Je0": "Je⁰",
-        "time_law_factor": "time law",
-        "fraction": "tail",
-        "omega": "crossover ω",
-        "G": "crossover G",
-    }
-
-    def plain(key: str) -> str:
-        name = split_unit(key)[0]
-        at = re.fullmatch(r"(eta|tan_delta|MFR)_([\d.eE+-]+)", name)
-        if at:
-            return f"{({'eta': 'η', 'tan_delta': 'tan δ'}).get(at[1], at[1])} at {at[2]}"
-        return names.get(name, name.replace("_", " "))
-
-    out: dict[str, dict[str, float]] = {}
-
-    def take(key: str, entry: Any, name: str = "") -> None:
-        if isinstance(entry, Mapping) and entry.get("budget"):
-            shares = {str(k): float(v or 0.0) for k, v in entry["budget"].items()}
-            if sum(shares.values()) > 0:
-                out.setdefault(name or plain(key), shares)
-
-    for group in ("averages", "terminal", "tail", "bands"):
-        entries = record.get(group)
-        if isinstance(entries, Mapping):
-            for key, entry in entries.items():
-                take(key, entry)
-                if group == "bands" and isinstance(entry, Mapping):
-                    for k, v in entry.items():
-                        take(k, v)
-    take("time_law_factor", record.get("time_law_factor"))
-    for entry in record.get("above") or []:
-        mass = value_of(entry.get("M_g_per_mol"))
-        if mass is not None:
-            take("above", entry.get("fraction"), f"above {short(mass)}")
-    return dict(list(out.items())[:8])
 
 
 def _distribution(shelf: _Shelf) -> None:
@@ -279,14 +189,16 @@ def _curves(shelf: _Shelf) -> None:
 def _choices(shelf: _Shelf) -> None:
     """Kernels, smoothing and budget of an inversion."""
     kernels = [k for k in shelf.record.get("kernels") or [] if isinstance(k, Mapping)]
-    if any(value_of(k.get("Mw_g_per_mol")) is not None for k in kernels):
-        shelf.add(
-            "kernels",
-            "The answer by each kernel",
-            table_of(kernels),
-            lambda: choices.plot_kernels(kernels),
-            lambda: choices.describe_kernels(kernels),
-        )
+    for key, label, unit in KERNEL_QUANTITIES:
+        if any(value_of(k.get(key)) is not None for k in kernels):
+            shelf.add(
+                "kernels",
+                "The answer by each kernel",
+                table_of(kernels),
+                partial(choices.plot_kernels, kernels, key=key, label=label),
+                partial(choices.describe_kernels, kernels, key, unit),
+            )
+            break
     budgets = collect_budgets(shelf.record)
     if budgets:
         data = pd.DataFrame.from_dict(budgets, orient="index").rename_axis("quantity").reset_index()
@@ -374,32 +286,6 @@ def _rest(shelf: _Shelf) -> None:
         )
 
 
-def target_header(table: pd.DataFrame, target: Any) -> str | None:
-    """Header of the column a target speaks of (`viscosity_Pa_s@0.1` is `eta 0.1 [Pa s]`)."""
-    if not isinstance(target, Mapping) or not target.get("quantity"):
-        return None
-    quantity = str(target["quantity"])
-    name, _, at = quantity.partition("@")
-    stems = {
-        "viscosity_Pa_s": ("eta", "viscosity", "|eta*|"),
-        "eta0_Pa_s": ("eta0",),
-        "MFR_g_per_10min": ("MFR",),
-        "tan_delta": ("tan delta", "tan_delta"),
-        "crossover_omega_rad_per_s": ("crossover omega", "omega crossover"),
-    }
-    for stem in stems.get(name, (name,)):
-        ends = ("", " rad/s", " kg")
-        spellings = (
-            [f"{stem}{gap}{at}{end}" for gap in (" ", "@", " at ") for end in ends]
-            if at
-            else [stem]
-        )
-        found = find(table, *spellings)
-        if found is not None:
-            return found
-    return None
-
-
 def _blend(shelf: _Shelf) -> None:
     _fractions(shelf)
     _distribution(shelf)
@@ -412,7 +298,7 @@ def _fractions(shelf: _Shelf) -> None:
     if table is None or blend.fraction_header(table) is None:
         return
     target = shelf.record.get("target")
-    aimed = target_header(table, target)
+    aimed = blend.target_header(table, target)
     headers = blend.property_headers(table)
     if aimed is not None:
         headers = [aimed, *[h for h in headers if h != aimed]]
@@ -541,6 +427,14 @@ def _calibrate(shelf: _Shelf) -> None:
             table,
             lambda: support.plot_parity(table),
             lambda: support.describe_parity(table),
+        )
+    if support.sample_columns(table):
+        shelf.add(
+            "samples",
+            "The fitted moduli against each sample",
+            table,
+            lambda: support.plot_samples(table),
+            lambda: support.describe_samples(table),
         )
     if moduli.residual_columns(table):
         shelf.add(

@@ -17,7 +17,7 @@ from mwdlink.figures import (
     trend,
 )
 from mwdlink.figures.columns import Absent
-from mwdlink.figures.gather import level_of
+from mwdlink.figures.extract import level_of
 from mwdlink.figures.words import value_of
 
 if TYPE_CHECKING:
@@ -100,7 +100,10 @@ def plot_result(result: Any, ax: Axes | None = None) -> Axes:
     if command == "datasheet":
         return claims.plot_claims(record.get("claims") or [], ax=ax)
     if command == "calibrate":
-        return support.plot_parity(table("residuals.csv"), ax=ax)
+        samples = table("residuals.csv")
+        if support.has_pairs(samples):
+            return support.plot_parity(samples, ax=ax)
+        return support.plot_samples(samples, ax=ax)
     if command == "batch":
         return trend.plot_trend(table("summary.csv"), ax=ax)
     raise Absent(f"no picture is known for {command!r}")

@@ -118,12 +118,9 @@ def plot_moduli(
                     zorder=1.5,
                 )
                 tops.append(y[good].max())
-    for table in (model,):
-        if table is None:
-            continue
-        x = numbers(table, *FREQUENCY)
-        if x is None:
-            continue
+    x = numbers(model, *FREQUENCY)
+    if model is not None and x is not None:
+        table = model
         banded = False
         for name, symbol in SYMBOLS:
             found, line, low_high = columns_of(table, name)
@@ -144,6 +141,18 @@ def plot_moduli(
                     zorder=1,
                 )
                 banded = True
+            other = numbers(table, f"{name} without tail", f"{name} without the tail")
+            if other is not None:
+                good = positive(x, other)
+                ax.plot(
+                    x[good],
+                    other[good],
+                    color=style.INK,
+                    linewidth=1.0,
+                    linestyle=style.DASHES[2],
+                    label="without the tail" if name == "G'" else None,
+                    zorder=1.8,
+                )
             if line is not None:
                 good = positive(x, line)
                 said = "model" if (found is not None or data is not None) else ""

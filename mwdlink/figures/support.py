@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from mwdlink.figures import shading, style
-from mwdlink.figures.columns import Absent, find, numbers, positive, words
+from mwdlink.figures.columns import Absent, numbers, positive, words
 from mwdlink.figures.words import number, value_of
 
 if TYPE_CHECKING:
@@ -43,7 +43,9 @@ def plot_explanations(explanations: Sequence[Mapping[str, Any]], *, ax: Axes | N
             edgecolor=style.INK,
             linewidth=0.7,
         )
-        ax.text(scale * share, row, f" {number(scale * share, 2)}", va="center", fontsize=8.0)
+        tiny = scale == 100.0 and 0 < scale * share < 0.1
+        said = "less than 0.1" if tiny else number(scale * share, 2)
+        ax.text(scale * share, row, f" {said}", va="center", fontsize=8.0)
     ax.set_yticks(range(len(explanations)), [str(e.get("name")) for e in explanations])
     ax.set_ylim(len(explanations) - 0.5, -0.5)
     ax.tick_params(axis="y", which="both", length=0)
@@ -63,7 +65,11 @@ def describe_explanations(explanations: Sequence[Mapping[str, Any]]) -> str:
     parts = []
     for e in explanations:
         share = value_of(e.get("support"))
-        parts.append(f"{e.get('name')} {'not weighed' if share is None else number(share, 2)}")
+        if share is None:
+            parts.append(f"{e.get('name')} not weighed")
+        else:
+            tiny = 0 < share < 1e-3
+            parts.append(f"{e.get('name')} {'less than 0.001' if tiny else number(share, 2)}")
     return f"Support of each explanation by the data: {'; '.join(parts)}." if parts else ""
 
 
@@ -121,7 +127,9 @@ def plot_parity(table: DataFrame, *, ax: Axes | None = None) -> Axes:
 
 
 def has_pairs(table: DataFrame) -> bool:
-    return any(find(table, *m) and find(table, *f) for m, f, _ in PAIRS)
+    return any(
+        numbers(table, *m) is not None and numbers(table, *f) is not None for m, f, _ in PAIRS
+    )
 
 
 def describe_parity(table: DataFrame) -> str:
@@ -135,3 +143,60 @@ def describe_parity(table: DataFrame) -> str:
                 f"{number(np.abs(off).max(), 2)} decades."
             )
     return ""
+
+
+def sample_columns(table: DataFrame) -> dict[str, tuple[np.ndarray, np.ndarray | None]]:
+    """Bias [decades] of each modulus by sample, with its scatter where known."""
+    out = {}
+    for name, symbol in (("G'", "G′"), ("G''", "G″")):
+        bias = numbers(table, f"bias {name}", f"{name} bias")
+        if bias is not None:
+            out[symbol] = bias, numbers(table, f"scatter {name}", f"{name} scatter")
+    return out
+
+
+@style.styled
+def plot_samples(table: DataFrame, *, ax: Axes | None = None) -> Axes:
+    """How far the fitted moduli lie from each sample's: a dot for the bias, a line for the scatter.
+
+    Parameters
+    ----------
+    table : DataFrame
+        `sample`, `bias G' [decades]`, `scatter G' [decades]` and the same for `G''`.
+    """
+    columns = sample_columns(table)
+    names = words(table, "sample", "name")
+    if not columns or names is None:
+        raise Absent("the table needs the columns sample and bias G' [decades]")
+    ax = style.new_axes(ax, height=30.0 + 7.5 * max(len(names), 2))
+    rows = np.arange(len(names), dtype=float)
+    top = 0.02
+    for i, (symbol, (bias, scatter)) in enumerate(columns.items()):
+        aside = rows + (i - 0.5) * 0.26
+        look = style.data_look(i)
+        if scatter is not None:
+            ax.hlines(aside, bias - scatter, bias + scatter, color=look["color"], linewidth=1.2)
+            top = max(top, float(np.nanmax(np.abs(bias) + scatter)))
+        ax.plot(bias, aside, **look | {"markerfacecolor": style.PAPER}, label=symbol)
+        top = max(top, float(np.nanmax(np.abs(bias))))
+    ax.axvline(0.0, color=style.SOFT, linewidth=0.9, linestyle=(0, (4, 2)), zorder=0.5)
+    ax.set_yticks(rows, names)
+    ax.set_ylim(len(names) - 0.5, -0.5)
+    ax.tick_params(axis="y", which="both", length=0)
+    ax.set_xlim(-1.15 * top, 1.15 * top)
+    ax.set_xlabel("fitted against measured / decades")
+    style.legend_above(ax)
+    return ax
+
+
+def describe_samples(table: DataFrame) -> str:
+    """The picture in words."""
+    names = words(table, "sample", "name") or []
+    parts = []
+    for symbol, (bias, _) in sample_columns(table).items():
+        if np.isfinite(bias).any():
+            worst = int(np.nanargmax(np.abs(bias)))
+            parts.append(
+                f"{symbol} is off most in {names[worst]}, {number(bias[worst], 2)} decades"
+            )
+    return f"{'; '.join(parts)}." if parts else ""

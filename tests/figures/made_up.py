@@ -552,6 +552,10 @@ def blendcheck() -> MadeUp:
 def tail() -> MadeUp:
     joint = distribution_table(tail=0.03)
     gpc = distribution_table()
+    joint["GPC continuation dW/dlog10M"] = gpc["dW/dlog10M"]
+    fit = fit_table()
+    fit["G' without tail [Pa]"] = 0.7 * fit["G' model [Pa]"]
+    fit["G'' without tail [Pa]"] = 0.8 * fit["G'' model [Pa]"]
     gpc = gpc[gpc["M [g/mol]"] < 1.2e6][["M [g/mol]", "dW/dlog10M"]]
     record = {
         "tail": {
@@ -560,6 +564,21 @@ def tail() -> MadeUp:
             "excess": uncertain(0.025, 0.3),
             "detection_limit": 0.003,
         },
+        "window": {"M_low_g_per_mol": 1.1e4, "M_high_g_per_mol": 4e6},
+        "kernels": [
+            {
+                "kernel": "reptation",
+                "chi2_per_point": 0.97,
+                "admissible": True,
+                "fraction": uncertain(0.03, 0.2),
+            },
+            {
+                "kernel": "power-law",
+                "chi2_per_point": 3.1,
+                "admissible": False,
+                "fraction": uncertain(0.05, 0.2),
+            },
+        ],
         "time_law_factor": uncertain(1.06, 0.05),
         "explanations": [
             {"name": "tail", "support": 0.93},
@@ -572,9 +591,7 @@ def tail() -> MadeUp:
         "advice": ["Measure at a second temperature."],
         "warnings": [],
     }
-    return MadeUp(
-        "tail", record, {"distribution.csv": joint, "gpc_only.csv": gpc, "fit.csv": fit_table()}
-    )
+    return MadeUp("tail", record, {"distribution.csv": joint, "gpc_only.csv": gpc, "fit.csv": fit})
 
 
 def datasheet() -> MadeUp:
@@ -608,6 +625,10 @@ def calibrate() -> MadeUp:
             "Mw [g/mol]": [5e4, 1e5, 2e5, 4e5],
             "eta0 measured [Pa s]": law * [1.05, 0.94, 1.02, 0.99],
             "eta0 law [Pa s]": law,
+            "bias G' [decades]": [0.01, -0.02, 0.0, 0.004],
+            "scatter G' [decades]": [0.03, 0.02, 0.02, 0.05],
+            "bias G'' [decades]": [0.0, -0.01, 0.01, 0.004],
+            "scatter G'' [decades]": [0.02, 0.02, 0.03, 0.02],
         }
     )
     return MadeUp(

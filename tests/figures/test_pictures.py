@@ -20,9 +20,9 @@ WANTED = {
     "rest": {"rest"},
     "blend": {"fractions", "distribution", "moduli", "flow", "spectrum", "relaxation"},
     "blendcheck": {"recovered", "residuals", "rules"},
-    "tail": {"distribution", "moduli", "residuals", "explanations", "budget"},
+    "tail": {"distribution", "moduli", "residuals", "explanations", "budget", "kernels"},
     "datasheet": {"claims"},
-    "calibrate": {"law"},
+    "calibrate": {"law", "samples"},
     "batch": {"trend-mw"},
 }
 
@@ -102,7 +102,8 @@ def test_window_and_blind_ranges_are_named(drawn):
     words = " ".join(
         w.replace("\n", " ") for w, _ in shown_texts(drawn["tail"]["distribution"].figure)
     )
-    assert "blind for the GPC" in words and "3.1 % beyond" in words
+    assert "blind for the GPC" in words and "sweep sees weight, not M" in words
+    assert "3.1 % beyond" in words
 
 
 def test_bounds_are_marked_as_bounds(drawn):
