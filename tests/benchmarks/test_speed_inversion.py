@@ -3,9 +3,12 @@
 from __future__ import annotations
 
 import importlib.util
+import os
 import subprocess
 import sys
 from pathlib import Path
+
+import mwdlink
 
 HERE = Path(__file__).parent
 
@@ -18,17 +21,14 @@ def script():
     return module
 
 
-def test_the_general_solver_solves_the_same_problem(full):
-    """Derived: both ends of the objective agree to a tenth; our job is the faster by far."""
+def test_the_general_solver_solves_the_same_problem():
+    """Derived: both ends of the objective agree to a tenth."""
     s = script()
     problem = s.make_problem(nodes=40, frequencies=16)
     found = s.scan(problem)
     k = len(found.fits) // 2
     other = s.general_solver(problem, float(found.smoothing[k]), s.good_start(problem), None)
     assert abs(other - found.fits[k].objective) < 0.1
-    job = s.job_ratio(*((4, 5) if full else (1, 1)))
-    print(f"job {job.ours:.2f} s, general solver {job.cold:.1f} s: ratio {job.cold / job.ours:.0f}")
-    assert job.cold > 5 * job.ours
 
 
 def test_ratios(full):
@@ -36,14 +36,21 @@ def test_ratios(full):
 
     In a process of its own, so that one thread is one thread whatever was imported before.
     """
+    solves, repeats = (4, 7) if full else (1, 1)
     code = (
         "import speed_inversion as s\n"
-        "j = s.job_ratio(*%s)\n"
+        f"j = s.job_ratio({solves}, {repeats})\n"
         "a, b = s.step_ratio()\n"
         "print(j.cold / j.ours, a / b)\n"
-    ) % ((4, 7) if full else (1, 1),)
+    )
+    paths = [str(Path(mwdlink.__file__).parents[1]), os.environ.get("PYTHONPATH", "")]
+    environment = os.environ | {"PYTHONPATH": os.pathsep.join(filter(None, paths))}
     done = subprocess.run(
-        [sys.executable, "-W", "ignore", "-c", code], cwd=HERE, capture_output=True, text=True
+        [sys.executable, "-W", "ignore", "-c", code],
+        cwd=HERE,
+        env=environment,
+        capture_output=True,
+        text=True,
     )
     assert done.returncode == 0, done.stderr
     job, step = (float(x) for x in done.stdout.split()[-2:])
