@@ -94,7 +94,7 @@ class Relaxation:
         reach = REACH_LONG * 10.0 ** -np.floor(np.log10(low) + 1e-9)
         shortest = min(
             REACH_SHORT * 10.0 ** -np.ceil(np.log10(high) - 1e-9),
-            1e-3 * (self._time_of_share(0.5) or longest),
+            1e-6 * (self._time_of_share(0.5) or longest),
         )
         key = (shortest, min(longest, reach))
         if key not in self._kept:

@@ -52,6 +52,11 @@ def spectrum_of(relaxation: Relaxation, tau_low: float | None = None) -> Spectru
     d, melt, model = relaxation.distribution, relaxation.melt, relaxation.model
     carried = relaxation.times[np.cumsum(d.mass) > 1e-4]
     low = float(carried.min()) * 1e-3 if tau_low is None else float(tau_low)
+    if model.rouse:
+        modes, times = rouse_mode_table(d.molar_mass, melt, 1.0 / low)
+        modes, times = (modes * d.mass[:, None]).ravel(), times.ravel()
+        slowest_rouse = float(times[modes > 1e-12 * modes.max()].max())
+        low = min(low, 0.1 * slowest_rouse)
     high = float(relaxation.times.max()) * 100.0
     low = min(low, high / 1e4)
     t = log_grid(low * 1e-2, high, TIMES_PER_DECADE)
@@ -69,13 +74,8 @@ def spectrum_of(relaxation: Relaxation, tau_low: float | None = None) -> Spectru
         tau, strength = np.array([low]), np.zeros(1)
     if model.rouse:
         # the list goes on where Rouse modes are slower than the network, as in unentangled melts
-        modes, times = rouse_mode_table(d.molar_mass, melt, 1.0 / tau[0])
-        modes = (modes * d.mass[:, None]).ravel()
-        times = times.ravel()
-        seen = modes > 1e-12 * modes.max()
-        slowest = float(times[seen].max())
-        if slowest > tau[-1]:
-            more = log_grid(tau[-1], 1.01 * slowest, MODES_PER_DECADE)[1:]
+        if slowest_rouse > tau[-1]:
+            more = log_grid(tau[-1], 1.01 * slowest_rouse, MODES_PER_DECADE)[1:]
             tau = np.concatenate([tau, more])
             strength = np.concatenate([strength, np.zeros(more.size)])
         strength = strength + shared_by_neighbours(tau, times, modes)
@@ -91,15 +91,18 @@ def shared_by_neighbours(tau: np.ndarray, times: np.ndarray, modes: np.ndarray) 
     tau : ndarray of shape (n_k,)
         [s], ascending.
     times, modes : ndarray of shape (n,)
-        Times [s] and strengths [Pa]; modes outside the list are left out.
+        Times [s] and strengths [Pa]. Faster modes join the first with g tau kept, slower ones are
+        left out.
 
     Returns
     -------
     ndarray of shape (n_k,)
         [Pa], >= 0.
     """
-    inside = (times >= tau[0]) & (times <= tau[-1]) & (modes > 0)
+    inside = (times <= tau[-1]) & (modes > 0)
     times, modes = times[inside], modes[inside]
+    modes = modes * np.minimum(times / tau[0], 1.0)
+    times = np.maximum(times, tau[0])
     if tau.size < 2:
         return np.array([modes.sum()])
     i = np.clip(np.searchsorted(tau, times) - 1, 0, tau.size - 2)

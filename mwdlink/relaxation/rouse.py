@@ -27,8 +27,9 @@ def rouse_modes(
 
     Per chain tau_R = tau_e Z^2; mode p adds (G_e/Z)[s_p (1/5) exp(-p^2 t/tau_R) + (1 - s_p)
     exp(-2 p^2 t/tau_R)], s_p = clip(Z - p, 0, 1), G_e/Z = G_N M_e/M, p from 1 to the number of
-    repeat units; cut where tau_R/(2 p^2) < 0.01/omega_max. Long runs of modes are gathered into
-    fewer, with their viscosity kept.
+    repeat units. Long runs of modes are gathered into fewer, and those with tau_R/(2 p^2) <
+    0.01/omega_max, all but viscous up to omega_max, into one that keeps their sums of g tau and
+    g tau^2. The viscosity is kept exactly.
 
     Parameters
     ----------
@@ -64,14 +65,22 @@ def rouse_mode_table(
         [Pa] (0 where a chain does not use the place), [s].
     """
     z, tau_r, front, last = _chain(molar_mass, melt)
-    if omega_max is not None:
-        last = np.minimum(last, np.maximum(np.floor(np.sqrt(50.0 * tau_r * omega_max)), 1.0))
+    seen = last if omega_max is None else np.floor(np.sqrt(50.0 * tau_r * omega_max))
     strength, tau = [], []
+    viscous, second = np.zeros_like(z), np.zeros_like(z)
     for first, end, share, fold in _runs(z, last):
         if np.any(end >= first):
-            p, count = _quadrature(first, end)
+            p, count = _quadrature(first, np.minimum(end, seen))
             strength.append((front * share)[:, None] * count)
             tau.append(tau_r[:, None] / (fold * p * p))
+            fast = np.maximum(first, seen + 1)
+            viscous += share * _power_sum(fast, end, 1) / fold
+            second += share * _power_sum(fast, end, 2) / fold**2
+    held = viscous > 0
+    if np.any(held):
+        one = np.where(held, tau_r * second / np.where(held, viscous, 1.0), tau_r)
+        strength.append((front * tau_r * viscous / one)[:, None])
+        tau.append(one[:, None])
     return np.concatenate(strength, axis=1), np.concatenate(tau, axis=1)
 
 
@@ -144,7 +153,7 @@ def rouse_relaxation(
 ) -> np.ndarray:
     """Relaxation modulus of the Rouse part [Pa], shape (n_t, n_M); see `rouse_moduli`.
 
-    Unless `omega_max` is given, modes faster than the shortest time are left out.
+    Unless `omega_max` is given, modes faster than a hundredth of the shortest time are left out.
     """
     t = np.asarray(t, dtype=float)
     m = np.atleast_1d(np.asarray(molar_mass, dtype=float))

@@ -132,7 +132,7 @@ def test_fluctuation_kernel_is_anchored(beta: float, mass: float) -> None:
 
 
 def test_fluctuations_shorten_and_vanish() -> None:
-    """Derived: with M1 far below M the kernel is reptation; fluctuations lower c, never raise it."""
+    """Derived: with M1 far below M the kernel is reptation; fluctuations only lower c."""
     tube = get_kernel("reptation").constant(2.0, WITH_M1, np.array([1e5]))[0]
     kernel = get_kernel("fluctuation")
     none = dataclasses.replace(HDPE, fluctuation_molar_mass=1e-3)
