@@ -125,9 +125,14 @@ def run(arguments: list[str] | None = None) -> NoReturn:
         signal.signal(signal.SIGTERM, _terminate)
     status = _status(arguments)
     try:
-        sys.stdout.flush()
+        if sys.stdout is not None:  # it may have been closed by the caller
+            sys.stdout.flush()
     except BrokenPipeError:
         _reader_left()
+    except OSError as error:
+        _say(f"Error: the output could not be written: {error.strerror}.")
+        _reader_left()
+        status = status or UNEXPECTED
     sys.exit(status)
 
 
@@ -158,6 +163,9 @@ def _status(arguments: list[str] | None) -> int:
         return TERMINATED
     except SystemExit as leaving:
         return leaving.code if isinstance(leaving.code, int) else UNEXPECTED
+    except OSError as error:
+        _say(f"Error: {error.filename or 'the output'}: {error.strerror or error}.")
+        return _with_traceback(UNEXPECTED)
     except Exception as error:
         first = (str(error).strip().splitlines() or ["no message"])[0]
         _say(

@@ -170,6 +170,16 @@ def test_reader_that_leaves() -> None:
     assert done.stderr == ""
 
 
+@pytest.mark.skipif(not Path("/dev/full").exists(), reason="no /dev/full")
+def test_output_that_cannot_be_written() -> None:
+    """Common practice: a full disk under standard output is one line and a status, no traceback."""
+    for arguments, status in (("> /dev/full", 1), (">&-", 0)):
+        line = f"'{sys.executable}' -m mwdlink polymers hdpe {arguments}"
+        done = subprocess.run(["bash", "-c", line], capture_output=True, text=True)
+        assert done.returncode == status
+        assert "Traceback" not in done.stderr
+
+
 def test_completion() -> None:
     """Interface: the shell completes commands and polymer names."""
 
