@@ -49,6 +49,8 @@ class Curve:
         Number of data N.
     chosen : int
     rule : str
+    axis : str
+        What `smoothing` counts: `smoothing` or `parts`.
     """
 
     smoothing: np.ndarray
@@ -59,19 +61,23 @@ class Curve:
     points: int
     chosen: int = 0
     rule: str = ""
+    axis: str = "smoothing"
 
     def columns(self) -> dict[str, Any]:
         """Columns of the table of the scan."""
-        chosen = np.arange(self.smoothing.size) == self.chosen
-        return {
-            "lambda [-]": self.smoothing,
-            "chi2 [-]": self.chi2,
+        score = gcv(self)
+        out = {
+            f"{self.axis} [-]": self.smoothing,
+            "chi2 per point [-]": self.chi2 / self.points,
             "roughness [-]": self.roughness,
-            "degrees of freedom [-]": self.freedom,
-            "ln evidence [-]": self.log_evidence,
-            "gcv [-]": gcv(self),
-            "chosen": chosen,
+            "freedom [-]": self.freedom,
+            "log evidence [-]": self.log_evidence,
+            "GCV [-]": np.where(np.isfinite(score), score, np.nan),
+            "chosen": np.arange(self.smoothing.size) == self.chosen,
         }
+        if self.axis == "parts":
+            del out["roughness [-]"], out["GCV [-]"]
+        return out
 
 
 @dataclass(frozen=True)

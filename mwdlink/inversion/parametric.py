@@ -292,7 +292,7 @@ def fit_mixture(
     Returns
     -------
     MethodFit
-        `curve` has one row a number of parts (its `smoothing` column is the number).
+        `curve` has one row a number of parts.
     """
     families = [Mixture(problem.window, k) for k in range(1, (parts or MAX_PARTS) + 1)]
     found: list[_Found] = []
@@ -335,6 +335,7 @@ def fit_mixture(
         problem.data.size,
         index,
         "evidence",
+        "parts",
     )
     return MethodFit(
         "mixture",

@@ -161,6 +161,9 @@ def test_tikhonov_with_every_way_of_choosing(problems, rule):
     for d, problem in (problems["log-normal"], problems["pair"]):
         fit = fit_tikhonov(problem, choose_by=rule)
         assert fit.converged and fit.curve.rule == rule
+        table = fit.curve.columns()
+        assert table["chosen"].sum() == 1 and len(table["smoothing [-]"]) == 21
+        assert fit.smoothing == table["smoothing [-]"][table["chosen"]][0]
         mw, mz = averages(problem, fit.w)
         assert mw == pytest.approx(d.Mw, rel=0.02)
         assert mz == pytest.approx(d.Mz, rel=0.06)
@@ -217,6 +220,8 @@ def test_mixture_counts_its_parts(problems):
         d, problem = problems[name]
         fit = fit_mixture(problem, members=10)
         assert fit.converged and fit.curve.chosen + 1 == parts
+        table = fit.curve.columns()
+        assert list(table["parts [-]"]) == [1, 2, 3, 4] and "roughness [-]" not in table
         mw, mz = averages(problem, fit.w)
         assert mw == pytest.approx(d.Mw, rel=0.02) and mz == pytest.approx(d.Mz, rel=0.05)
         assert fit.members.shape == (10, problem.size)
