@@ -15,7 +15,6 @@ from typing import Any, NoReturn
 import click
 
 import mwdlink
-from mwdlink.errors import InputError, ModelError, MwdlinkError, NotConverged
 
 # what each command is for, in the order a newcomer meets them; its code is mwdlink/cli/NAME.py
 COMMANDS = {
@@ -146,15 +145,6 @@ def _status(arguments: list[str] | None) -> int:
     except click.ClickException as error:
         error.show()
         return error.exit_code
-    except (InputError, ModelError) as error:
-        _say(f"Error: {error}")
-        return _with_traceback(BAD_INPUT)
-    except NotConverged as error:
-        _say(f"Did not converge: {error}")
-        return _with_traceback(NOT_DONE)
-    except MwdlinkError as error:
-        _say(f"Error: {error}")
-        return _with_traceback(UNEXPECTED)
     except KeyboardInterrupt:
         _say("Interrupted.")
         return BROKEN_OFF
@@ -163,16 +153,32 @@ def _status(arguments: list[str] | None) -> int:
         return TERMINATED
     except SystemExit as leaving:
         return leaving.code if isinstance(leaving.code, int) else UNEXPECTED
-    except OSError as error:
-        _say(f"Error: {error.filename or 'the output'}: {error.strerror or error}.")
-        return _with_traceback(UNEXPECTED)
     except Exception as error:
-        first = (str(error).strip().splitlines() or ["no message"])[0]
-        _say(
-            f"Unexpected fault ({type(error).__name__}: {first}). Please report it to the "
-            "maintainers with the command line, the input and what MWDLINK_DEBUG=1 prints."
-        )
-        return _with_traceback(UNEXPECTED)
+        return _with_traceback(_explained(error))
+
+
+def _explained(error: Exception) -> int:
+    """Say in a line what went wrong; gives the status."""
+    from mwdlink.errors import InputError, ModelError, MwdlinkError, NotConverged
+
+    if isinstance(error, (InputError, ModelError)):
+        _say(f"Error: {error}")
+        return BAD_INPUT
+    if isinstance(error, NotConverged):
+        _say(f"Did not converge: {error}")
+        return NOT_DONE
+    if isinstance(error, MwdlinkError):
+        _say(f"Error: {error}")
+        return UNEXPECTED
+    if isinstance(error, OSError):
+        _say(f"Error: {error.filename or 'the output'}: {error.strerror or error}.")
+        return UNEXPECTED
+    first = (str(error).strip().splitlines() or ["no message"])[0]
+    _say(
+        f"Unexpected fault ({type(error).__name__}: {first}). Please report it to the "
+        "maintainers with the command line, the input and what MWDLINK_DEBUG=1 prints."
+    )
+    return UNEXPECTED
 
 
 def _with_traceback(status: int) -> int:

@@ -115,4 +115,3 @@ def command(
         model=result.model,
         seed=seed,
     )
-
