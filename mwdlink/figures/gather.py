@@ -109,11 +109,11 @@ def _moduli(shelf: _Shelf, source: str, data: pd.DataFrame | None = None) -> Non
     )
 
 
-def _fit(shelf: _Shelf) -> None:
-    table = shelf.table("fit.csv")
+def _fit(shelf: _Shelf, source: str = "fit.csv") -> None:
+    table = shelf.table(source)
     if table is None:
         return
-    _moduli(shelf, "fit.csv")
+    _moduli(shelf, source)
     if find(table, *decay.TIME) is not None:
         shelf.add(
             "relaxation",
@@ -465,6 +465,22 @@ def _batch(shelf: _Shelf) -> None:
         )
 
 
+def _consistency(shelf: _Shelf) -> None:
+    _fit(shelf, "residuals.csv")
+
+
+def _drift(shelf: _Shelf) -> None:
+    table = shelf.table("drift.csv")
+    if table is not None:
+        shelf.add(
+            "drift",
+            "Change between the sweeps before and after",
+            table,
+            lambda: moduli.plot_drift(table),
+            lambda: moduli.describe_drift(table),
+        )
+
+
 _BY_COMMAND: dict[str, Callable[[_Shelf], None]] = {
     "predict": _predict,
     "invert": _invert,
@@ -477,6 +493,8 @@ _BY_COMMAND: dict[str, Callable[[_Shelf], None]] = {
     "datasheet": _datasheet,
     "calibrate": _calibrate,
     "batch": _batch,
+    "consistency": _consistency,
+    "drift": _drift,
 }
 
 

@@ -106,4 +106,8 @@ def plot_result(result: Any, ax: Axes | None = None) -> Axes:
         return support.plot_samples(samples, ax=ax)
     if command == "batch":
         return trend.plot_trend(table("summary.csv"), ax=ax)
+    if command == "consistency":
+        return moduli.plot_moduli(table("residuals.csv"), ax=ax)
+    if command == "drift":
+        return moduli.plot_drift(table("drift.csv"), ax=ax)
     raise Absent(f"no picture is known for {command!r}")

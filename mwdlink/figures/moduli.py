@@ -360,3 +360,51 @@ def describe_phase_angle(curves: dict[str, DataFrame]) -> str:
         "Where all points fall on one curve, one shift in frequency brings the temperatures "
         "together."
     )
+
+
+def drift_columns(table: DataFrame) -> dict[str, np.ndarray]:
+    """Ratio after to before of each modulus."""
+    out = {}
+    for name, symbol in SYMBOLS:
+        ratio = numbers(table, f"{name} after/before", f"{name} after over before")
+        if ratio is not None:
+            out[symbol] = ratio
+    return out
+
+
+@style.styled
+def plot_drift(table: DataFrame, *, ax: Axes | None = None) -> Axes:
+    """Change of the moduli between a sweep before and one after, by frequency.
+
+    Parameters
+    ----------
+    table : DataFrame
+        `omega [rad/s]`, `G' after/before [-]`, `G'' after/before [-]`.
+    """
+    x, columns = numbers(table, *FREQUENCY), drift_columns(table)
+    if x is None or not columns:
+        raise Absent("the table needs omega [rad/s] and G' after/before [-]")
+    ax = style.new_axes(ax, height=64.0)
+    top = 1.0
+    for i, (symbol, ratio) in enumerate(columns.items()):
+        change = 100.0 * (ratio - 1.0)
+        ax.plot(x, change, **style.data_look(i), label=symbol)
+        top = max(top, float(np.nanmax(np.abs(change))))
+    ax.axhline(0.0, color=style.INK, linewidth=0.8, zorder=1)
+    style.log_axis(ax.xaxis)
+    good = positive(x)
+    ax.set_xlim(*shading.span_of([x[good].min(), x[good].max()], 0.03))
+    ax.set_ylim(-1.2 * top, 1.2 * top)
+    ax.set_xlabel(X_LABEL)
+    ax.set_ylabel("change after the test / %")
+    style.legend_above(ax)
+    return ax
+
+
+def describe_drift(table: DataFrame) -> str:
+    """The picture in words."""
+    parts = [
+        f"{symbol} changed by {number(100 * (np.nanmean(ratio) - 1), 2)} % on average"
+        for symbol, ratio in drift_columns(table).items()
+    ]
+    return f"{upper_first('; '.join(parts))}." if parts else ""

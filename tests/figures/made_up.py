@@ -655,6 +655,22 @@ def batch() -> MadeUp:
     return MadeUp("batch", record, {"summary.csv": pd.DataFrame(out)})
 
 
+def consistency() -> MadeUp:
+    return MadeUp("consistency", {"warnings": []}, {"residuals.csv": fit_table()})
+
+
+def drift() -> MadeUp:
+    omega = np.logspace(-2, 2, 21)
+    table = pd.DataFrame(
+        {
+            "omega [rad/s]": omega,
+            "G' after/before [-]": 0.9 + 0.02 * np.log10(omega),
+            "G'' after/before [-]": 0.97 + 0.01 * np.log10(omega),
+        }
+    )
+    return MadeUp("drift", {"warnings": []}, {"drift.csv": table})
+
+
 ALL = {
     f.__name__: f
     for f in (
@@ -669,5 +685,7 @@ ALL = {
         datasheet,
         calibrate,
         batch,
+        consistency,
+        drift,
     )
 }

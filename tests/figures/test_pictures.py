@@ -24,6 +24,8 @@ WANTED = {
     "datasheet": {"claims"},
     "calibrate": {"law", "samples"},
     "batch": {"trend-mw"},
+    "consistency": {"moduli", "residuals"},
+    "drift": {"drift"},
 }
 
 

@@ -19,9 +19,9 @@ pytestmark = pytest.mark.browser
 @pytest.fixture(scope="module", params=[2.0, 2.3])
 def predicted(request):
     """Two invented grades blended 70/30 and, for the comparison, 40/60."""
-    parts = [lognormal(9e4, 3.0, points=60), lognormal(2.6e5, 4.0, points=60)]
+    parts = [lognormal(9e4, 3.0, points=40), lognormal(2.6e5, 4.0, points=40)]
     polymer = builtin("hdpe")
-    omega = np.logspace(-2, 2, 21)
+    omega = np.logspace(-2, 2, 13)
 
     def at(phi):
         return blend(
@@ -30,7 +30,7 @@ def predicted(request):
             polymer,
             exponent=request.param,
             omega=omega,
-            members=24,
+            members=6,
         )
 
     return request.param, at(0.7), at(0.4)
