@@ -156,9 +156,10 @@ def test_the_penalty_does_not_depend_on_the_spacing():
 
 
 @pytest.mark.parametrize("rule", RULES)
-def test_tikhonov_with_every_way_of_choosing(problems, rule):
+def test_tikhonov_with_every_way_of_choosing(problems, rule, full):
     """Derived: Mw within 2 %, Mz within 6 % of the truth at 3 % noise, chi2 near the noise."""
-    for d, problem in (problems["log-normal"], problems["pair"]):
+    names = ("log-normal", "pair") if full or rule == "evidence" else ("pair",)
+    for d, problem in (problems[n] for n in names):
         fit = fit_tikhonov(problem, choose_by=rule)
         assert fit.converged and fit.curve.rule == rule
         table = fit.curve.columns()
@@ -182,10 +183,10 @@ def test_tikhonov_at_a_tiny_fixed_lambda_is_an_answer(problems):
 
 
 def test_tikhonov_members_spread_about_the_answer(problems):
-    """Derived: Mw of 30 members within a per cent or so; the same seed gives the same members."""
+    """Derived: Mw of 16 members within a per cent or so; the same seed gives the same members."""
     d, problem = problems["log-normal"]
-    fit = fit_tikhonov(problem, members=30, seed=4)
-    assert fit.members.shape[0] >= 27 and fit.members.shape[1] == problem.size
+    fit = fit_tikhonov(problem, members=16, seed=4)
+    assert fit.members.shape[0] >= 14 and fit.members.shape[1] == problem.size
     mw = averages(problem, fit.w)[0]
     spread = np.std([averages(problem, w)[0] for w in fit.members]) / mw
     assert 0.001 < spread < 0.02
