@@ -423,6 +423,8 @@ class JointScan:
         return float(e.max() + np.log(np.sum(np.exp(e - e.max())) / self.asked))
 
 
+# what a hundred more steps may still gain in a fit that counts as converged
+SETTLED = 0.5
 # values of lambda whose evidence is this many e-folds below the best are not followed further
 HOPELESS = 9.0
 
@@ -444,4 +446,15 @@ def scan(problem: JointProblem, z0: np.ndarray, values: np.ndarray) -> JointScan
             top = max(top, fits[i].log_evidence)
             if fits[i].log_evidence < top - HOPELESS:
                 break
+    for i, fit in fits.items():
+        if not fit.converged and fit.log_evidence > top - HOPELESS:
+            fits[i] = polished(problem, fit)
     return JointScan(problem, tuple(fits[i] for i in sorted(fits)), len(values))
+
+
+def polished(problem: JointProblem, fit: JointFit) -> JointFit:
+    """A fit that ran out of steps, taken on; it has settled when that gains next to nothing."""
+    again = minimise(problem, fit.z, fit.smoothing)
+    if not again.converged and fit.objective - again.objective < SETTLED:
+        again = replace(again, converged=True)
+    return again
