@@ -44,10 +44,14 @@ class Picture:
     @cached_property
     def _svg(self) -> bytes:
         # wanted twice, for its own file and inside the page, and drawing is the slow part
-        return style.save_svg(self.figure, title=self.title, description=self.description)
+        svg = style.save_svg(self.figure, title=self.title, description=self.description)
+        # the layout found for one file serves the other
+        self.figure.set_layout_engine("none")
+        return svg
 
     def png(self) -> bytes:
         """PNG at 300 dots per inch."""
+        self.svg()
         return style.save_png(self.figure, title=self.title, description=self.description)
 
     def csv(self) -> bytes:
