@@ -15,7 +15,7 @@ import numpy as np
 from scipy.linalg import LinAlgError, cho_factor, cho_solve
 
 from mwdlink.errors import NotConverged
-from mwdlink.measurement.modes import mode_moduli
+from mwdlink.measurement.modes import mode_moduli, reach
 from mwdlink.quantity import readonly
 
 PER_DECADE = 10
@@ -124,8 +124,7 @@ class _Problem:
         sigma_loss: np.ndarray,
         per_decade: int,
     ) -> None:
-        low = -np.log10(omega[-1]) - MARGIN
-        high = -np.log10(omega[0]) + MARGIN
+        low, high = (float(np.log10(t)) for t in reach(omega, storage, loss, MARGIN))
         n = int(np.ceil((high - low) * per_decade)) + 1
         self.tau = np.logspace(low, high, n)
         d = (high - low) / (n - 1)

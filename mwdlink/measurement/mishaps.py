@@ -270,8 +270,12 @@ def bad_ends(
 def _end_proposal(
     end: str, rows: tuple[int, ...], sweep: Sweep, cut: np.ndarray, deviation: np.ndarray
 ) -> Proposal:
-    named = ", ".join(map(str, rows))
-    span = f"{sweep.omega[cut[0]]:.3g} to {sweep.omega[cut[-1]]:.3g} rad/s"
+    if cut.size == 1:
+        points = f"point at the {end} end ({sweep.omega[cut[0]]:.3g} rad/s; row {rows[0]}) departs"
+    else:
+        span = f"{sweep.omega[cut[0]]:.3g} to {sweep.omega[cut[-1]]:.3g} rad/s"
+        named = ", ".join(map(str, rows))
+        points = f"points at the {end} end ({span}; rows {named}) depart"
     size = float(np.mean(deviation))
     if end == "upper":
         cause = (
@@ -284,9 +288,9 @@ def _end_proposal(
         cause = "as readings near the torque floor, drift or unfinished loading do"
         code = "torque_floor_points"
     text = (
-        f"The points at the {end} end ({span}; rows {named}) depart from the spectrum of all the "
-        f"others by {100 * size:+.0f} % on average, {cause}. Consider leaving these rows out; "
-        "nothing was left out here."
+        f"The {points} from the spectrum of all the others by {100 * size:+.0f} % on average, "
+        f"{cause}. Consider leaving out what is marked here, and its neighbours if they lean the "
+        "same way; nothing was left out."
     )
     return Proposal(code, text, size, rows)
 

@@ -66,27 +66,46 @@ class ModeFit:
 
 
 def mode_grid(
-    omega: np.ndarray, per_decade: float = PER_DECADE, margin: float = MARGIN
+    omega: np.ndarray,
+    storage: np.ndarray,
+    loss: np.ndarray,
+    per_decade: float = PER_DECADE,
+    margin: float = MARGIN,
 ) -> np.ndarray:
     """Relaxation times on a logarithmic grid around the window.
 
     Parameters
     ----------
-    omega : ndarray of shape (n,)
-        [rad/s]
+    omega, storage, loss : ndarray of shape (n,)
+        [rad/s], [Pa], [Pa]
     per_decade : float
         Modes per decade of tau.
     margin : float
-        Decades beyond 1/omega_max and 1/omega_min.
+        Decades beyond the reach of the data (`reach`).
 
     Returns
     -------
     ndarray of shape (k,)
         [s], ascending.
     """
-    low = -np.log10(np.max(omega)) - margin
-    high = -np.log10(np.min(omega)) + margin
+    low, high = (np.log10(t) for t in reach(omega, storage, loss, margin))
     return np.logspace(low, high, int(np.ceil((high - low) * per_decade)) + 1)
+
+
+def reach(
+    omega: np.ndarray, storage: np.ndarray, loss: np.ndarray, margin: float
+) -> tuple[float, float]:
+    """Shortest and longest relaxation time [s] the two moduli may need.
+
+    `margin` decades beyond 1/omega_max and 1/omega_min; further out where G'/(G'' omega), the
+    relaxation time a single mode would have, lies beyond: a melt deep in terminal flow is faster
+    than its window, a plateau slower. No more than four decades, for readings that are noise.
+    """
+    single = storage / (loss * omega)
+    low, high = 1.0 / omega.max(), 1.0 / omega.min()
+    tau_low = min(low * 10.0**-margin, max(0.3 * single.min(), low * 1e-4))
+    tau_high = max(high * 10.0**margin, min(3.0 * single.max(), high * 1e4))
+    return float(tau_low), float(tau_high)
 
 
 def mode_moduli(omega: np.ndarray, tau: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -165,7 +184,7 @@ def fit_on_grid(
     sigma_storage, sigma_loss : ndarray of shape (n,) or float
         Relative standard errors [-], > 0.
     tau : ndarray of shape (k,), optional
-        Grid [s]; default `mode_grid(omega)`.
+        Grid [s]; default `mode_grid`.
 
     Returns
     -------
@@ -190,7 +209,8 @@ def fit_on_grid(
         )
     up = np.broadcast_to(np.asarray(sigma_storage, dtype=float), omega.shape)
     out = np.broadcast_to(np.asarray(sigma_loss, dtype=float), omega.shape)
-    tau = mode_grid(omega) if tau is None else np.asarray(tau, dtype=float)
+    if tau is None:
+        tau = mode_grid(omega, storage, loss)
     A = weighted_rows(omega, storage, loss, up, out, tau)
     g = non_negative(A, np.concatenate([1.0 / up, 1.0 / out]))
     used = g > 0
@@ -267,7 +287,7 @@ def parsimonious(
             f"{modes} modes cannot be had from {omega.size} frequencies.",
             remedy=f"Ask for 1 to {omega.size}.",
         )
-    span = mode_grid(omega, margin=CLOSE_MARGIN)
+    span = mode_grid(omega, storage, loss, margin=CLOSE_MARGIN)
     dense = fit_on_grid(omega, storage, loss, up, out, span)
     fit_at = _fitter(omega, storage, loss, up, out, (np.log(span[0]), np.log(span[-1])))
     tau, g = _merge_touching(dense.tau, dense.strength, PER_DECADE)

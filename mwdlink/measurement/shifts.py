@@ -15,7 +15,7 @@ from scipy.linalg import LinAlgError, cho_factor, cho_solve
 
 from mwdlink.errors import InputError, NotConverged
 from mwdlink.measurement.continuous import penalties
-from mwdlink.measurement.modes import mode_moduli
+from mwdlink.measurement.modes import mode_moduli, reach
 from mwdlink.quantity import readonly
 
 LN10 = float(np.log(10.0))
@@ -127,8 +127,8 @@ class _Joint:
     def grid(self, shift: np.ndarray) -> None:
         """Nodes around the range the shifts give."""
         reduced = self.x + shift[self.owner]
-        low = -reduced.max() / LN10 - MARGIN
-        high = -reduced.min() / LN10 + MARGIN
+        up, out = np.exp(self.y).reshape(2, -1)
+        low, high = (float(np.log10(t)) for t in reach(np.exp(reduced), up, out, MARGIN))
         n = int(np.ceil((high - low) * PER_DECADE)) + 1
         self.tau = np.logspace(low, high, n)
         self.n = n

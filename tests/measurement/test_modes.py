@@ -34,12 +34,13 @@ def test_grid_fit_satisfies_the_optimality_conditions():
     """Derived: at a non-negative least-squares solution the gradient vanishes where modes are."""
     storage, loss = noisy(1)
     fit = fit_on_grid(OMEGA, storage, loss, 0.02, 0.02)
-    up, out = mode_moduli(OMEGA, mode_grid(OMEGA))
+    grid = mode_grid(OMEGA, storage, loss)
+    up, out = mode_moduli(OMEGA, grid)
     A = np.vstack([up / (0.02 * storage)[:, None], out / (0.02 * loss)[:, None]])
     A /= np.linalg.norm(A, axis=0)
     r = np.concatenate([fit.residual_storage, fit.residual_loss])
     gradient = A.T @ r
-    used = np.isin(np.round(np.log(mode_grid(OMEGA)), 9), np.round(np.log(fit.tau), 9))
+    used = np.isin(np.round(np.log(grid), 9), np.round(np.log(fit.tau), 9))
     assert np.abs(gradient[used]).max() < 1e-6
     assert gradient[~used].max() < 1e-6
 
@@ -67,3 +68,13 @@ def test_impossible_numbers_are_refused():
         parsimonious(OMEGA, *noisy(0), 0.02, 0.02, modes=40)
     with pytest.raises(InputError, match="too few"):
         fit_on_grid(OMEGA[:2], *(x[:2] for x in noisy(0)), 0.02, 0.02)
+
+
+def test_deep_terminal_flow_and_deep_plateau():
+    """Derived: a melt much faster or slower than its window is still one mode, exactly."""
+    omega = np.logspace(-1, 1, 11)
+    for tau in (1e-4, 3e3):
+        moduli = Spectrum([tau], [1e5]).moduli(omega)
+        fit = fit_on_grid(omega, *moduli, 0.01, 0.01)
+        assert fit.chi2_per_point < 1e-3
+        assert parsimonious(omega, *moduli, 0.01, 0.01).tau[0] == pytest.approx(tau, rel=1e-3)
