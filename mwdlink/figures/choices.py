@@ -6,6 +6,7 @@ from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
+from matplotlib import rc_context
 
 from mwdlink.figures import shading, style
 from mwdlink.figures.columns import Absent, find, numbers, positive
@@ -250,7 +251,7 @@ def describe_kernels(
     return f"{upper_first('; '.join(parts))}." if parts else ""
 
 
-HATCHES = ("", "////", "....", "xxxx", "\\\\\\\\", "++++", "----")
+HATCHES = ("", "//", "..", "", "\\\\", "++", "--")
 
 
 @style.styled
@@ -268,17 +269,18 @@ def plot_budget(budgets: Mapping[str, Mapping[str, float]], *, ax: Axes | None =
     lefts = np.zeros(len(budgets))
     for i, part in enumerate(parts):
         share = np.array([100.0 * float(b.get(part) or 0.0) for b in budgets.values()])
-        ax.barh(
-            range(len(budgets)),
-            share,
-            left=lefts,
-            height=0.62,
-            color=style.FILLS[i % len(style.FILLS)],
-            hatch=HATCHES[i % len(HATCHES)],
-            edgecolor=style.INK,
-            linewidth=0.6,
-            label=BUDGET_WORDS[part],
-        )
+        with rc_context({"hatch.color": style.INK}):
+            ax.barh(
+                range(len(budgets)),
+                share,
+                left=lefts,
+                height=0.62,
+                color=style.FILLS[i % len(style.FILLS)],
+                hatch=HATCHES[i % len(HATCHES)],
+                edgecolor=style.INK,
+                linewidth=0.6,
+                label=BUDGET_WORDS[part],
+            )
         for row, value in enumerate(share):
             if value >= 12:
                 ax.text(

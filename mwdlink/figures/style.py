@@ -42,8 +42,8 @@ VERMILION = "#d55e00"
 GREEN = "#008a65"
 PURPLE = "#a5528c"
 HATCH = "#b9bfc7"
-FILLS = ("#7db8da", "#f0b37e", "#7fc4b0", "#d9a9ca", "#b8bec6", "#e8d98a", "#7d8794")
-"""Fills of bars; each has its own hatch as well."""
+FILLS = ("#4f94c4", "#f7d3ae", "#57a58e", "#ecd0e4", "#9aa3ad", "#f3eab8", "#6d7783")
+"""Fills of bars, light and dark in turn for a grey print; each has its own hatch as well."""
 SERIES = (BLUE, VERMILION, GREEN, PURPLE, INK)
 DASHES: tuple[Any, ...] = (
     "-",
