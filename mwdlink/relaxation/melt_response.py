@@ -195,7 +195,7 @@ class Relaxation:
         ----------
         tau_low : float, optional
             Shortest time wanted [s]; default three decades below the shortest chain's kernel time.
-            Rouse modes below it are left out.
+            Faster modes are gathered there, with their viscosity kept.
         """
         return modes.spectrum_of(self, tau_low)
 

@@ -16,7 +16,8 @@ if TYPE_CHECKING:
 
 MODES_PER_DECADE = 6
 # a narrow melt ends in one exponential: modes stand close together in the last decade
-LAST_MODES_PER_DECADE = 24
+FINE_MODES_PER_DECADE = 24
+ROUSE_MODES_PER_DECADE = 16
 TIMES_PER_DECADE = 24
 # where G has fallen to this share of G(0) the fit ends
 LEAST_SEEN = 1e-26
@@ -51,12 +52,14 @@ def spectrum_of(relaxation: Relaxation, tau_low: float | None = None) -> Spectru
     """Positive modes of the network part plus the Rouse part's own modes, on one list of times."""
     d, melt, model = relaxation.distribution, relaxation.melt, relaxation.model
     carried = relaxation.times[np.cumsum(d.mass) > 1e-4]
-    low = float(carried.min()) * 1e-3 if tau_low is None else float(tau_low)
+    low = float(carried.min()) * 1e-3
+    if tau_low is not None:
+        low = min(low, float(tau_low))
     if model.rouse:
         modes, times = rouse_mode_table(d.molar_mass, melt, 1.0 / low)
         modes, times = (modes * d.mass[:, None]).ravel(), times.ravel()
         slowest_rouse = float(times[modes > 1e-12 * modes.max()].max())
-        low = min(low, 0.1 * slowest_rouse)
+        low = min(low, 1e-3 * slowest_rouse)
     high = float(relaxation.times.max()) * 100.0
     low = min(low, high / 1e4)
     t = log_grid(low * 1e-2, high, TIMES_PER_DECADE)
@@ -66,19 +69,24 @@ def spectrum_of(relaxation: Relaxation, tau_low: float | None = None) -> Spectru
         t, g = t[held], g[held]
         # the slowest mode that can be seen: the decay at the very end
         slowest = -(t[-1] - t[-2]) / np.log(g[-1] / g[-2])
-        last = slowest * 10.0 ** (-np.arange(LAST_MODES_PER_DECADE, -1, -1) / LAST_MODES_PER_DECADE)
+        last = slowest * 10.0 ** (-np.arange(FINE_MODES_PER_DECADE, -1, -1) / FINE_MODES_PER_DECADE)
         tau = log_grid(low, max(last[0], 2.0 * low), MODES_PER_DECADE)
         tau = np.concatenate([tau[tau < 0.95 * last[0]], last])
         strength = positive_modes(t, g, tau)
     else:
         tau, strength = np.array([low]), np.zeros(1)
     if model.rouse:
-        # the list goes on where Rouse modes are slower than the network, as in unentangled melts
-        if slowest_rouse > tau[-1]:
-            more = log_grid(tau[-1], 1.01 * slowest_rouse, MODES_PER_DECADE)[1:]
-            tau = np.concatenate([tau, more])
-            strength = np.concatenate([strength, np.zeros(more.size)])
+        # where Rouse modes matter they want a list of their own, as in unentangled melts
+        if slowest_rouse > tau[-1] or modes @ times > 1e-3 * (strength @ tau):
+            own = log_grid(low, max(1.01 * slowest_rouse, 2.0 * low), ROUSE_MODES_PER_DECADE)
+            both = np.union1d(tau, own)
+            there = np.zeros(both.size)
+            there[np.searchsorted(both, tau)] = strength
+            tau, strength = both, there
         strength = strength + shared_by_neighbours(tau, times, modes)
+    if tau_low is not None and tau[0] < tau_low < tau[-1]:
+        kept = np.concatenate([[tau_low], tau[tau > 1.05 * tau_low]])
+        tau, strength = kept, shared_by_neighbours(kept, tau, strength)
     keep = strength > 0
     return Spectrum(tau[keep], strength[keep])
 
