@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 
@@ -19,6 +20,7 @@ from mwdlink.measurement.modes import fit_on_grid
 from mwdlink.measurement.noise import noise_of
 from mwdlink.measurement.spectrum_fit import REACHED_ETA0
 from mwdlink.measurement.sweep import Sweep
+from mwdlink.quantity import readonly
 from mwdlink.relaxation.operator import log_grid
 
 
@@ -69,34 +71,41 @@ def modes_of(sweep: Sweep, members: int = 0, seed: int = 0, noise: float | None 
         Too few points.
     """
     weights = noise_of(sweep, noise)
-    data = (sweep.omega, sweep.storage, sweep.loss, weights.sigma_storage, weights.sigma_loss)
+    curves = (sweep.omega, sweep.storage, sweep.loss, weights.sigma_storage, weights.sigma_loss)
+    return _fitted(tuple(np.asarray(c).tobytes() for c in curves), members, seed)
+
+
+@lru_cache(maxsize=24)
+def _fitted(raw: tuple[bytes, ...], members: int, seed: int) -> Modes:
+    """The fit itself, kept: moving a fraction to and fro asks for the same components again."""
+    data = tuple(np.frombuffer(b, dtype=float) for b in raw)
+    omega, storage, loss, sigma_storage, sigma_loss = data
     try:
         c = fit_continuous(*data, members=members, seed=seed)
         tau, strength = c.tau, np.vstack([c.H[None, :], c.members]) * c.step
     except NotConverged:
-        grid = log_grid(0.05 / sweep.omega[-1], 10.0 / sweep.omega[0], 6)
+        tau = log_grid(0.05 / omega[-1], 10.0 / omega[0], 6)
         rng = np.random.default_rng(seed)
         rows = []
         for k in range(members + 1):
             scale = 0.0 if k == 0 else 1.0
-            up = sweep.storage * np.exp(
-                scale * weights.sigma_storage * rng.standard_normal(len(sweep))
-            )
-            out = sweep.loss * np.exp(scale * weights.sigma_loss * rng.standard_normal(len(sweep)))
-            fit = fit_on_grid(sweep.omega, up, out, data[3], data[4], tau=grid)
-            row = np.zeros(grid.size)
-            row[np.searchsorted(grid, fit.tau)] = fit.strength
+            up = storage * np.exp(scale * sigma_storage * rng.standard_normal(omega.size))
+            out = loss * np.exp(scale * sigma_loss * rng.standard_normal(omega.size))
+            fit = fit_on_grid(omega, up, out, sigma_storage, sigma_loss, tau=tau)
+            row = np.zeros(tau.size)
+            row[np.searchsorted(tau, fit.tau)] = fit.strength
             rows.append(row)
-        tau, strength = grid, np.array(rows)
+        strength = np.array(rows)
     eta0 = float(strength[0] @ tau)
-    x = sweep.omega[0] * tau
+    x = omega[0] * tau
     d = x / (1 + x * x)
-    lowest = float(np.hypot(strength[0] @ (x * d), strength[0] @ d) / sweep.omega[0])
+    lowest = float(np.hypot(strength[0] @ (x * d), strength[0] @ d) / omega[0])
+    typical = float(np.median(np.concatenate([sigma_storage, sigma_loss])))
     return Modes(
-        tau,
-        strength,
-        weights.typical,
-        (float(sweep.omega[0]), float(sweep.omega[-1])),
+        readonly(tau),
+        readonly(strength),
+        typical,
+        (float(omega[0]), float(omega[-1])),
         eta0,
         eta0 / lowest <= REACHED_ETA0,
     )

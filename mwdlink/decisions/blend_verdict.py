@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from mwdlink.decisions.ensemble import PRIOR_EXPONENT, PRIOR_SPREAD
 from mwdlink.decisions.trust import RuleError
 from mwdlink.quantity import Uncertain
 
@@ -23,7 +24,7 @@ def verdict_of(
     exponent: Uncertain,
     error: RuleError,
     rules: Sequence[Mapping[str, Any]],
-    misses: Sequence[np.ndarray],
+    plain: Sequence[float],
     trusted: float,
 ) -> str:
     """Sentences: does the rule hold, which bag does not, and what else it could be.
@@ -37,8 +38,9 @@ def verdict_of(
     error : RuleError
     rules : sequence of mapping
         The ranking, best first.
-    misses : sequence of ndarray
-        Residuals of each blend [decades].
+    plain : sequence of float
+        Mean of log10(predicted/measured) of each blend by double reptation [decades]: an exponent
+        that is free can swallow a bias that all blends share.
     trusted : float
         Limit of trust [decades].
     """
@@ -59,9 +61,10 @@ def verdict_of(
         )
     elif not odd:
         out.append(
-            f"The fractions agree, but the curves are missed by {left_out:.2g} decades: the rule "
-            "holds only roughly for these components"
+            f"The rule holds only roughly: the curves are missed by {left_out:.2g} decades, and "
+            "within that error the fractions agree"
         )
+        out.append(_common_cause(blends, odd, plain))
     elif len(odd) <= max(1, judged // 3) and judged >= 3:
         out.append(_odd_ones(odd))
         if holds:
@@ -77,7 +80,7 @@ def verdict_of(
             f"{len(odd)} of {judged} blends disagree with their weighed fractions: no single bag "
             "is to blame"
         )
-        out.append(_common_cause(blends, odd, misses))
+        out.append(_common_cause(blends, odd, plain))
     good = [d for d in error.decades if d.trusted]
     if good and judged:
         out.append(
@@ -94,10 +97,13 @@ def verdict_of(
         )
     if exponent.low is not None and exponent.high is not None and judged:
         if exponent.low > 2.0 or exponent.high < 2.0:
-            out.append(
+            text = (
                 f"The preferred exponent {exponent.value:.3g} ({exponent.low:.3g} to "
                 f"{exponent.high:.3g}) is not that of double reptation"
             )
+            if abs((exponent.value or 2.0) - PRIOR_EXPONENT) > 4 * PRIOR_SPREAD:
+                text += "; so far from it that it makes up for something else than mixing"
+            out.append(text)
     if unclear:
         out.append(f"Not judged: {', '.join(b.name for b in unclear)}")
     return ". ".join(s.rstrip(".") for s in out) + "."
@@ -120,18 +126,21 @@ def _odd_ones(odd: Sequence[CheckedBlend]) -> str:
 
 
 def _common_cause(
-    blends: Sequence[CheckedBlend], odd: Sequence[CheckedBlend], misses: Sequence[np.ndarray]
+    blends: Sequence[CheckedBlend], odd: Sequence[CheckedBlend], plain: Sequence[float]
 ) -> str:
     """What many blends that disagree have in common."""
-    bias = np.array([b.bias for b in blends if b.agrees is not None])
+    judged = [i for i, b in enumerate(blends) if b.agrees is not None]
+    bias = np.asarray(plain)[judged or range(len(blends))]
     same = np.all(bias > ORDINARY) or np.all(bias < -ORDINARY)
-    worse = np.mean([b.misfit for b in odd]) > 0.5 * np.mean([b.scatter for b in odd])
+    asked = list(odd) or [b for b in blends if b.agrees is not None]
+    worse = np.mean([b.misfit for b in asked]) > 0.5 * np.mean([b.scatter for b in asked])
     if same:
         side = "less" if bias.mean() > 0 else "more"
         process = "chain scission" if bias.mean() > 0 else "crosslinking or lost short chains"
         return (
-            f"All blends are {side} viscous than predicted, by {abs(bias.mean()):.2g} decades in "
-            f"the mean: degradation in compounding ({process}) or a wrong rule would both do that. "
+            f"All blends are {side} viscous than double reptation predicts, by "
+            f"{abs(bias.mean()):.2g} decades in the mean: degradation in compounding ({process}) "
+            "or a wrong rule would both do that. "
             "Run the neat components through the same extruder and measure them again: if the "
             "gap closes, it was the processing"
         )

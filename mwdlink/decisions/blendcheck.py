@@ -329,7 +329,14 @@ def check_blends(
         routes,
     )
     columns = _decades_table(data, misses)
-    text = verdict_of(checked, left_out, exponent, routes[main], table, misses, TRUSTED_DECADES)
+    factor = together.factor
+    plain = [
+        float(
+            np.mean(residuals(chosen.rule.response(d.phi[None, :], 2.0), 0, d, np.array([factor])))
+        )
+        for d in data
+    ]
+    text = verdict_of(checked, left_out, exponent, routes[main], table, plain, TRUSTED_DECADES)
     warnings = merge_cautions(
         study.warnings,
         study.polymer.warnings,
@@ -378,19 +385,17 @@ def _data(
         sweep, notes = at_temperature(b.sweep, b.temperature_C, study.polymer, temperature_C)
         said.extend(notes)
         said.extend(sweep.warnings)
+        inside = np.ones(len(sweep), dtype=bool)
         if bank is not None:
             low, high = bank.omega
-            sweep = (
-                sweep.select((sweep.omega >= low * 0.999) & (sweep.omega <= high * 1.001))
-                if np.any((sweep.omega >= low * 0.999) & (sweep.omega <= high * 1.001))
-                else sweep
-            )
-        if len(sweep) < 4 or (bank is not None and not bank.omega[0] < bank.omega[1]):
+            inside = (sweep.omega >= low * 0.999) & (sweep.omega <= high * 1.001)
+        if inside.sum() < 4:
             raise InputError(
                 f"blend {b.name!r} has fewer than four points where all components were measured.",
                 path=b.sweep.path,
                 remedy="Measure components and blends over the same frequencies.",
             )
+        sweep = sweep.select(inside)
         if len(sweep) < len(b.sweep):
             said.append(
                 Caution(
