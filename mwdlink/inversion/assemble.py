@@ -26,8 +26,6 @@ from mwdlink.relaxation.kernels import DEFAULT_KERNEL
 from mwdlink.relaxation.validity import frequency_cautions
 
 PRIOR_DRAWS = 200
-# what is advised on when nobody asks
-DEFAULT_WANT = {"Mz": 0.1}
 # a lambda this near an end of the scan was chosen by the scan, not by the data
 AT_END_ROUGH, AT_END_SMOOTH = 1, 0
 
@@ -141,7 +139,7 @@ def assemble(
         notes, _fit_cautions(centre, method), check_notes, _sweep_cautions(sweep, melt)
     )
     notes = notes + _bound_cautions(averages, outside)
-    advice = _advice(centre, sweep, polymer, want)
+    advice = _advice(centre, sweep, polymer, want, averages)
     return Inversion(
         molar_mass=readonly(grid),
         density=readonly(density),
@@ -393,11 +391,24 @@ def _bound_cautions(
 
 
 def _advice(
-    centre: Branch, sweep: Any, polymer: Polymer, want: Mapping[str, float] | None
-) -> tuple[str, ...] | None:
-    """What to measure next, for what was asked; without a wish, for Mz to 10 %."""
-    if not isinstance(sweep, Sweep) or centre.build is not None:
-        return None
+    centre: Branch,
+    sweep: Any,
+    polymer: Polymer,
+    want: Mapping[str, float] | None,
+    averages: Mapping[str, Uncertain],
+) -> tuple[str, ...]:
+    """What to measure next: computed for what is wanted, else what the statuses say."""
+    if not want or not isinstance(sweep, Sweep) or centre.build is not None:
+        out = []
+        if averages["Mz_g_per_mol"].status == "lower_bound":
+            out.append(
+                "Mz is bounded because the longest chains relax below the lowest frequency: lower "
+                "frequencies, or the same ones at a higher temperature, would size them. Ask with "
+                "--want Mz=0.1 how far to go."
+            )
+        if averages["Mn_g_per_mol"].status != "resolved":
+            out.append("Mn cannot be had from rheology; GPC gives it.")
+        return tuple(out)
     return tuple(
         advise(
             centre.problem,
@@ -406,7 +417,7 @@ def _advice(
             centre.model,
             sweep.omega,
             centre.problem.sigma,
-            want or DEFAULT_WANT,
+            want,
             polymer,
         )
     )

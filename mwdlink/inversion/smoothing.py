@@ -91,6 +91,8 @@ def log_evidence(problem: Problem, fit: Fit) -> float:
 
 # along the scan a fit may stop this early; the one chosen is finished
 ALONG = 2e-3
+# and one that is forced to be far too smooth need not be finished: its evidence is nothing
+ALONG_STEPS = 40
 
 
 def scan(
@@ -107,11 +109,11 @@ def scan(
     first = int(order[0])
     fits: dict[int, Fit] = {}
     start_u = good_start(problem) if u0 is None else u0
-    fits[first] = minimise(problem, start_u, float(values[first]), tolerance=tolerance)
+    fits[first] = minimise(problem, start_u, float(values[first]), tolerance=tolerance, most=ALONG_STEPS)
     for direction in (range(first + 1, len(values)), range(first - 1, -1, -1)):
         u = fits[first].u
         for i in direction:
-            fits[i] = minimise(problem, u, float(values[i]), tolerance=tolerance)
+            fits[i] = minimise(problem, u, float(values[i]), tolerance=tolerance, most=ALONG_STEPS)
             u = fits[i].u
     evidence = [log_evidence(problem, fits[i]) for i in range(len(values))]
     best = int(np.argmax(evidence))

@@ -9,9 +9,9 @@ from scipy.linalg.lapack import dposv
 
 from mwdlink.inversion.objective import Problem, lump_rows, weights
 
-MAX_STEPS = 80
-# a step that promises less than this much of the objective is the end
-TOLERANCE = 1e-4
+MAX_STEPS = 300
+# a step that promises less than this much of the objective (0.03 standard deviations) is the end
+TOLERANCE = 1e-3
 
 
 @dataclass(frozen=True, eq=False)
@@ -81,6 +81,7 @@ def minimise(
     smoothing: float,
     shift: Shift | None = None,
     tolerance: float = TOLERANCE,
+    most: int = MAX_STEPS,
 ) -> Fit:
     """Minimise |misfit|^2 + lambda |third u|^2 + weak prior from a start.
 
@@ -95,6 +96,8 @@ def minimise(
         Perturbation of data and prior (randomise, then optimise).
     tolerance : float
         The last step promised less than this much of the objective.
+    most : int
+        Steps at most.
 
     Returns
     -------
@@ -116,7 +119,9 @@ def minimise(
 
     def cost(u: np.ndarray) -> tuple[float, float]:
         w = weights(u)
-        r = (np.log(f.values(w)) - data) * inverse
+        with np.errstate(invalid="ignore", divide="ignore"):
+            # far from the data a modulus can come out negative: the step is then refused
+            r = (np.log(f.values(w)) - data) * inverse
         t = root * (third @ u) - pull
         k = weak @ u - target
         lump = lump_rows(w)[0] - lump_target
@@ -129,7 +134,7 @@ def minimise(
     converged = False
     hessian = precision
     steps = 0
-    while steps < MAX_STEPS:
+    while steps < min(most, MAX_STEPS):
         steps += 1
         w = weights(u)
         y, slope = f.values_and_slope(w)
