@@ -24,7 +24,7 @@ COMMANDS = {
     "blend": "Predict a blend, or find the fraction that reaches a target.",
     "blendcheck": "Hold measured blends of known fractions against the rule.",
     "tail": "GPC and sweep together: weight beyond what the GPC sees.",
-    # "datasheet": "Do the numbers on a supplier's sheet hang together?",
+    "datasheet": "Do the numbers on a supplier's sheet hang together?",
     "master": "From sweeps at several temperatures to one master curve.",
     "spectrum": "From a sweep to its relaxation spectrum, without a chain model.",
     "rest": "How long to wait after loading a sample.",

@@ -1,0 +1,184 @@
+"""What all the other claims lead one to expect of each: fits and draws of many melts at once.
+
+For every family of distributions and every kernel the unknowns are fitted to all claims, and to all
+but one in turn; around each fit melts are drawn and weighed by how well they keep to the claims
+(importance weights), and families and kernels by their evidence. What the draws say of the claim
+left out is its expected value.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from mwdlink.decisions.datasheet_claims import Claim
+from mwdlink.decisions.datasheet_model import CARD, FAMILIES, FLOW_ERROR, SheetModel
+
+STEPS = 14
+DRAWS = 48
+# unknowns further out than this (standard deviations of the prior) are not believed
+FARTHEST = 4.0
+
+
+@dataclass(frozen=True, eq=False)
+class Expected:
+    """Draws of all quantities from fits that leave one claim out.
+
+    Attributes
+    ----------
+    values : ndarray of shape (m, q)
+        ln of every claim and shadow quantity of each draw.
+    weights : ndarray of shape (m,)
+        Sum 1.
+    cost : float
+        Least misfit of the claims that were kept.
+    """
+
+    values: np.ndarray
+    weights: np.ndarray
+    cost: float
+
+    def mean_and_spread(self, column: int) -> tuple[float, float]:
+        """Of ln of one quantity; NaN where it could not be computed."""
+        y = self.values[:, column]
+        good = np.isfinite(y)
+        total = float(self.weights[good].sum())
+        if total < 0.2:
+            return float("nan"), float("nan")
+        w = self.weights[good] / total
+        mean = float(w @ y[good])
+        return mean, float(np.sqrt(max(w @ (y[good] - mean) ** 2, 0.0)))
+
+
+def claim_sigma(claims: Sequence[Claim]) -> np.ndarray:
+    """Standard deviation of ln of each claim."""
+    return np.array([0.5 * c.tolerance for c in claims])
+
+
+def model_sigma(claims: Sequence[Claim]) -> np.ndarray:
+    """What the way of predicting each claim is itself good for."""
+    flow = {"melt flow": FLOW_ERROR, "flow rate ratio": FLOW_ERROR}
+    return np.array([flow.get(c.kind, 0.0) for c in claims])
+
+
+def expect(
+    models: Sequence[SheetModel], claims: int, seed: int = 0, draws: int = DRAWS
+) -> tuple[Expected, tuple[Expected, ...]]:
+    """Fits to all claims, and to all but each one.
+
+    Parameters
+    ----------
+    models : sequence of SheetModel
+        One per kernel; the first `claims` of their quantities are the sheet's, the others are
+        wanted but not claimed.
+    claims : int
+    seed : int
+    draws : int
+        Per fit.
+
+    Returns
+    -------
+    everything : Expected
+    left_out : tuple of Expected
+        One for each claim.
+    """
+    held = models[0].claims
+    target = np.log(np.array([c.value for c in held[:claims]]))
+    sigma = np.hypot(claim_sigma(held), model_sigma(held))[:claims]
+    masks = np.vstack([np.ones(claims), 1.0 - np.eye(claims)])
+    rng = np.random.default_rng(seed)
+    collected: list[list[tuple[np.ndarray, np.ndarray, float, float]]] = [[] for _ in masks]
+    for model in models:
+        for family in FAMILIES:
+            z, cost, chol, evidence = _fit(model, family, target, sigma, masks)
+            d = z.shape[1]
+            push = rng.standard_normal((draws // 2, d))
+            push = np.concatenate([push, -push])
+            # z = mean + L^-T push, L L' the Hessian
+            moved = np.linalg.solve(np.swapaxes(chol, 1, 2), np.broadcast_to(push.T, (len(masks), d, len(push))))
+            drawn = z[:, None, :] + np.swapaxes(moved, 1, 2)
+            y = model.predict(drawn.reshape(-1, d), family).reshape(len(masks), len(push), -1)
+            for i, mask in enumerate(masks):
+                exact = _cost(y[i, :, :claims], drawn[i], target, sigma, mask)
+                gauss = cost[i] + np.sum(push**2, axis=1)
+                log_weight = np.clip(-0.5 * (exact - gauss), -30.0, 3.0)
+                collected[i].append((y[i], log_weight + evidence[i], float(cost[i]), evidence[i]))
+    out = []
+    for parts in collected:
+        log_weight = np.concatenate([p[1] for p in parts])
+        weight = np.exp(log_weight - log_weight.max())
+        out.append(
+            Expected(
+                np.concatenate([p[0] for p in parts]),
+                weight / weight.sum(),
+                min(p[2] for p in parts),
+            )
+        )
+    return out[0], tuple(out[1:])
+
+
+def _cost(
+    y: np.ndarray, z: np.ndarray, target: np.ndarray, sigma: np.ndarray, mask: np.ndarray
+) -> np.ndarray:
+    """Misfit of claims kept and distance from the prior, shape (k,)."""
+    r = np.nan_to_num((y - target) / sigma, nan=5.0, posinf=50.0, neginf=-50.0)
+    r = np.clip(r, -200.0, 200.0) * mask
+    return np.sum(r * r, axis=-1) + np.sum(z * z, axis=-1)
+
+
+def _fit(
+    model: SheetModel,
+    family: str,
+    target: np.ndarray,
+    sigma: np.ndarray,
+    masks: np.ndarray,
+) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """Damped Gauss-Newton of all rows at once.
+
+    Returns
+    -------
+    z : ndarray of shape (rows, d)
+    cost : ndarray of shape (rows,)
+    chol : ndarray of shape (rows, d, d)
+        Cholesky factor of the Hessian.
+    evidence : ndarray of shape (rows,)
+        ln of the evidence by Laplace's approximation.
+    """
+    d = len(FAMILIES[family]) + len(CARD)
+    n, k = target.size, masks.shape[0]
+    z = np.zeros((k, d))
+    damping = np.full(k, 0.3)
+    y, slope = model.predict_and_slope(z, family)
+    y, slope = y[:, :n], slope[:, :n]
+    cost = _cost(y, z, target, sigma, masks)
+    eye = np.eye(d)
+    for _ in range(STEPS):
+        r = np.clip(np.nan_to_num((y - target) / sigma, nan=0.0), -200, 200) * masks
+        j = slope / sigma[:, None] * masks[:, :, None]
+        gradient = np.einsum("knd,kn->kd", j, r) + z
+        hessian = np.einsum("knd,kne->kde", j, j) + eye
+        step = np.linalg.solve(
+            hessian + damping[:, None, None] * eye * np.einsum("kdd->kd", hessian)[:, None, :],
+            -gradient[:, :, None],
+        )[:, :, 0]
+        step *= np.minimum(1.0, 1.5 / np.maximum(np.abs(step).max(axis=1), 1e-12))[:, None]
+        trial = np.clip(z + step, -FARTHEST, FARTHEST)
+        new_y, new_slope = model.predict_and_slope(trial, family)
+        new_y, new_slope = new_y[:, :n], new_slope[:, :n]
+        new_cost = _cost(new_y, trial, target, sigma, masks)
+        better = new_cost <= cost + 1e-9
+        gain = np.where(better, cost - new_cost, 0.0)
+        z = np.where(better[:, None], trial, z)
+        y = np.where(better[:, None], new_y, y)
+        slope = np.where(better[:, None, None], new_slope, slope)
+        cost = np.where(better, new_cost, cost)
+        damping = np.where(better, np.maximum(damping * 0.2, 1e-4), np.minimum(damping * 8.0, 1e4))
+        if np.all(gain[better] < 1e-2) and np.all(better):
+            break
+    j = slope / sigma[:, None] * masks[:, :, None]
+    hessian = np.einsum("knd,kne->kde", j, j) + eye
+    chol = np.linalg.cholesky(hessian)
+    evidence = -0.5 * cost - np.sum(np.log(np.einsum("kdd->kd", chol)), axis=1)
+    return z, cost, chol, evidence

@@ -1,0 +1,304 @@
+"""From a family of distributions and an uncertain card to every number that a sheet may hold.
+
+Many melts at once: rows of unknowns in standard deviations of their priors. A factor on the time
+law, on the modulus, on temperature's shift and the die's entrance loss only move a curve, so the
+costly part is the distribution and the mixing exponent.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.special import gammaln
+
+from mwdlink.chains.polymer import Polymer
+from mwdlink.chains.shift import GAS_CONSTANT, ZERO_CELSIUS
+from mwdlink.decisions.datasheet_claims import Claim
+from mwdlink.decisions.gpc_scale import STANDARD_A, STANDARD_K, STANDARD_SOLVENT
+from mwdlink.decisions.properties import Curves, crossovers, melt_flow_rates
+from mwdlink.relaxation.mixing import Model, survival_matrix
+from mwdlink.relaxation.operator import LEAN_MARGIN, time_operator
+from mwdlink.relaxation.rouse import rouse_moduli, rouse_viscosity
+
+# unknowns of the distribution (per family) and, after them, of the card and the tests
+FAMILIES = {
+    "log-normal": ("Mw", "breadth"),
+    "generalised exponential": ("Mw", "rise", "cut"),
+    "two parts": ("Mw", "breadth", "share", "ratio"),
+}
+CARD = ("exponent", "time law", "modulus", "entrance", "energy", "intrinsic", "equivalent")
+EXPONENT, TIME, MODULUS, ENTRANCE, ENERGY, INTRINSIC, EQUIVALENT = range(7)
+
+EXPONENTS = np.array([1.5, 1.75, 2.0, 2.25, 2.5])
+EXPONENT_PRIOR = (2.0, 0.2)
+# the share of the load lost at the die's entrance (common practice for this short a die)
+ENTRANCE_PRIOR = (0.08, 0.05)
+ENERGY_SPREAD = 0.08
+# Mark-Houwink constants from another laboratory, and conversion of equivalent masses
+INTRINSIC_SPREAD = 0.05
+EQUIVALENT_SPREAD = 0.06
+# where the card has no Mark-Houwink constants: equivalent masses of polyolefins are about twice
+# the true ones (recalled), and that is all one knows
+BLIND_FACTOR, BLIND_SPREAD = 2.0, 0.25
+# what Cox-Merz and the flow integral themselves are good for, beside the claims' tolerances
+FLOW_ERROR = 0.04
+STEP = 1e-3
+# ln of the weight average, before anything is known
+MASS_PRIOR = (float(np.log(1.3e5)), 1.0)
+NODES = np.linspace(2.0, 7.6, 92)
+OMEGA = np.geomspace(1e-5, 1e5, 61)
+
+
+@dataclass(frozen=True, eq=False)
+class SheetModel:
+    """Everything that does not depend on the unknowns.
+
+    Attributes
+    ----------
+    polymer : Polymer
+    claims : tuple of Claim
+    kernel : str
+    tables : ndarray of shape (5, n_t, n)
+        F^(1/beta) at each of EXPONENTS.
+    matrix : ndarray of shape (2 n_w, n_t)
+    linear : ndarray of shape (2 n_w, n)
+        Rouse part of each node [Pa].
+    rouse_eta : ndarray of shape (n,)
+        [Pa s]
+    times : ndarray of shape (n_t,)
+    """
+
+    polymer: Polymer
+    claims: tuple[Claim, ...]
+    kernel: str
+    tables: np.ndarray
+    matrix: np.ndarray
+    linear: np.ndarray
+    rouse_eta: np.ndarray
+    times: np.ndarray
+
+    @property
+    def mass(self) -> np.ndarray:
+        """Molar masses of the nodes [g/mol]."""
+        return 10.0**NODES
+
+    def predict(self, z: np.ndarray, family: str) -> np.ndarray:
+        """ln of every claimed quantity.
+
+        Parameters
+        ----------
+        z : ndarray of shape (k, d)
+            Unknowns of the family, then of CARD, in standard deviations of their priors.
+        family : str
+
+        Returns
+        -------
+        ndarray of shape (k, number of claims)
+            NaN where a quantity lies outside what can be computed.
+        """
+        own = len(FAMILIES[family])
+        return self._all(*self._costly(z, own, family), z[:, own:])
+
+    def predict_and_slope(self, z: np.ndarray, family: str) -> tuple[np.ndarray, np.ndarray]:
+        """The same and its derivatives, shapes (k, c) and (k, c, d)."""
+        own = len(FAMILIES[family])
+        k, d = z.shape
+        costly = [*range(own), own + EXPONENT]
+        moved = np.concatenate([z, *[z + STEP * np.eye(d)[i] for i in costly]])
+        w, curves = self._costly(moved, own, family)
+        y = self._all(w, curves, moved[:, own:]).reshape(len(costly) + 1, k, -1)
+        slope = np.zeros((k, y.shape[2], d))
+        for j, i in enumerate(costly):
+            slope[:, :, i] = (y[j + 1] - y[0]) / STEP
+        first = Curves(curves.omega, curves.storage[:k], curves.loss[:k], curves.eta0[:k], curves.Je0[:k])
+        for i in range(own, d):
+            if i not in costly:
+                card = z[:, own:] + STEP * np.eye(d - own)[i - own]
+                slope[:, :, i] = (self._all(w[:k], first, card) - y[0]) / STEP
+        return y[0], np.nan_to_num(slope)
+
+    def _costly(self, z: np.ndarray, own: int, family: str) -> tuple[np.ndarray, Curves]:
+        w = distribution_rows(z[:, :own], family)
+        return w, self._curves(w, EXPONENT_PRIOR[0] + EXPONENT_PRIOR[1] * z[:, own + EXPONENT])
+
+    def _all(self, w: np.ndarray, curves: Curves, card: np.ndarray) -> np.ndarray:
+        with np.errstate(invalid="ignore", divide="ignore"):
+            return np.column_stack([self._one(c, w, curves, card) for c in self.claims])
+
+    def _curves(self, w: np.ndarray, exponent: np.ndarray) -> Curves:
+        beta = np.clip(exponent, 1.35, 2.65)
+        share = _polynomial(beta)
+        melt = self.polymer.melt(self.polymer.temperature_C)
+        s = np.zeros((self.times.size, w.shape[0]))
+        for i in range(EXPONENTS.size):
+            s += (self.tables[i] @ w.T) * share[:, i]
+        g = melt.plateau_modulus * np.maximum(s, 1e-30) ** beta
+        y = np.maximum(self.matrix @ g + self.linear @ w.T, 1e-9)
+        step = np.log(self.times[1] / self.times[0])
+        eta0 = step * (self.times @ g) - 0.5 * g[0] * self.times[0] * step
+        eta0 = eta0 + g[0] * self.times[0] + w @ self.rouse_eta
+        n = OMEGA.size
+        return Curves(OMEGA, y[:n].T, y[n:].T, eta0, np.ones(w.shape[0]))
+
+    def _one(
+        self, c: Claim, w: np.ndarray, curves: Curves, card: np.ndarray
+    ) -> np.ndarray:
+        m = self.mass
+        if c.kind in ("Mn", "Mw", "Mz", "dispersity"):
+            number, weight = -np.log(w @ (1.0 / m)), np.log(w @ m)
+            if c.kind == "dispersity":
+                return weight - number
+            value = {"Mn": number, "Mw": weight, "Mz": np.log(w @ m**2) - weight}[c.kind]
+            return value + self._equivalent(c, card)
+        if c.kind == "intrinsic viscosity":
+            k, a = self.polymer.get("mark_houwink.K_dL_per_g"), self.polymer.get("mark_houwink.a")
+            return np.log(k * (w @ m**a)) + INTRINSIC_SPREAD * card[:, INTRINSIC]
+        if c.kind == "activation energy":
+            return np.log(self._energy(card) / 1000.0)
+        melt = self.polymer.melt(self.polymer.temperature_C)
+        law = self.time_spread * card[:, TIME]
+        modulus = self.modulus_spread * card[:, MODULUS]
+        T = melt.temperature_C if c.temperature_C is None else c.temperature_C
+        shift = self._log_shift(T, card)
+        moved = law - modulus + shift  # ln of the factor on all times
+        if c.kind == "eta0":
+            return np.log(curves.eta0) + law + shift
+        if c.kind.startswith("crossover"):
+            omega, level = crossovers(curves)
+            return np.log(omega) - moved if c.kind.endswith("omega") else np.log(level) + modulus
+        if c.kind == "viscosity":
+            return (
+                _along(np.log(OMEGA), np.log(curves.viscosity), np.log(c.omega) + moved)
+                + modulus
+                + moved
+            )
+        lost = np.clip(ENTRANCE_PRIOR[0] + ENTRANCE_PRIOR[1] * card[:, ENTRANCE], 0.0, 0.5)
+        effective = 1.0 - (1.0 - lost) / np.exp(modulus)
+        density = self.polymer.density(T)
+        rate = np.log(melt_flow_rates(curves, float(c.load_kg), density, effective)) - moved
+        if c.kind == "flow rate ratio":
+            other = melt_flow_rates(curves, float(c.second_load_kg), density, effective)
+            return rate - (np.log(other) - moved)
+        return rate - np.log(density / 1000.0) if c.volume else rate
+
+    @property
+    def time_spread(self) -> float:
+        """Standard deviation of ln of the viscosity law's coefficient."""
+        return max(self.polymer.scatter_decades * np.log(10.0), 0.1)
+
+    @property
+    def modulus_spread(self) -> float:
+        """Standard deviation of ln of the plateau modulus."""
+        span = self.polymer.get("network.plateau_modulus_range_Pa")
+        return 0.07 if span is None else max(0.03, 0.25 * float(np.log(span[1] / span[0])))
+
+    def _equivalent(self, c: Claim, card: np.ndarray) -> np.ndarray:
+        if c.calibration != "equivalent":
+            return np.zeros(card.shape[0])
+        k, a = self.polymer.get("mark_houwink.K_dL_per_g"), self.polymer.get("mark_houwink.a")
+        if k is None or str(self.polymer.get("mark_houwink.solvent", "")).upper() != STANDARD_SOLVENT:
+            return np.log(BLIND_FACTOR) + BLIND_SPREAD * card[:, EQUIVALENT]
+        own = np.log(max(c.value, 1.0) / BLIND_FACTOR)
+        standard = ((1 + a) * own + np.log(k / STANDARD_K)) / (1 + STANDARD_A)
+        return standard - own + EQUIVALENT_SPREAD * card[:, EQUIVALENT]
+
+    def _energy(self, card: np.ndarray) -> np.ndarray:
+        """Flow activation energy at the card's temperature [J/mol]."""
+        shift = self.polymer.shift
+        base = 30e3 if shift is None else shift.activation_energy(self.polymer.temperature_C)
+        return base * np.exp(ENERGY_SPREAD * card[:, ENERGY])
+
+    def _log_shift(self, T: float, card: np.ndarray) -> np.ndarray:
+        own = self.polymer.temperature_C
+        if abs(T - own) < 0.05:
+            return np.zeros(card.shape[0])
+        shift = self.polymer.shift
+        factor = 0.0 if shift is None else float(np.log(shift.factor(T, own)))
+        reciprocal = 1.0 / (T + ZERO_CELSIUS) - 1.0 / (own + ZERO_CELSIUS)
+        base = self._energy(np.zeros((1, len(CARD))))
+        return factor + (self._energy(card) - base) / GAS_CONSTANT * reciprocal
+
+
+def sheet_model(polymer: Polymer, claims: Sequence[Claim], kernel: str) -> SheetModel:
+    """The model of one polymer and one kernel."""
+    melt = polymer.melt(polymer.temperature_C)
+    operator = time_operator(OMEGA, LEAN_MARGIN, 8)
+    mass = 10.0**NODES
+    tables = np.array(
+        [survival_matrix(operator.times, mass, melt, Model(kernel, float(b))) for b in EXPONENTS]
+    )
+    part = rouse_moduli(OMEGA, mass, melt)
+    return SheetModel(
+        polymer,
+        tuple(claims),
+        kernel,
+        tables,
+        operator.matrix,
+        np.vstack([part.real, part.imag]),
+        rouse_viscosity(mass, melt),
+        operator.times,
+    )
+
+
+def distribution_rows(z: np.ndarray, family: str) -> np.ndarray:
+    """Weights on NODES of members of a family, shape (k, n).
+
+    Parameters
+    ----------
+    z : ndarray of shape (k, number of the family's unknowns)
+        In standard deviations of their priors.
+    """
+    x = NODES * np.log(10.0)
+    Mw = MASS_PRIOR[0] + MASS_PRIOR[1] * z[:, 0]
+    if family == "log-normal":
+        return _lognormal(x, Mw, np.exp(np.log(3.0) + 0.8 * z[:, 1]))
+    if family == "two parts":
+        spread = np.exp(np.log(2.0) + 0.7 * z[:, 1])
+        share = 1.0 / (1.0 + np.exp(1.5 - 1.5 * z[:, 2]))
+        ratio = np.exp(np.log(6.0) + 0.6 * z[:, 3])
+        first = Mw - np.log((1.0 - share) + share * ratio)
+        a = _lognormal(x, first, spread)
+        b = _lognormal(x, first + np.log(ratio), np.ones_like(first))
+        return (1.0 - share)[:, None] * a + share[:, None] * b
+    rise = np.exp(0.6 * z[:, 1])
+    cut = np.exp(np.log(0.7) + 0.35 * z[:, 2])
+    scale = Mw - (gammaln((rise + 2) / cut) - gammaln((rise + 1) / cut))
+    r = x - scale[:, None]
+    log = (rise + 1)[:, None] * r - np.exp(np.minimum(cut[:, None] * r, 50.0))
+    w = np.exp(log - log.max(axis=1, keepdims=True))
+    return w / w.sum(axis=1, keepdims=True)
+
+
+def _lognormal(x: np.ndarray, Mw: np.ndarray, excess: np.ndarray) -> np.ndarray:
+    """Log-normals of weight average exp(Mw) and dispersity 1 + excess."""
+    s2 = np.log1p(np.maximum(excess, 0.03))
+    log = -0.5 * (x - Mw[:, None] + 0.5 * s2[:, None]) ** 2 / s2[:, None]
+    w = np.exp(log)
+    return w / np.maximum(w.sum(axis=1, keepdims=True), 1e-300)
+
+
+def _polynomial(at: np.ndarray) -> np.ndarray:
+    """Lagrange's weights of EXPONENTS at each place, shape (k, 5)."""
+    out = np.ones((at.size, EXPONENTS.size))
+    for j in range(EXPONENTS.size):
+        for m in range(EXPONENTS.size):
+            if m != j:
+                out[:, j] *= (at - EXPONENTS[m]) / (EXPONENTS[j] - EXPONENTS[m])
+    return out
+
+
+def _along(x: np.ndarray, rows: np.ndarray, at: np.ndarray) -> np.ndarray:
+    """Each row read at its own place by a local cubic, shape (k,)."""
+    h = x[1] - x[0]
+    i = np.clip(np.floor((at - x[0]) / h).astype(int) - 1, 0, x.size - 4)
+    u = (at - x[0]) / h - i
+    k = np.arange(rows.shape[0])
+    a, b, c, d = u, u - 1, u - 2, u - 3
+    return (
+        -b * c * d / 6 * rows[k, i]
+        + a * c * d / 2 * rows[k, i + 1]
+        - a * b * d / 2 * rows[k, i + 2]
+        + a * b * c / 6 * rows[k, i + 3]
+    )
