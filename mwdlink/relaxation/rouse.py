@@ -8,7 +8,7 @@ from __future__ import annotations
 from functools import lru_cache
 
 import numpy as np
-from scipy.special import polygamma
+from scipy.special import zeta
 
 from mwdlink.chains.melt import Melt
 from mwdlink.relaxation.lattice import POINTS, spread
@@ -18,6 +18,7 @@ SINGLE_MODES = 12
 # lattice on which the modes of many chains are gathered, per decade of tau
 LATTICE_PER_DECADE = 20
 UNKNOWN_REPEAT_UNIT = 100.0
+TABLED = 64
 
 
 def rouse_modes(
@@ -165,7 +166,7 @@ def rouse_relaxation(
 def rouse_viscosity(molar_mass: np.ndarray, melt: Melt) -> np.ndarray:
     """Zero-shear viscosity of the Rouse part [Pa s] of each molar mass, shape (n_M,).
 
-    Exact: the sums over p of p^-2 are differences of trigamma functions.
+    Exact: the sums over p of p^-2 are differences of tails of one sum.
     """
     return _moment(molar_mass, melt, 1)
 
@@ -215,10 +216,29 @@ def _runs(z: np.ndarray, last: np.ndarray) -> list[tuple[np.ndarray, np.ndarray,
 
 def _power_sum(first: np.ndarray, last: np.ndarray, power: int) -> np.ndarray:
     """Sum of p^-2 (power 1) or p^-4 (power 2) over p = first ... last; 0 when last < first."""
-    order = 2 * power - 1
-    factor = 1.0 if power == 1 else 6.0
-    value = (polygamma(order, first) - polygamma(order, np.maximum(last, first - 1) + 1)) / factor
+    value = _tail(first, power) - _tail(np.maximum(last, first - 1) + 1, power)
     return np.where(last >= first, value, 0.0)
+
+
+def _tail(first: np.ndarray, power: int) -> np.ndarray:
+    """Sum of p^-2 or p^-4 over all p from `first` on, whole numbers >= 1.
+
+    A table for small ones, the series of Euler and Maclaurin beyond (1e-13 there).
+    """
+    x = np.maximum(first, TABLED)
+    if power == 1:
+        series = 1 / x + 1 / (2 * x**2) + 1 / (6 * x**3) - 1 / (30 * x**5)
+    else:
+        series = 1 / (3 * x**3) + 1 / (2 * x**4) + 1 / (3 * x**5) - 1 / (6 * x**7)
+    return np.where(
+        first < TABLED, _tail_table(power)[np.minimum(first, TABLED).astype(np.intp)], series
+    )
+
+
+@lru_cache(maxsize=2)
+def _tail_table(power: int) -> np.ndarray:
+    """Tails from p = 0 (unused) to TABLED."""
+    return np.concatenate([[np.inf], zeta(2.0 * power, np.arange(1.0, TABLED + 1))])
 
 
 def _moment(molar_mass: np.ndarray, melt: Melt, power: int) -> np.ndarray:
@@ -240,8 +260,8 @@ def _quadrature(first: np.ndarray, last: np.ndarray) -> tuple[np.ndarray, np.nda
     if not np.any(long):
         return p, count
     # ends of the integral such that int p^-2 dp is the sum of p^-2, near begin - 1/2 and last + 1/2
-    low = 1.0 / polygamma(1, begin)
-    high = 1.0 / polygamma(1, np.maximum(last, begin) + 1.0)
+    low = 1.0 / _tail(begin, 1)
+    high = 1.0 / _tail(np.maximum(last, begin) + 1.0, 1)
     half = 0.5 * np.log(high / low)
     x, weight = _gauss(int(6 + np.ceil(8 * half[long].max())))
     run = low[:, None] * np.exp(half[:, None] * (1.0 + x))
