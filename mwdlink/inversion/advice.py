@@ -32,8 +32,8 @@ DECADES = (0.5, 1.0, 1.5, 2.0, 2.5, 3.0)
 # noise as a part of the present one; a rheometer's own limit
 NOISE_PARTS = (0.7, 0.5, 0.35, 0.25)
 LEAST_NOISE = 0.003
-# the longest test at one frequency that is proposed without a word [s]
-LONG_TEST = 3600.0
+# the longest cycle that is proposed without a word, and the longest that is proposed at all [s]
+LONG_TEST, LONGEST_TEST = 3600.0, 1e5
 QUANTITIES = ("Mw", "Mz", "Mw_within_window", "above:M")
 
 
@@ -55,6 +55,8 @@ class Option:
         Precision by Fisher information [-].
     checked : float or None
         Precision of the small ensemble [-], where it was run.
+    feasible : bool
+        False where one cycle would last more than a day and no temperature of the shift law helps.
     """
 
     kind: str
@@ -63,6 +65,7 @@ class Option:
     sigma: np.ndarray
     expected: float
     checked: float | None = None
+    feasible: bool = True
 
     @property
     def precision(self) -> float:
@@ -219,6 +222,11 @@ def _frequency_text(lab: Laboratory, decades: float, polymer: Polymer | None) ->
     return text
 
 
+def _feasible(lab: Laboratory, decades: float, polymer: Polymer | None) -> bool:
+    period = 2 * np.pi * 10**decades / float(lab.omega.min())
+    return period <= LONGEST_TEST or _temperature_for(lab, decades, polymer) is not None
+
+
 def _temperature_for(
     lab: Laboratory, decades: float, polymer: Polymer | None
 ) -> float | None:
@@ -246,7 +254,8 @@ def _options(lab: Laboratory, name: str, polymer: Polymer | None) -> list[Option
     for d in DECADES:
         omega, sigma = _lower(lab, d)
         text = _frequency_text(lab, d, polymer)
-        out.append(Option("frequency", text, omega, sigma, lab.expected(omega, sigma, name)))
+        found, feasible = lab.expected(omega, sigma, name), _feasible(lab, d, polymer)
+        out.append(Option("frequency", text, omega, sigma, found, feasible=feasible))
     law = None if polymer is None else polymer.shift
     if law is not None and law.reach_C[1] > lab.melt.temperature_C + 5.0:
         T = float(law.reach_C[1])
@@ -274,8 +283,8 @@ def _options(lab: Laboratory, name: str, polymer: Polymer | None) -> list[Option
             _frequency_text(lab, d, polymer)
             + f", and bring the noise to {100 * float(np.median(sigma)):.2g} %"
         )
-        found = lab.expected(omega, sigma, name)
-        out.append(Option("frequency and noise", text, omega, sigma, found))
+        found, feasible = lab.expected(omega, sigma, name), _feasible(lab, d, polymer)
+        out.append(Option("frequency and noise", text, omega, sigma, found, feasible=feasible))
     return out
 
 
@@ -297,7 +306,7 @@ def _advise_one(
     kept: dict[str, Option] = {}
     for k, option in enumerate(options):
         # the most modest of each kind, checked by an ensemble
-        if option.kind in kept or option.expected > TO_SPARE * wanted:
+        if not option.feasible or option.kind in kept or option.expected > TO_SPARE * wanted:
             continue
         if option.kind == "frequency and noise" and kept:
             continue
@@ -307,16 +316,16 @@ def _advise_one(
             kept[option.kind] = option
     best = min(kept.values(), key=_effort, default=None)
     if best is None:
-        closest = min(options, key=lambda o: o.precision)
+        closest = min((o for o in options if o.feasible), key=lambda o: o.precision)
         text = (
             f"{head}; nothing looked at here brings it to {100 * wanted:.2g} %. The most would be "
             f"to {closest.text}: {_percent(closest.precision)}"
         )
         if not np.isfinite(closest.precision):
             text = (
-                f"{head}, and would after every measurement looked at here (three decades lower in "
-                "frequency, less noise). Mw_within_window or the weight above a molar mass inside "
-                "the window can be had instead"
+                f"{head}, and would after every measurement looked at that takes less than a day a "
+                "cycle (up to three decades lower in frequency, less noise). Mw_within_window or "
+                "the weight above a molar mass inside the window can be had instead"
             )
     else:
         text = f"{head}; to bring it to {100 * wanted:.2g} %, {best.text}: "

@@ -38,6 +38,7 @@ class Laboratory:
         self.w, self.smoothing = fit.w, fit.smoothing
         self.melt, self.model = melt, model
         self.omega, self.sigma = omega, sigma
+        self._made: dict[tuple[bytes, bytes], tuple[Problem, np.ndarray]] = {}
         n = omega.size
         self.noise = float(np.median(sigma))
         self.per_decade = max((n - 1) / max(float(np.log10(omega.max() / omega.min())), 0.1), 2.0)
@@ -76,6 +77,12 @@ class Laboratory:
 
     def problem(self, omega: np.ndarray, sigma: np.ndarray) -> tuple[Problem, np.ndarray]:
         """The problem of a set of frequencies with exact data, and the weights behind it."""
+        key = (omega.tobytes(), sigma.tobytes())
+        if key not in self._made:
+            self._made[key] = self._make(omega, sigma)
+        return self._made[key]
+
+    def _make(self, omega: np.ndarray, sigma: np.ndarray) -> tuple[Problem, np.ndarray]:
         ones = np.ones(omega.size)
         built = sweep_problem(omega, ones, ones, sigma, self.melt, self.model)
         w = self.continued(built)

@@ -4,7 +4,8 @@ A maximum counts as a peak when it stands clearly above the valleys beside it, h
 and returns in most members of the ensemble, with every kernel that fits: a narrow melt read with a
 kernel that is too sharp fits well and shows a second peak that is not there (made by the power-law
 kernel, read by the exponential one: a third of the weight at a quarter of the molar mass). The
-weight of a peak is what lies between its valleys.
+weight of a peak is what lies between its valleys; the outermost peaks take what lies beyond the
+nodes on their side.
 """
 
 from __future__ import annotations
@@ -34,7 +35,7 @@ class Peak:
     molar_mass, molar_mass_low, molar_mass_high : float
         Position of the maximum [g/mol] and its interval over the members.
     fraction, fraction_low, fraction_high : float
-        Weight between the valleys on both sides [-].
+        Weight between the valleys on both sides [-], of all chains.
     width_decades : float or None
         Full width at half height [decades of M]; None where a valley or the end of the nodes
         comes before half height on both sides.
@@ -90,6 +91,8 @@ def find_peaks(
     level: float = 0.9,
     weights: np.ndarray | None = None,
     groups: np.ndarray | None = None,
+    above_members: np.ndarray | None = None,
+    above_central: float = 0.0,
 ) -> list[Peak]:
     """Peaks of the central curve that persist over the members, by ascending molar mass.
 
@@ -109,6 +112,11 @@ def find_peaks(
         Weight of each member.
     groups : ndarray of shape (m,), optional
         Label of each member's kernel: a peak must return within every group.
+    above_members : ndarray of shape (m,), optional
+        Weight of each member beyond the last node [-]; zero unless given. What is then missing
+        from one lies below the first node.
+    above_central : float
+        The same of the central curve [-].
 
     Returns
     -------
@@ -119,8 +127,13 @@ def find_peaks(
     central = np.asarray(density_central, dtype=float)
     tops = _tops(central, step)
     members = None if density_members is None else np.atleast_2d(density_members)
+    lump = np.array([above_central])
     if members is None or members.shape[0] == 0:
-        return [_peak(x, central, t, None, None, 1.0, window, level) for t in tops]
+        alone = [float(_weight(central[None], t, step, lump)[0]) for t in tops]
+        return [
+            _peak(x, central, t, f, None, None, 1.0, window, level)
+            for t, f in zip(tops, alone, strict=True)
+        ]
     share = np.ones(len(members)) if weights is None else np.asarray(weights, dtype=float)
     share = share / share.sum()
     labels = np.zeros(len(members), dtype=int) if groups is None else np.asarray(groups)
@@ -132,13 +145,25 @@ def find_peaks(
         if len(tops) < 2 or persistence[weakest] >= PERSISTENCE:
             break
         tops = _without(tops, weakest, central)
+    beyond = np.zeros(len(members)) if above_members is None else np.asarray(above_members)
     out = []
     for top, (held, at), kept in zip(tops, found, persistence, strict=True):
+        fraction = float(_weight(central[None], top, step, lump)[0])
         position = np.array([_summit(x, members[i], j) for i, j in zip(held, at, strict=True)])
-        weight = members[:, top.first : top.last + 1].sum(axis=1) * step
+        weight = _weight(members, top, step, beyond)
         spread = (position, share[held])
-        out.append(_peak(x, central, top, spread, (weight, share), kept, window, level))
+        out.append(_peak(x, central, top, fraction, spread, (weight, share), kept, window, level))
     return out
+
+
+def _weight(members: np.ndarray, top: _Top, step: float, above: np.ndarray) -> np.ndarray:
+    """Weight of a basin in each member; the outermost basins hold what lies beyond the nodes."""
+    weight = members[:, top.first : top.last + 1].sum(axis=1) * step
+    if top.first == 0:
+        weight = weight + np.clip(1.0 - members.sum(axis=1) * step - above, 0.0, 1.0)
+    if top.last == members.shape[1] - 1:
+        weight = weight + above
+    return np.clip(weight, 0.0, 1.0)
 
 
 def _least_share(held: np.ndarray, share: np.ndarray, kinds: list[np.ndarray]) -> float:
@@ -233,6 +258,7 @@ def _peak(
     x: np.ndarray,
     density: np.ndarray,
     top: _Top,
+    fraction: float,
     position: tuple[np.ndarray, np.ndarray] | None,
     weight: tuple[np.ndarray, np.ndarray] | None,
     persistence: float,
@@ -241,7 +267,6 @@ def _peak(
 ) -> Peak:
     ends = [(1 - level) / 2, (1 + level) / 2]
     at = _summit(x, density, top.top)
-    fraction = float(density[top.first : top.last + 1].sum() * (x[1] - x[0]))
     low = high = at
     if position is not None and position[0].size:
         a, b = quantiles(position[0], ends, position[1])

@@ -63,6 +63,16 @@ def test_a_peak_must_return_in_the_members_of_every_kernel():
     assert len(find_peaks(NODES, most, two, weights=weights)) == 1
 
 
+def test_weight_beyond_the_nodes_belongs_to_the_outermost_peaks():
+    """Derived: 0.3 and 0.7 with a tenth of each cut off; what is above is told apart if given."""
+    density = 0.2 * bell(4.8, 0.12) + 0.6 * bell(6.0, 0.2)
+    low, high = find_peaks(NODES, density[None], density, above_members=[0.1], above_central=0.1)
+    assert low.fraction == pytest.approx(0.3, abs=0.003)
+    assert high.fraction == pytest.approx(0.7, abs=0.003)
+    (one,) = find_peaks(NODES, None, 0.7 * bell(5.5, 0.2))
+    assert one.fraction == pytest.approx(1.0)
+
+
 def test_a_rise_to_the_end_of_the_nodes_is_flagged():
     """Derived: a maximum at the last node is at the edge."""
     density = bell(7.2, 0.5)
