@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import ast
+import functools
 import sys
 from collections.abc import Iterator
 from pathlib import Path
@@ -61,9 +62,9 @@ def imports(tree: ast.AST, path: Path, top_only: bool = False) -> Iterator[tuple
             yield from imports(node, path, top_only)
 
 
-def parsed() -> Iterator[tuple[Path, ast.AST]]:
-    for path in modules():
-        yield path, ast.parse(path.read_text(encoding="utf-8"))
+@functools.cache
+def parsed() -> tuple[tuple[Path, ast.AST], ...]:
+    return tuple((path, ast.parse(path.read_text(encoding="utf-8"))) for path in modules())
 
 
 def test_rooms_in_order() -> None:

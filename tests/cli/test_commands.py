@@ -53,6 +53,15 @@ sweep = "aab-sweep.csv"
 """
 
 
+SHEET = """\
+polymer = "hdpe"
+[claims]
+Mw_g_per_mol = {value = 1.2e5, tolerance = 0.10, calibration = "absolute"}
+dispersity = {value = 4.0, tolerance = 0.15}
+eta0_Pa_s = {value = 2.0e4, tolerance = 0.15, temperature_C = 190}
+"""
+
+
 def measured(melt: Any, T: float, chance: np.random.Generator) -> pd.DataFrame:
     """A sweep of a made-up melt with 2 % noise."""
     omega = np.geomspace(1e-2, 1e2, 17)
@@ -88,6 +97,7 @@ def inputs(tmp_path_factory: pytest.TempPathFactory) -> Path:
     for name, melt in melts.items():
         measured(melt, 190.0, chance).to_csv(folder / f"{name}-sweep.csv", index=False)
     (folder / "study.toml").write_text(STUDY)
+    (folder / "sheet.toml").write_text(SHEET)
     return folder
 
 
@@ -128,6 +138,7 @@ WRITTEN = {
         "distribution.csv gpc_only.csv fit.csv",
         "tail time_law_factor explanations averages advice",
     ),
+    "datasheet sheet.toml --kernel power-law": ("claims.csv", "claims odd_one_out verdict"),
     "calibrate study.toml --kernel power-law": (
         "residuals.csv",
         "viscosity network exponent",

@@ -2,77 +2,22 @@
 
 from __future__ import annotations
 
-import os
 import re
-import subprocess
-import sys
+from collections.abc import Callable
 from pathlib import Path
 
 import pytest
 from click.testing import CliRunner
+from pages import PAGES, TOP, name_of, pages_with_code
 
-import mwdlink
 from mwdlink.cli.main import COMMANDS, main
 
-TOP = Path(__file__).parents[2]
-PAGES = [TOP / "README.md", TOP / "DEVELOPERS.md", *sorted((TOP / "docs").glob("**/*.md"))]
-BLOCK = re.compile(r"^```(\w+)[^\n]*\n(.*?)^```\s*$", re.MULTILINE | re.DOTALL)
-# a block below this line is shown, not run: it installs, takes long, or is a fragment
-NOT_RUN = re.compile(r"<!-- not run[^>]*-->\s*$")
 
-
-def blocks(page: Path) -> list[tuple[str, str]]:
-    """(language, code) of a page's runnable blocks, in order."""
-    text = page.read_text(encoding="utf-8")
-    found = []
-    for match in BLOCK.finditer(text):
-        if match[1] in ("python", "sh", "bash") and not NOT_RUN.search(text[: match.start()]):
-            found.append((match[1], match[2]))
-    return found
-
-
-def pages_with_code() -> list[Path]:
-    return [p for p in PAGES if p.is_file() and blocks(p)]
-
-
-@pytest.mark.parametrize("page", pages_with_code(), ids=lambda p: str(p.relative_to(TOP)))
-def test_code_blocks_run(page: Path, tmp_path: Path) -> None:
-    """A reader who follows a page from top to bottom in an empty folder gets no error.
-
-    The folder holds the shipped example data as `examples`, as a reader's checkout does. Python
-    blocks of a page share one session, as they would in a notebook.
-    """
-    if (TOP / "examples").is_dir():
-        (tmp_path / "examples").symlink_to(TOP / "examples")
-    programs = tmp_path.parent / f"{tmp_path.name}-bin"
-    programs.mkdir()
-    command = programs / "mwdlink"
-    command.write_text(f'#!/bin/sh\nexec "{sys.executable}" -m mwdlink "$@"\n')
-    command.chmod(0o755)
-    for name in ("python", "python3"):
-        (programs / name).symlink_to(sys.executable)
-    inside = [str(Path(mwdlink.__file__).parents[1]), os.environ.get("PYTHONPATH", "")]
-    environment = os.environ | {
-        "PATH": f"{programs}{os.pathsep}{os.environ['PATH']}",
-        "PYTHONPATH": os.pathsep.join(filter(None, inside)),
-        "MPLBACKEND": "Agg",
-    }
-    session = ""
-    for language, code in blocks(page):
-        if language == "python":
-            session += code
-            continue
-        if session:
-            run([sys.executable, "-c", session], tmp_path, environment, session)
-            session = ""
-        run(["bash", "-euo", "pipefail", "-c", code], tmp_path, environment, code)
-    if session:
-        run([sys.executable, "-c", session], tmp_path, environment, session)
-
-
-def run(command: list[str], folder: Path, environment: dict[str, str], code: str) -> None:
-    done = subprocess.run(command, cwd=folder, env=environment, capture_output=True, text=True)
-    assert done.returncode == 0, f"{code}\n--- stdout\n{done.stdout}\n--- stderr\n{done.stderr}"
+@pytest.mark.parametrize("page", pages_with_code(), ids=name_of)
+def test_code_blocks_run(page: Path, outcome_of: Callable[[Path], str]) -> None:
+    """A reader who follows a page from top to bottom in an empty folder gets no error."""
+    failure = outcome_of(page)
+    assert not failure, failure
 
 
 @pytest.mark.parametrize("name", COMMANDS)
