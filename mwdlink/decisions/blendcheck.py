@@ -554,13 +554,14 @@ def _error(
             a.append(misses[i][:n][mask])
             b.append(misses[i][n:][mask])
     decades = []
+    top = max(float(data[i].omega[-1]) for i in good)
     for k in sorted(pooled):
         up, out = (np.concatenate(x) for x in pooled[k])
         rms = float(np.sqrt(np.mean(up**2))), float(np.sqrt(np.mean(out**2)))
         decades.append(
             Decade(
                 float(10.0**k),
-                float(10.0 ** (k + 1)),
+                min(float(10.0 ** (k + 1)), top),
                 rms[0],
                 rms[1],
                 float(up.mean()),

@@ -74,9 +74,10 @@ def read_study(
         named = reader.path(named, "polymer", 0)
         reader.read.append(named)
     card = read_polymer(named)
-    temperature = temperature_C
-    if temperature is None:
-        temperature = reader.number(mapping, "temperature_C", "", 0, low=-273.15)
+    own = reader.number(mapping, "temperature_C", "", 0, low=-273.15)
+    # tables that do not state theirs were measured at the study's own temperature
+    reader.celsius = own
+    temperature = own if temperature_C is None else temperature_C
     uncertainty = reader.number(mapping, "fraction_uncertainty", "", 0, low=-1e-300, high=0.2)
     components = [
         reader.component(block, i) for i, block in enumerate(reader.blocks(mapping, "component"))
@@ -143,6 +144,7 @@ class _Reader:
     def __init__(self, path: str, text: str, folder: Path, outside: bool) -> None:
         self.file, self.text, self.folder, self.outside = path, text, folder, outside
         self.read: list[str] = []
+        self.celsius: float | None = None
 
     # -- errors with their line ---------------------------------------------------------------
     def error(self, message: str, place: Place | None, remedy: str | None = None) -> InputError:
@@ -257,6 +259,7 @@ class _Reader:
             distribution = read_distribution(path, calibration=calibration, label=name)
             self.read.append(path)
         temperature = self.number(block, "temperature_C", "component", i, low=-273.15)
+        temperature = self.celsius if temperature is None else temperature
         if "sweep" in block:
             path = self.path(block["sweep"], "component", i, "sweep")
             sweep = read_sweep(path, temperature_C=temperature, label=name)
@@ -311,6 +314,7 @@ class _Reader:
             )
         shares = {k: v / total for k, v in shares.items()}
         temperature = self.number(block, "temperature_C", "blend", i, low=-273.15)
+        temperature = self.celsius if temperature is None else temperature
         sweep = None
         if "sweep" in block:
             path = self.path(block["sweep"], "blend", i, "sweep")
