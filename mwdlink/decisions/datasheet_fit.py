@@ -150,8 +150,7 @@ def _fit(
     n, k = target.size, masks.shape[0]
     z = np.zeros((k, d))
     damping = np.full(k, 0.3)
-    y, slope = model.predict_and_slope(z, family)
-    y, slope = y[:, :n], slope[:, :n]
+    y, slope = model.predict_and_slope(z, family, n)
     cost = _cost(y, z, target, sigma, masks)
     eye = np.eye(d)
     for _ in range(STEPS):
@@ -165,8 +164,7 @@ def _fit(
         )[:, :, 0]
         step *= np.minimum(1.0, 1.5 / np.maximum(np.abs(step).max(axis=1), 1e-12))[:, None]
         trial = np.clip(z + step, -FARTHEST, FARTHEST)
-        new_y, new_slope = model.predict_and_slope(trial, family)
-        new_y, new_slope = new_y[:, :n], new_slope[:, :n]
+        new_y, new_slope = model.predict_and_slope(trial, family, n)
         new_cost = _cost(new_y, trial, target, sigma, masks)
         better = new_cost <= cost + 1e-9
         gain = np.where(better, cost - new_cost, 0.0)

@@ -45,9 +45,26 @@ BLIND_FACTOR, BLIND_SPREAD = 2.0, 0.25
 # what Cox-Merz and the flow integral themselves are good for, beside the claims' tolerances
 FLOW_ERROR = 0.04
 STEP = 1e-3
+# which of CARD's unknowns act on what, the exponent aside
+_TIMES = (TIME, MODULUS, ENERGY)
+ACTS: dict[str, tuple[int, ...]] = {
+    "Mn": (EQUIVALENT,),
+    "Mw": (EQUIVALENT,),
+    "Mz": (EQUIVALENT,),
+    "dispersity": (),
+    "eta0": (TIME, ENERGY),
+    "melt flow": (*_TIMES, ENTRANCE),
+    "flow rate ratio": (MODULUS, ENTRANCE),
+    "crossover omega": _TIMES,
+    "crossover G": (MODULUS,),
+    "viscosity": _TIMES,
+    "intrinsic viscosity": (INTRINSIC,),
+    "activation energy": (ENERGY,),
+}
 # ln of the weight average, before anything is known
 MASS_PRIOR = (float(np.log(1.3e5)), 1.0)
 NODES = np.linspace(2.0, 7.6, 92)
+MASS = 10.0**NODES
 OMEGA = np.geomspace(1e-5, 1e5, 61)
 
 
@@ -79,13 +96,8 @@ class SheetModel:
     rouse_eta: np.ndarray
     times: np.ndarray
 
-    @property
-    def mass(self) -> np.ndarray:
-        """Molar masses of the nodes [g/mol]."""
-        return 10.0**NODES
-
     def predict(self, z: np.ndarray, family: str) -> np.ndarray:
-        """ln of every claimed quantity.
+        """ln of every quantity.
 
         Parameters
         ----------
@@ -99,33 +111,59 @@ class SheetModel:
             NaN where a quantity lies outside what can be computed.
         """
         own = len(FAMILIES[family])
-        return self._all(*self._costly(z, own, family), z[:, own:])
+        w, curves = self._costly(z, own, family)
+        return self._all(self.claims, w, curves, z[:, own:], {})
 
-    def predict_and_slope(self, z: np.ndarray, family: str) -> tuple[np.ndarray, np.ndarray]:
-        """The same and its derivatives, shapes (k, c) and (k, c, d)."""
+    def predict_and_slope(
+        self, z: np.ndarray, family: str, count: int
+    ) -> tuple[np.ndarray, np.ndarray]:
+        """The same of the first `count` quantities, and derivatives: (k, c) and (k, c, d)."""
         own = len(FAMILIES[family])
         k, d = z.shape
+        claims = self.claims[:count]
         costly = [*range(own), own + EXPONENT]
         moved = np.concatenate([z, *[z + STEP * np.eye(d)[i] for i in costly]])
         w, curves = self._costly(moved, own, family)
-        y = self._all(w, curves, moved[:, own:]).reshape(len(costly) + 1, k, -1)
-        slope = np.zeros((k, y.shape[2], d))
+        y = self._all(claims, w, curves, moved[:, own:], {}).reshape(len(costly) + 1, k, -1)
+        slope = np.zeros((k, count, d))
         for j, i in enumerate(costly):
             slope[:, :, i] = (y[j + 1] - y[0]) / STEP
-        first = Curves(curves.omega, curves.storage[:k], curves.loss[:k], curves.eta0[:k], curves.Je0[:k])
+        first = Curves(OMEGA, curves.storage[:k], curves.loss[:k], curves.eta0[:k], curves.Je0[:k])
         for i in range(own, d):
-            if i not in costly:
-                card = z[:, own:] + STEP * np.eye(d - own)[i - own]
-                slope[:, :, i] = (self._all(w[:k], first, card) - y[0]) / STEP
+            acts = [c for c, q in enumerate(claims) if i - own in ACTS[q.kind]]
+            if i in costly or not acts:
+                continue
+            card = z[:, own:] + STEP * np.eye(d - own)[i - own]
+            changed = self._all([claims[c] for c in acts], w[:k], first, card, {})
+            slope[:, acts, i] = (changed - y[0][:, acts]) / STEP
         return y[0], np.nan_to_num(slope)
 
     def _costly(self, z: np.ndarray, own: int, family: str) -> tuple[np.ndarray, Curves]:
         w = distribution_rows(z[:, :own], family)
         return w, self._curves(w, EXPONENT_PRIOR[0] + EXPONENT_PRIOR[1] * z[:, own + EXPONENT])
 
-    def _all(self, w: np.ndarray, curves: Curves, card: np.ndarray) -> np.ndarray:
+    def _all(
+        self,
+        claims: Sequence[Claim],
+        w: np.ndarray,
+        curves: Curves,
+        card: np.ndarray,
+        rates: dict[float, np.ndarray],
+    ) -> np.ndarray:
         with np.errstate(invalid="ignore", divide="ignore"):
-            return np.column_stack([self._one(c, w, curves, card) for c in self.claims])
+            return np.column_stack([self._one(c, w, curves, card, rates) for c in claims])
+
+    def _rate(
+        self, load: float, curves: Curves, card: np.ndarray, rates: dict[float, np.ndarray]
+    ) -> np.ndarray:
+        """ln of the melt flow rate at unit density and unmoved times; one run a load."""
+        if load not in rates:
+            lost = np.clip(ENTRANCE_PRIOR[0] + ENTRANCE_PRIOR[1] * card[:, ENTRANCE], 0.0, 0.5)
+            modulus = self.modulus_spread * card[:, MODULUS]
+            # a factor on the modulus is a factor on the stress that drives the flow
+            effective = 1.0 - (1.0 - lost) / np.exp(modulus)
+            rates[load] = np.log(melt_flow_rates(curves, load, 1000.0, effective))
+        return rates[load]
 
     def _curves(self, w: np.ndarray, exponent: np.ndarray) -> Curves:
         beta = np.clip(exponent, 1.35, 2.65)
@@ -143,9 +181,14 @@ class SheetModel:
         return Curves(OMEGA, y[:n].T, y[n:].T, eta0, np.ones(w.shape[0]))
 
     def _one(
-        self, c: Claim, w: np.ndarray, curves: Curves, card: np.ndarray
+        self,
+        c: Claim,
+        w: np.ndarray,
+        curves: Curves,
+        card: np.ndarray,
+        rates: dict[float, np.ndarray],
     ) -> np.ndarray:
-        m = self.mass
+        m = MASS
         if c.kind in ("Mn", "Mw", "Mz", "dispersity"):
             number, weight = -np.log(w @ (1.0 / m)), np.log(w @ m)
             if c.kind == "dispersity":
@@ -174,14 +217,12 @@ class SheetModel:
                 + modulus
                 + moved
             )
-        lost = np.clip(ENTRANCE_PRIOR[0] + ENTRANCE_PRIOR[1] * card[:, ENTRANCE], 0.0, 0.5)
-        effective = 1.0 - (1.0 - lost) / np.exp(modulus)
-        density = self.polymer.density(T)
-        rate = np.log(melt_flow_rates(curves, float(c.load_kg), density, effective)) - moved
+        rate = self._rate(float(c.load_kg or 0.0), curves, card, rates)
         if c.kind == "flow rate ratio":
-            other = melt_flow_rates(curves, float(c.second_load_kg), density, effective)
-            return rate - (np.log(other) - moved)
-        return rate - np.log(density / 1000.0) if c.volume else rate
+            return rate - self._rate(float(c.second_load_kg or 0.0), curves, card, rates)
+        if c.volume:
+            return rate - moved
+        return rate - moved + np.log(self.polymer.density(T) / 1000.0)
 
     @property
     def time_spread(self) -> float:
@@ -225,7 +266,7 @@ def sheet_model(polymer: Polymer, claims: Sequence[Claim], kernel: str) -> Sheet
     """The model of one polymer and one kernel."""
     melt = polymer.melt(polymer.temperature_C)
     operator = time_operator(OMEGA, LEAN_MARGIN, 8)
-    mass = 10.0**NODES
+    mass = MASS
     tables = np.array(
         [survival_matrix(operator.times, mass, melt, Model(kernel, float(b))) for b in EXPONENTS]
     )
