@@ -21,7 +21,7 @@ DISPERSITIES = (1.5, 2.0, 3.0, 4.0, 8.0, 16.0)
 KERNELS = ("exponential", "reptation", "power-law")
 EXPONENTS = (2.0, 2.25)
 MW = 1.5e5
-# a log-normal of dispersity 16 owes most of its eta0 to chains no reactor makes
+# a log-normal of dispersity 16 owes a third of its eta0 to chains no reactor makes
 LONGEST = 1.0e7
 
 
