@@ -134,33 +134,9 @@ def plot_claims(claims: Sequence[Mapping[str, Any]], *, ax: Axes | None = None) 
     ax.tick_params(axis="y", which="both", length=0)
     reach = min(1.12 * max(abs(min(ends)), abs(max(ends))), 3.0)
     ax.set_xlim(-reach, reach)
-    steps = [
-        f
-        for f in (
-            1 / 1000,
-            1 / 300,
-            0.01,
-            0.03,
-            0.1,
-            0.2,
-            0.5,
-            0.7,
-            0.8,
-            0.9,
-            1,
-            1.1,
-            1.25,
-            1.4,
-            2,
-            5,
-            10,
-            30,
-            100,
-            300,
-            1000,
-        )
-        if abs(np.log10(f)) <= reach
-    ]
+    factors = (1.1, 1.25, 1.5, 2.0, 3.0, 5.0, 10.0, 30.0, 100.0, 300.0, 1000.0)
+    below = (0.9, 0.8, 0.7, 0.5, 0.3, 0.2, 0.1, 0.03, 0.01, 0.003, 0.001)
+    steps = [f for f in (1.0, *factors, *below) if abs(np.log10(f)) <= reach]
     ticks: list[float] = []
     for f in sorted(steps, key=lambda f: abs(np.log10(f))):
         # far apart enough for their labels

@@ -289,6 +289,8 @@ def blocks(record: Mapping[str, Any]) -> list[Block]:
     for key, x in record.items():
         if key in LEFT_OUT or x is None:
             continue
+        if key == "explanations" and all(isinstance(e, str) for e in x):
+            continue
         caption = CAPTIONS.get(key, upper_first(name_and_unit(key)[0]))
         band = bands.get(key) if isinstance(bands, Mapping) else None
         if isinstance(x, Mapping) and not is_uncertain(x):

@@ -75,14 +75,15 @@ def render(
         '<main id="answer" tabindex="-1">',
         _section(
             "Answer",
-            f'<p class="answer">{escape(result.answer())}</p>{_verdict(record)}',
+            f'<p class="answer">{escape(result.answer())}</p>{_verdict(record, result.answer())}',
             "s-answer",
         ),
         _section("To copy", f'<p class="copy">{escape(result.paragraph())}</p>', "s-copy"),
         _list_section("What the data cannot say", result.cannot_say(), "s-cannot"),
         "" if live is None else blend_live.section(live),
         _figures(pictures),
-        _list_section("What would help", record.get("advice") or (), "s-advice"),
+        _list_section("What could explain it", _texts(record.get("explanations")), "s-explain"),
+        _list_section("What would help", _texts(record.get("advice")), "s-advice"),
         _numbers(record),
         _how(record, command_line),
         _card(record),
@@ -157,9 +158,17 @@ def _head(kind: str, heading: str, labels: Mapping[str, str]) -> str:
     return f"<header>{above}<h1>{escape(heading)}</h1>{said_labels}</header>"
 
 
-def _verdict(record: Mapping[str, Any]) -> str:
+def _verdict(record: Mapping[str, Any], answer: str) -> str:
+    """The verdict below the answer, unless the answer has said it."""
     verdict = record.get("verdict")
-    return f"<p>{escape(str(verdict))}</p>" if isinstance(verdict, str) and verdict else ""
+    if not isinstance(verdict, str) or not verdict or verdict.strip(" .") in answer:
+        return ""
+    return f"<p>{escape(verdict)}</p>"
+
+
+def _texts(x: Any) -> list[str]:
+    """The entries of a list that are sentences; other entries are shown as a table."""
+    return [e for e in x if isinstance(e, str)] if isinstance(x, (list, tuple)) else []
 
 
 def _figures(pictures: Mapping[str, Picture]) -> str:
