@@ -18,7 +18,7 @@ import mwdlink
 
 # what each command is for, in the order a newcomer meets them; its code is mwdlink/cli/NAME.py
 COMMANDS = {
-    # "demo": "Write an invented example and run the whole job on it.",
+    "demo": "Write an invented example and run the whole job on it.",
     "predict": "From a distribution to moduli, spectrum, relaxation and flow.",
     "invert": "From a frequency sweep to the molecular-weight distribution.",
     "blend": "Predict a blend, or find the fraction that reaches a target.",
