@@ -194,6 +194,8 @@ class _Problem:
     ) -> tuple[float, float, np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
         part = self.A * np.exp(np.clip(u, -600, 600))
         model = part.sum(axis=1)
+        # a spectrum that vanished altogether costs beyond measure, but stays a number
+        model = np.maximum(model, 1e-300)
         r = (np.log(model) - y) * self.w
         J = part * (self.w / model)[:, None]
         chi2 = float(r @ r)
@@ -297,9 +299,11 @@ def fit_continuous(
         pull3 = rng.standard_normal(problem.D3.shape[0]) / np.sqrt(member_lam)
         pull2 = np.asarray(rng.standard_normal(problem.D2.shape[0]))
         try:
-            rows.append(problem.solve(fits[k][4], member_lam, y, pull3, pull2)[0])
+            row = problem.solve(fits[k][4], member_lam, y, pull3, pull2)[0]
         except NotConverged:
             continue
+        if np.all(problem.A @ np.exp(row) > 1e-6 * np.exp(problem.y)):
+            rows.append(row)
     if members and len(rows) < 0.9 * members:
         raise NotConverged(
             f"Only {len(rows)} of {members} perturbed refits of the continuous spectrum converged."

@@ -333,6 +333,7 @@ def _terminal(sweep: Sweep, c: Continuous, discrete: ModeFit) -> tuple[dict[str,
         bounds: np.ndarray,
         lines: float,
     ) -> Uncertain:
+        samples, bounds = samples[np.isfinite(samples)], bounds[np.isfinite(bounds)]
         if resolved:
             if samples.size == 0:
                 return Uncertain(float(value), level=c.level)
@@ -340,7 +341,7 @@ def _terminal(sweep: Sweep, c: Continuous, discrete: ModeFit) -> tuple[dict[str,
             low, high = min(q.low or lines, lines), max(q.high or lines, lines)
             unseen = MISSED * abs(value - bound)
             return Uncertain(q.value, low - unseen, high + unseen, c.level)
-        if bounds.size == 0:
+        if bounds.size == 0 or samples.size == 0:
             return Uncertain(float(bound), level=c.level, status="lower_bound")
         low = float(np.quantile(bounds, (1 - c.level) / 2))
         # the upper end is where the smooth continuation leads: no promise, a plain number all the
@@ -350,8 +351,10 @@ def _terminal(sweep: Sweep, c: Continuous, discrete: ModeFit) -> tuple[dict[str,
             float(bound), min(low, float(bound)), max(high, value), c.level, "lower_bound"
         )
 
-    m_je0, m_time = m_second / m_eta0**2, m_second / m_eta0
-    m_eta_low, m_je_low = m_abs / sweep.omega[0], m_up / m_abs**2
+    # curves no melt has can make a member vanish: such members do not count
+    with np.errstate(all="ignore"):
+        m_je0, m_time = m_second / m_eta0**2, m_second / m_eta0
+        m_eta_low, m_je_low = m_abs / sweep.omega[0], m_up / m_abs**2
     bands = {
         "eta0_Pa_s": quantity(
             float(eta0), m_eta0, reached, eta_low, m_eta_low, single.zero_shear_viscosity
