@@ -38,7 +38,8 @@ class Pool:
     ----------
     cells : tuple of Cells
         One per branch (branches have their own nodes).
-    kernel, smoothing : ndarray of int, shape (m,)
+    kernel, smoothing, plateau, branch : ndarray of int, shape (m,)
+        Labels: of the kernel, of lambda, of the plateau modulus, of the branch in `cells`.
     exponent, ln_time : ndarray of shape (m,)
     """
 
@@ -47,6 +48,8 @@ class Pool:
     smoothing: np.ndarray
     exponent: np.ndarray
     ln_time: np.ndarray
+    plateau: np.ndarray
+    branch: np.ndarray
 
     def gather(self, f: Any) -> np.ndarray:
         """A quantity of every member, f(Cells) -> (m_b,) or (m_b, k)."""
@@ -59,7 +62,7 @@ class Pool:
             self.exponent,
             self.ln_time,
             self.smoothing,
-            np.zeros_like(self.kernel),
+            self.plateau,
         )
 
 
@@ -68,12 +71,17 @@ def make_pool(branches: Sequence[Branch], drawn: Sequence[Members]) -> Pool | No
     if not drawn:
         return None
     cells, kernel, smooth, exponent, ln_time = [], [], [], [], []
+    plateau, branch = [], []
+    names = sorted({b.kernel for b in branches})
     for i, (b, m) in enumerate(zip(branches, drawn, strict=True)):
         ok = m.converged
         # eta0 = K M^a: a law `factor` times higher reads the same times as shorter chains
         scale = np.exp(-m.ln_time[ok] / b.melt.law_exponent)
         cells.append(Cells.make(b.problem.window.edges, m.w[ok], scale))
-        kernel.append(np.full(int(ok.sum()), i))
+        count = int(ok.sum())
+        kernel.append(np.full(count, names.index(b.kernel)))
+        plateau.append(np.full(count, round(1000 * b.plateau_factor)))
+        branch.append(np.full(count, i))
         smooth.append(m.smoothing_index[ok])
         exponent.append(m.exponent[ok])
         ln_time.append(m.ln_time[ok])
@@ -83,6 +91,8 @@ def make_pool(branches: Sequence[Branch], drawn: Sequence[Members]) -> Pool | No
         np.concatenate(smooth),
         np.concatenate(exponent),
         np.concatenate(ln_time),
+        np.concatenate(plateau),
+        np.concatenate(branch),
     )
 
 
@@ -92,6 +102,7 @@ def assemble(
     melt: Melt,
     branches: Sequence[Branch],
     allowed: Sequence[bool],
+    used: Sequence[Branch],
     drawn: Sequence[Members],
     *,
     above: tuple[float, ...],
@@ -107,12 +118,15 @@ def assemble(
     level: float,
     notes: tuple[Caution, ...],
 ) -> Inversion:
-    """All numbers of the result. Central values are medians of the ensemble, else the fit's."""
-    used = [b for b, ok in zip(branches, allowed, strict=True) if ok]
+    """All numbers of the result. Central values are medians of the ensemble, else the fit's.
+
+    `used` are the branches the members were drawn from: those allowed, and their variants.
+    """
     centre = _preferred(used)
     pool = make_pool(used, drawn)
-    low = max(b.problem.window.low for b in used)
-    high = min(b.problem.window.high for b in used)
+    nominal = [b for b in used if b.plateau_factor == 1.0]
+    low = max(b.problem.window.low for b in nominal)
+    high = min(b.problem.window.high for b in nominal)
     single = Cells.make(centre.problem.window.edges, centre.fit.w)
     prior = Cells.make(centre.problem.window.edges, prior_weights(centre, PRIOR_DRAWS, prior_seed))
     averages = _averages(single, pool, prior, low, high, level)
@@ -169,7 +183,7 @@ def assemble(
         smoothing_table=_smoothing_table(centre),
         kernels=_kernel_rows(branches, allowed, low, high, pool, used),
         model={
-            "kernels": [b.kernel for b in used],
+            "kernels": [b.kernel for b, ok in zip(branches, allowed, strict=True) if ok],
             "exponent": centre.model.exponent,
             "exponent_spread": centre.exponent_spread,
             "rouse": rouse,
@@ -189,10 +203,11 @@ def assemble(
 
 def _preferred(used: Sequence[Branch]) -> Branch:
     """The default kernel where the data allow it, else the likeliest."""
-    for b in used:
+    nominal = [b for b in used if b.plateau_factor == 1.0]
+    for b in nominal:
         if b.kernel == DEFAULT_KERNEL:
             return b
-    return max(used, key=lambda b: b.scan.total)
+    return max(nominal, key=lambda b: b.scan.total)
 
 
 def _uncertain(
@@ -494,7 +509,8 @@ def _kernel_rows(
             "Mw_high_g_per_mol": None,
         }
         if ok and pool is not None:
-            held = pool.cells[list(used).index(b)].averages()["Mw"]
+            parts = [c for c, u in zip(pool.cells, used, strict=True) if u.kernel == b.kernel]
+            held = np.concatenate([c.averages()["Mw"] for c in parts])
             row["Mw_low_g_per_mol"], row["Mw_high_g_per_mol"] = (
                 float(x) for x in np.quantile(held, [0.05, 0.95])
             )
@@ -510,7 +526,8 @@ def _member_table(
     parts = [c.averages() for c in pool.cells]
     joined = {k: np.concatenate([p[k] for p in parts]) for k in parts[0]}
     return {
-        "kernel": np.array([used[i].kernel for i in pool.kernel]),
+        "kernel": np.array([used[i].kernel for i in pool.branch]),
+        "plateau modulus factor [-]": pool.plateau / 1000.0,
         "exponent [-]": pool.exponent,
         "time-law factor [-]": np.exp(pool.ln_time),
         "Mn [g/mol]": joined["Mn"],

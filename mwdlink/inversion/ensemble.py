@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 
@@ -147,6 +148,28 @@ def fit_branch(
         problem = replace(moved, prior=problem.prior)
         found = scan(problem, found.fits[found.best].u, found.smoothing)
     return Branch(kernel, melt, model, spread, problem, found, build.plateau_factor)
+
+
+def plateau_variants(make: Any, melt: Melt, rouse: bool, branch: Branch) -> list[Branch]:
+    """The branch, and where the card gives a range of the plateau modulus the same at its ends.
+
+    The exponent's posterior and the relaxed prior are the branch's own.
+    """
+    out = [branch]
+    if melt.plateau_range is None or branch.build is not None:
+        return out
+    for end in melt.plateau_range:
+        factor = end / melt.plateau_modulus
+        if abs(factor - 1.0) < 5e-3:
+            continue
+        build = BranchBuilder(make, melt, rouse, factor)
+        other, model, problem = build.problem(branch.kernel, branch.model.exponent)
+        problem = replace(problem, prior=branch.problem.prior, sigma=branch.problem.sigma)
+        found = scan(problem, branch.fit.u, branch.scan.smoothing)
+        out.append(
+            Branch(branch.kernel, other, model, branch.exponent_spread, problem, found, factor)
+        )
+    return out
 
 
 def _scan(

@@ -21,6 +21,7 @@ from mwdlink.inversion.ensemble import (
     admissible,
     draw_members,
     fit_branch,
+    plateau_variants,
 )
 from mwdlink.inversion.inversion_result import Inversion
 from mwdlink.inversion.methods import CHOICES, METHODS, method_branch, method_members
@@ -133,12 +134,14 @@ def invert(
     branches, inflation = _inflate(branches, allowed, weights.source)
     used = [b for b, ok in zip(branches, allowed, strict=True) if ok]
     notes += tuple(n for b in used for n in b.notes)
+    if members and method == "smooth":
+        used = [v for b in used for v in plateau_variants(make, melt, rouse, b)]
     scatter = melt.scatter_decades * float(np.log(10.0))
     seeds = np.random.SeedSequence(seed).spawn(len(KERNEL_NAMES) + 1)
-    shares = _split(members, len(used))
+    children = {k: iter(seeds[KERNEL_NAMES.index(k)].spawn(3)) for k in KERNEL_NAMES}
     jobs = [
-        (b, n, seeds[KERNEL_NAMES.index(b.kernel)], scatter, method, choose)
-        for b, n in zip(used, shares, strict=True)
+        (b, n, next(children[b.kernel]), scatter, method, choose)
+        for b, n in zip(used, _split(members, len(used)), strict=True)
     ]
     drawn: list[Members] = list(mapper(_run_members, jobs)) if members else []
     words = chi2_in_words(
@@ -162,6 +165,7 @@ def invert(
         melt,
         branches,
         allowed,
+        used,
         drawn,
         above=tuple(float(a) for a in above),
         seed=seed,

@@ -10,6 +10,7 @@ import pytest
 from melts import FAMILIES, exact_card, mean_within, measured, melt_of
 
 from mwdlink.chains import families
+from mwdlink.chains.polymer import builtin
 from mwdlink.errors import InputError, ModelError, NotConverged
 from mwdlink.inversion.invert import invert
 from mwdlink.measurement.sweep import Sweep
@@ -133,6 +134,17 @@ def test_time_law_scatter_moves_molar_mass_as_the_law_says():
     r = invert(sweep, exact_card(0.2), kernels=["power-law"], exponent=2.0, members=400)
     spread = np.std(np.log(r.members["Mw [g/mol]"]))
     assert spread == pytest.approx(0.2 * np.log(10) / 3.6, rel=0.15)
+
+
+def test_a_range_of_the_plateau_modulus_takes_part():
+    """A card with 3.5e5 to 4.3e5 Pa: members use both ends, the weight below the window feels it."""
+    card = builtin("pp-isotactic")
+    rng = np.random.default_rng(1)
+    sweep = measured(families.lognormal(3e5, 4.0), card, Model(), rng)
+    r = invert(sweep, card, kernels=["power-law"], exponent=2.0, members=120, noise=0.03)
+    factors = set(np.round(r.members["plateau modulus factor [-]"], 2))
+    assert factors == {0.9, 1.0, 1.1}
+    assert r.outside["below"].budget["card"] > 0.0
 
 
 def test_result_is_complete_and_plain(default_result):
