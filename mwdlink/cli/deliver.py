@@ -145,12 +145,19 @@ class DrawnOnce:
 
 
 def report_of(result: Any, record: Mapping[str, Any], pictures: Mapping[str, Any]) -> str | None:
-    """The self-contained page."""
+    """The self-contained page.
+
+    Who calls a command from a program gives what a user would have typed as the context's `obj`,
+    a list of words.
+    """
     report = importlib.import_module("mwdlink.report")
     if not hasattr(report, "render"):
         return None
     # without what changes nothing in the result, so that a repeated run gives the same page
-    typed = [a for a in sys.argv[1:] if a not in ("--replace", "--quiet", "--json")]
+    context = click.get_current_context(silent=True)
+    told = None if context is None else context.find_root().obj
+    words = told if isinstance(told, list) else sys.argv[1:]
+    typed = [a for a in words if a not in ("--replace", "--quiet", "--json")]
     line = "mwdlink " + shlex.join(typed)
     page: str = report.render(result, record, pictures, command_line=line)
     return page

@@ -143,6 +143,11 @@ def run_step(step: Step, folder: Path) -> str:
     args = [*words[1:], "--out", step.folder, "--replace", "--quiet"]
     heard = io.StringIO()
     with contextlib.chdir(folder), contextlib.redirect_stdout(heard):
-        code.command.main(args, prog_name=f"mwdlink {step.command}", standalone_mode=False)
+        code.command.main(
+            args,
+            prog_name=f"mwdlink {step.command}",
+            standalone_mode=False,
+            obj=[step.command, *args],  # what the report quotes as typed
+        )
     first = heard.getvalue().strip().split("\n\n")[0]
     return " ".join(first.split())
