@@ -61,7 +61,7 @@ def write_study(folder: Path) -> None:
         "Crag": Distribution.from_averages(Mw=2.4e5, dispersity=3.5),
     }
     lines = [
-        "# Invented: six bags weighed from two invented polyethylenes (examples/make_weighed_bags.py)",
+        "# Invented: six bags of two invented polyethylenes (examples/make_weighed_bags.py)",
         'polymer = "hdpe"',
         "temperature_C = 190",
         "fraction_uncertainty = 0.002",

@@ -26,7 +26,9 @@ MODEL_ERROR = 0.04
 # a sweep's residuals hang together: about this many of them are independent in each modulus
 INDEPENDENT = 8
 ETA0_ERROR = 0.05
-NODES = 90
+NODES = 60
+# of Student's law of the samples' shifts
+FREEDOM = 3.0
 STEPS = (0.0, 0.01, 0.02, 0.02)
 MAX_ROUNDS = 20
 
@@ -154,9 +156,9 @@ def fit(
 
     def total(p: np.ndarray, d: np.ndarray, parts_rows: Sequence[np.ndarray]) -> float:
         prior = ((p - start) / PRIOR)[index]
-        return float(
-            sum(x @ x for x in parts_rows) + prior @ prior + np.sum((d / sample_shift) ** 2)
-        )
+        # Student's t: a sample with a wrong label must not drag the law of the others along
+        odd = (FREEDOM + 1.0) * np.log1p((d / sample_shift) ** 2 / FREEDOM)
+        return float(sum(x @ x for x in parts_rows) + prior @ prior + np.sum(odd))
 
     normal = np.eye(index.size + n)
     for _ in range(MAX_ROUNDS):
@@ -180,7 +182,8 @@ def fit(
                 j[:, c] = (rows(k, response(k, q), q[0] + d[k]) - r0[k]) / STEPS[i]
             normal += j.T @ j
             gradient += j.T @ r0[k]
-        weight = np.concatenate([PRIOR[index] ** -2, np.full(n, sample_shift**-2)])
+        tied = (FREEDOM + 1.0) / (FREEDOM + (d / sample_shift) ** 2) / sample_shift**2
+        weight = np.concatenate([PRIOR[index] ** -2, tied])
         normal += np.diag(weight)
         gradient += weight * np.concatenate([(p - start)[index], d])
         for _ in range(8):

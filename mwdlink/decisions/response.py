@@ -21,12 +21,11 @@ from mwdlink.decisions.properties import Curves
 from mwdlink.relaxation.kernels import get_kernel, power_law_decay, tube_survival
 from mwdlink.relaxation.mixing import Model, in_network, relaxation_times
 from mwdlink.relaxation.operator import exponential_fit, log_grid
-from mwdlink.relaxation.rouse import rouse_modes
+from mwdlink.relaxation.rouse import rouse_on_lattice
 
 TIMES_PER_DECADE = 10
 MODES_PER_DECADE = 8
 FREQUENCIES_PER_DECADE = 10
-ROUSE_PER_DECADE = 20
 MOST_NODES = 240
 HIGHEST_FREQUENCY = 1e7
 
@@ -278,22 +277,14 @@ class Bank:
             return np.empty(0), np.empty((len(self.components), 0))
         key = melt.plateau_modulus
         if key not in self._rouse:
-            listed = []
-            for i, d in enumerate(self.components):
-                for m, w in zip(d.molar_mass, d.mass, strict=True):
-                    if w > 1e-9:
-                        g, tau = rouse_modes(float(m), melt, 30.0 * self.omega_max)
-                        listed.append((np.full(g.size, i), g * w, tau))
-            which, g, tau = (np.concatenate([x[j] for x in listed]) for j in range(3))
-            grid = log_grid(float(tau.min()), float(tau.max()) * 1.01, ROUSE_PER_DECADE)
-            if grid.size < 2:
-                grid = np.array([grid[0], grid[0] * 1.2])
-            j = np.clip(np.searchsorted(grid, tau) - 1, 0, grid.size - 2)
-            upper = (tau - grid[j]) / (grid[j + 1] - grid[j])
-            out = np.zeros((len(self.components), grid.size))
-            np.add.at(out, (which, j), g * (1 - upper))
-            np.add.at(out, (which, j + 1), g * upper)
-            self._rouse[key] = (grid, out)
+            masses = np.concatenate([d.molar_mass for d in self.components])
+            tau, each = rouse_on_lattice(masses, None, melt, 30.0 * self.omega_max)
+            parts, first = [], 0
+            for d in self.components:
+                last = first + d.molar_mass.size
+                parts.append(each[:, first:last] @ d.mass)
+                first = last
+            self._rouse[key] = (tau, np.stack(parts))
         return self._rouse[key]
 
     def response(

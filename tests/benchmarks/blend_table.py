@@ -1,7 +1,7 @@
 """Measured tables of docs/blends.md: python tests/benchmarks/blend_table.py [SEEDS]
 
 Invented blends of two log-normal polyethylenes (Mw 6e4 and 2.2e5 g/mol, dispersity 2.5 and 3) at
-190 C, five decades of frequency at most, 2 % noise. Run by hand; takes about a minute.
+190 C, four decades of frequency, 2 % noise. Run by hand; takes about a minute.
 """
 
 from __future__ import annotations
