@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Any, ClassVar
 
@@ -148,15 +148,16 @@ class Inversion(Result):
         out = []
         for key, name in names.items():
             status = self.averages[key].status
+            start = name[0].upper() + name[1:]
             if status == "lower_bound":
                 out.append(
-                    f"{name} is a lower bound: chains too long for these frequencies carry "
+                    f"{start} is a lower bound: chains too long for these frequencies carry "
                     "weight of unknown length."
                 )
             elif status == "upper_bound":
-                out.append(f"{name} is an upper bound: chains too short to see are in the melt.")
+                out.append(f"{start} is an upper bound: chains too short to see are in the melt.")
             elif status == "assumed":
-                out.append(f"{name} is assumed, not measured: the prior shape fixes it.")
+                out.append(f"{start} is assumed, not measured: the prior shape fixes it.")
         out.append(
             "Long-chain branching and a second phase change the low frequencies as a "
             "high-molar-mass tail does; one sweep at one temperature cannot tell them apart."
@@ -183,9 +184,11 @@ def percent(u: Uncertain) -> str:
 
 
 def _g(x: float | None) -> str:
-    return "unknown" if x is None else f"{x:.3g}"
-
-
-def columns_of_fit(names: Sequence[str], values: Sequence[np.ndarray]) -> dict[str, np.ndarray]:
-    """Columns by name."""
-    return dict(zip(names, values, strict=True))
+    """Three digits, powers of ten written 1.16e5."""
+    if x is None:
+        return "unknown"
+    text = f"{x:.3g}"
+    if "e" in text:
+        digits, power = text.split("e")
+        text = f"{digits}e{int(power)}"
+    return text
