@@ -3,9 +3,11 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
+from scipy.stats import norm
 
 from mwdlink.chains.distribution import Distribution
 from mwdlink.chains.polymer import Polymer, builtin
@@ -28,6 +30,9 @@ from mwdlink.relaxation.mixing import Model, relaxation_times
 
 # a nuisance unknown this many prior standard deviations out strains the model
 STRAINED = 2.5
+# weight fraction that kernel, mixing rule and continuation are worth at best, one standard deviation
+# (assumed): a hundredth of a per cent is not told from nothing
+WORTH = 2e-4
 # this much of a moment beyond the window makes the average a bound
 BOUND = 0.1
 
@@ -180,6 +185,16 @@ def _uncertain(
     return Uncertain.from_samples(samples, level=level, status=status, **more)
 
 
+def _widened(u: Uncertain, least: float | None = None) -> Uncertain:
+    """The interval with what no model of this kind is better than, WORTH, added in quadrature."""
+    if u.value is None or u.low is None or u.high is None:
+        return u
+    more = float(norm.ppf((1 + u.level) / 2)) * WORTH
+    low = u.value - float(np.hypot(u.value - u.low, more))
+    high = u.value + float(np.hypot(u.high - u.value, more))
+    return replace(u, low=low if least is None else max(low, least), high=high)
+
+
 def _assemble(
     found: Joint,
     gpc: Distribution,
@@ -207,8 +222,10 @@ def _assemble(
     more = part - weight_beyond(x, alone, beyond)
     status = "resolved" if beyond <= reach else "assumed"
     budget = _budget(found, part, nuisance)
-    fraction = _uncertain(part, level, status, float(part[0]), budget=budget)
-    excess = _uncertain(more, level, status, float(more[0]), budget=_budget(found, more, nuisance))
+    fraction = _widened(_uncertain(part, level, status, float(part[0]), budget=budget), 0.0)
+    excess = _widened(
+        _uncertain(more, level, status, float(more[0]), budget=_budget(found, more, nuisance))
+    )
     limit = detection_limit(leader.smooth.problem, leader.smooth.best, beyond)
 
     # -- what went with it ----------------------------------------------------------------------
