@@ -9,6 +9,7 @@ from typing import Any, ClassVar
 import numpy as np
 
 from mwdlink.errors import Caution, InputError, merge_cautions
+from mwdlink.measurement.master_notes import law_text, master_cautions
 from mwdlink.measurement.shift_laws import LawFit, fit_laws, preferred
 from mwdlink.measurement.shifts import Curve, ShiftFit, fit_shifts
 from mwdlink.measurement.superposition import Superposition, judge
@@ -20,8 +21,6 @@ from mwdlink.result import Result
 LN10 = float(np.log(10.0))
 VERTICALS = ("none", "rho-T", "free")
 LEVEL = 0.9
-# Free vertical factors must differ by this much, and by four standard errors, to be spoken of.
-VERTICAL_TOLD = 0.03
 
 
 @dataclass(frozen=True)
@@ -240,7 +239,7 @@ class Master(Result):
         T = [s.temperature_C for s in self.steps]
         return (
             f"{len(T)} temperatures from {T[0]:.4g} to {T[-1]:.4g} C make one master curve at "
-            f"{self.reference_C:.4g} C; the shifts follow {_law_text(self.law)}. "
+            f"{self.reference_C:.4g} C; the shifts follow {law_text(self.law)}. "
             f"{self.superposition.text()}"
         )
 
@@ -249,7 +248,7 @@ class Master(Result):
         if "wlf" in self.laws:
             other = self.laws["wlf" if self.law.kind == "arrhenius" else "arrhenius"]
             text += (
-                f" The other law, {_law_text(other)}, misses the shifts by "
+                f" The other law, {law_text(other)}, misses the shifts by "
                 f"{other.residual_decades:.3f} decades (this one by "
                 f"{self.law.residual_decades:.3f})."
             )
@@ -270,20 +269,6 @@ class Master(Result):
         if len(T) < 4:
             out.append(f"With {len(T)} temperatures Arrhenius and WLF can hardly be told apart.")
         return tuple(out)
-
-
-def _law_text(law: LawFit) -> str:
-    def span(q: Uncertain) -> str:
-        return "" if q.low is None or q.high is None else f" ({q.low:.3g} to {q.high:.3g})"
-
-    c = law.constants
-    if law.kind == "arrhenius":
-        e = c["energy_kJ_per_mol"]
-        return f"an Arrhenius law with {e.value:.3g} kJ/mol{span(e)}"
-    return (
-        f"a WLF law with c1 = {c['c1'].value:.3g}{span(c['c1'])} and c2 = {c['c2_K'].value:.4g} "
-        f"K{span(c['c2_K'])}"
-    )
 
 
 def make_master(
@@ -350,6 +335,7 @@ def make_master(
     free = fit if vertical == "free" else fit_shifts(curves, pivot, free_vertical=True, start=fit)
     # where the curves do not superpose, the misfit and not the noise limits the shifts
     scale = max(1.0, fit.chi2_per_point)
+    _check_determined(scale * np.diag(fit.covariance), names)
     rng = np.random.default_rng(np.random.SeedSequence(seed))
     y = fit.log_shift / LN10
     laws, draws = fit_laws(
@@ -386,10 +372,29 @@ def make_master(
         *(p.warnings for p in parts),
         notes,
         notes_noise,
-        _cautions(T, reference_C, same_temperature, steps, vertical, fixed, free, free_scale,
+        master_cautions(T, reference_C, same_temperature, steps, vertical, fixed, free, free_scale,
                   verdict, polymer),
     )  # fmt: skip
     return Master(float(reference_C), steps, vertical, laws, law, verdict, fit, None, warnings)
+
+
+def _check_determined(variance: np.ndarray, names: list[str]) -> None:
+    """Refuse shifts the data leave open by a decade or more: they would be no answer.
+
+    A variance below zero is one too large to be computed.
+
+    Raises
+    ------
+    InputError
+    """
+    variance = np.where(variance < 0, np.inf, variance)
+    k = int(np.argmax(variance))
+    if not variance[k] < LN10**2:
+        raise InputError(
+            f"the shift of the sweep at {names[k]} is not determined by the data.",
+            remedy="Its curve is too noisy or too featureless where it overlaps the others: give "
+            "more points or a wider range, or leave this temperature out.",
+        )
 
 
 def _curve(sweep: Sweep, sigma: np.ndarray) -> Curve:
@@ -446,54 +451,3 @@ def _overlap(reduced: list[np.ndarray], k: int, pivot: int) -> float:
         high = min(reduced[k][-1], reduced[j][-1])
         best = max(best, float(np.log10(high / low)) if high > low else 0.0)
     return best
-
-
-def _cautions(
-    T: np.ndarray,
-    reference_C: float,
-    same_temperature: float,
-    steps: tuple[Step, ...],
-    vertical: str,
-    fixed: np.ndarray,
-    free: ShiftFit,
-    free_scale: float,
-    verdict: Superposition,
-    polymer: Any,
-) -> tuple[Caution, ...]:
-    out = []
-    nearest = float(np.min(np.abs(T - reference_C)))
-    if nearest > same_temperature:
-        where = "between" if T[0] < reference_C < T[-1] else "outside"
-        text = (
-            f"{reference_C:g} C was not measured and lies {where} the measured temperatures: the "
-            "curve was taken there by the fitted shift law."
-        )
-        out.append(Caution("reference_not_measured", text))
-    if vertical == "rho-T" and polymer is None:
-        text = "Without a polymer the density was taken as constant: b_T is T_ref/T alone."
-        out.append(Caution("density_assumed", text))
-    if vertical != "free":
-        pivot = int(np.argmin(np.abs(T - reference_C)))
-        off = free.log_vertical - (fixed - fixed[pivot])
-        told = (np.abs(off) > VERTICAL_TOLD) & (np.abs(off) > 4 * free.vertical_sigma * free_scale)
-        if told.any():
-            k = int(np.argmax(np.abs(off) * told))
-            text = (
-                f"Left free, the curves ask for vertical factors that differ from those used, most "
-                f"at {T[k]:.4g} C ({np.exp(free.log_vertical[k]):.3f} against "
-                f"{np.exp(fixed[k] - fixed[pivot]):.3f}). Linear polyethylene and polypropylene "
-                "need none; branched ones do (Mavridis & Shroff, published). A change of gap or "
-                "filling between the steps does it too."
-            )
-            out.append(Caution("vertical_disagrees", text))
-    thin = [s for s in steps if s.overlap_decades < 0.5]
-    if thin:
-        shown = ", ".join(f"{s.temperature_C:.4g} C ({s.overlap_decades:.2f})" for s in thin)
-        text = (
-            f"Less than half a decade of overlap with the neighbour [decades]: {shown}. The shifts "
-            "there rest on few points; a temperature in between would help."
-        )
-        out.append(Caution("thin_overlap", text))
-    if not verdict.passed:
-        out.append(Caution("superposition_failed", verdict.text()))
-    return tuple(out)

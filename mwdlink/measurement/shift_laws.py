@@ -199,8 +199,7 @@ def fit_laws(
     # 1e-12: exact shifts (a test's) still need an invertible covariance
     full = C + np.diag(slope[others] ** 2) + slope[pivot] ** 2 + 1e-12 * np.eye(others.size)
     W = np.linalg.inv(full)
-    root = np.linalg.cholesky(C + 1e-16 * np.eye(others.size))
-    wide = np.linalg.cholesky(full)
+    root, wide = _root(C), _root(full)
     draws = rng.standard_normal((members, others.size))
     shifts = np.zeros((members, T.size))
     shifts[:, others] = y[others] + draws @ root.T
@@ -218,6 +217,12 @@ def fit_laws(
         samples = np.array(rows).reshape(members, best.size)
         laws[kind] = _law(kind, best, samples, T, y, others, W, T[pivot], reference_C, level)
     return laws, shifts
+
+
+def _root(covariance: np.ndarray) -> np.ndarray:
+    """A matrix R with R R' = covariance, rounding errors below zero set to zero."""
+    values, vectors = np.linalg.eigh(0.5 * (covariance + covariance.T))
+    return vectors * np.sqrt(np.maximum(values, 0.0))
 
 
 def _law(

@@ -395,7 +395,9 @@ def _describe(joint: _Joint, p: np.ndarray, lam: float, chi2: float) -> ShiftFit
     r, J = joint.evaluate(p)
     P = joint.prior(lam)
     N = J.T @ J
-    C = np.linalg.inv(N + P + 1e-12 * np.eye(N.shape[0]))
+    # scaled to a unit diagonal first: nodes far outside the window hang on a weak prior alone
+    d = np.sqrt(np.diag(N + P) + 1e-12)
+    C = np.linalg.inv((N + P) / np.outer(d, d) + 1e-13 * np.eye(d.size)) / np.outer(d, d)
     effective = float(np.trace(C @ N))
     _, shift, vertical = joint.unpack(p)
     k, n = joint.others.size, joint.n

@@ -99,12 +99,17 @@ class Superposition:
                 f"The sweeps superpose: where they overlap they lie on one curve to within "
                 f"{100 * self.residual:.1f} %, as noise and the repeatability of one loading allow."
             )
-        worst = max(self.bands, key=lambda b: b.residual / b.limit)
         text = (
-            f"The sweeps do not superpose: where they overlap they depart from one curve by "
-            f"{100 * self.residual:.1f} %, most between {worst.low:.2g} and {worst.high:.2g} rad/s "
-            f"({100 * worst.residual:.1f} %, {100 * worst.limit:.1f} % would be in order)."
+            "The sweeps do not superpose: where they overlap they depart from one curve by "
+            f"{100 * self.residual:.1f} %"
         )
+        if self.bands:
+            worst = max(self.bands, key=lambda b: b.residual / b.limit)
+            text += (
+                f", most between {worst.low:.2g} and {worst.high:.2g} rad/s "
+                f"({100 * worst.residual:.1f} %, {100 * worst.limit:.1f} % would be in order)"
+            )
+        text += "."
         if not self.low_frequency_passed:
             text += (
                 " The low end fails, which long-chain branching does, and a second phase, filler, "
