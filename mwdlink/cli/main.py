@@ -29,7 +29,7 @@ COMMANDS = {
     "spectrum": "From a sweep to its relaxation spectrum, without a chain model.",
     "rest": "How long to wait after loading a sample.",
     "calibrate": "A polymer card from samples with both GPC and sweep.",
-    # "batch": "Invert many sweeps into one table.",
+    "batch": "Invert many sweeps into one table.",
     "polymers": "The built-in polymer cards and where each number is from.",
 }
 

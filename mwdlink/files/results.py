@@ -204,7 +204,7 @@ def folder_beside(out_dir: str | os.PathLike[str], replace: bool = False) -> Ite
             yield new
             _flush_tree(new)
             os.chmod(new, 0o777 & ~_umask())
-            _put_in_place(new, out, replace)
+            put_in_place(new, out, replace)
     except OSError as error:
         raise MwdlinkError(
             f"{out_dir} could not be written: {_words(error)}. Nothing there was changed."
@@ -225,7 +225,7 @@ def _words(error: OSError) -> str:
     }.get(error.errno or 0, error.strerror or str(error))
 
 
-def _put_in_place(new: Path, out: Path, replace: bool) -> None:
+def put_in_place(new: Path, out: Path, replace: bool) -> None:
     try:
         os.rename(new, out)  # takes the place of nothing, or of an empty folder
     except OSError as error:
