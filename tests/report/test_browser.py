@@ -306,6 +306,7 @@ def test_printed_page_cuts_no_figure(chromium, files, name):
     for height, left, right, rule in boxes:
         assert 40 < height < A4[1] * mm and rule == "avoid"
         assert left >= -1 and right <= A4[0] * mm + 1
+    assert chromium.run("document.documentElement.scrollWidth") <= round(A4[0] * mm)
     closed = chromium.run(
         "[...document.querySelectorAll('details table')].filter("
         "t => t.getBoundingClientRect().height < 20).length"
