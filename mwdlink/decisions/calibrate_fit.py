@@ -75,6 +75,7 @@ class Fitted:
     shifts : ndarray of shape (n,)
         ln of each sample's time shift.
     chi2_per_point : float
+        Of sigma that hold the model's own error; an odd sample counts by its logarithm.
     residuals : tuple of ndarray
         ln(predicted/measured) of each sample at its own shift.
     eta0 : ndarray of shape (n,)
@@ -156,9 +157,11 @@ def fit(
 
     def total(p: np.ndarray, d: np.ndarray, parts_rows: Sequence[np.ndarray]) -> float:
         prior = ((p - start) / PRIOR)[index]
-        # Student's t: a sample with a wrong label must not drag the law of the others along
+        # a sample with a wrong label must not drag the others along, neither by its times
+        # (Student's t) nor by the shape of its curves (a misfit counts by its logarithm)
         odd = (FREEDOM + 1.0) * np.log1p((d / sample_shift) ** 2 / FREEDOM)
-        return float(sum(x @ x for x in parts_rows) + prior @ prior + np.sum(odd))
+        shape = sum(x.size * np.log1p(x @ x / x.size) for x in parts_rows)
+        return float(shape + prior @ prior + np.sum(odd))
 
     normal = np.eye(index.size + n)
     for _ in range(MAX_ROUNDS):
@@ -180,8 +183,9 @@ def fit(
                 q = p.copy()
                 q[i] += STEPS[i]
                 j[:, c] = (rows(k, response(k, q), q[0] + d[k]) - r0[k]) / STEPS[i]
-            normal += j.T @ j
-            gradient += j.T @ r0[k]
+            trusted = 1.0 / (1.0 + r0[k] @ r0[k] / r0[k].size)
+            normal += trusted * (j.T @ j)
+            gradient += trusted * (j.T @ r0[k])
         tied = (FREEDOM + 1.0) / (FREEDOM + (d / sample_shift) ** 2) / sample_shift**2
         weight = np.concatenate([PRIOR[index] ** -2, tied])
         normal += np.diag(weight)
@@ -207,7 +211,7 @@ def fit(
     assert state is not None  # the loop ran
     covariance = np.linalg.inv(normal)[: index.size, : index.size]
     count = sum(x.size for x in state[1])
-    chi2 = float(sum(x @ x for x in state[1])) / max(count, 1)
+    chi2 = sum(x.size * float(np.log1p(x @ x / x.size)) for x in state[1]) / max(count, 1)
     full = np.zeros((4, 4))
     full[np.ix_(index, index)] = covariance * max(1.0, chi2)
     spread = np.where(free, np.sqrt(np.diag(full)), PRIOR)
