@@ -22,6 +22,8 @@ from mwdlink.relaxation.kernels import get_kernel
 STRAINED, INCONSISTENT = 2.0, 3.0
 # others that leave a factor of more than 2.5 open (90 %) do not determine a claim
 OPEN = float(np.log(2.5) / (2 * 1.645))
+# two claims are told apart when leaving out the one leaves this much less misfit than the other
+TELL_APART = 4.0
 LEVEL = 0.9
 # the realistic kernel, and the one furthest from it: what they differ by is what one does not know
 KERNELS = ("power-law", "exponential")
@@ -49,6 +51,7 @@ def check_datasheet(
     Returns
     -------
     DataSheet
+        Where a claim stands out, the others are judged by each other without it.
 
     Raises
     ------
@@ -76,9 +79,11 @@ def check_datasheet(
     quantities = (*usable, *extra)
     models = [sheet_model(card, quantities, k) for k in names]
     _, left_out = expect(models, len(usable), seed)
-    judged = _judged(sheet, usable, left_out, quantities)
+    judged = _judged(usable, left_out)
+    odd, rivals = _odd_one_out(judged, left_out)
+    if odd is not None and len(usable) > 2:
+        judged = _without(odd, rivals, usable, card, names, judged, seed)
     index = _branching_index(sheet)
-    odd, rivals = _odd_one_out(judged)
     words = explain(sheet, judged, odd, rivals, index, quantities, left_out, card)
     return DataSheet(
         claims=judged,
@@ -142,9 +147,25 @@ def _usable(sheet: Sheet, card: Polymer) -> tuple[tuple[Claim, ...], tuple[Cauti
     return tuple(out), tuple(notes)
 
 
-def _judged(
-    sheet: Sheet, claims: Sequence[Claim], left_out: Sequence[Expected], quantities: Sequence[Claim]
+def _without(
+    odd: str,
+    rivals: Sequence[str],
+    claims: Sequence[Claim],
+    card: Polymer,
+    kernels: Sequence[str],
+    judged: Sequence[Judged],
+    seed: int,
 ) -> tuple[Judged, ...]:
+    """The other claims judged again without the one that stands out, which leads them astray."""
+    kept = [c for c in claims if c.quantity != odd]
+    models = [sheet_model(card, kept, k) for k in kernels]
+    again = {j.quantity: j for j in _judged(kept, expect(models, len(kept), seed)[1])}
+    return tuple(
+        j if j.quantity == odd or j.quantity in rivals else again[j.quantity] for j in judged
+    )
+
+
+def _judged(claims: Sequence[Claim], left_out: Sequence[Expected]) -> tuple[Judged, ...]:
     own, model = claim_sigma(claims), model_sigma(claims)
     out = []
     for i, c in enumerate(claims):
@@ -194,14 +215,19 @@ def _interval(
     )
 
 
-def _odd_one_out(judged: Sequence[Judged]) -> tuple[str | None, tuple[str, ...]]:
-    """The claim that stands out most, and others that stand out nearly as much."""
-    marked = sorted((j for j in judged if j.verdict == "inconsistent"), key=lambda j: -abs(j.z or 0))
+def _odd_one_out(
+    judged: Sequence[Judged], left_out: Sequence[Expected]
+) -> tuple[str | None, tuple[str, ...]]:
+    """The claim without which all the others agree best, and others that come close to that."""
+    marked = sorted(
+        (e.cost, j.quantity)
+        for j, e in zip(judged, left_out, strict=True)
+        if j.verdict == "inconsistent"
+    )
     if not marked:
         return None, ()
-    first = marked[0]
-    rivals = [j.quantity for j in marked[1:] if abs(j.z or 0) > 0.8 * abs(first.z or 0)]
-    return first.quantity, tuple(rivals)
+    least, first = marked[0]
+    return first, tuple(name for cost, name in marked[1:] if cost < least + TELL_APART)
 
 
 def _branching_index(sheet: Sheet) -> float | None:

@@ -1,0 +1,280 @@
+"""Sheets whose numbers hang together, and sheets with one that does not: all invented."""
+
+from __future__ import annotations
+
+import importlib.util
+import json
+from dataclasses import replace
+from pathlib import Path
+from types import ModuleType
+
+import numpy as np
+import pytest
+
+from mwdlink.chains.distribution import Distribution
+from mwdlink.chains.polymer import builtin
+from mwdlink.decisions.datasheet import check_datasheet
+from mwdlink.decisions.datasheet_claims import Claim, Sheet
+from mwdlink.decisions.datasheet_model import (
+    CARD,
+    ENTRANCE_PRIOR,
+    FAMILIES,
+    MASS,
+    distribution_rows,
+    sheet_model,
+)
+from mwdlink.errors import InputError
+from mwdlink.files.sheet import read_sheet
+from mwdlink.relaxation.flow import melt_flow_rate
+from mwdlink.relaxation.melt_response import Relaxation
+from mwdlink.relaxation.mixing import Model
+
+
+def _load(name: str) -> ModuleType:
+    path = Path(__file__).parents[1] / "benchmarks" / f"{name}.py"
+    spec = importlib.util.spec_from_file_location(name, path)
+    assert spec is not None and spec.loader is not None
+    module = importlib.util.module_from_spec(spec)
+    spec.loader.exec_module(module)
+    return module
+
+
+STUDY = _load("sheet_study")
+HDPE = builtin("hdpe")
+
+
+def _sheet(**changed: float) -> Sheet:
+    """An invented linear HDPE of log-normal distribution, claims right; some times a factor."""
+    z = np.zeros((1, 9))
+    y = np.exp(sheet_model(HDPE, STUDY.POSSIBLE, "power-law").predict(z, "log-normal")[0])
+    names = [c.quantity for c in STUDY.POSSIBLE]
+    claims = [
+        replace(c, value=float(v) * changed.get(n, 1.0))
+        for c, n, v in zip(STUDY.POSSIBLE, names, y, strict=True)
+        if n not in ("viscosity 100 rad/s 190 C", "melt_flow 5 kg 190 C")
+    ]
+    return Sheet(tuple(claims), HDPE)
+
+
+def test_numbers_are_the_predictions() -> None:
+    """Every quantity against `Relaxation` and the flow integral of the same melt (derived)."""
+    z = np.zeros((1, 9))
+    z[0, 0] = 0.3
+    w = distribution_rows(z[:, :2], "log-normal")[0]
+    d = Distribution.from_nodes(MASS, w)
+    melt = HDPE.melt(190.0)
+    r = Relaxation(d, melt, Model("power-law", 2.0))
+    got = dict(
+        zip(
+            [c.quantity for c in STUDY.POSSIBLE],
+            np.exp(sheet_model(HDPE, STUDY.POSSIBLE, "power-law").predict(z, "log-normal")[0]),
+            strict=True,
+        )
+    )
+    assert got["Mn_g_per_mol"] == pytest.approx(d.Mn, rel=1e-6)
+    assert got["Mz_g_per_mol"] == pytest.approx(d.Mz, rel=1e-6)
+    assert got["eta0_Pa_s"] == pytest.approx(r.zero_shear_viscosity, rel=2e-3)
+    omega, level = r.crossover()
+    assert got["crossover_omega_rad_per_s"] == pytest.approx(omega, rel=5e-3)
+    assert got["crossover_G_Pa"] == pytest.approx(level, rel=5e-3)
+    spectrum = r.spectrum()
+    for load in (2.16, 21.6):
+        wanted = melt_flow_rate(spectrum, load, HDPE.density(190.0), ENTRANCE_PRIOR[0])
+        assert got[f"melt_flow {load:g} kg 190 C"] == pytest.approx(wanted, rel=0.01)
+    k, a = HDPE.get("mark_houwink.K_dL_per_g"), HDPE.get("mark_houwink.a")
+    assert got["intrinsic_viscosity"] == pytest.approx(k * d.moment(a), rel=1e-6)
+    assert got["activation_energy"] == pytest.approx(26.8, rel=1e-6)
+
+
+@pytest.mark.parametrize("family", FAMILIES)
+def test_families_have_the_average_asked_for(family: str) -> None:
+    """The first unknown is ln of the weight average in every family (derived)."""
+    rng = np.random.default_rng(1)
+    z = rng.standard_normal((6, len(FAMILIES[family])))
+    w = distribution_rows(z, family)
+    assert np.allclose(w.sum(axis=1), 1.0)
+    assert np.allclose(np.log(w @ MASS), np.log(1.3e5) + z[:, 0], atol=5e-3)
+
+
+@pytest.mark.parametrize("family", FAMILIES)
+def test_slopes(family: str) -> None:
+    """Derivatives against central differences (derived)."""
+    model = sheet_model(HDPE, STUDY.POSSIBLE, "exponential")
+    d = len(FAMILIES[family]) + len(CARD)
+    z = 0.3 * np.random.default_rng(2).standard_normal((2, d))
+    _, slope = model.predict_and_slope(z, family, len(STUDY.POSSIBLE))
+    for i in range(d):
+        step = np.zeros(d)
+        step[i] = 1e-2
+        up, down = model.predict(z + step, family), model.predict(z - step, family)
+        assert np.allclose((up - down) / 2e-2, slope[:, :, i], atol=0.02)
+
+
+@pytest.fixture(scope="module")
+def clean() -> object:
+    return check_datasheet(_sheet())
+
+
+def test_clean_sheet_passes(clean: object) -> None:
+    """Claims of one melt: nothing stands out, and the verdict says so."""
+    r = clean
+    assert r.odd_one_out is None  # type: ignore[attr-defined]
+    assert "hangs together" in r.answer()  # type: ignore[attr-defined]
+    assert all(j.verdict in ("consistent", "cannot judge") for j in r.claims)  # type: ignore[attr-defined]
+    json.dumps(r.to_dict(), allow_nan=False)  # type: ignore[attr-defined]
+
+
+def test_what_others_do_not_determine() -> None:
+    """Mn from rheology alone is not determined: `cannot judge` is the right answer (physics)."""
+    claims = [c for c in _sheet().claims if c.kind in ("Mn", "eta0", "activation energy")]
+    r = check_datasheet(Sheet(tuple(claims), HDPE))
+    verdicts = {j.quantity: j.verdict for j in r.claims}
+    assert verdicts["Mn_g_per_mol"] == "cannot judge"
+    assert "nothing can be said" in r.answer() or r.odd_one_out is None
+
+
+@pytest.mark.parametrize(
+    ("name", "factor"),
+    [
+        ("eta0_Pa_s", 2.0),
+        ("melt_flow 2.16 kg 190 C", 1.6),
+        ("Mw_g_per_mol", 0.6),
+        ("viscosity 0.1 rad/s 190 C", 0.6),
+    ],
+)
+def test_claim_off_is_named(name: str, factor: float) -> None:
+    """One claim moved well beyond its tolerance is the odd one out."""
+    r = check_datasheet(_sheet(**{name: factor}))
+    assert r.odd_one_out == name
+    verdicts = {j.quantity: j.verdict for j in r.claims}
+    assert verdicts.pop(name) == "inconsistent"
+    assert "inconsistent" not in verdicts.values()
+
+
+def test_another_load_is_recognised() -> None:
+    """A rate measured at 5 kg and printed as 2.16 kg: the words say so."""
+    right = {c.quantity: c.value for c in _sheet().claims}
+    z = np.zeros((1, 9))
+    y = np.exp(sheet_model(HDPE, STUDY.POSSIBLE, "power-law").predict(z, "log-normal")[0])
+    at_5 = float(y[[c.quantity for c in STUDY.POSSIBLE].index("melt_flow 5 kg 190 C")])
+    name = "melt_flow 2.16 kg 190 C"
+    r = check_datasheet(_sheet(**{name: at_5 / right[name]}))
+    assert r.odd_one_out == name
+    assert "measured at 5 kg" in r.paragraph()
+
+
+def test_unit_slip_is_recognised() -> None:
+    """A viscosity in poise printed as Pa s is ten times too high."""
+    r = check_datasheet(_sheet(eta0_Pa_s=10.0))
+    assert r.odd_one_out == "eta0_Pa_s"
+    assert "unit had slipped by a factor 10" in r.paragraph()
+
+
+def test_polystyrene_equivalent_is_recognised() -> None:
+    """A weight average on the polystyrene scale is about twice the true one (recalled)."""
+    sheet = _sheet(Mw_g_per_mol=2.2)
+    claims = [replace(c, calibration="unstated") for c in sheet.claims if c.kind not in ("Mn", "Mz")]
+    r = check_datasheet(replace(sheet, claims=tuple(claims)))
+    assert r.odd_one_out == "Mw_g_per_mol"
+    assert "relative to polystyrene" in r.paragraph()
+
+
+def test_other_temperatures_are_handled_and_slips_caught() -> None:
+    """A rate at 210 C printed as one at 190 C stands out; printed as 210 C it fits."""
+    card = HDPE
+    name = "melt_flow 2.16 kg 190 C"
+    factor = 1.0 / card.shift.factor(230.0, 190.0)
+    r = check_datasheet(_sheet(**{name: factor}))
+    assert r.odd_one_out == name and "at 230 C" in r.paragraph()
+    claims = [
+        replace(c, value=c.value * factor, temperature_C=230.0, quantity="melt_flow 2.16 kg 230 C")
+        if c.quantity == name
+        else c
+        for c in _sheet().claims
+    ]
+    assert check_datasheet(Sheet(tuple(claims), card)).odd_one_out is None
+
+
+def test_words_are_neutral() -> None:
+    """What is said could be sent to the supplier (house rule)."""
+    for changes in ({"eta0_Pa_s": 3.0}, {"melt_flow 21.6 kg 190 C": 0.4}):
+        text = check_datasheet(_sheet(**changes)).paragraph().lower()
+        for word in ("wrong", "false", "fake", "cheat", "lie", "fraud", "bad"):
+            assert f" {word} " not in text and f" {word}." not in text
+        assert "release tests decide" in text
+
+
+EXAMPLE = """
+polymer = "hdpe"
+[claims]
+Mn_g_per_mol = {value = 2.1e4, tolerance = 0.15, calibration = "equivalent"}
+Mw_g_per_mol = {value = 1.2e5, tolerance = 0.10}
+eta0_Pa_s = {value = 7.1e3, tolerance = 0.15, temperature_C = 190}
+melt_flow = [{load_kg = 2.16, temperature_C = 190, MFR_g_per_10min = 1.1, tolerance = 0.10},
+  {load_kg = 21.6, temperature_C = 190, MVR_cm3_per_10min = 52}]
+flow_rate_ratio = {loads_kg = [21.6, 2.16], value = 36, tolerance = 0.15}
+crossover = {omega_rad_per_s = 60, G_Pa = 3.0e4, tolerance = 0.15, temperature_C = 190}
+viscosity = [{omega_rad_per_s = 0.1, value_Pa_s = 6.5e3, temperature_C = 190, tolerance = 0.10}]
+intrinsic_viscosity = {value_dL_per_g = 1.7, solvent = "TCB", temperature_C = 135}
+activation_energy = {value_kJ_per_mol = 28, tolerance = 0.10}
+long_chain_branching = "none"
+"""
+
+
+def _written(tmp_path: Path, text: str) -> Path:
+    path = tmp_path / "sheet.toml"
+    path.write_text(text, encoding="utf-8")
+    return path
+
+
+def test_sheet_file(tmp_path: Path) -> None:
+    """The sheet of the written contract, key by key."""
+    sheet = read_sheet(_written(tmp_path, EXAMPLE))
+    names = [c.quantity for c in sheet.claims]
+    assert "melt_flow 2.16 kg 190 C" in names and "viscosity 0.1 rad/s 190 C" in names
+    by_name = {c.quantity: c for c in sheet.claims}
+    assert by_name["melt_flow 21.6 kg 190 C"].volume
+    assert not by_name["melt_flow 21.6 kg 190 C"].tolerance_given
+    assert by_name["Mn_g_per_mol"].calibration == "equivalent"
+    assert by_name["flow_rate_ratio"].load_kg == 21.6
+    assert sheet.branching == "none" and sheet.polymer.name == "hdpe"
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "words", "row"),
+    [
+        ("Mw_g_per_mol", "Mw_g_mol", "Did you mean 'Mw_g_per_mol'", 5),
+        ("value = 1.2e5", "value = 1.2", "out of range", 5),
+        ("tolerance = 0.10}\n", "tolerance = 10}\n", "must be a fraction", 5),
+        ('"equivalent"', '"relative"', "unknown calibration", 4),
+        ("MFR_g_per_10min = 1.1", "MFR = 1.1", "no key 'MFR'", 7),
+        ('"none"', '"maybe"', 'Write "none" or "some"', 14),
+        ("[claims]", "[claim]", "Did you mean 'claims'", 3),
+        ("value = 7.1e3", "value = 7,1e3", "no TOML", 6),
+    ],
+)
+def test_slips_in_a_sheet(tmp_path: Path, old: str, new: str, words: str, row: int) -> None:
+    """Each slip is refused with its line and a remedy."""
+    with pytest.raises(InputError) as caught:
+        read_sheet(_written(tmp_path, EXAMPLE.replace(old, new, 1)))
+    assert words in str(caught.value)
+    assert caught.value.row is None or abs(caught.value.row - row) <= 1
+
+
+def test_too_little_to_compare() -> None:
+    """One claim cannot be compared with anything."""
+    with pytest.raises(InputError, match="1 claim"):
+        check_datasheet(Sheet((Claim("Mw_g_per_mol", "Mw", 1e5, 0.1),), HDPE))
+    with pytest.raises(InputError, match="no polymer"):
+        check_datasheet(replace(_sheet(), polymer=None))
+
+
+@pytest.mark.full
+def test_targets_over_many() -> None:
+    """The figures of docs/datasheet.md: false alarms, and claims off that are named."""
+    known = STUDY.models()
+    alarms = sum(check_datasheet(STUDY.clean(s, known)).odd_one_out is not None for s in range(200))
+    assert alarms <= 10
+    pairs = [p for s in range(100) if (p := STUDY.moved(STUDY.clean(s, known), s)) is not None]
+    named = [check_datasheet(sheet).odd_one_out == name for sheet, name in pairs]
+    assert np.mean(named) >= 0.8
