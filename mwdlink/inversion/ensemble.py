@@ -37,7 +37,7 @@ REJECT = 25.0
 # members are perturbed by this many standard deviations, and lambda leans this much (in ln of the
 # evidence per half decade) to the free side: with 1 and 0 the intervals of two-peak melts covered
 # 0.78 to 0.85 instead of 0.90 (docs/accuracy.md), because smoothing also biases what it chooses
-WIDEN, LEAN = 1.05, 0.35
+WIDEN, LEAN = 1.1, 0.6
 # the fit may narrow the exponent's prior to half its spread at most
 MOST_PRECISION = 3.0
 

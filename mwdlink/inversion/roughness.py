@@ -46,7 +46,7 @@ class Roughness:
 # below this share of its highest weight a smooth ln w is a belief, not an observation: the prior is
 # relaxed in proportion (else a Schulz-Zimm melt's steep end is read as a log-normal's, and its
 # interval is too narrow)
-RELIEF_LEVEL, RELIEF_FLOOR = 0.05, 1e-3
+RELIEF_LEVEL, RELIEF_FLOOR = 0.1, 1e-3
 
 
 def relieved(prior: Roughness, w: np.ndarray) -> Roughness:
