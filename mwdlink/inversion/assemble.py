@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -14,86 +13,27 @@ from mwdlink.chains.polymer import Polymer
 from mwdlink.errors import Caution, merge_cautions
 from mwdlink.inversion import closed_form
 from mwdlink.inversion.advice import advise
-from mwdlink.inversion.budget import variance_shares
 from mwdlink.inversion.ensemble import Branch, ExponentPrior, Members, prior_weights
 from mwdlink.inversion.inversion_result import Inversion
 from mwdlink.inversion.peaks import find_peaks
+from mwdlink.inversion.pool import Pool, make_pool
 from mwdlink.inversion.quantities import Cells
+from mwdlink.inversion.result_tables import (
+    bound_cautions,
+    fit_cautions,
+    fit_table,
+    kernel_rows,
+    member_table,
+    peak_row,
+    smoothing_table,
+    sweep_cautions,
+)
 from mwdlink.inversion.statuses import average_statuses, prior_dominates, zero_excluded
 from mwdlink.measurement.sweep import Sweep
 from mwdlink.quantity import Uncertain, quantiles, readonly
 from mwdlink.relaxation.kernels import DEFAULT_KERNEL
-from mwdlink.relaxation.validity import frequency_cautions
 
 PRIOR_DRAWS = 200
-# a lambda this near an end of the scan was chosen by the scan, not by the data
-AT_END_ROUGH, AT_END_SMOOTH = 1, 0
-
-
-@dataclass(frozen=True, eq=False)
-class Pool:
-    """Members of all branches side by side.
-
-    Attributes
-    ----------
-    cells : tuple of Cells
-        One per branch (branches have their own nodes).
-    kernel, smoothing, plateau, branch : ndarray of int, shape (m,)
-        Labels: of the kernel, of lambda, of the plateau modulus, of the branch in `cells`.
-    exponent, ln_time : ndarray of shape (m,)
-    """
-
-    cells: tuple[Cells, ...]
-    kernel: np.ndarray
-    smoothing: np.ndarray
-    exponent: np.ndarray
-    ln_time: np.ndarray
-    plateau: np.ndarray
-    branch: np.ndarray
-
-    def gather(self, f: Any) -> np.ndarray:
-        """A quantity of every member, f(Cells) -> (m_b,) or (m_b, k)."""
-        return np.concatenate([f(c) for c in self.cells])
-
-    def shares(self, value: np.ndarray) -> dict[str, float]:
-        return variance_shares(
-            value,
-            self.kernel,
-            self.exponent,
-            self.ln_time,
-            self.smoothing,
-            self.plateau,
-        )
-
-
-def make_pool(branches: Sequence[Branch], drawn: Sequence[Members]) -> Pool | None:
-    """Members of the admissible branches; those that did not converge are left out."""
-    if not drawn:
-        return None
-    cells, kernel, smooth, exponent, ln_time = [], [], [], [], []
-    plateau, branch = [], []
-    names = sorted({b.kernel for b in branches})
-    for i, (b, m) in enumerate(zip(branches, drawn, strict=True)):
-        ok = m.converged
-        # eta0 = K M^a: a law `factor` times higher reads the same times as shorter chains
-        scale = np.exp(-m.ln_time[ok] / b.melt.law_exponent)
-        cells.append(Cells.make(b.problem.window.edges, m.w[ok], scale))
-        count = int(ok.sum())
-        kernel.append(np.full(count, names.index(b.kernel)))
-        plateau.append(np.full(count, round(1000 * b.plateau_factor)))
-        branch.append(np.full(count, i))
-        smooth.append(m.smoothing_index[ok])
-        exponent.append(m.exponent[ok])
-        ln_time.append(m.ln_time[ok])
-    return Pool(
-        tuple(cells),
-        np.concatenate(kernel),
-        np.concatenate(smooth),
-        np.concatenate(exponent),
-        np.concatenate(ln_time),
-        np.concatenate(plateau),
-        np.concatenate(branch),
-    )
 
 
 def assemble(
@@ -150,9 +90,9 @@ def assemble(
         groups=None if pool is None else pool.kernel,
     )
     notes = merge_cautions(
-        notes, _fit_cautions(centre, method), check_notes, _sweep_cautions(sweep, melt)
+        notes, fit_cautions(centre, method), check_notes, sweep_cautions(sweep, melt)
     )
-    notes = notes + _bound_cautions(averages, outside)
+    notes = notes + bound_cautions(averages, outside)
     advice = _advice(centre, sweep, polymer, want, averages)
     return Inversion(
         molar_mass=readonly(grid),
@@ -179,9 +119,9 @@ def assemble(
             "converged": bool(centre.fit.converged),
             "members": 0 if pool is None else int(pool.kernel.size),
         },
-        fit_table=_fit_table(sweep, centre),
-        smoothing_table=_smoothing_table(centre),
-        kernels=_kernel_rows(branches, allowed, low, high, pool, used),
+        fit_table=fit_table(sweep, centre),
+        smoothing_table=smoothing_table(centre),
+        kernels=kernel_rows(branches, allowed, low, high, pool, used),
         model={
             "kernels": [b.kernel for b, ok in zip(branches, allowed, strict=True) if ok],
             "exponent": centre.model.exponent,
@@ -192,10 +132,10 @@ def assemble(
         seed=seed,
         noise=noise,
         exponent=exponent,
-        peaks=tuple(_peak_row(p) for p in found),
+        peaks=tuple(peak_row(p) for p in found),
         cross_check=None if check is None else check.to_dict(),
         advice=advice,
-        members=_member_table(pool, used, low, high),
+        members=member_table(pool, used, low, high),
         time_law_scatter_decades=melt.scatter_decades,
         warnings=notes,
     )
@@ -362,49 +302,6 @@ def _cross_check(
     return check, cautions
 
 
-def _fit_cautions(centre: Branch, method: str) -> tuple[Caution, ...]:
-    scan = centre.scan
-    if scan.smoothing.size > 1 and scan.best >= scan.smoothing.size - AT_END_ROUGH:
-        return (
-            Caution(
-                "smoothing_at_end",
-                "The smoothing chosen is the least of the scan: the data ask for more detail than "
-                "the scan allows, or their noise is understated.",
-            ),
-        )
-    return ()
-
-
-def _sweep_cautions(sweep: Any, melt: Melt) -> tuple[Caution, ...]:
-    omega = getattr(sweep, "omega", None)
-    return () if omega is None else frequency_cautions(float(np.max(omega)), melt)
-
-
-def _bound_cautions(
-    averages: Mapping[str, Uncertain], outside: Mapping[str, Uncertain]
-) -> tuple[Caution, ...]:
-    out = []
-    most = outside["above"].high or outside["above"].value or 0.0
-    if averages["Mz_g_per_mol"].status == "lower_bound":
-        out.append(
-            Caution(
-                "weight_above_window",
-                f"Up to {100 * most:.2g} % of the weight is in chains too long to be sized: Mz "
-                "(and Mw where so marked) are lower bounds. Long-chain branching or a second phase "
-                "would look the same.",
-            )
-        )
-    out.append(
-        Caution(
-            "branching_rival",
-            "The reading takes linear chains. Long-chain branching changes the low-frequency "
-            "end as a high-molar-mass tail does; a second temperature or the intrinsic viscosity "
-            "would tell them apart.",
-        )
-    )
-    return tuple(out)
-
-
 def _advice(
     centre: Branch,
     sweep: Any,
@@ -436,104 +333,3 @@ def _advice(
             polymer,
         )
     )
-
-
-def _peak_row(peak: Any) -> dict[str, Any]:
-    return dict(peak.to_dict())
-
-
-def _fit_table(sweep: Any, centre: Branch) -> dict[str, np.ndarray]:
-    problem = centre.problem
-    model = problem.forward.values(centre.fit.w)
-    residual = problem.data - np.log(model)
-    if isinstance(sweep, Sweep):
-        n = len(sweep)
-        return {
-            "omega [rad/s]": sweep.omega,
-            "G' [Pa]": sweep.storage,
-            "G'' [Pa]": sweep.loss,
-            "G' fit [Pa]": model[:n],
-            "G'' fit [Pa]": model[n:],
-            "G' residual [-]": residual[:n],
-            "G'' residual [-]": residual[n:],
-            "sigma' used [-]": problem.sigma[:n],
-            "sigma'' used [-]": problem.sigma[n:],
-        }
-    frame = sweep.to_frame()
-    first, second = list(frame.columns)[:2]
-    return {
-        first: frame[first].to_numpy(),
-        second: frame[second].to_numpy(),
-        f"fit {second}": model,
-        "residual [-]": residual,
-        "sigma used [-]": problem.sigma,
-    }
-
-
-def _smoothing_table(centre: Branch) -> dict[str, np.ndarray]:
-    scan = centre.scan
-    if centre.curve is not None:
-        return dict(centre.curve)
-    return {
-        "smoothing [-]": scan.smoothing,
-        "chi2 per point [-]": np.array([f.chi2 for f in scan.fits]) / centre.problem.data.size,
-        "roughness [-]": scan.roughness,
-        "freedom [-]": scan.freedom,
-        "log evidence [-]": scan.log_evidence,
-        "weight [-]": scan.weights,
-        "chosen": np.arange(scan.smoothing.size) == scan.best,
-    }
-
-
-def _kernel_rows(
-    branches: Sequence[Branch],
-    allowed: Sequence[bool],
-    low: float,
-    high: float,
-    pool: Pool | None,
-    used: Sequence[Branch],
-) -> tuple[dict[str, Any], ...]:
-    rows = []
-    for b, ok in zip(branches, allowed, strict=True):
-        cells = Cells.make(b.problem.window.edges, b.fit.w)
-        values = cells.averages()
-        row: dict[str, Any] = {
-            "kernel": b.kernel,
-            "chi2_per_point": b.chi2_per_point,
-            "admissible": bool(ok),
-            "exponent": b.model.exponent,
-            "Mw_g_per_mol": float(values["Mw"][0]),
-            "Mz_g_per_mol": float(values["Mz"][0]),
-            "Mw_within_window_g_per_mol": float(cells.mean_within(low, high)[0]),
-            "Mw_low_g_per_mol": None,
-            "Mw_high_g_per_mol": None,
-        }
-        if ok and pool is not None:
-            parts = [c for c, u in zip(pool.cells, used, strict=True) if u.kernel == b.kernel]
-            held = np.concatenate([c.averages()["Mw"] for c in parts])
-            row["Mw_low_g_per_mol"], row["Mw_high_g_per_mol"] = (
-                float(x) for x in np.quantile(held, [0.05, 0.95])
-            )
-        rows.append(row)
-    return tuple(rows)
-
-
-def _member_table(
-    pool: Pool | None, used: Sequence[Branch], low: float, high: float
-) -> dict[str, np.ndarray]:
-    if pool is None:
-        return {}
-    parts = [c.averages() for c in pool.cells]
-    joined = {k: np.concatenate([p[k] for p in parts]) for k in parts[0]}
-    return {
-        "kernel": np.array([used[i].kernel for i in pool.branch]),
-        "plateau modulus factor [-]": pool.plateau / 1000.0,
-        "exponent [-]": pool.exponent,
-        "time-law factor [-]": np.exp(pool.ln_time),
-        "Mn [g/mol]": joined["Mn"],
-        "Mw [g/mol]": joined["Mw"],
-        "Mz [g/mol]": joined["Mz"],
-        "Mw within window [g/mol]": pool.gather(lambda c: c.mean_within(low, high)),
-        "weight above window [-]": pool.gather(lambda c: c.above(high)),
-        "weight below window [-]": 1.0 - pool.gather(lambda c: c.above(low)),
-    }

@@ -35,8 +35,9 @@ from mwdlink.relaxation.mixing import Model
 # one's chi2 per degree of freedom (five standard deviations)
 REJECT = 25.0
 # members are perturbed by this many standard deviations, and lambda leans this much (in ln of the
-# evidence per half decade) to the free side: with 1 and 0 the intervals of two-peak melts covered
-# 0.78 to 0.85 instead of 0.90 (docs/accuracy.md), because smoothing also biases what it chooses
+# evidence per half decade) to the free side. With 1 and 0 the 90 % intervals covered 0.78 to 0.93
+# by family (two-peak melts worst: smoothing also biases what it chooses); docs/accuracy.md has the
+# figures with these
 WIDEN, LEAN = 1.1, 0.6
 # the fit may narrow the exponent's prior to half its spread at most
 MOST_PRECISION = 3.0
