@@ -39,6 +39,23 @@ class Span(click.ParamType):
         return low, high
 
 
+def _shared_out(reading: dict[str, Any]) -> tuple[dict[str, Any], dict[str, Any]]:
+    """The reading options of the GPC's table and of the sweep's.
+
+    Columns go where their role belongs; rows to leave out are the sweep's.
+    """
+    from mwdlink.files.roles import ROLES
+
+    given = reading.get("columns") or {}
+    masses = {k: v for k, v in given.items() if k in ROLES and ROLES[k].kind in _OF_GPC}
+    others = {k: v for k, v in given.items() if k not in masses}
+    return reading | {"columns": masses or None, "omit": set()}, reading | {"columns": others or None}
+
+
+# kinds of quantity that only a distribution's table holds
+_OF_GPC = ("molar mass", "signal")
+
+
 @click.command()
 @click.argument("distribution", metavar="DIST", type=INPUT)
 @click.argument("sweep", type=INPUT)
@@ -90,8 +107,9 @@ def command(
     from mwdlink.files.cards import read_polymer
 
     card = read_polymer(polymer)
-    gpc = read_one(distribution, ["distribution"], reading, calibration=calibration or "unstated")
-    data = read_one(sweep, ["sweep"], reading, temperature_C=temperature)
+    first, second = _shared_out(reading)
+    gpc = read_one(distribution, ["distribution"], first, calibration=calibration or "unstated")
+    data = read_one(sweep, ["sweep"], second, temperature_C=temperature)
     with working("Fitting GPC and sweep together", output):
         result = find_tail(
             gpc,
