@@ -133,7 +133,7 @@ def narrows(test: ast.expr) -> bool:
     """True for ``name is not None``."""
     return (
         isinstance(test, ast.Compare)
-        and isinstance(test.left, ast.Name)
+        and isinstance(test.left, ast.Name | ast.Attribute)
         and isinstance(test.ops[0], ast.IsNot)
         and isinstance(test.comparators[0], ast.Constant)
         and test.comparators[0].value is None
