@@ -45,10 +45,10 @@ KERNEL_QUANTITIES = (
 
 
 def _figure(ax: Axes) -> Figure:
-    figure = ax.get_figure(root=True)
+    figure = style.figure_of(ax)
     if figure is None:
         raise Absent("axes without a figure")
-    return figure  # type: ignore[return-value]
+    return figure
 
 
 class _Shelf:

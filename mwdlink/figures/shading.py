@@ -7,7 +7,6 @@ from collections.abc import Sequence
 from typing import Any
 
 from matplotlib.axes import Axes
-from matplotlib.figure import Figure
 
 from mwdlink.figures import style
 
@@ -23,8 +22,8 @@ def _fraction(ax: Axes, x: float) -> float:
 
 
 def _axes_width_mm(ax: Axes) -> float:
-    figure = ax.get_figure(root=True)
-    width = figure.get_figwidth() / style.MM if isinstance(figure, Figure) else style.WIDTH
+    figure = style.figure_of(ax)
+    width = style.WIDTH if figure is None else figure.get_figwidth() / style.MM
     return 0.8 * float(width) * min(1.0, ax.get_position().width / 0.775)
 
 

@@ -156,6 +156,13 @@ def new_axes(ax: Axes | None = None, *, height: float = 82.0, width: float = WID
     return figure.add_subplot()
 
 
+def figure_of(ax: Axes) -> Figure | None:
+    """The figure that holds the axes, past any subfigures, in every supported matplotlib."""
+    figure: Any = ax.figure
+    root = getattr(figure, "figure", figure)
+    return root if isinstance(root, Figure) else None
+
+
 def superscript(exponent: int) -> str:
     """An integer in raised figures: plain text, which every font and screen can show."""
     return str(exponent).translate(str.maketrans("0123456789-", "⁰¹²³⁴⁵⁶⁷⁸⁹⁻"))
@@ -262,8 +269,8 @@ def equal_decades(
     if own_figure and x > 0:
         beside, around = 19.0, 17.0 + 4.6 * rows
         height = (WIDTH - beside) * y / x + around
-        figure = ax.get_figure(root=True)
-        if isinstance(figure, Figure):
+        figure = figure_of(ax)
+        if figure is not None:
             figure.set_size_inches(WIDTH * MM, min(max(height, least), most) * MM)
 
 
@@ -331,8 +338,8 @@ def legend_above(ax: Axes, *, handles: list[Any] | None = None, over_figure: boo
     order = by_rows(list(range(len(found))), columns)
     found, labels = [found[k] for k in order], [labels[k] for k in order]
     look: dict[str, Any] = {"ncols": columns, "borderpad": 0.0, "handletextpad": 0.6}
-    figure = ax.get_figure(root=True)
-    if over_figure and isinstance(figure, Figure):
+    figure = figure_of(ax)
+    if over_figure and figure is not None:
         figure.legend(found, labels, loc="outside upper left", **look)
     elif width <= WIDTH - 34.0:
         ax.legend(found, labels, loc="lower left", bbox_to_anchor=(0.0, 1.01), **look)
