@@ -36,6 +36,8 @@ from mwdlink.relaxation.mixing import Model
 
 DEFAULT_EXPONENT, DEFAULT_SPREAD = 2.0, 0.2
 LEAST_POINTS = 5
+# more would cost memory and time without end, and say no more than their means do
+MOST_POINTS = 2_000
 
 
 def invert(
@@ -225,6 +227,12 @@ def _check(
             f"{len(sweep)} points are too few for a distribution.",
             path=sweep.path,
             remedy=f"Give at least {LEAST_POINTS}, better five per decade over four decades.",
+        )
+    if len(sweep) > MOST_POINTS:
+        raise InputError(
+            f"{len(sweep)} points are too many.",
+            path=sweep.path,
+            remedy=f"Give at most {MOST_POINTS}: twenty per decade are plenty.",
         )
     if members < 0 or (0 < members < 20):
         raise InputError("give 0 members, or at least 20 for an interval")

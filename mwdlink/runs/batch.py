@@ -9,6 +9,7 @@ the same version.
 from __future__ import annotations
 
 import contextlib
+import json
 import os
 import shutil
 import time
@@ -125,6 +126,10 @@ def batch(
     leave_out = [] if target is None else [target, partial_of(target)]
     lots, notes = find_lots(inputs, anywhere=anywhere, leave_out=leave_out)
     lots, cards = _cards(lots, own)
+    if own is None and not any(lot.polymer for lot in lots):
+        raise InputError(
+            "no polymer is given.", remedy="Give --polymer, or a column `polymer` in a manifest."
+        )
     job = Job(
         None,
         (),
@@ -173,10 +178,20 @@ def why_not_batch(out: str | os.PathLike[str], replace: bool) -> str | None:
     if reason:
         return reason
     partial = partial_of(Path(os.path.realpath(out)))
-    if partial.exists() and not (partial / MARK).exists():
+    if partial.exists() and not _is_work(partial):
         if not partial.is_dir() or set(os.listdir(partial)) - {LOCK}:
             return f"{partial} is in the way: it is no batch broken off. Move it."
     return None
+
+
+def _is_work(partial: Path) -> bool:
+    """Whether a folder is a batch broken off, be it in the very step of getting its name."""
+    if (partial / MARK).exists():
+        return True
+    with contextlib.suppress(OSError, ValueError):
+        found = json.loads((partial / "result.json").read_text(encoding="utf-8"))
+        return isinstance(found, dict) and found.get("command") == "batch"
+    return False
 
 
 def _with(job: Job, **changes: Any) -> Job:
