@@ -10,7 +10,8 @@ import numpy as np
 from mwdlink.errors import Caution, InputError, merge_cautions
 from mwdlink.measurement.consistency import KramersKronig, kramers_kronig
 from mwdlink.measurement.continuous import Continuous, fit_continuous
-from mwdlink.measurement.modes import ModeFit, parsimonious
+from mwdlink.measurement.dense import at_all_readings, averaged
+from mwdlink.measurement.modes import ModeFit, describe, parsimonious
 from mwdlink.measurement.noise import Weights, chi2_in_words, noise_of
 from mwdlink.measurement.sweep import Sweep
 from mwdlink.quantity import Uncertain
@@ -280,7 +281,8 @@ def fit_spectrum(
             remedy="Give at least four, better five per decade over three decades.",
         )
     weights = noise_of(sweep, noise)
-    data = (sweep.omega, sweep.storage, sweep.loss, weights.sigma_storage, weights.sigma_loss)
+    whole = (sweep.omega, sweep.storage, sweep.loss, weights.sigma_storage, weights.sigma_loss)
+    data = averaged(*whole)
     discrete = parsimonious(*data, modes=modes)
     continuous = fit_continuous(
         *data,
@@ -289,6 +291,9 @@ def fit_spectrum(
         smoothing=smoothing,
         noise_freedom=None if weights.estimate is None else weights.estimate.degrees_of_freedom,
     )
+    if data[0].size < len(sweep):
+        discrete = describe(*whole, discrete.tau, discrete.strength, discrete.free)
+        continuous = at_all_readings(continuous, *whole)
     verdict = kramers_kronig(sweep, noise)
     bands, reached = _terminal(sweep, continuous, discrete)
     bands |= _crossover(sweep, continuous)

@@ -192,3 +192,15 @@ def test_repeats_over_noise_seeds():
     found = module.spread(melt, decades=(-2.0, 2.0), sweeps=12)
     assert found["largest"] < 0.05
     assert found["bias"] < 0.05
+
+
+def test_many_readings():
+    """Derived: averaging dense readings before the fit changes nothing but the time it takes."""
+    dense = fit_spectrum(sweep(-2, 2, per_decade=100), members=20)
+    assert dense.discrete.points == 802 and len(dense.to_frame()) == dense.continuous.tau.size
+    assert len(dense.tables()["fit.csv"]) == 401
+    assert 0.8 < dense.discrete.chi2_per_point < 1.2
+    true = log_normal(dense.continuous.tau)
+    seen = dense.supported_mask & (true > 0.01 * true.max())
+    np.testing.assert_allclose(dense.continuous.H[seen], true[seen], rtol=0.05)
+    assert not any(w.code == "misfit_unlike_noise" for w in dense.warnings)
