@@ -109,7 +109,9 @@ def scan(
     first = int(order[0])
     fits: dict[int, Fit] = {}
     start_u = good_start(problem) if u0 is None else u0
-    fits[first] = minimise(problem, start_u, float(values[first]), tolerance=tolerance, most=ALONG_STEPS)
+    fits[first] = minimise(
+        problem, start_u, float(values[first]), tolerance=tolerance, most=ALONG_STEPS
+    )
     for direction in (range(first + 1, len(values)), range(first - 1, -1, -1)):
         u = fits[first].u
         for i in direction:

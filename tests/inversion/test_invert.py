@@ -106,7 +106,7 @@ def test_data_of_every_kernel_read_by_default(kernel):
 
 
 def test_impossible_kernels_are_rejected():
-    """Narrow single-exponential melts have too narrow a spectrum for the power-law kernel (measured:
+    """Narrow single-exponential melts are too narrow for the power-law kernel (measured:
     chi2 of 4 and more); a rejected kernel stays in the table and out of the interval."""
     sweep = _one(families.lognormal(2e5, 1.1), 1, Model("exponential"), noise=0.02)
     r = invert(sweep, CARD, exponent=2.0, noise=0.02, members=60)
@@ -137,7 +137,7 @@ def test_time_law_scatter_moves_molar_mass_as_the_law_says():
 
 
 def test_a_range_of_the_plateau_modulus_takes_part():
-    """A card with 3.5e5 to 4.3e5 Pa: members use both ends, the weight below the window feels it."""
+    """A card with 3.5e5 to 4.3e5 Pa: members use both ends, the weight below feels it."""
     card = builtin("pp-isotactic")
     rng = np.random.default_rng(1)
     sweep = measured(families.lognormal(3e5, 4.0), card, Model(), rng)
@@ -186,7 +186,7 @@ def test_no_members_no_intervals():
 
 
 def test_misfit_is_explained_and_widens_the_intervals():
-    """Noise stated at a tenth of what it is: said, inflated, intervals as wide as with the truth."""
+    """Noise stated at a tenth of what it is: said, inflated, intervals as wide as they should."""
     sweep = _one(families.lognormal(1.2e5, 3.0), noise=0.05)
     kw = dict(kernels=["power-law"], exponent=2.0, members=100)
     honest = invert(sweep, CARD, noise=0.05, **kw).averages["Mw_within_window_g_per_mol"]
