@@ -3,9 +3,9 @@
 An invented maker of extruded netting buys two linear polyethylene grades, called here Fell and
 Tarn (invented, like everything in this file). The melts "in nature" follow a kernel and an exponent
 that are not the tool's defaults, and a time law 6 % off the card's, so that the example shows the
-tool at work on a world it does not know. What the laboratory gets: GPC slices with noise,
-baseline and an exclusion limit, sweeps at three temperatures with noise, three weighed blends, a lot with a tail
-that the GPC does not see, and a data sheet with one wrong number.
+tool at work on a world it does not know. What the laboratory gets: GPC slices with noise, baseline
+and an exclusion limit, sweeps at three temperatures with noise, three weighed blends, a lot with a
+tail that the GPC does not see, and a data sheet with one wrong number.
 """
 
 from __future__ import annotations
