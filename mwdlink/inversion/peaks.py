@@ -22,8 +22,8 @@ from mwdlink.quantity import finite, quantiles
 DEEPEST_SHARE = 0.90
 # a peak with less weight than this is not spoken of
 LEAST_WEIGHT = 0.01
-# share of members in which a peak must return
-PERSISTENCE = 0.6
+# share of all members, and of each kernel's, in which a peak must return
+PERSISTENCE, PERSISTENCE_EACH = 0.6, 0.3
 
 
 @dataclass(frozen=True)
@@ -42,7 +42,7 @@ class Peak:
     height : float
         dW/dlog10 M at the maximum [-].
     persistence : float
-        Share of the members that show it [-], of the group that shows it least; 1 without members.
+        Share of the members that show it [-]; 1 without members.
     at_edge : bool
         Whether it lies where the data do not resolve molar mass (outside the window).
     """
@@ -111,7 +111,7 @@ def find_peaks(
     weights : ndarray of shape (m,), optional
         Weight of each member.
     groups : ndarray of shape (m,), optional
-        Label of each member's kernel: a peak must return within every group.
+        Label of each member's kernel: a peak must return, if less often, within every group.
     above_members : ndarray of shape (m,), optional
         Weight of each member beyond the last node [-]; zero unless given. What is then missing
         from one lies below the first node.
@@ -140,9 +140,15 @@ def find_peaks(
     kinds = [labels == g for g in np.unique(labels)]
     while True:
         found = [_matches(members, t, step) for t in tops]
-        persistence = [_least_share(f[0], share, kinds) for f in found]
-        weakest = int(np.argmin(persistence)) if tops else 0
-        if len(tops) < 2 or persistence[weakest] >= PERSISTENCE:
+        persistence = [float(share[f[0]].sum()) for f in found]
+        each = [_least_share(f[0], share, kinds) for f in found]
+        # in units of what is asked of it, the weaker of the two counts
+        standing = [
+            min(p / PERSISTENCE, e / PERSISTENCE_EACH)
+            for p, e in zip(persistence, each, strict=True)
+        ]
+        weakest = int(np.argmin(standing)) if tops else 0
+        if len(tops) < 2 or standing[weakest] >= 1.0:
             break
         tops = _without(tops, weakest, central)
     beyond = np.zeros(len(members)) if above_members is None else np.asarray(above_members)

@@ -112,3 +112,39 @@ def test_two_equal_peaks_at_a_ratio_of_three_are_told_apart(kernel):
 def test_two_peaks_at_three_over_many_seeds(kernel):
     """Derived: resolved in at least nine of ten noise seeds."""
     assert resolution().resolved(3.0, kernel, 0.03, 10) >= 0.9
+
+
+def measured(d: Distribution, kernel: str):
+    """An invented melt's noisy sweep."""
+    from mwdlink.measurement.sweep import Sweep
+
+    r = resolution()
+    storage, loss = r.Relaxation(d, r.MELT, Model(kernel)).moduli(r.OMEGA)
+    rng = np.random.default_rng(0)
+    up, out = (x * np.exp(0.03 * rng.standard_normal(x.size)) for x in (storage, loss))
+    return Sweep(r.OMEGA, up, out, temperature_C=190.0)
+
+
+def all_kernels(d: Distribution, kernel: str):
+    """The whole inversion of it, every kernel tried."""
+    from mwdlink.chains.polymer import builtin
+    from mwdlink.inversion.invert import invert
+
+    return invert(measured(d, kernel), builtin("hdpe"), members=60, noise=0.03)
+
+
+def test_no_false_peak_when_sharper_kernels_fit_as_well():
+    """Derived: a narrow power-law melt fits every kernel; the sharper ones show two peaks."""
+    found = all_kernels(Distribution.from_averages(Mw=1e5, dispersity=1.1), "power-law")
+    assert sum(k["admissible"] for k in found.kernels) > 1
+    assert len(found.peaks) == 1
+
+
+@pytest.mark.full
+@pytest.mark.parametrize("kernel", ["exponential", "reptation", "power-law"])
+def test_one_and_two_peaks_with_every_kernel_tried(kernel):
+    """Derived: one peak to dispersity 1.1, two at a ratio of 3, whichever kernel made the data."""
+    for dispersity in (1.02, 1.1):
+        d = Distribution.from_averages(Mw=1e5, dispersity=dispersity)
+        assert len(all_kernels(d, kernel).peaks) == 1
+    assert len(all_kernels(resolution().pair(3.0), kernel).peaks) == 2
