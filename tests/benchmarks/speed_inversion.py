@@ -153,12 +153,21 @@ def job_ratio(solves: int = 4, repeats: int = 5) -> Job:
 
 
 def step_ratio() -> tuple[float, float]:
-    """Time of one Gauss-Newton step and of its bare products and factorisation [s]."""
+    """Time of one Gauss-Newton step and of its bare products and factorisation [s].
+
+    The difference between five steps and two from one start, so that what is done once a fit does
+    not count; the start is one from which no step is refused.
+    """
     problem = make_problem()
     found = scan(problem)
-    start, smoothing = good_start(problem), float(found.smoothing[8])
-    steps = minimise(problem, start, smoothing).steps
-    step = seconds(lambda: minimise(problem, start, smoothing), least=1.0) / steps
+    k = LAMBDAS // 2
+    start, smoothing = found.fits[k + 4].u, float(found.smoothing[k])
+
+    def run(steps: int) -> Callable[[], object]:
+        return lambda: minimise(problem, start, smoothing, None, 0.0, steps)
+
+    times = [(seconds(run(5), repeats=20), seconds(run(2), repeats=20)) for _ in range(12)]
+    step = float(np.median([(x - y) / 3 for x, y in times]))
     f, w = problem.forward, weights(start)
     scaled = f.values_and_slope(w)[1]
     hessian = scaled.T @ scaled + problem.prior.precision(smoothing)
@@ -180,7 +189,7 @@ def step_ratio() -> tuple[float, float]:
         f.rows @ s
         f.linear @ w
 
-    return step, seconds(bare, least=0.5)
+    return step, float(np.median([seconds(bare, repeats=20) for _ in range(12)]))
 
 
 def scaling() -> dict[str, list[tuple[int, float, float]]]:
