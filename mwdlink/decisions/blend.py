@@ -24,7 +24,8 @@ from mwdlink.decisions.components import (
     validity_of,
 )
 from mwdlink.decisions.ensemble import ExponentBelief
-from mwdlink.decisions.predict import Outputs, band_words, frames, model_payload, quoted
+from mwdlink.decisions.predict import band_words, model_payload
+from mwdlink.decisions.predicted import Outputs, frames, quoted
 from mwdlink.decisions.trust import Trust
 from mwdlink.errors import Caution, InputError, merge_cautions
 from mwdlink.quantity import Uncertain

@@ -12,7 +12,7 @@ from mwdlink.decisions.trust import RuleError
 from mwdlink.quantity import Uncertain
 
 if TYPE_CHECKING:
-    from mwdlink.decisions.blendcheck import CheckedBlend
+    from mwdlink.decisions.blend_judge import CheckedBlend
 
 # what two labs' sweeps of one melt differ by without anybody's fault (common practice)
 ORDINARY = 0.02

@@ -17,7 +17,7 @@ from decisions.made_up import HDPE, OMEGA, A, B, study, sweep  # noqa: E402
 
 from mwdlink.chains.distribution import Distribution  # noqa: E402
 from mwdlink.decisions.blend import blend  # noqa: E402
-from mwdlink.decisions.blend_compute import _central_map  # noqa: E402
+from mwdlink.decisions.blend_parts import central_map  # noqa: E402
 from mwdlink.decisions.blend_sweeps import (  # noqa: E402
     MeasuredBank,
     log_additive,
@@ -119,7 +119,7 @@ def speed() -> None:
     r = blend([A, B], [0.5, 0.5], HDPE, members=0)
     c = r.computed
     seconds = best(
-        lambda: _central_map(
+        lambda: central_map(
             c.central,
             r.fractions,
             c.omega,

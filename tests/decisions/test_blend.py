@@ -13,7 +13,7 @@ from mwdlink.chains.distribution import Distribution
 from mwdlink.chains.families import lognormal
 from mwdlink.chains.polymer import builtin
 from mwdlink.decisions.blend import blend
-from mwdlink.decisions.blend_compute import _central_map
+from mwdlink.decisions.blend_parts import central_map
 from mwdlink.decisions.blend_routes import along
 from mwdlink.decisions.blend_sweeps import (
     MeasuredBank,
@@ -384,7 +384,7 @@ def test_the_map_of_all_fractions_is_quick(full, by_distributions):
 
     def once(belief):
         start = time.perf_counter()
-        _central_map(c.central, by_distributions.fractions, c.omega, 759.0, (2.16, 5.0, 21.6),
+        central_map(c.central, by_distributions.fractions, c.omega, 759.0, (2.16, 5.0, 21.6),
                      (0.1, 1.0, 10.0, 100.0), lambda x: x, belief)  # fmt: skip
         return time.perf_counter() - start
 
