@@ -31,6 +31,9 @@ TAIL_FROM, TAIL_RAMP, TAIL_FREEDOM = -0.6, 0.4, 3e-4
 # lambda of a curve that may only go on smoothly there
 STIFF = 3.0
 MAX_STEPS = 150
+# three steps in a row that gain less than this many tolerances end a fit as well: along narrow
+# valleys the linear model promises more than it keeps
+IDLE = 5.0
 # of the objective, which is a sum over a hundred rows: what is left is nothing beside its scatter
 TOLERANCE = 2e-2
 
@@ -290,6 +293,7 @@ def minimise(
     smoothing: float,
     noise: Noise | None = None,
     tolerance: float = TOLERANCE,
+    bound: float = np.inf,
 ) -> JointFit:
     """Damped Gauss-Newton, of the data as they are or perturbed (randomise, then optimise).
 
@@ -304,6 +308,9 @@ def minimise(
         Perturbation of data and prior.
     tolerance : float
         A step that promises less than this of the objective is the end.
+    bound : float
+        A fit that will not come below this is left early: another one explains the data far
+        better, and how badly this one does it does not matter.
     """
     rows, target = problem.prior_rows(smoothing)
     shift = 0.0 if noise is None else noise.data
@@ -323,11 +330,12 @@ def minimise(
     value, r, slope, w, q = cost(z)
     damping = 1e-3
     converged = False
-    steps = 0
+    steps = slow = 0
     for steps in range(1, MAX_STEPS + 1):
         gradient = slope.T @ r + rows.T @ q
         hessian = slope.T @ slope + precision
         diagonal = np.diag(hessian).copy()
+        refused = False
         while True:
             lhs = hessian.copy()
             lhs[np.diag_indices_from(lhs)] += damping * diagonal + 1e-12
@@ -344,6 +352,7 @@ def minimise(
                 if promised < tolerance:
                     converged = True
                     break
+            refused = True
             damping = max(damping * 6.0, 1e-6)
             if damping > 1e8:
                 break
@@ -352,7 +361,14 @@ def minimise(
         gain = value - new[0]
         z = trial
         value, r, slope, w, q = new
-        damping = max(damping * (0.15 if gain > 0.25 * promised else 2.0), 1e-9)
+        if not refused:
+            damping = max(damping * (0.15 if gain > 0.25 * promised else 2.0), 1e-9)
+        slow = slow + 1 if gain < IDLE * tolerance else 0
+        if slow >= 3:
+            converged = True
+            break
+        if steps > 8 and value - FORESEEN * gain > bound:
+            break
         if promised < tolerance * (1.0 + 1e-3 * value):
             converged = True
             break
@@ -423,31 +439,39 @@ class JointScan:
         return float(e.max() + np.log(np.sum(np.exp(e - e.max())) / self.asked))
 
 
+# an objective this far above the best one's is beyond all rescue; steps looked ahead for it
+BEYOND_RESCUE, FORESEEN = 60.0, 15.0
 # what a hundred more steps may still gain in a fit that counts as converged
 SETTLED = 0.5
 # values of lambda whose evidence is this many e-folds below the best are not followed further
 HOPELESS = 9.0
 
 
-def scan(problem: JointProblem, z0: np.ndarray, values: np.ndarray) -> JointScan:
+def scan(
+    problem: JointProblem, z0: np.ndarray, values: np.ndarray, rival: float = np.inf
+) -> JointScan:
     """Fit at each lambda, from the middle both ways, each started from its neighbour.
 
     A direction is left where the evidence has become hopeless: fits that are far too smooth for
-    the data are the slow ones, and nothing is drawn from them.
+    the data are the slow ones, and nothing is drawn from them. `rival` is the objective of another
+    explanation's best fit.
     """
     middle = len(values) // 2
-    fits: dict[int, JointFit] = {middle: minimise(problem, z0, float(values[middle]))}
+    bound = rival + BEYOND_RESCUE
+    fits: dict[int, JointFit] = {middle: minimise(problem, z0, float(values[middle]), bound=bound)}
     top = fits[middle].log_evidence
     for direction in (range(middle + 1, len(values)), range(middle - 1, -1, -1)):
         z = fits[middle].z
         for i in direction:
-            fits[i] = minimise(problem, z, float(values[i]))
+            bound = min(bound, min(f.objective for f in fits.values()) + BEYOND_RESCUE)
+            fits[i] = minimise(problem, z, float(values[i]), bound=bound)
             z = fits[i].z
             top = max(top, fits[i].log_evidence)
             if fits[i].log_evidence < top - HOPELESS:
                 break
     for i, fit in fits.items():
-        if not fit.converged and fit.log_evidence > top - HOPELESS:
+        near = fit.log_evidence > top - HOPELESS and fit.objective < bound
+        if not fit.converged and near:
             fits[i] = polished(problem, fit)
     return JointScan(problem, tuple(fits[i] for i in sorted(fits)), len(values))
 

@@ -240,13 +240,15 @@ def infer(setting: Setting, kernels: tuple[str, ...], members: int, seed: int) -
     """
     alone = smooth_curve(setting.x, setting.gpc)
     found = []
+    rival = np.inf
     for kernel in kernels:
         problem, window = setting.problem(kernel)
+        free = joint.scan(problem, joint.start(problem, alone.u), SMOOTHING, rival)
+        rival = min(rival, free.best.objective)
         stiff = problem.with_priors(replace(problem.priors, tail_free=False))
-        smooth = joint.scan(stiff, joint.start(stiff, alone.u), SMOOTHING)
-        first = smooth.best.z.copy()
-        first[problem.n] = problem.priors.lump[0]
-        found.append(KernelScan(kernel, joint.scan(problem, first, SMOOTHING), smooth, window))
+        smooth = joint.scan(stiff, joint.start(stiff, alone.u), SMOOTHING, rival)
+        rival = min(rival, smooth.best.objective)
+        found.append(KernelScan(kernel, free, smooth, window))
     found.sort(key=lambda k: -k.total)
     gap = np.array([k.total - found[0].total for k in found])
     weight = np.where(gap > -ADMISSIBLE, np.exp(gap / TEMPER), 0.0)

@@ -66,17 +66,19 @@ def weigh(best: KernelScan) -> tuple[Explanation, ...]:
     scans: dict[str, JointScan] = {}
     z = best.smooth.best.z
     scans["tail"] = joint.scan(free, best.free.best.z, SMOOTHING)
-    scans["time law"] = joint.scan(smooth, z, SMOOTHING)
+    rival = scans["tail"].best.objective
+    scans["time law"] = joint.scan(smooth, z, SMOOTHING, rival)
     p = smooth.priors
     for name, priors in (
         ("none", _stated(p)),
         ("gpc baseline", p.with_(joint.BASELINE, WIDE_BASELINE)),
         ("gpc calibration", p.with_(joint.CALIBRATION, WIDE_CALIBRATION)),
     ):
-        scans[name] = joint.scan(smooth.with_priors(priors), z, SMOOTHING)
+        scans[name] = joint.scan(smooth.with_priors(priors), z, SMOOTHING, rival)
     for name, extra in (("branching", _slow(smooth)), ("second phase", _plateau(smooth))):
         problem = smooth.with_priors(p, extra)
-        scans[name] = joint.scan(problem, np.concatenate([z, extra.centre]), SMOOTHING)
+        start = np.concatenate([z, extra.centre])
+        scans[name] = joint.scan(problem, start, SMOOTHING, rival)
     totals = np.array([scans[name].total for name in NAMES])
     share = np.exp(totals - totals.max())
     share = _one_temperature(share / share.sum())
