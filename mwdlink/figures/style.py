@@ -267,7 +267,7 @@ def equal_decades(
     ax.set_aspect("equal", adjustable="box")
     ax.set_anchor("N")
     if own_figure and x > 0:
-        beside, around = 19.0, 17.0 + 4.6 * rows
+        beside, around = 19.0, 18.5 + 4.6 * rows
         height = (WIDTH - beside) * y / x + around
         figure = figure_of(ax)
         if figure is not None:
