@@ -2,9 +2,14 @@
 
 from __future__ import annotations
 
+import os
 import shutil
 
 import pytest
+
+# matrices here are small: more threads than one only wait for each other
+for _library in ("OPENBLAS", "OMP", "MKL"):
+    os.environ.setdefault(f"{_library}_NUM_THREADS", "1")
 
 BROWSERS = ("chromium", "chromium-browser", "google-chrome")
 

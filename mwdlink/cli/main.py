@@ -120,6 +120,9 @@ class Terminated(BaseException):
 
 def run(arguments: list[str] | None = None) -> NoReturn:
     """Run the command line and leave with the status of its ending."""
+    # before numpy loads: its matrices are small here, and threads would only wait for each other
+    for library in ("OPENBLAS", "OMP", "MKL"):
+        os.environ.setdefault(f"{library}_NUM_THREADS", "1")
     with contextlib.suppress(ValueError):  # not in the main thread: leave signals alone
         signal.signal(signal.SIGTERM, _terminate)
     status = _status(arguments)

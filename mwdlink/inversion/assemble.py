@@ -88,6 +88,8 @@ def assemble(
         centre.problem.window,
         level=level,
         groups=None if pool is None else pool.kernel,
+        above_members=None if pool is None else pool.gather(lambda c: c.w[:, -1]),
+        above_central=float(centre.fit.w[-1]),
     )
     notes = merge_cautions(
         notes, fit_cautions(centre, method), check_notes, sweep_cautions(sweep, melt)

@@ -151,7 +151,8 @@ def invert(
         max(points - int(used[0].scan.freedom[used[0].scan.best]), 1),
         weights.source,
     )
-    if words:
+    if words and not isinstance(sweep, FlowCurve):
+        # a flow curve's errors are the rule's, not scatter: its chi2 says nothing of the noise
         notes += (Caution("chi2", words),)
     if inflation > 1.0:
         notes += (

@@ -117,10 +117,11 @@ class _State:
         w, k, p, y, r, t, q, lump = self.rows(u, index)
         f = self.problem.forward
         weighted = (self.power[index][:, None] * p)[:, :, None] * k
-        slope = np.matmul(f.rows, weighted) + f.linear
-        scaled = slope * (self.inverse / y)[:, :, None]
-        j = scaled * w[:, None, :]
-        j -= j.sum(axis=2, keepdims=True) * w[:, None, :]
+        j = np.matmul(f.rows, weighted)
+        j += f.linear
+        j *= (self.inverse / y)[:, :, None]
+        j -= np.matmul(j, w[:, :, None])
+        j *= w[:, None, :]
         jt = j.transpose(0, 2, 1)
         n = u.shape[1]
         prior = self.problem.prior
@@ -142,7 +143,7 @@ def _stack(problem: Problem, copies: Copies) -> tuple[np.ndarray, np.ndarray]:
     u = copies.u.copy()
     active = np.arange(m)
     value = state.cost(u, active)
-    damping = np.full(m, 1e-3)
+    damping = np.full(m, 1e-8)
     done = np.zeros(m, dtype=bool)
     diag = np.arange(n)
     for _ in range(MAX_STEPS):

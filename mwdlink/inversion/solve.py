@@ -7,7 +7,8 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.linalg.lapack import dposv
 
-from mwdlink.inversion.objective import Problem, lump_rows, weights
+from mwdlink.inversion.objective import Problem, weights
+from mwdlink.inversion.roughness import LUMP_CENTRE, LUMP_SPREAD
 
 MAX_STEPS = 300
 # a step that promises less than this much of the objective (0.03 standard deviations) is the end
@@ -117,48 +118,51 @@ def minimise(
         data = data + problem.sigma * shift.data
         pull, target, lump_target = shift.third, target + shift.weak, shift.lumps
 
-    def cost(u: np.ndarray) -> tuple[float, float]:
+    # the linear rows' part of the gradient is precision u less this
+    pulled = root * (third.T @ pull) + weak.T @ target
+
+    def cost(u: np.ndarray) -> tuple[float, float, np.ndarray, np.ndarray]:
         w = weights(u)
         with np.errstate(invalid="ignore", divide="ignore"):
             # far from the data a modulus can come out negative: the step is then refused
             r = (np.log(f.values(w)) - data) * inverse
         t = root * (third @ u) - pull
         k = weak @ u - target
-        lump = lump_rows(w)[0] - lump_target
+        lump = (np.log(np.maximum(w[-2:], 1e-300)) - LUMP_CENTRE) / LUMP_SPREAD - lump_target
         chi2 = float(r @ r)
-        return chi2 + float(t @ t + k @ k + lump @ lump), chi2
+        return chi2 + float(t @ t + k @ k + lump @ lump), chi2, w, lump
 
     u = np.array(u0, dtype=float)
-    value, chi2 = cost(u)
-    damping = 1e-3
+    value, chi2, w, lump = cost(u)
+    # relative to the diagonal, so that directions the data hardly see are not held back by it
+    damping = 1e-6
     converged = False
     hessian = precision
     steps = 0
     while steps < min(most, MAX_STEPS):
         steps += 1
-        w = weights(u)
-        y, slope = f.values_and_slope(w)
-        scaled = slope * (inverse / y)[:, None]
+        y, j = f.values_and_slope(w)
+        j *= (inverse / y)[:, None]
         # d/du through the softmax: J diag(w) - (J w) w'
-        j = scaled * w - np.outer(scaled @ w, w)
+        j -= (j @ w)[:, None]
+        j *= w
         r = (np.log(y) - data) * inverse
-        lump_r, lump_j = lump_rows(w)
-        lump_r = lump_r - lump_target
-        gradient = (
-            j.T @ r
-            + root * (third.T @ (root * (third @ u) - pull))
-            + weak.T @ (weak @ u - target)
-            + lump_j.T @ lump_r
-        )
-        hessian = j.T @ j + precision + lump_j.T @ lump_j
-        diagonal = np.diag(hessian).copy()
+        lump_j = np.empty((2, w.size))
+        lump_j[:] = -w / LUMP_SPREAD
+        lump_j[0, -2] += 1.0 / LUMP_SPREAD
+        lump_j[1, -1] += 1.0 / LUMP_SPREAD
+        gradient = r @ j + precision @ u - pulled + lump @ lump_j
+        hessian = j.T @ j
+        hessian += precision
+        hessian += lump_j.T @ lump_j
+        diagonal = hessian.diagonal().copy()
         while True:
             lhs = hessian.copy()
-            lhs[np.diag_indices_from(lhs)] += damping * diagonal + 1e-12
-            _, step, info = dposv(lhs, -gradient)
-            if info == 0 and np.all(np.isfinite(step)):
+            lhs.flat[:: lhs.shape[0] + 1] += damping * diagonal + 1e-12
+            _, step, info = dposv(lhs, -gradient, overwrite_a=True)
+            if info == 0 and np.isfinite(step).all():
                 trial = u + step
-                new, new_chi2 = cost(trial)
+                new, new_chi2, new_w, new_lump = cost(trial)
                 promised = -float(gradient @ step)
                 if new <= value + 1e-12 * abs(value):
                     break
@@ -171,7 +175,7 @@ def minimise(
         if converged or damping > 1e8:
             break
         gain = value - new
-        u, value, chi2 = trial, new, new_chi2
+        u, value, chi2, w, lump = trial, new, new_chi2, new_w, new_lump
         damping = max(damping * (0.15 if gain > 0.25 * promised else 2.0), 1e-9)
         if promised < tolerance * (1.0 + 1e-3 * value):
             converged = True
