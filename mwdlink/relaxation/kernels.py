@@ -203,13 +203,15 @@ def tube_survival(u: Any) -> np.ndarray:
     exp(-pi^2/(4 u)), 1e-18.
     """
     u = np.asarray(u, dtype=float)
-    v = np.minimum(u, 700.0)
+    out = np.asarray(1.0 - 4.0 * np.sqrt(np.minimum(u, 0.06)) / np.pi**1.5)
+    late = u >= 0.06
+    v = np.minimum(u[late], 700.0)
     total = np.exp(-v)
     # at u = 0.06 the first term left out, p = 25, is exp(-37.5)/25^2: 1e-19
     for p in range(3, 25, 2):
         total += np.exp(-np.minimum(p * p * v, 745.0)) / (p * p)
-    small = 1.0 - 4.0 * np.sqrt(np.minimum(u, 0.06)) / np.pi**1.5
-    return np.where(u < 0.06, small, 8.0 / np.pi**2 * total)
+    out[late] = 8.0 / np.pi**2 * total
+    return out
 
 
 def power_law_decay(z: Any, n: float) -> np.ndarray:
@@ -256,12 +258,15 @@ def fluctuation_sum(x: Any) -> np.ndarray:
     exp(-pi^2/x); above, pi^2/6 less the direct sum of eleven terms.
     """
     x = np.asarray(x, dtype=float)
-    v = np.minimum(x, 700.0)
-    tail = np.zeros_like(v)
-    for k in range(1, 12):
-        tail += np.exp(-np.minimum(k * k * v, 745.0)) / (k * k)
     low = np.minimum(x, 0.3)
-    return np.where(x <= 0.3, np.sqrt(np.pi * low) - 0.5 * low, np.pi**2 / 6 - tail)
+    out = np.asarray(np.sqrt(np.pi * low) - 0.5 * low)
+    late = x > 0.3
+    v = np.minimum(x[late], 700.0)
+    tail = np.exp(-v)
+    for k in range(2, 12):
+        tail += np.exp(-np.minimum(k * k * v, 745.0)) / (k * k)
+    out[late] = np.pi**2 / 6 - tail
+    return out
 
 
 # ln s for the integrals of F over ln s: the trapezoid rule is exponentially accurate there, as the
