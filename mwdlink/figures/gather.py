@@ -38,6 +38,7 @@ if TYPE_CHECKING:
 Tables = Mapping[str, pd.DataFrame]
 Record = Mapping[str, Any]
 MOST_PROPERTIES = 6
+MOST_TRENDS = 6
 KERNEL_QUANTITIES = (
     ("Mw_g_per_mol", "weight-average molar mass Mw / g mol⁻¹", "g/mol"),
     ("fraction", "weight fraction beyond", ""),
@@ -450,15 +451,18 @@ def _batch(shelf: _Shelf) -> None:
     table = shelf.table("summary.csv")
     if table is None:
         return
-    limits = shelf.record.get("control") or shelf.record.get("limits") or {}
-    for name in trend.WANTED:
-        header = find(table, name)
-        if header is None or numbers(table, header) is None:
-            continue
-        own = limits.get(header) or limits.get(name) or (limits if "centre" in limits else None)
+    limits = shelf.record.get("control")
+    limits = limits if isinstance(limits, Mapping) else {}
+    # what has limits is charted; without any, the quantity people ask for first
+    headers = [h for h in limits if numbers(table, h) is not None]
+    if not headers:
+        headers = [h for h in (trend.trend_header(table),) if h and numbers(table, h) is not None]
+    for header in headers[:MOST_TRENDS]:
+        name = "".join(c if c.isalnum() else "-" for c in bare(header).casefold()).strip("-")
+        own = limits.get(header)
         shelf.add(
-            f"trend-{name.casefold()}",
-            f"{name} over the lots",
+            f"trend-{name}",
+            f"{bare(header)} over the lots",
             table,
             partial(trend.plot_trend, table, header, limits=own),
             partial(trend.describe_trend, table, header, own),

@@ -105,7 +105,11 @@ def plot_result(result: Any, ax: Axes | None = None) -> Axes:
             return support.plot_parity(samples, ax=ax)
         return support.plot_samples(samples, ax=ax)
     if command == "batch":
-        return trend.plot_trend(table("summary.csv"), ax=ax)
+        summary = table("summary.csv")
+        header = trend.trend_header(summary)
+        return trend.plot_trend(
+            summary, header, limits=(record.get("control") or {}).get(header), ax=ax
+        )
     if command == "consistency":
         return moduli.plot_moduli(table("residuals.csv"), ax=ax)
     if command == "drift":
