@@ -310,7 +310,7 @@ def blend(
         notes,
         valid.warnings,
         c.warnings,
-        _trust_cautions(trust, ready, melt),
+        _trust_cautions(trust, ready, melt, settings.route),
     )
     return Blend(
         components=ready,
@@ -366,11 +366,19 @@ def _route(components: Sequence[Component], wanted: str | None) -> str:
 
 
 def _trust_cautions(
-    trust: Trust | None, components: Sequence[Component], melt: Melt
+    trust: Trust | None, components: Sequence[Component], melt: Melt, route: str
 ) -> tuple[Caution, ...]:
     if trust is None:
         return ()
     out = []
+    if route not in trust.routes:
+        out.append(
+            Caution(
+                "trust_other_route",
+                f"The trust file says nothing of the route through {route}: the band is that of a "
+                "prediction without it.",
+            )
+        )
     names = {c.name for c in components}
     if trust.components and not names <= set(trust.components):
         other = ", ".join(sorted(names - set(trust.components)))

@@ -92,7 +92,7 @@ def verdict_of(
     best = rules[0] if rules else None
     if best is not None:
         out.append(
-            f"Of all rules tried {best['kernel']} with exponent {best['exponent']:.3g} misses a "
+            f"Of all rules tried, {best['kernel']} with exponent {best['exponent']:.3g} misses a "
             f"left-out blend least ({best['scatter_decades']:.2g} decades)"
         )
     if exponent.low is not None and exponent.high is not None and judged:

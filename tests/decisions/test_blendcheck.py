@@ -152,6 +152,14 @@ def test_through_distributions_alone():
     assert r.route == "distributions"
     for b in r.blends:
         assert b.recovered["A"].value == pytest.approx(b.weighed["A"], abs=0.03)
+    # and the error found stands in for kernels, prior and the card's scatter
+    told = blend(bare, [0.45, 0.55], HDPE, trust=r.trust, members=40)
+    free = blend(bare, [0.45, 0.55], HDPE, members=40)
+    assert told.kernels == ("power-law",)
+    a, b = (x.outputs.bands["eta0_Pa_s"] for x in (told, free))
+    assert np.log(a.high / a.low) < 0.5 * np.log(b.high / b.low)
+    swept = blend(made.components, [0.45, 0.55], HDPE, trust=r.trust, members=0)
+    assert "trust_other_route" in {w.code for w in swept.warnings}
 
 
 def test_three_components():
