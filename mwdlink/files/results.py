@@ -207,14 +207,15 @@ def folder_beside(out_dir: str | os.PathLike[str], replace: bool = False) -> Ite
             put_in_place(new, out, replace)
     except OSError as error:
         raise MwdlinkError(
-            f"{out_dir} could not be written: {_words(error)}. Nothing there was changed."
+            f"{out_dir} could not be written: {system_words(error)}. Nothing there was changed."
         ) from error
     finally:
         if new is not None:
             shutil.rmtree(new, ignore_errors=True)
 
 
-def _words(error: OSError) -> str:
+def system_words(error: OSError) -> str:
+    """What the system refused, as people say it."""
     return {
         errno.ENOSPC: "the disk is full",
         errno.EDQUOT: "your share of the disk is used up",

@@ -23,7 +23,7 @@ import mwdlink
 from mwdlink.chains.polymer import Polymer
 from mwdlink.errors import InputError, MwdlinkError
 from mwdlink.files.cards import read_polymer
-from mwdlink.files.results import csv_text, json_text, put_in_place, why_not
+from mwdlink.files.results import csv_text, json_text, put_in_place, system_words, why_not
 from mwdlink.quantity import to_plain
 from mwdlink.runs.batch_result import Batch
 from mwdlink.runs.lock import NAME as LOCK
@@ -234,7 +234,7 @@ def _work_folder(
         folder.mkdir(parents=True, exist_ok=True)
         lock = RunLock(folder, str(out))
     except OSError as error:
-        raise MwdlinkError(f"{folder} cannot be written: {error.strerror}.") from None
+        raise MwdlinkError(f"{folder} cannot be written: {system_words(error)}.") from None
     try:
         # under the lock: the run that held it may have finished meanwhile
         reason = why_not_batch(target, replace)
@@ -247,7 +247,7 @@ def _work_folder(
         try:
             (folder / MARK).touch()
         except OSError as error:
-            raise MwdlinkError(f"{folder} cannot be written: {error.strerror}.") from None
+            raise MwdlinkError(f"{folder} cannot be written: {system_words(error)}.") from None
         yield folder
     finally:
         lock.release()
@@ -383,7 +383,7 @@ def _finish(folder: Path, target: Path, result: Batch, job: Job, command_line: s
         with contextlib.suppress(OSError):
             (folder / MARK).touch()
         raise MwdlinkError(
-            f"the result could not be put in place: {error.strerror or error}. What is finished is "
+            f"the result could not be put in place: {system_words(error)}. What is finished is "
             f"kept in {folder}; the same command goes on from there."
         ) from error
     # where there was an earlier result, it now stands under the work folder's name

@@ -26,3 +26,9 @@ def whole(lots: Path, tmp_path_factory: pytest.TempPathFactory) -> Path:
     out = tmp_path_factory.mktemp("whole") / "out"
     batch([lots], "hdpe", out=out, **QUICK)
     return out
+
+
+@pytest.fixture(autouse=True)
+def without_pictures(monkeypatch: pytest.MonkeyPatch) -> None:
+    """The trend pictures take longer than the quick lots; `whole` has them."""
+    monkeypatch.setattr("mwdlink.figures.gather.pictures_of", lambda *parts: {})

@@ -54,9 +54,11 @@ def write_lots(folder: Path, count: int, seed: int = 1, odd: int | None = None) 
 
 
 def contents(folder: Path) -> dict[str, bytes]:
-    """Every file of a result but what holds the pace: by its path."""
+    """Every table and every input's record, by path (the batch's own record holds the pace)."""
     return {
         str(p.relative_to(folder)): p.read_bytes()
         for p in sorted(folder.rglob("*"))
-        if p.is_file() and str(p.relative_to(folder)) not in ("result.json", "report.html")
+        if p.is_file()
+        and str(p.relative_to(folder)) not in ("result.json", "report.html")
+        and p.parent.name != "figures"
     }

@@ -14,6 +14,8 @@ import pytest
 from lots_made import QUICK, contents, sweep_table, write_lots
 
 import mwdlink
+from melts import mean_within
+from mwdlink.chains.families import lognormal
 from mwdlink.errors import InputError, MwdlinkError
 from mwdlink.files.results import csv_text
 from mwdlink.runs.batch import Progress, batch, partial_of
@@ -171,7 +173,7 @@ def test_earlier_result_stays_until_the_new_one_is_whole(lots: Path, tmp_path: P
     out = tmp_path / "out"
     batch([home], "hdpe", out=out, **QUICK)
     before = contents(out)
-    broken_off(home, out, 2, noise=0.05)
+    broken_off(home, out, 2, noise=0.05, replace=True)
     assert contents(out) == before
     with pytest.raises(MwdlinkError, match="not empty"):
         batch([home], "hdpe", out=out, **QUICK)
@@ -222,17 +224,17 @@ def test_folder_that_vanishes(lots: Path, tmp_path: Path, monkeypatch: pytest.Mo
 
 
 FULL = """
-mount -t tmpfs -o size=200k small "$1" && cd "$1" || exit 77
-"$2" -m mwdlink batch "$3" {options} --workers 1 --out out
+mount -t tmpfs -o size=60k small "$1" && cd "$1" || exit 77
+"$2" -m mwdlink batch "$3" {options} --workers 1 --out out > /dev/null
 echo "status $?"; ls
 mount -o remount,size=20m "$1"
-"$2" -m mwdlink batch "$3" {options} --workers 1 --out out --quiet
+"$2" -m mwdlink batch "$3" {options} --workers 1 --out out --quiet > /dev/null
 echo "status $?"; ls
 """
 
 
 def test_full_disk(lots: Path, tmp_path: Path) -> None:
-    """On a disk of 200 kB the run stops, keeps what is done, and goes on when there is room."""
+    """On a disk of 60 kB the run stops, keeps what is done, and goes on when there is room."""
     from lots_made import QUICK_OPTIONS
 
     script = FULL.format(options=" ".join(QUICK_OPTIONS))
@@ -250,7 +252,7 @@ def test_full_disk(lots: Path, tmp_path: Path) -> None:
     if done.returncode == 77 or "status" not in done.stdout:
         pytest.skip(f"no small disk can be mounted here: {done.stderr[:200]}")
     first, second = done.stdout.split("status ")[1:]
-    assert first.split() == ["1", "out.partial"] or first.split()[:2] == ["1", "out.partial"]
+    assert first.split() == ["1", "out.partial"]
     assert "the disk is full" in done.stderr and "finished and kept" in done.stderr
     assert second.split() == ["0", "out"]
 
@@ -275,7 +277,9 @@ def test_against_a_reference(lots: Path, tmp_path: Path) -> None:
     low, high = (rows["stiffer"][f"G ratio {end} [-]"] for end in ("low", "high"))
     assert low < 1.1 < high or abs(rows["stiffer"]["G ratio [-]"] - 1.1) < 0.02
     assert rows["alike"]["Mw ratio low [-]"] < 1.0 < rows["alike"]["Mw ratio high [-]"]
-    assert rows["longer"]["Mw ratio low [-]"] > 1.0
+    window = [rows["longer"][f"M window {end} [g/mol]"] for end in ("low", "high")]
+    true = mean_within(lognormal(1.5e5, 4.0), *window) / mean_within(lognormal(1.2e5, 4.0), *window)
+    assert rows["longer"]["Mw ratio low [-]"] < true < rows["longer"]["Mw ratio high [-]"]
     assert "2 differ from the reference" in result.answer()
 
 
