@@ -304,7 +304,10 @@ def _agree_frequencies(picker: Picker, used: Column, omega: np.ndarray, rows: np
 def _cross_check(
     picker: Picker, pair: tuple[str, str], rows: np.ndarray, columns: dict[str, np.ndarray]
 ) -> None:
-    """Say so where a further column of the file contradicts the moduli read."""
+    """Say so where a further column of the file contradicts the moduli read.
+
+    A viscosity column is kept beside the moduli, for the check of their units.
+    """
     keep = np.isin(np.array(picker.block.rows), rows)
     magnitude = np.hypot(columns["storage"], columns["loss"])
     expected = {
@@ -325,6 +328,8 @@ def _cross_check(
         other = other[keep]
         if not np.all(other > 0):
             continue
+        if role == "|eta*|" and np.all(np.isfinite(other)):
+            columns["stated_viscosity"] = other
         off = float(np.median(np.abs(np.log(other / value))))
         if off > _AGREE:
             picker.notes.append(
@@ -359,7 +364,8 @@ def _same_step(a: Segment, b: Segment, same: float) -> bool:
     if a.temperature is not None and b.temperature is not None:
         if abs(a.temperature - b.temperature) > same:
             return False
-    if set(a.columns) != set(b.columns):
+    # the viscosity beside the moduli is a witness only: pieces with and without it belong together
+    if (set(a.columns) ^ set(b.columns)) - {"stated_viscosity"}:
         return False
     x, y = np.log(a.columns["omega"]), np.log(b.columns["omega"])
     # complete each other: the ranges meet at most, or a few points fall between the others
@@ -380,7 +386,11 @@ def _append(held: Segment, more: Segment) -> None:
             )
             held.warnings = merge_cautions(held.warnings, (note,))
             held.temperature = (n * held.temperature + m * more.temperature) / (n + m)
-    held.columns = {k: np.concatenate([v, more.columns[k]]) for k, v in held.columns.items()}
+    held.columns = {
+        k: np.concatenate([v, more.columns[k]])
+        for k, v in held.columns.items()
+        if k in more.columns
+    }
     held.rows = np.concatenate([held.rows, more.rows])
     held.warnings = merge_cautions(held.warnings, more.warnings)
     held.comments = (*held.comments, *(c for c in more.comments if c not in held.comments))

@@ -307,7 +307,8 @@ def check_consistency(
     noise : float, optional
         Relative noise [-]; default the error columns, else each curve's own scatter.
     complex_viscosity : array_like of shape (n,), optional
-        |eta*| as the instrument wrote it [Pa s]: shows Hz taken for rad/s, and kPa for Pa.
+        |eta*| as the instrument wrote it [Pa s]: shows Hz taken for rad/s, and kPa for Pa. Default
+        the sweep's own `stated_viscosity`, which the readers keep where the file has the column.
     other : Sweep, optional
         A sweep of the same melt at the same temperature that is trusted: shows the same slips.
     plateau_modulus : float, optional
@@ -327,6 +328,8 @@ def check_consistency(
     verdict = kramers_kronig(sweep, noise)
     estimate = estimate_noise(sweep)
     outliers = find_outliers(sweep, estimate)
+    if complex_viscosity is None:
+        complex_viscosity = sweep.stated_viscosity
     proposals = propose(
         sweep,
         verdict.chi2_per_point / max(verdict.limit, 1e-12),

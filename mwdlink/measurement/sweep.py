@@ -300,6 +300,9 @@ class Sweep(_Curve):
         Strain amplitude [-] and torque [N m] where given.
     comments : tuple of str
         Comment and preamble lines of the source.
+    stated_viscosity : ndarray of shape (n,) or None
+        |eta*| [Pa s] as a column of its own beside the moduli. Nothing is computed from it: it
+        bears witness on the units of the frequency and the moduli.
     """
 
     omega: np.ndarray
@@ -315,6 +318,7 @@ class Sweep(_Curve):
     strain: np.ndarray | None = None
     torque: np.ndarray | None = None
     comments: tuple[str, ...] = ()
+    stated_viscosity: np.ndarray | None = None
 
     _columns: ClassVar[dict[str, str]] = {
         "omega": "omega [rad/s]",
@@ -324,6 +328,7 @@ class Sweep(_Curve):
         "sigma_loss": "sigma'' [-]",
         "strain": "strain [-]",
         "torque": "torque [N m]",
+        "stated_viscosity": "|eta*| [Pa s]",
     }
     _required: ClassVar[tuple[str, ...]] = ("omega", "storage", "loss")
     _sigmas: ClassVar[tuple[str, ...]] = ("sigma_storage", "sigma_loss")
@@ -359,8 +364,13 @@ class Sweep(_Curve):
         """
         if not (np.isfinite(a_T) and a_T > 0 and np.isfinite(b_T) and b_T > 0):
             raise InputError(f"shift factors must be above zero, not {a_T:g} and {b_T:g}.")
+        stated = self.stated_viscosity
         return replace(
-            self, omega=self.omega * a_T, storage=self.storage * b_T, loss=self.loss * b_T
+            self,
+            omega=self.omega * a_T,
+            storage=self.storage * b_T,
+            loss=self.loss * b_T,
+            stated_viscosity=None if stated is None else stated * (b_T / a_T),
         )
 
 
