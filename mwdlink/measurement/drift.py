@@ -134,6 +134,7 @@ def compare_drift(
     ):
         raise InputError(
             f"The sweeps are at {before.temperature_C:g} and {after.temperature_C:g} C.",
+            path=after.path,
             remedy="Compare sweeps of one temperature.",
         )
     inside = (before.omega >= after.omega[0] * (1 - 1e-9)) & (
@@ -142,6 +143,7 @@ def compare_drift(
     if inside.sum() < 3:
         raise InputError(
             "The two sweeps have fewer than three frequencies in common.",
+            path=after.path,
             remedy="Measure both over the same range.",
         )
     omega = before.omega[inside]

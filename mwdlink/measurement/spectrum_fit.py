@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any, ClassVar
 
 import numpy as np
 
 from mwdlink.errors import Caution, InputError, merge_cautions
+from mwdlink.measurement.checks import Checks
 from mwdlink.measurement.consistency import KramersKronig, kramers_kronig
 from mwdlink.measurement.continuous import Continuous, fit_continuous
 from mwdlink.measurement.dense import at_all_readings, averaged
@@ -48,6 +49,8 @@ class SpectrumFit(Result):
     terminal_reached : bool
         Whether the window reaches terminal flow as far as eta0 needs it.
     warnings : tuple of Caution
+    checks : Checks or None
+        Slips, outliers and drift, where they were looked for (`with_checks`).
     """
 
     command: ClassVar[str] = "spectrum"
@@ -62,6 +65,13 @@ class SpectrumFit(Result):
     bands: dict[str, Uncertain] = field(default_factory=dict)
     terminal_reached: bool = False
     warnings: tuple[Caution, ...] = ()
+    checks: Checks | None = None
+
+    def with_checks(self, checks: Checks) -> SpectrumFit:
+        """The same fit with what the checks of its sweep found; no number changes."""
+        # the check names the same readings with more detail
+        own = [c for c in self.warnings if c.code != "outliers" or c in self.sweep.warnings]
+        return replace(self, checks=checks, warnings=merge_cautions(own, checks.warnings))
 
     @property
     def spectrum(self) -> Spectrum:
@@ -92,7 +102,10 @@ class SpectrumFit(Result):
                 "crossover": {k: b[k] for k in crossing} if has else None,
             },
             "supported": {"tau_low_s": self.supported[0], "tau_high_s": self.supported[1]},
-            "consistency": {"kramers_kronig": self.kramers_kronig.to_dict()},
+            "consistency": {
+                "kramers_kronig": self.kramers_kronig.to_dict(),
+                **({} if self.checks is None else self.checks.payload()),
+            },
             "noise": self._noise(),
             "fit": {
                 "modes": int(self.discrete.tau.size),
@@ -149,6 +162,7 @@ class SpectrumFit(Result):
             "continuous.csv": continuous,
             "fit.csv": pd.DataFrame(fit),
             "smoothing.csv": self.smoothing_table(),
+            **({} if self.checks is None else self.checks.tables()),
         }
 
     def smoothing_table(self) -> Any:
@@ -188,7 +202,7 @@ class SpectrumFit(Result):
             f" {w.estimate.text()}" if w.estimate is not None
             else f" Relative errors of {100 * w.typical:.1f} % were used ({w.source})."
         )  # fmt: skip
-        return text
+        return text if self.checks is None else f"{text} {self.checks.text()}".strip()
 
     def cannot_say(self) -> tuple[str, ...]:
         low, high = self.supported
