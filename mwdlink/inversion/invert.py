@@ -29,6 +29,7 @@ from mwdlink.inversion.objective import Problem, sweep_problem
 from mwdlink.inversion.other_inputs import curve_cautions, curve_maker
 from mwdlink.inversion.smoothing import scan
 from mwdlink.inversion.window import Window
+from mwdlink.measurement.checks import slips
 from mwdlink.measurement.noise import chi2_in_words, noise_of
 from mwdlink.measurement.sweep import FlowCurve, RelaxationCurve, Sweep
 from mwdlink.relaxation.kernels import KERNEL_NAMES, available_kernels, get_kernel
@@ -121,7 +122,9 @@ def invert(
             get_kernel(k, melt)
     prior, fixed = exponent_prior(exponent, melt)
     make, points, weights = _problem_maker(sweep, noise)
-    if not isinstance(sweep, Sweep):
+    if isinstance(sweep, Sweep):
+        notes += slips(sweep, noise=noise, plateau_modulus=melt.plateau_modulus)
+    else:
         notes += curve_cautions(sweep)
     tasks = [(make, melt, rouse, k, prior, smoothing, method, choose) for k in names]
     mapper: Callable[..., Any] = map if executor is None else executor.map
