@@ -193,10 +193,8 @@ def find_fractions(
             if share > 0.02:
                 reason += f" Within the prediction's band {100 * share:.0f} % of members reach it."
         return TargetFound(target, component, (), (), (low, high), reason)
-    if member_values is None:
-        sets: list[list[float]] = [[] for _ in centres]
-    else:
-        sets = [[] for _ in centres]
+    sets: list[list[float]] = [[] for _ in centres]
+    if member_values is not None:
         for v in member_values:
             left = roots_along(member_phi, v, wanted)
             for k in np.argsort([min((abs(c - r) for r in left), default=9.0) for c in centres]):
@@ -204,10 +202,17 @@ def find_fractions(
                     break
                 j = int(np.argmin([abs(centres[k] - r) for r in left]))
                 sets[k].append(left.pop(j))
+    met = [len(s) for s in sets]
+    if member_values is not None and len(centres) == 1:
+        # a member that cannot reach the target points beyond an end: the interval reaches it
+        for v in member_values:
+            if not roots_along(member_phi, v, wanted) and np.all(np.isfinite(v[[0, -1]])):
+                nearer = np.argmin(np.abs(np.log(np.maximum(v[[0, -1]], 1e-300) / wanted)))
+                sets[0].append(float(member_phi[[0, -1]][nearer]))
     out, shares = [], []
-    for c, s in zip(centres, sets, strict=True):
+    for c, s, count in zip(centres, sets, met, strict=True):
         out.append(Uncertain.from_samples(s, c, level=LEVEL) if s else Uncertain(c, level=LEVEL))
-        shares.append(len(s) / len(member_values) if member_values is not None else 1.0)
+        shares.append(count / len(member_values) if member_values is not None else 1.0)
     if len(centres) > 1:
         listed = ", ".join(f"{100 * c:.3g} %" for c in centres)
         reason = (
@@ -219,7 +224,7 @@ def find_fractions(
     weak = [s for s in shares if s < 0.95]
     if member_values is not None and weak:
         reason += (
-            f" Only {100 * min(weak):.0f} % of the ensemble's members meet it at all: for the "
-            "others it lies out of reach, and the interval holds for those that do."
+            f" Only {100 * min(weak):.0f} % of the ensemble's members meet it at all; for the "
+            "others it lies out of reach."
         )
     return TargetFound(target, component, tuple(out), tuple(shares), (low, high), reason)

@@ -339,6 +339,17 @@ def test_several_fractions_for_one_value():
     assert roots_along(phi, phi + 1, 1.0) == [0.0] and roots_along(phi, phi + 1, 2.0) == [1.0]
 
 
+def test_members_that_cannot_reach_the_target_widen_its_interval_to_the_end():
+    """Compared with members of which half would need less than nothing of A (made up)."""
+    phi = np.linspace(0, 1, 101)
+    falling = 10.0 ** (2 - phi)
+    members = np.stack([falling * f for f in (0.5, 0.6, 0.9, 1.05, 1.1, 1.2)])
+    t = find_fractions(parse_target("eta0_Pa_s=95"), "A", phi, falling, phi, members, ["B"])
+    f = t.fractions[0]
+    assert f.low == 0.0 and f.value == pytest.approx(np.log10(100 / 95), abs=1e-3)
+    assert t.shares[0] == pytest.approx(0.5) and "Only 50 %" in t.reason
+
+
 # -- what is refused or warned of -----------------------------------------------------------------
 def test_fractions_sum_to_one_or_hundred():
     """Compared with the contract of --fractions."""
