@@ -19,7 +19,7 @@ from mwdlink.errors import Caution, InputError, merge_cautions
 from mwdlink.quantity import Uncertain, quantiles
 from mwdlink.relaxation.kernels import get_kernel
 
-STRAINED, INCONSISTENT = 2.0, 3.0
+STRAINED, INCONSISTENT = 2.0, 3.25
 # others that leave a factor of more than 2.5 open (90 %) do not determine a claim
 OPEN = float(np.log(2.5) / (2 * 1.645))
 # two claims are told apart when leaving out the one leaves this much less misfit than the other
