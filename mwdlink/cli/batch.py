@@ -106,7 +106,7 @@ def command(
     as_json: bool,
     replace: bool,
     quiet: bool,
-) -> int:
+) -> None:
     """Invert many INPUTS into one table, with a folder for each.
 
     \b
@@ -178,7 +178,8 @@ def command(
         note(caution.text, output)
     if out is not None:
         note(f"written to {out}", output, kind="done")
-    return PART_FAILED if result.failed else 0
+    if result.failed:
+        click.get_current_context().exit(PART_FAILED)
 
 
 def _labels(pairs: tuple[str, ...]) -> dict[str, str]:
@@ -233,12 +234,15 @@ class _Progress:
             self.open = False
 
     def broken_off(self, out: Path | None) -> None:
-        if self.done and not self.quiet and self.done < self.total and out is not None:
-            click.echo(
-                f"{self.done} of {self.total} inputs were dealt with; the same command goes on "
-                "from there.",
-                err=True,
-            )
+        from mwdlink.runs.batch import partial_of
+
+        if self.quiet or out is None or not partial_of(out).is_dir():
+            return
+        click.echo(
+            f"{self.done} of {self.total or 'the'} inputs were dealt with. What is finished is "
+            f"kept in {partial_of(out)}; the same command goes on from there.",
+            err=True,
+        )
 
 
 def in_words(seconds: float) -> str:

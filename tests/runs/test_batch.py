@@ -12,9 +12,9 @@ from pathlib import Path
 import pandas as pd
 import pytest
 from lots_made import QUICK, contents, sweep_table, write_lots
+from melts import mean_within
 
 import mwdlink
-from melts import mean_within
 from mwdlink.chains.families import lognormal
 from mwdlink.errors import InputError, MwdlinkError
 from mwdlink.files.results import csv_text

@@ -53,7 +53,19 @@ def test_results_are_no_inputs(tmp_path: Path) -> None:
 
 @pytest.mark.parametrize(
     "name",
-    ["=cmd|'x'!A1", "-dash", "a b", "new\nline", "<b>&", "../up", "CON", "x" * 200, "é", "..", "=1"],
+    [
+        "=cmd|'x'!A1",
+        "-dash",
+        "a b",
+        "new\nline",
+        "<b>&",
+        "../up",
+        "CON",
+        "x" * 200,
+        "é",
+        "..",
+        "=1",
+    ],
 )
 def test_folder_names_are_safe(name: str) -> None:
     """Names that a shell, a spreadsheet or another system would trip over become plain ones."""
