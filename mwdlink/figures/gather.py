@@ -238,6 +238,7 @@ def _invert(shelf: _Shelf) -> None:
 def _spectrum_command(shelf: _Shelf) -> None:
     _spectrum(shelf)
     _fit(shelf)
+    _drift(shelf)
 
 
 def _master(shelf: _Shelf) -> None:
