@@ -58,7 +58,8 @@ def test_part_failed(lots: Path, tmp_path: Path) -> None:
     bad.touch()
     out = tmp_path / "out"
     asked = ["batch", str(lots / "lot 1.csv"), str(bad), *QUICK, "--out", str(out)]
-    done = CliRunner().invoke(main, [*asked, "--json", "--label", "plant=made-up"])
+    asked += ["--label", "plant=made-up"]
+    done = CliRunner().invoke(main, [*asked, "--json"])
     record = json.loads(done.stdout)
     assert (record["schema"], record["done"]) == ("mwdlink/batch/1", 1)
     assert record["failed"][0]["path"] == str(bad) and "empty" in record["failed"][0]["reason"]
