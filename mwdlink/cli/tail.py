@@ -49,7 +49,9 @@ def _shared_out(reading: dict[str, Any]) -> tuple[dict[str, Any], dict[str, Any]
     given = reading.get("columns") or {}
     masses = {k: v for k, v in given.items() if k in ROLES and ROLES[k].kind in _OF_GPC}
     others = {k: v for k, v in given.items() if k not in masses}
-    return reading | {"columns": masses or None, "omit": set()}, reading | {"columns": others or None}
+    return reading | {"columns": masses or None, "omit": set()}, reading | {
+        "columns": others or None
+    }
 
 
 # kinds of quantity that only a distribution's table holds

@@ -97,7 +97,9 @@ def expect(
             push = rng.standard_normal((draws // 2, d))
             push = np.concatenate([push, -push])
             # z = mean + L^-T push, L L' the Hessian
-            moved = np.linalg.solve(np.swapaxes(chol, 1, 2), np.broadcast_to(push.T, (len(masks), d, len(push))))
+            moved = np.linalg.solve(
+                np.swapaxes(chol, 1, 2), np.broadcast_to(push.T, (len(masks), d, len(push)))
+            )
             drawn = z[:, None, :] + np.swapaxes(moved, 1, 2)
             y = model.predict(drawn.reshape(-1, d), family).reshape(len(masks), len(push), -1)
             for i, mask in enumerate(masks):

@@ -239,7 +239,10 @@ class SheetModel:
         if c.calibration != "equivalent":
             return np.zeros(card.shape[0])
         k, a = self.polymer.get("mark_houwink.K_dL_per_g"), self.polymer.get("mark_houwink.a")
-        if k is None or str(self.polymer.get("mark_houwink.solvent", "")).upper() != STANDARD_SOLVENT:
+        if (
+            k is None
+            or str(self.polymer.get("mark_houwink.solvent", "")).upper() != STANDARD_SOLVENT
+        ):
             return np.log(BLIND_FACTOR) + BLIND_SPREAD * card[:, EQUIVALENT]
         own = np.log(max(c.value, 1.0) / BLIND_FACTOR)
         standard = ((1 + a) * own + np.log(k / STANDARD_K)) / (1 + STANDARD_A)

@@ -24,7 +24,7 @@ FITS = 1.5
 SLIPS = (1e-3, 1e-2, 0.1, 10.0, 100.0, 1e3)
 # solid over melt density of polyolefins, about (common practice)
 SOLID_OVER_MELT = 1.25
-# linear polyethylenes of dispersity 2 to 4 lie within about 0.15 of the line [derived from the card]
+# linear polyethylenes of dispersity 2 to 4 lie within about 0.2 of the line (derived)
 BRANCHED_INDEX = 0.2
 
 
@@ -37,14 +37,19 @@ def shadows(claims: Sequence[Claim], card: Polymer) -> tuple[Claim, ...]:
                 if abs(load - float(c.load_kg or 0)) > 0.01:
                     out.append(replace(c, quantity=f"{c.quantity}|load {load:g} kg", load_kg=load))
             out.append(replace(c, quantity=f"{c.quantity}|volume", volume=not c.volume))
-        if c.kind in ("melt flow", "eta0", "viscosity", "crossover omega") and card.shift is not None:
+        if (
+            c.kind in ("melt flow", "eta0", "viscosity", "crossover omega")
+            and card.shift is not None
+        ):
             low, high = card.shift.reach_C
             for T in TEMPERATURES:
                 if low - 30 <= T <= high + 30 and abs(T - float(c.temperature_C or T)) > 1.0:
                     out.append(replace(c, quantity=f"{c.quantity}|at {T:g} C", temperature_C=T))
         if c.kind in ("Mn", "Mw", "Mz"):
             if c.calibration != "equivalent":
-                out.append(replace(c, quantity=f"{c.quantity}|equivalent", calibration="equivalent"))
+                out.append(
+                    replace(c, quantity=f"{c.quantity}|equivalent", calibration="equivalent")
+                )
             for other in ("Mn", "Mw", "Mz"):
                 if other != c.kind:
                     out.append(replace(c, quantity=f"{c.quantity}|{other}", kind=other))
@@ -187,9 +192,7 @@ def _said(what: str, claim: Claim) -> str:
     return f"if it were the {words[what]} average"
 
 
-def _by_nature(
-    claim: Claim, one: Judged, judged: Sequence[Judged], card: Polymer
-) -> list[str]:
+def _by_nature(claim: Claim, one: Judged, judged: Sequence[Judged], card: Polymer) -> list[str]:
     """Causes in the material that would push this number this way."""
     high = (one.z or 0) > 0
     if claim.kind in ("eta0", "viscosity") and high:

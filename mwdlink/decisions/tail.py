@@ -14,9 +14,9 @@ from mwdlink.chains.polymer import Polymer, builtin
 from mwdlink.decisions import tail_words
 from mwdlink.decisions.gpc_scale import on_own_scale
 from mwdlink.decisions.tail_result import Tail
+from mwdlink.decisions.tail_tables import budget, distribution_table, fit_table, gpc_table
 from mwdlink.errors import Caution, InputError, NotConverged, merge_cautions
 from mwdlink.inversion import joint
-from mwdlink.inversion.budget import variance_shares
 from mwdlink.inversion.invert import exponent_prior
 from mwdlink.inversion.joint_ensemble import Joint, infer, settle, weight_beyond
 from mwdlink.inversion.joint_explain import weigh
@@ -24,14 +24,14 @@ from mwdlink.inversion.joint_limit import detection_limit
 from mwdlink.inversion.window import SUPPORT
 from mwdlink.measurement.noise import chi2_in_words, noise_of
 from mwdlink.measurement.sweep import Sweep
-from mwdlink.quantity import Uncertain, quantiles
+from mwdlink.quantity import Uncertain
 from mwdlink.relaxation.kernels import KERNEL_NAMES, available_kernels, get_kernel
 from mwdlink.relaxation.mixing import Model, relaxation_times
 
 # a nuisance unknown this many prior standard deviations out strains the model
 STRAINED = 2.5
-# weight fraction that kernel, mixing rule and continuation are worth at best, one standard deviation
-# (assumed): a hundredth of a per cent is not told from nothing
+# weight fraction that kernel, mixing rule and continuation are worth at best, one standard
+# deviation (assumed): a hundredth of a per cent is not told from nothing
 WORTH = 2e-4
 # this much of a moment beyond the window makes the average a bound
 BOUND = 0.1
@@ -178,7 +178,11 @@ def _kernels(asked: Sequence[str] | None, melt: Any) -> tuple[str, ...]:
 
 
 def _uncertain(
-    samples: np.ndarray, level: float, status: str = "resolved", single: float | None = None, **more: Any
+    samples: np.ndarray,
+    level: float,
+    status: str = "resolved",
+    single: float | None = None,
+    **more: Any,
 ) -> Uncertain:
     if samples.size < 5:
         return Uncertain(single, None, None, level, status)
@@ -221,20 +225,20 @@ def _assemble(
     part = weight_beyond(x, w, beyond)
     more = part - weight_beyond(x, alone, beyond)
     status = "resolved" if beyond <= reach else "assumed"
-    budget = _budget(found, part, nuisance)
-    fraction = _widened(_uncertain(part, level, status, float(part[0]), budget=budget), 0.0)
+    shares = budget(found, part, nuisance)
+    fraction = _widened(_uncertain(part, level, status, float(part[0]), budget=shares), 0.0)
     excess = _widened(
-        _uncertain(more, level, status, float(more[0]), budget=_budget(found, more, nuisance))
+        _uncertain(more, level, status, float(more[0]), budget=budget(found, more, nuisance))
     )
     limit = detection_limit(leader.smooth.problem, leader.smooth.best, beyond)
 
     # -- what went with it ----------------------------------------------------------------------
-    factors = {
-        "time": _uncertain(np.exp(nuisance[:, joint.TIME]), level, single=float(np.exp(nuisance[0, joint.TIME]))),
-        "gpc": _uncertain(np.exp(nuisance[:, joint.CALIBRATION]), level, single=float(np.exp(nuisance[0, joint.CALIBRATION]))),
-        "modulus": _uncertain(np.exp(nuisance[:, joint.MODULUS]), level, single=float(np.exp(nuisance[0, joint.MODULUS]))),
-        "exponent": _uncertain(nuisance[:, joint.EXPONENT], level, single=float(nuisance[0, joint.EXPONENT])),
-    }  # fmt: skip
+    def factor(index: int) -> Uncertain:
+        values = np.exp(nuisance[:, index])
+        return _uncertain(values, level, single=float(values[0]))
+
+    exponents = nuisance[:, joint.EXPONENT]
+    exponent = _uncertain(exponents, level, single=float(exponents[0]))
     explanations = weigh(leader)
     averages = _averages(x, w, gpc, reach, window[1], level)
     needed = _frequency_for(2.0 * beyond, found)
@@ -251,10 +255,10 @@ def _assemble(
         fraction=fraction,
         excess=excess,
         detection_limit=limit,
-        time_law_factor=factors["time"],
-        exponent=factors["exponent"],
-        gpc_factor=factors["gpc"],
-        modulus_factor=factors["modulus"],
+        time_law_factor=factor(joint.TIME),
+        exponent=exponent,
+        gpc_factor=factor(joint.CALIBRATION),
+        modulus_factor=factor(joint.MODULUS),
         explanations=explanations,
         averages=averages,
         advice=tail_words.advice(
@@ -262,7 +266,9 @@ def _assemble(
         ),
         window=window,
         gpc_range=(setting.gpc.low, setting.gpc.high),
-        kernels=tuple(_kernel_row(found, i, beyond, part, level) for i in range(len(found.kernels))),
+        kernels=tuple(
+            _kernel_row(found, i, beyond, part, level) for i in range(len(found.kernels))
+        ),
         fit={
             "chi2_per_point": best.chi2_sweep / leader.free.problem.data.size,
             "points": int(leader.free.problem.data.size),
@@ -276,45 +282,14 @@ def _assemble(
         },
         model={
             "kernels": [k.kernel for k in found.kernels if k.share > 0],
-            "exponent": factors["exponent"],
+            "exponent": exponent,
             "rouse": rouse,
         },
-        distribution_table=_distribution_table(x, nodes, w, alone, best.w, level),
-        gpc_table=_gpc_table(gpc, setting.gpc.low, setting.gpc.high),
-        fit_table=_fit_table(found, sweep),
+        distribution_table=distribution_table(x, nodes, w, alone, best.w, level),
+        gpc_table=gpc_table(gpc, setting.gpc.low, setting.gpc.high),
+        fit_table=fit_table(found, sweep),
         warnings=cautions,
     )
-
-
-def _budget(found: Joint, value: np.ndarray, nuisance: np.ndarray) -> dict[str, float]:
-    if value.size < 20:
-        return {}
-    shares = variance_shares(
-        value - value.min() + 1e-9 if np.any(value <= 0) else value,
-        found.kernel,
-        nuisance[:, joint.EXPONENT],
-        nuisance[:, joint.TIME],
-        np.rint(np.log10(found.smoothing) * 10).astype(int) + 100 * found.tail_free + 500,
-        np.zeros(value.size, dtype=int),
-    )
-    if not shares:
-        return {}
-    # the GPC's factor and baseline, and the level of the moduli, out of what was left as noise
-    causes = nuisance[:, [joint.CALIBRATION, joint.BASELINE, joint.MODULUS]]
-    causes = causes - causes.mean(axis=0)
-    y = value - value.mean()
-    held = causes.std(axis=0) > 1e-9
-    explained = np.zeros(3)
-    for i in np.flatnonzero(held):
-        c = causes[:, i]
-        explained[i] = float(c @ y) ** 2 / float(c @ c) / max(float(y @ y), 1e-300)
-    explained = np.clip(explained - 1.0 / value.size, 0.0, None)
-    left = shares.get("noise", 0.0)
-    scale = min(1.0, left / max(explained.sum(), 1e-12))
-    shares["gpc"] = float((explained[0] + explained[1]) * scale)
-    shares["card"] = shares.get("card", 0.0) + float(explained[2] * scale)
-    shares["noise"] = max(left - float(explained.sum() * scale), 0.0)
-    return shares
 
 
 def _averages(
@@ -339,7 +314,9 @@ def _averages(
             number, level, "upper_bound" if cut else "resolved", float(number[0])
         ),
         "Mw_g_per_mol": _uncertain(first, level, status(share_w), float(first[0])),
-        "Mz_g_per_mol": _uncertain(second / first, level, status(share_z), float((second / first)[0])),
+        "Mz_g_per_mol": _uncertain(
+            second / first, level, status(share_z), float((second / first)[0])
+        ),
         "dispersity": _uncertain(
             first / number, level, status(share_w), float((first / number)[0])
         ),
@@ -444,54 +421,3 @@ def _cautions(
         )
     )
     return out
-
-
-def _distribution_table(
-    x: np.ndarray,
-    nodes: np.ndarray,
-    w: np.ndarray,
-    alone: np.ndarray,
-    centre: np.ndarray,
-    level: float,
-) -> dict[str, np.ndarray]:
-    h = float(x[1] - x[0])
-    density = w[:, :-1] / h
-    if w.shape[0] >= 5:
-        q = [(1 - level) / 2, 0.5, (1 + level) / 2]
-        low, middle, high = (np.array(v) for v in zip(*[quantiles(d, q) for d in density.T], strict=True))
-    else:
-        middle = centre[:-1] / h
-        low = high = np.full(middle.size, np.nan)
-    return {
-        "M [g/mol]": nodes,
-        "dW/dlog10M": middle,
-        "dW/dlog10M low": low,
-        "dW/dlog10M high": high,
-        "GPC continuation dW/dlog10M": np.median(alone, axis=0) / h,
-    }
-
-
-def _gpc_table(gpc: Distribution, low: float, high: float) -> dict[str, np.ndarray]:
-    held = (gpc.molar_mass >= low * (1 - 1e-9)) & (gpc.molar_mass <= high * (1 + 1e-9))
-    return {"M [g/mol]": gpc.molar_mass[held], "dW/dlog10M": gpc.density[held]}
-
-
-def _fit_table(found: Joint, sweep: Sweep) -> dict[str, np.ndarray]:
-    n = len(sweep)
-    leader = found.kernels[0]
-    columns: dict[str, np.ndarray] = {
-        "omega [rad/s]": sweep.omega,
-        "G' [Pa]": sweep.storage,
-        "G'' [Pa]": sweep.loss,
-    }
-    curves = {}
-    for name, scan in (("model", leader.best), ("without tail", leader.smooth.best)):
-        problem = leader.free.problem
-        p = scan.nuisance
-        log_y = problem.response.log_moduli(scan.w, p[joint.TIME], p[joint.EXPONENT])[0]
-        curves[name] = np.exp(log_y + p[joint.MODULUS])
-        columns[f"G' {name} [Pa]"] = curves[name][:n]
-        columns[f"G'' {name} [Pa]"] = curves[name][n:]
-    columns["G' residual [-]"] = np.log(sweep.storage / curves["model"][:n])
-    columns["G'' residual [-]"] = np.log(sweep.loss / curves["model"][n:])
-    return columns

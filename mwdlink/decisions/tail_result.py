@@ -134,15 +134,13 @@ class Tail(Result):
         second = others[0] if others else None
         text = (
             f"{self.answer()} GPC (used from {tail_words.mass(self.gpc_range[0])} to "
-            f"{tail_words.mass(self.gpc_range[1])}) and sweep were fitted as one distribution, with "
-            "the time law, the mixing exponent and the GPC's molar-mass factor left to adjust "
+            f"{tail_words.mass(self.gpc_range[1])}) and sweep were fitted as one distribution, "
+            "with the time law, the mixing exponent and the GPC's molar-mass factor left to adjust "
             f"within their priors. Best supported is {tail_words.EXPLAINED[best.name]} "
             f"({100 * best.support:.0f} % of the evidence)"
         )
         if second is not None and second.support >= 0.01:
-            text += (
-                f", then {tail_words.EXPLAINED[second.name]} ({100 * second.support:.0f} %)"
-            )
+            text += f", then {tail_words.EXPLAINED[second.name]} ({100 * second.support:.0f} %)"
         return text + ". All of it supposes linear chains."
 
     def cannot_say(self) -> tuple[str, ...]:

@@ -90,7 +90,9 @@ class _Reader:
         self.known(mapping, _TOP, "the sheet")
         claims = mapping.get("claims")
         if not isinstance(claims, Mapping) or not claims:
-            raise self.error("there is no [claims] section.", None, "Put the claims under [claims].")
+            raise self.error(
+                "there is no [claims] section.", None, "Put the claims under [claims]."
+            )
         self.known(claims, (*_SINGLE, *_OTHERS), "[claims]")
         out: list[Claim] = []
         for key, (kind, value_key, more, low, high) in _SINGLE.items():
@@ -147,7 +149,9 @@ class _Reader:
         if "loads_kg" in more:
             loads = entry.get("loads_kg", [21.6, 2.16])
             if not (isinstance(loads, list) and len(loads) == 2 and all(map(_is_number, loads))):
-                raise self.error("loads_kg must be two loads.", key, "Write loads_kg = [21.6, 2.16].")
+                raise self.error(
+                    "loads_kg must be two loads.", key, "Write loads_kg = [21.6, 2.16]."
+                )
             first, second = sorted((float(v) for v in loads), reverse=True)
             if not first > second > 0:
                 raise self.error("loads_kg must be two different positive loads.", key)
@@ -207,9 +211,7 @@ class _Reader:
             if key in entry:
                 tolerance, said = self.tolerance(entry, "crossover", kind)
                 value = self.number(entry, key, "crossover", low, high)
-                out.append(
-                    Claim(f"crossover_{key}", kind, value, tolerance, said, temperature_C=T)
-                )
+                out.append(Claim(f"crossover_{key}", kind, value, tolerance, said, temperature_C=T))
         if not out:
             raise self.error("crossover needs omega_rad_per_s or G_Pa.", "crossover")
         return out
@@ -258,11 +260,19 @@ class _Reader:
                 near = difflib.get_close_matches(key, known, n=1, cutoff=0.5)
                 hint = f"Did you mean {near[0]!r}? " if near else ""
                 raise self.error(
-                    f"there is no key {key!r} in {where}.", key, f"{hint}Known are {', '.join(known)}."
+                    f"there is no key {key!r} in {where}.",
+                    key,
+                    f"{hint}Known are {', '.join(known)}.",
                 )
 
     def number(
-        self, entry: Mapping[str, Any], key: str, where: str, low: float, high: float, hint: str = ""
+        self,
+        entry: Mapping[str, Any],
+        key: str,
+        where: str,
+        low: float,
+        high: float,
+        hint: str = "",
     ) -> float:
         value = entry.get(key)
         if value is None:
@@ -327,6 +337,4 @@ class _Reader:
 
 
 def _is_number(value: Any) -> bool:
-    return (
-        isinstance(value, (int, float)) and not isinstance(value, bool) and math.isfinite(value)
-    )
+    return isinstance(value, (int, float)) and not isinstance(value, bool) and math.isfinite(value)

@@ -1,4 +1,4 @@
-"""What the GPC measured: rows of its curve within the range it may be trusted in, and its errors."""
+"""What the GPC measured: rows of its curve where it may be trusted, and their errors."""
 
 from __future__ import annotations
 

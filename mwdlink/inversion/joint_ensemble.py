@@ -76,7 +76,9 @@ class Setting:
     @property
     def exponents(self) -> np.ndarray:
         """Exponents the tables are made at."""
-        centre, spread = (float(a[joint.EXPONENT]) for a in (self.priors.centre, self.priors.spread))
+        centre, spread = (
+            float(a[joint.EXPONENT]) for a in (self.priors.centre, self.priors.spread)
+        )
         if spread <= joint.PINNED:
             return np.array([centre])
         return np.maximum(centre + spread * np.linspace(-2.5, 2.5, 5), 1.0 + 0.05 * np.arange(5))

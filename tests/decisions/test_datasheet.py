@@ -173,7 +173,9 @@ def test_unit_slip_is_recognised() -> None:
 def test_polystyrene_equivalent_is_recognised() -> None:
     """A weight average on the polystyrene scale is about twice the true one (recalled)."""
     sheet = _sheet(Mw_g_per_mol=2.2)
-    claims = [replace(c, calibration="unstated") for c in sheet.claims if c.kind not in ("Mn", "Mz")]
+    claims = [
+        replace(c, calibration="unstated") for c in sheet.claims if c.kind not in ("Mn", "Mz")
+    ]
     r = check_datasheet(replace(sheet, claims=tuple(claims)))
     assert r.odd_one_out == "Mw_g_per_mol"
     assert "relative to polystyrene" in r.paragraph()
