@@ -116,14 +116,15 @@ def where_time_goes(lots: Path, members: int) -> dict[str, float]:
             (Path(top) / one.MARK).touch()
             from mwdlink.runs.lots import find_lots
 
-            for index, lot in enumerate(find_lots([lots])[0][:5]):
+            tried = find_lots([lots])[0][:5]
+            for index, lot in enumerate(tried):
                 one.run_one(job, index, lot)
             total = time.perf_counter() - began
     finally:
         for home, attribute, function in kept:
             setattr(home, attribute, function)
     shares = {k: v / total for k, v in spent.items()}
-    return shares | {"fits": 1.0 - sum(shares.values()), "seconds an input": total / 5}
+    return shares | {"fits": 1.0 - sum(shares.values()), "seconds an input": total / len(tried)}
 
 
 def main() -> None:
