@@ -30,6 +30,8 @@ from mwdlink.relaxation.mixing import Model, relaxation_times
 
 # a nuisance unknown this many prior standard deviations out strains the model
 STRAINED = 2.5
+# sum of their squares up to which nothing is stretched
+EXPECTED_STRAIN = 2.0
 # weight fraction that kernel, mixing rule and continuation are worth at best, one standard
 # deviation (assumed): a hundredth of a per cent is not told from nothing
 WORTH = 2e-4
@@ -189,13 +191,24 @@ def _uncertain(
     return Uncertain.from_samples(samples, level=level, status=status, **more)
 
 
-def _widened(u: Uncertain, least: float | None = None) -> Uncertain:
-    """The interval with what no model of this kind is better than, WORTH, added in quadrature."""
+def _stretch(found: Joint) -> float:
+    """Factor on the intervals of a pair that agrees only by stretching what was thought known.
+
+    The squares of the nuisance unknowns' distances from their priors add up to about 1 to 3 where
+    card, kernel and data belong together; a kernel that is not the melt's makes 20 and more.
+    """
+    priors = found.setting.priors
+    z = (found.best.nuisance - priors.centre) / priors.spread
+    return float(np.sqrt(max(1.0, float(z @ z) / EXPECTED_STRAIN)))
+
+
+def _widened(u: Uncertain, stretch: float, least: float | None = None) -> Uncertain:
+    """The interval stretched, with what no model of this kind is better than in quadrature."""
     if u.value is None or u.low is None or u.high is None:
         return u
     more = float(norm.ppf((1 + u.level) / 2)) * WORTH
-    low = u.value - float(np.hypot(u.value - u.low, more))
-    high = u.value + float(np.hypot(u.high - u.value, more))
+    low = u.value - float(np.hypot(stretch * (u.value - u.low), more))
+    high = u.value + float(np.hypot(stretch * (u.high - u.value), more))
     return replace(u, low=low if least is None else max(low, least), high=high)
 
 
@@ -226,10 +239,11 @@ def _assemble(
     more = part - weight_beyond(x, alone, beyond)
     status = "resolved" if beyond <= reach else "assumed"
     shares = budget(found, part, nuisance)
-    fraction = _widened(_uncertain(part, level, status, float(part[0]), budget=shares), 0.0)
-    excess = _widened(
-        _uncertain(more, level, status, float(more[0]), budget=budget(found, more, nuisance))
-    )
+    stretch = _stretch(found)
+    fraction = _uncertain(part, level, status, float(part[0]), budget=shares)
+    fraction = _widened(fraction, stretch, 0.0)
+    shares = budget(found, more, nuisance)
+    excess = _widened(_uncertain(more, level, status, float(more[0]), budget=shares), stretch)
     limit = detection_limit(leader.smooth.problem, leader.smooth.best, beyond)
 
     # -- what went with it ----------------------------------------------------------------------
@@ -390,8 +404,8 @@ def _cautions(
             Caution(
                 "priors_strained",
                 f"The pair agrees only by stretching what was thought known ({words} standard "
-                "deviations): the kernel, the card or the pairing of the samples is in doubt, and "
-                "the interval is too narrow if so. Let all kernels take part.",
+                "deviations): the kernel, the card or the pairing of the samples is in doubt. The "
+                "intervals were widened for it. Let all kernels take part.",
             )
         )
     points = leader.free.problem.data.size
