@@ -85,6 +85,9 @@ class ExecutorHands(Hands):
         """Replace an executor that broke; one that was given cannot be."""
         raise MwdlinkError("the executor given has broken down; run again to go on.")
 
+    def check(self) -> None:
+        """Raise if it is not a worker that was lost but all of them at once."""
+
     def submit(self, function: Any, *arguments: Any) -> Future[Any]:
         assert self.executor is not None
         return self.executor.submit(function, *arguments)
@@ -125,6 +128,8 @@ class ExecutorHands(Hands):
                     broken = broken or "Broken" in type(error).__name__
                 else:
                     yield from outcomes
+            if lost:
+                self.check()
             if broken:
                 lost += flying.values()
                 flying.clear()
@@ -214,7 +219,7 @@ class Cluster(ExecutorHands):
                 remedy="Check the scheduler's address, as in tcp://host:8786.",
             ) from None
         try:
-            self._check()
+            self._same_version()
             threads = sum(self.client.ncores().values())
             executor = self.client.get_executor(pure=False)
         except BaseException:
@@ -222,7 +227,11 @@ class Cluster(ExecutorHands):
             raise
         super().__init__(executor, 2 * max(threads, 1), MOST_IN_CHUNK)
 
-    def _check(self) -> None:
+    def check(self) -> None:
+        if self.client.status != "running":
+            raise MwdlinkError("the cluster's scheduler no longer answers; run again to go on.")
+
+    def _same_version(self) -> None:
         import mwdlink
 
         found = self.client.run(version_here)
