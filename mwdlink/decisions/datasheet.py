@@ -99,7 +99,8 @@ def check_datasheet(
 
 def _usable(sheet: Sheet, card: Polymer) -> tuple[tuple[Claim, ...], tuple[Caution, ...]]:
     """Claims the card can speak of, at a stated temperature."""
-    out, notes = [], []
+    out: list[Claim] = []
+    notes: list[Caution] = []
     hoops = card.get("mark_houwink.K_dL_per_g")
     shift = card.shift
     for c in sheet.claims:
