@@ -26,7 +26,7 @@ from mwdlink.inversion.objective import (
 )
 from mwdlink.inversion.other_inputs import minimise_copies
 from mwdlink.inversion.roughness import relieved
-from mwdlink.inversion.smoothing import SCAN, Scan, scan
+from mwdlink.inversion.smoothing import SCAN, Scan, mean_evidence, scan
 from mwdlink.inversion.solve import Fit
 from mwdlink.relaxation.kernels import get_kernel
 from mwdlink.relaxation.mixing import Model
@@ -39,6 +39,8 @@ REJECT = 25.0
 # by family (two-peak melts worst: smoothing also biases what it chooses); docs/accuracy.md has the
 # figures with these
 WIDEN, LEAN = 1.1, 0.6
+# a mean of the exponent that moves by less than this share of its spread is not worth another scan
+UNMOVED = 0.15
 # the fit may narrow the exponent's prior to half its spread at most
 MOST_PRECISION = 3.0
 
@@ -145,9 +147,10 @@ def fit_branch(
     problem, found = _scan(problem, None, values)
     if spread > 0:
         mean, spread = _exponent_posterior(build, kernel, problem, found, mean, prior)
-        melt, model, moved = build.problem(kernel, mean)
-        problem = replace(moved, prior=problem.prior)
-        found = scan(problem, found.fits[found.best].u, found.smoothing)
+        if mean != prior.mean:
+            melt, model, moved = build.problem(kernel, mean)
+            problem = replace(moved, prior=problem.prior)
+            found = scan(problem, found.fits[found.best].u, found.smoothing)
     return Branch(kernel, melt, model, spread, problem, found, build.plateau_factor)
 
 
@@ -223,8 +226,13 @@ def _exponent_posterior(
     values = np.unique(np.append(found.smoothing[::4], found.smoothing[found.best]))[::-1]
     totals = []
     for d in offsets:
+        if d == 0.0:
+            held = np.isin(found.smoothing, values)
+            totals.append(mean_evidence(found.log_evidence[held]))
+            continue
         other = build.problem(kernel, centre + d)[2]
-        totals.append(scan(replace(other, prior=problem.prior), u, values).total)
+        side = scan(replace(other, prior=problem.prior), u, values, tolerance=2e-2)
+        totals.append(mean_evidence(side.log_evidence))
     c2, c1, _ = np.polyfit(offsets, totals, 2)
     # the shape prior speaks in this evidence too, so it may not narrow the exponent without limit
     data = float(np.clip(-2.0 * c2, 0.0, MOST_PRECISION / prior.spread**2))
@@ -233,7 +241,10 @@ def _exponent_posterior(
     pull = 1.0 / prior.spread**2
     precision = data + pull
     shift = (data * peak + pull * (prior.mean - centre)) / precision
-    return max(centre + float(shift), 1.0), float(1.0 / np.sqrt(precision))
+    spread = float(1.0 / np.sqrt(precision))
+    if abs(shift) < UNMOVED * prior.spread:
+        return centre, spread
+    return max(centre + float(shift), 1.0), spread
 
 
 def draw_members(

@@ -51,8 +51,13 @@ class Scan:
     @property
     def total(self) -> float:
         """ln of the evidence averaged over the scan."""
-        top = self.log_evidence.max()
-        return float(top + np.log(np.mean(np.exp(self.log_evidence - top))))
+        return mean_evidence(self.log_evidence)
+
+
+def mean_evidence(log_evidence: np.ndarray) -> float:
+    """ln of the mean of evidences given by their logarithms."""
+    top = float(np.max(log_evidence))
+    return top + float(np.log(np.mean(np.exp(log_evidence - top))))
 
 
 def start(problem: Problem, centre: float | None = None, dispersity: float = 3.0) -> np.ndarray:
