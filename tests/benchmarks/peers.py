@@ -218,7 +218,9 @@ def softmax_rows(u: np.ndarray) -> np.ndarray:
     return e / e.sum(axis=1, keepdims=True)
 
 
-def general_solver(case: Case, problem: Problem, analytic: bool) -> tuple[Answer, Mode]:
+def general_solver(
+    case: Case, problem: Problem, analytic: bool, solved: int = SOLVED
+) -> tuple[Answer, Mode]:
     """`least_squares` and the Laplace intervals of its end."""
     mode = general_mode(problem, analytic)
     began = time.process_time()
@@ -228,11 +230,12 @@ def general_solver(case: Case, problem: Problem, analytic: bool) -> tuple[Answer
     w0 = weights(mode.u)
     began = time.process_time()
     rng = np.random.default_rng(4)
-    for _ in range(SOLVED):
+    for _ in range(solved):
         noise = rng.standard_normal(problem.data.size + mode.u.size)
         rows, slopes = residual_rows(problem, mode.smoothing, noise)
         least_squares(rows, mode.u, jac=slopes if analytic else "2-point")
-    refits = mode.seconds + (time.process_time() - began) * DRAWS / SOLVED
+    refits = mode.seconds if solved else np.nan
+    refits += (time.process_time() - began) * DRAWS / max(solved, 1)
     answer = Answer(
         mode.seconds, whole, problem.chi2(w0) / problem.data.size,
         case.quantities(w0[None])[0], low, high, mode.objective,
@@ -395,11 +398,11 @@ NAMES = {
 }
 
 
-def compare(case: Case, steps: int = STEPS) -> dict[str, Answer]:
+def compare(case: Case, steps: int = STEPS, solved: int = SOLVED) -> dict[str, Answer]:
     """All sides on one melt."""
     ours, problem = tool(case)
-    numeric, _ = general_solver(case, problem, False)
-    analytic, mode = general_solver(case, problem, True)
+    numeric, _ = general_solver(case, problem, False, solved)
+    analytic, mode = general_solver(case, problem, True, solved)
     return {
         "tool": ours,
         "numeric": numeric,
