@@ -2,7 +2,7 @@
 
     python tests/benchmarks/peers.py [MELTS] [FAMILIES]
 
-MELTS seeded melts a family (default 12; families two-peak,tail), power-law kernel of both data and
+MELTS seeded melts a family (default 8; families two-peak,tail), power-law kernel of both data and
 fit, exponent 2, 3 % noise, six decades at five points a decade. Prints Markdown. All sides get the
 same forward map on the same nodes, so only what is done with it is compared:
 
@@ -438,7 +438,7 @@ def times_table(runs: Sequence[Run]) -> str:
     text += "|---|---|---|---|\n"
     for name, label in NAMES.items():
         fit, whole, same = (ratio(runs, name, k) for k in ("fit", "whole", "same"))
-        last = "1" if name == "tool" else "" if np.isnan(same) else f"{same:.2g}"
+        last = "1" if name == "tool" else "" if np.isnan(same) else f"{float(f'{same:.2g}'):g}"
         text += f"| {label} | {fit:.2g} | {whole:.2g} | {last} |\n"
     ours = [a["tool"] for _, _, a in runs]
     walks = [a["metropolis"].notes for _, _, a in runs]
@@ -500,7 +500,7 @@ def study(families: Sequence[str], melts: Sequence[int]) -> list[Run]:
 
 
 def main() -> None:
-    melts = int(sys.argv[1]) if len(sys.argv) > 1 else 12
+    melts = int(sys.argv[1]) if len(sys.argv) > 1 else 8
     chosen = sys.argv[2].split(",") if len(sys.argv) > 2 else ["two-peak", "tail"]
     began = time.process_time()
     runs = study(chosen, range(melts))
