@@ -181,11 +181,15 @@ def plot_property(
                 zorder=4,
                 linestyle="none",
             )
+            # near the right edge the label stands on the other side of its mark, off the curve
+            inside = at < 0.85
+            above = not rising if inside else rising
             ax.annotate(
                 f"{short(100 * at)} %",
                 (100 * at, wanted),
-                xytext=(5, -6 if rising else 5),
-                va="top" if rising else "bottom",
+                xytext=(5 if inside else -5, 5 if above else -6),
+                ha="left" if inside else "right",
+                va="bottom" if above else "top",
                 textcoords="offset points",
                 fontsize=8.0,
             )
