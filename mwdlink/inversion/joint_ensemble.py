@@ -8,10 +8,11 @@ import numpy as np
 
 from mwdlink.chains.distribution import Distribution
 from mwdlink.chains.melt import Melt
-from mwdlink.inversion import joint
-from mwdlink.inversion.joint import JointFit, JointProblem, JointScan, Priors
+from mwdlink.inversion import joint, joint_fit
+from mwdlink.inversion.joint import JointProblem, Priors
 from mwdlink.inversion.joint_alone import AloneFit, fit_alone, smooth_curve
 from mwdlink.inversion.joint_data import GpcRows, gpc_rows, supported_range
+from mwdlink.inversion.joint_fit import JointFit, JointScan
 from mwdlink.inversion.joint_response import sweep_response
 from mwdlink.inversion.window import Window, find_window
 from mwdlink.relaxation.mixing import Model, relaxation_times
@@ -245,10 +246,10 @@ def infer(setting: Setting, kernels: tuple[str, ...], members: int, seed: int) -
     rival = np.inf
     for kernel in kernels:
         problem, window = setting.problem(kernel)
-        free = joint.scan(problem, joint.start(problem, alone.u), SMOOTHING, rival)
+        free = joint_fit.scan(problem, joint_fit.start(problem, alone.u), SMOOTHING, rival)
         rival = min(rival, free.best.objective)
         stiff = problem.with_priors(replace(problem.priors, tail_free=False))
-        smooth = joint.scan(stiff, joint.start(stiff, alone.u), SMOOTHING, rival)
+        smooth = joint_fit.scan(stiff, joint_fit.start(stiff, alone.u), SMOOTHING, rival)
         rival = min(rival, smooth.best.objective)
         found.append(KernelScan(kernel, free, smooth, window))
     found.sort(key=lambda k: -k.total)
@@ -273,9 +274,9 @@ def _draw(
         free = bool(rng.random() < ranked[j].tail_odds)
         chosen = ranked[j].free if free else ranked[j].smooth
         k = int(rng.choice(len(chosen.fits), p=chosen.weights))
-        noise = joint.draw_noise(chosen.problem, rng)
+        noise = joint_fit.draw_noise(chosen.problem, rng)
         first = chosen.fits[k]
-        fit = joint.minimise(chosen.problem, first.z, first.smoothing, noise, tolerance=0.05)
+        fit = joint_fit.minimise(chosen.problem, first.z, first.smoothing, noise, tolerance=0.05)
         own = rng.standard_normal(alone.prior_rows)
         if fit.converged:
             fits.append(fit)

@@ -11,9 +11,10 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from mwdlink.inversion import joint
-from mwdlink.inversion.joint import Extra, JointProblem, JointScan, Priors
+from mwdlink.inversion import joint, joint_fit
+from mwdlink.inversion.joint import Extra, JointProblem, Priors
 from mwdlink.inversion.joint_ensemble import KernelScan
+from mwdlink.inversion.joint_fit import JointScan
 
 NAMES = (
     "tail",
@@ -65,20 +66,20 @@ def weigh(best: KernelScan) -> tuple[Explanation, ...]:
     free, smooth = best.free.problem, best.smooth.problem
     scans: dict[str, JointScan] = {}
     z = best.smooth.best.z
-    scans["tail"] = joint.scan(free, best.free.best.z, SMOOTHING)
+    scans["tail"] = joint_fit.scan(free, best.free.best.z, SMOOTHING)
     rival = scans["tail"].best.objective
-    scans["time law"] = joint.scan(smooth, z, SMOOTHING, rival)
+    scans["time law"] = joint_fit.scan(smooth, z, SMOOTHING, rival)
     p = smooth.priors
     for name, priors in (
         ("none", _stated(p)),
         ("gpc baseline", p.with_(joint.BASELINE, WIDE_BASELINE)),
         ("gpc calibration", p.with_(joint.CALIBRATION, WIDE_CALIBRATION)),
     ):
-        scans[name] = joint.scan(smooth.with_priors(priors), z, SMOOTHING, rival)
+        scans[name] = joint_fit.scan(smooth.with_priors(priors), z, SMOOTHING, rival)
     for name, extra in (("branching", _slow(smooth)), ("second phase", _plateau(smooth))):
         problem = smooth.with_priors(p, extra)
         start = np.concatenate([z, extra.centre])
-        scans[name] = joint.scan(problem, start, SMOOTHING, rival)
+        scans[name] = joint_fit.scan(problem, start, SMOOTHING, rival)
     totals = np.array([scans[name].total for name in NAMES])
     share = np.exp(totals - totals.max())
     share = _one_temperature(share / share.sum())

@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 
-from mwdlink.inversion.joint import JointFit, JointProblem
+from mwdlink.inversion.joint import JointProblem
+from mwdlink.inversion.joint_fit import JointFit
 
 # A part of the weight is reported as a tail when about 3.6 standard deviations speak for it (its
 # evidence must make up for the wager); nine times in ten it then takes 1.3 more

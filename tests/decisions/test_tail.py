@@ -17,7 +17,7 @@ from mwdlink.decisions.gpc_scale import STANDARD_A, STANDARD_K, on_own_scale
 from mwdlink.decisions.tail import find_tail
 from mwdlink.decisions.tail_result import Tail
 from mwdlink.errors import InputError
-from mwdlink.inversion import joint
+from mwdlink.inversion import joint, joint_fit
 from mwdlink.inversion.joint_ensemble import settle, weight_beyond
 from mwdlink.inversion.joint_explain import LEAST_BRANCHING, NAMES
 from mwdlink.measurement.sweep import Sweep
@@ -64,7 +64,7 @@ def _problem(kernel: str = "power-law") -> tuple[joint.JointProblem, np.ndarray]
     )
     problem, _ = setting.problem(kernel)
     u = -0.5 * ((setting.x - 5.0) / 0.5) ** 2
-    z = joint.start(problem, u - np.log(np.exp(u).sum()))
+    z = joint_fit.start(problem, u - np.log(np.exp(u).sum()))
     z[problem.n + 1 :] += [0.1, 0.13, 0.02, 0.01, 0.001]
     return problem, z
 
