@@ -7,16 +7,9 @@ from dataclasses import dataclass
 import numpy as np
 
 from mwdlink.chains.distribution import Distribution
+from mwdlink.chains.gpc_error import BASELINE_ERROR, RELATIVE_ERROR, SIGNAL
 from mwdlink.errors import InputError
 from mwdlink.inversion.joint_response import lagrange_rows
-
-# error of one row of the curve: a part of itself and a part of the peak (baseline), both assumed;
-# a row is a cell of the joint grid, so that a finer table brings no more certainty
-RELATIVE_ERROR = 0.03
-BASELINE_ERROR = 0.003
-# the curve supports what stands above this part of its peak
-SIGNAL = 1e-3
-
 
 @dataclass(frozen=True, eq=False)
 class GpcRows:
@@ -125,7 +118,8 @@ def gpc_rows(
     spacing : float
         Decades of the joint grid: finer tables are averaged to it, coarser ones kept.
     relative, baseline : float
-        Error of a row as a part of itself and of the peak.
+        Error of a row as a part of itself and of the peak. A row is a cell of the joint grid, so
+        that a finer table brings no more certainty.
 
     Raises
     ------

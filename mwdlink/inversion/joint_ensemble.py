@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from mwdlink.chains.distribution import Distribution
+from mwdlink.chains.gpc_error import CALIBRATION_SPREAD
 from mwdlink.chains.melt import Melt
 from mwdlink.inversion import joint, joint_fit
 from mwdlink.inversion.joint import JointProblem, Priors
@@ -23,9 +24,6 @@ SPACING = 0.065
 # exponent unless card or user says otherwise: centre and spread of the prior
 EXPONENT_PRIOR = (2.0, 0.2)
 LEAST_TIME_SPREAD = 0.1
-# spread of ln (M of the GPC/true M) by what the molar masses are (equivalent and unstated:
-# recalled; the others: assumed)
-CALIBRATION_SPREAD = {"absolute": 0.01, "universal": 0.02, "equivalent": 0.05, "unstated": 0.05}
 # level of the moduli: gap and geometry of the rheometer, and the plateau modulus of the card
 MODULUS_SPREAD = 0.03
 BASELINE_SPREAD = 0.002
