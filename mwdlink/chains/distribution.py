@@ -41,6 +41,9 @@ class Distribution:
         What the molar masses are: `absolute`, `universal`, `equivalent` (to the standards'
         polymer) or `unstated`.
     warnings : tuple of Caution
+    measured : bool
+        Whether it is a table as measured, with the errors of a GPC; families and computed curves
+        are taken as exact.
 
     Raises
     ------
@@ -60,6 +63,7 @@ class Distribution:
     label: str = ""
     calibration: str = "absolute"
     warnings: tuple[Caution, ...] = field(default=())
+    measured: bool = False
 
     def __post_init__(self) -> None:
         m = readonly(self.molar_mass)
@@ -235,7 +239,7 @@ class Distribution:
                     "Convert them before relaxation times are read from them.",
                 )
             )
-        return cls(m, mass, edges, label=label, calibration=calibration, warnings=tuple(cautions))
+        return cls(m, mass, edges, label, calibration, tuple(cautions), measured=True)
 
     @classmethod
     def from_averages(
@@ -287,12 +291,13 @@ class Distribution:
         cautions = merge_cautions(*(d.warnings for d, _ in used))
         kinds = {d.calibration for d, _ in used}
         calibration = kinds.pop() if len(kinds) == 1 else "unstated"
+        measured = any(d.measured for d, _ in used)
         if all(
             np.array_equal(d.edges, first.edges) and np.array_equal(d.molar_mass, first.molar_mass)
             for d, _ in used
         ):
             mass = np.sum([f * d.mass for d, f in used], axis=0)
-            return cls(first.molar_mass, mass, first.edges, label, calibration, cautions)
+            return cls(first.molar_mass, mass, first.edges, label, calibration, cautions, measured)
         edges = _even_edges([d for d, _ in used], points)
         count = edges.size - 1
         nodes = np.sqrt(edges[:-1] * edges[1:])
@@ -310,7 +315,7 @@ class Distribution:
         held = mass > 0
         nodes[held] *= np.exp(moved[held] / mass[held])
         nodes = np.clip(nodes, edges[:-1] * (1 + 1e-12), edges[1:] * (1 - 1e-12))
-        return cls(nodes, mass, edges, label, calibration, cautions)
+        return cls(nodes, mass, edges, label, calibration, cautions, measured)
 
     def to_frame(self) -> Any:
         """Table with `M [g/mol]` and `dW/dlog10M` at the nodes."""

@@ -11,6 +11,7 @@ from mwdlink.chains.gpc_error import BASELINE_ERROR, RELATIVE_ERROR, SIGNAL
 from mwdlink.errors import InputError
 from mwdlink.inversion.joint_response import lagrange_rows
 
+
 @dataclass(frozen=True, eq=False)
 class GpcRows:
     """The GPC's curve as data of the joint inference.
