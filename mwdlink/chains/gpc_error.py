@@ -187,11 +187,10 @@ def curves_off_by(
 ) -> np.ndarray:
     """Weights of curves that are off by given errors in units of their standard deviations.
 
-    An error e = relative z_1 + baseline z_2/(signal in parts of the peak) multiplies a row by
-    1 + e, or divides it by 1 - e where e is negative: to first order the rows' own errors, never a
-    negative signal, and alike in both directions, from the truth to the table and back. What lies
-    below a thousandth of the peak goes with the last signal above: nothing is known of it, and what
-    the table leaves out stays out.
+    A row is multiplied by exp(relative z_1) and moved by baseline z_2 of the peak, as long as it
+    stands above the baseline's error; below, where it says nothing, that error is a factor
+    exp(z_2). So no signal turns negative, what the table leaves out stays out, and the step is the
+    same from the truth to the table and back.
 
     Parameters
     ----------
@@ -205,9 +204,14 @@ def curves_off_by(
     ndarray of shape (m, n)
         Rows sum to 1.
     """
-    signal = np.maximum(d.density / d.density.max(), SIGNAL)
-    e = error.relative * rows + error.baseline / signal * drifts
-    w = d.mass * np.where(e >= 0, 1.0 + e, 1.0 / (1.0 + np.abs(e)))
+    signal = np.broadcast_to(d.density / d.density.max(), np.shape(rows))
+    if error.baseline > 0:
+        y = np.maximum(signal / error.baseline, 1e-300)
+        # a scale on which the step is the same everywhere: even above 1, logarithmic below
+        u = np.where(y > 1.0, y, 1.0 + np.log(np.minimum(y, 1.0))) + drifts
+        moved = error.baseline * np.where(u > 1.0, u, np.exp(np.minimum(u, 1.0) - 1.0))
+        signal = np.where(signal > 0, moved, 0.0)
+    w = signal * np.exp(error.relative * rows) * np.diff(np.log10(d.edges))
     return w / w.sum(axis=1, keepdims=True)
 
 

@@ -24,6 +24,7 @@ from mwdlink.decisions.components import (
     validity_of,
 )
 from mwdlink.decisions.ensemble import ExponentBelief
+from mwdlink.decisions.gpc_band import error_asked, gpc_limits
 from mwdlink.decisions.predict import band_words, model_payload
 from mwdlink.decisions.predicted import Outputs, frames, quoted
 from mwdlink.decisions.trust import Trust
@@ -109,6 +110,8 @@ class Blend(Result):
     def payload(self) -> dict[str, Any]:
         blocks = self.outputs.blocks(self.averages, self.average_bands)
         model = model_payload(self.model, self.kernels, self.belief, self.members)
+        c = self.computed
+        model["band_gpc"] = c.gpc.to_dict() if c.gpc is not None and c.gpc_in_curves else None
         if self.route == "sweeps":
             model |= {"kernel": None, "band_kernels": []}
         return {
@@ -185,7 +188,8 @@ class Blend(Result):
                 f"and a mixing exponent of {self.model.exponent:.3g} ({self.belief.source})."
             )
             if self.members:
-                how += " " + band_words(self.kernels, self.belief, self.melt, self.members)
+                gpc = self.computed.gpc if self.computed.gpc_in_curves else None
+                how += " " + band_words(self.kernels, self.belief, self.melt, self.members, gpc)
         text = f"{self.answer()} {how}"
         if self.trust is not None:
             text += (
@@ -215,7 +219,15 @@ class Blend(Result):
                 "compliance of the blend are lower bounds, the melt flow rate may be unknown."
             )
         if self.distribution is not None:
-            out.append("The band takes the distributions as given: GPC errors are not in it.")
+            own = [c.distribution for c in self.components]
+            c = self.computed
+            if self.route == "distributions" and c.gpc is not None and not c.gpc_in_curves:
+                out.append(
+                    "Errors of the GPC are in the band as part of the error that the measured "
+                    "blends of the same components have shown, not a second time."
+                )
+            elif self.route == "distributions":
+                out.extend(gpc_limits(own, c.gpc))  # type: ignore[arg-type]
         return tuple(out)
 
 
@@ -236,6 +248,7 @@ def blend(
     fraction_uncertainty: float = 0.0,
     members: int = 200,
     seed: int = 0,
+    gpc_error: Any = None,
 ) -> Blend:
     """Predict a blend, map every fraction, find the fraction that meets a target.
 
@@ -263,6 +276,8 @@ def blend(
         Relative noise of the sweeps [-]; default their columns, else estimated.
     fraction_uncertainty : float
         Standard error of a weighed fraction [-].
+    gpc_error : float or GpcError, optional
+        Error of the distributions, as for `predict`.
 
     Returns
     -------
@@ -302,6 +317,7 @@ def blend(
         seed=int(seed),
         trust=trust,
         target=wish,
+        gpc_error=error_asked(gpc_error),
     )
     c = compute(ready, phi, melt, settings)
     warnings = merge_cautions(

@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 
 from mwdlink.chains.distribution import Distribution
+from mwdlink.chains.gpc_error import GpcError
 from mwdlink.chains.melt import Melt
 from mwdlink.decisions.blend_parts import (
     average_bands_of,
@@ -51,6 +52,7 @@ from mwdlink.decisions.ensemble import (
     exponent_belief,
     kernels_to_use,
 )
+from mwdlink.decisions.gpc_band import GpcBand
 from mwdlink.decisions.predict import frequencies, narrow_cautions
 from mwdlink.decisions.predicted import Outputs, Recorder, stack
 from mwdlink.decisions.properties import INDEX_FREQUENCIES, properties_of
@@ -84,6 +86,7 @@ class Settings:
     seed: int = 0
     trust: Trust | None = None
     target: Target | None = None
+    gpc_error: GpcError | None = None
 
     @property
     def error(self) -> RuleError | None:
@@ -107,6 +110,8 @@ class Computed:
     difference: Mapping[str, Any] | None
     classical: Mapping[str, Any]
     classical_columns: Mapping[str, np.ndarray]
+    gpc: GpcBand | None
+    gpc_in_curves: bool
     target: TargetFound | None
     terminal: bool
     quadratic: Quadratic | None
@@ -148,8 +153,14 @@ def compute(components: Sequence[Component], phi: np.ndarray, melt: Melt, s: Set
         )
     bank = None
     route: ThroughDistributions | ThroughSweeps
-    mixed = None
+    mixed = gpc = None
+    # blends measured with these components have these components' GPC errors in them
+    learned = error is not None and {c.name for c in components} <= set(s.trust.components)  # type: ignore[union-attr]
+    gpc_in_curves = False
     if known:
+        own = [c.distribution for c in components]
+        gpc = GpcBand.of(own, s.gpc_error, s.members, s.seed)  # type: ignore[arg-type]
+        gpc_in_curves = s.route == "distributions" and gpc is not None and not learned
         mixed = Distribution.blend(
             [(c.distribution, f) for c, f in zip(components, phi, strict=True)]  # type: ignore[misc]
         )
@@ -168,7 +179,9 @@ def compute(components: Sequence[Component], phi: np.ndarray, melt: Melt, s: Set
         inner = inner_frequencies(min(w[0], 1e-2 / max(ends)), float(w[-1]), melt)
         bank = Bank([c.distribution for c in components], melt, s.rouse, float(inner[-1]))  # type: ignore[misc]
         factor = 1.0 if error is None else error.time_factor
-        route = ThroughDistributions(bank, kernel, belief, draws, factor)
+        route = ThroughDistributions(
+            bank, kernel, belief, draws, factor, gpc if gpc_in_curves else None
+        )
     terminal = s.route == "distributions" or measured is None or measured.terminal
     offsets = RuleOffsets.of(error, s.members, s.seed) if error and s.members else None
     frequencies_at, loads = _asked(s.target)
@@ -201,6 +214,8 @@ def compute(components: Sequence[Component], phi: np.ndarray, melt: Melt, s: Set
         if s.route == "sweeps" and measured is not None:
             marks = noise_marks(measured, len(draws))
             extra = {"noise": np.hstack([marks, *extra.values()])}
+        if gpc is not None and gpc_in_curves:
+            extra = extra | {"gpc": gpc.marks(shares)}
         bands = property_bands(
             stack(samples), melt.density, draws, values, extra, frequencies_at, status
         )
@@ -254,13 +269,15 @@ def compute(components: Sequence[Component], phi: np.ndarray, melt: Melt, s: Set
         belief=belief,
         distribution=None if mixed is None else shown(components, phi),
         averages=averages,
-        average_bands=average_bands_of(components, shares, averages),
+        average_bands=average_bands_of(components, shares, averages, gpc, phi),
         spectrum=spectrum,
         outputs=Outputs(recorder.tables(spectrum), values, bands),
         map=m,
         difference=difference,
         classical=classical,
         classical_columns=columns,
+        gpc=gpc,
+        gpc_in_curves=gpc_in_curves,
         target=target,
         terminal=terminal,
         quadratic=quadratic,

@@ -19,6 +19,7 @@ from mwdlink.decisions.blend_sweeps import (
 )
 from mwdlink.decisions.components import Component
 from mwdlink.decisions.ensemble import ExponentBelief
+from mwdlink.decisions.gpc_band import MOMENTS, GpcBand, average_bands, averages_from
 from mwdlink.decisions.predict import frequencies
 from mwdlink.decisions.predicted import trimmed
 from mwdlink.decisions.properties import Curves, properties_of
@@ -127,21 +128,21 @@ def noise_marks(bank: MeasuredBank, members: int) -> np.ndarray:
 def exact_averages(components: Sequence[Component], shares: np.ndarray) -> dict[str, np.ndarray]:
     """Mn, Mw, Mz, dispersity of blends of shares (k, n), from the components' own moments."""
     d = [c.distribution for c in components]
-    moments = {k: np.array([x.moment(k) for x in d]) for k in (-1, 1, 2)}  # type: ignore[union-attr]
-    mn, mw = 1.0 / (shares @ moments[-1]), shares @ moments[1]
-    return {
-        "Mn_g_per_mol": mn,
-        "Mw_g_per_mol": mw,
-        "Mz_g_per_mol": shares @ moments[2] / mw,
-        "dispersity": mw / mn,
-    }
+    moments = (shares @ np.array([x.moment(k) for x in d]) for k in MOMENTS)  # type: ignore[union-attr]
+    return averages_from(*moments)
 
 
 def average_bands_of(
-    components: Sequence[Component], shares: np.ndarray, averages: Mapping[str, float]
+    components: Sequence[Component],
+    shares: np.ndarray,
+    averages: Mapping[str, float],
+    gpc: GpcBand | None,
+    phi: np.ndarray,
 ) -> dict[str, Uncertain]:
     if not averages:
         return {}
+    if gpc is not None:
+        return average_bands(averages, gpc, shares, phi)
     if len(shares) == 0 or np.ptp(shares, axis=0).max() == 0:
         return {k: Uncertain(v, v, v) for k, v in averages.items()}
     rows = exact_averages(components, shares)

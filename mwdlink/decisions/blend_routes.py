@@ -16,6 +16,7 @@ from scipy.stats import norm
 from mwdlink.chains.melt import Melt
 from mwdlink.decisions.blend_sweeps import MeasuredBank
 from mwdlink.decisions.ensemble import LEVEL, Draws, ExponentBelief, budget
+from mwdlink.decisions.gpc_band import GpcBand
 from mwdlink.decisions.properties import Curves, properties_of
 from mwdlink.decisions.response import Bank, Response
 from mwdlink.decisions.trust import RuleError
@@ -44,6 +45,7 @@ class ThroughDistributions:
     belief: ExponentBelief
     draws: Draws | None = None
     time_factor: float = 1.0
+    gpc: GpcBand | None = None
     name: str = "distributions"
 
     def central(self, fractions: np.ndarray) -> Response:
@@ -61,6 +63,7 @@ class ThroughDistributions:
             float(d.exponent[i]),
             float(d.plateau_levels[d.plateau[i]]),
             float(d.time_factor[i]) * self.time_factor,
+            None if self.gpc is None else self.gpc.version(i),
         )
 
 

@@ -235,10 +235,14 @@ def budget(
 
 
 def band(
-    samples: np.ndarray, value: float | None, draws: Draws | None = None, **more: Any
+    samples: np.ndarray,
+    value: float | None,
+    draws: Draws | None = None,
+    extra: Mapping[str, np.ndarray] | None = None,
+    **more: Any,
 ) -> Uncertain:
     """The interval of an ensemble around a central value, with its budget."""
-    shares = budget(samples, draws) if draws is not None else {}
+    shares = budget(samples, draws, extra) if draws is not None else {}
     return Uncertain.from_samples(samples, value, level=LEVEL, budget=shares, **more)
 
 

@@ -18,6 +18,7 @@ from mwdlink.decisions.ensemble import (
     exponent_belief,
     kernels_to_use,
 )
+from mwdlink.decisions.gpc_band import GpcBand, average_bands, error_asked, gpc_limits
 from mwdlink.decisions.predicted import (
     Outputs,
     Recorder,
@@ -75,15 +76,18 @@ class Prediction(Result):
     spectrum: Spectrum
     outputs: Outputs
     members: int = 0
+    gpc: GpcBand | None = None
     warnings: tuple[Caution, ...] = ()
 
     def payload(self) -> dict[str, Any]:
         averages = averages_of(self.distribution)
-        exact = {k: Uncertain(v, v, v) for k, v in averages.items()}
+        one = np.ones(1)
+        spread = average_bands(averages, self.gpc, np.ones((max(self.members, 1), 1)), one)
+        model = model_payload(self.model, self.kernels, self.belief, self.members)
         return {
-            **self.outputs.blocks(averages, exact),
+            **self.outputs.blocks(averages, spread),
             "temperature_C": self.melt.temperature_C,
-            "central_model": model_payload(self.model, self.kernels, self.belief, self.members),
+            "central_model": model | {"band_gpc": None if self.gpc is None else self.gpc.to_dict()},
         }
 
     def tables(self) -> dict[str, Any]:
@@ -106,13 +110,12 @@ class Prediction(Result):
             f"{self.model.exponent:g} ({self.belief.source}), {_rouse_words(self.model)}."
         )
         if self.members:
-            text += " " + band_words(self.kernels, self.belief, self.melt, self.members)
+            text += " " + band_words(self.kernels, self.belief, self.melt, self.members, self.gpc)
         return text
 
     def cannot_say(self) -> tuple[str, ...]:
         return (
-            "The band takes the distribution as given: errors of the GPC are not in it. One per "
-            "cent in Mw is about three and a half per cent in the zero-shear viscosity.",
+            *gpc_limits([self.distribution], self.gpc),
             "Long-chain branching, fillers and second phases are not in the model.",
             "Steady flow and melt flow rate rest on the Cox-Merz rule; the central melt flow rate "
             "has no entrance correction, its band takes up to a fifth of the load as lost there.",
@@ -130,12 +133,14 @@ def predict(
     omega: Any = None,
     members: int = 200,
     seed: int = 0,
+    gpc_error: Any = None,
 ) -> Prediction:
     """Linear viscoelasticity and flow of a melt of given distribution.
 
     The central curves are of the power-law kernel (or the first of `kernels`) and the exponent 2
     unless the card or `exponent` says otherwise. The bands spread over kernels, exponent, scatter
-    of the viscosity law and, where the card gives a range, the plateau modulus.
+    of the viscosity law, the errors of a GPC table and, where the card gives a range, the plateau
+    modulus.
 
     Parameters
     ----------
@@ -154,6 +159,10 @@ def predict(
     members : int
         Ensemble members; 0 gives no bands.
     seed : int
+    gpc_error : float or GpcError, optional
+        Error of the distribution: a number is that of a row, relative [-]. By default a measured
+        table has the errors of `GpcError` and a distribution from averages is exact; 0 takes the
+        rows as exact and leaves the error of the molar masses.
 
     Returns
     -------
@@ -184,6 +193,7 @@ def predict(
     inner = inner_frequencies(min(w[0], 1e-2 / relaxation.longest_time), float(w[-1]), melt)
     bank = Bank([distribution], melt, rouse, float(inner[-1]))
     draws = draw(melt, names, belief, members, seed) if members > 0 else None
+    gpc = GpcBand.of([distribution], error_asked(gpc_error), int(members), seed)
     one = np.ones((1, 1))
     samples: list[Curves] = []
     output = Recorder(w)
@@ -205,10 +215,12 @@ def predict(
                 float(draws.exponent[i]),
                 float(draws.plateau_levels[draws.plateau[i]]),
                 float(draws.time_factor[i]),
+                None if gpc is None else gpc.version(i),
             )
             output.member(r)
             samples.append(r.curves(inner))
-        bands = bands_of(stack(samples), melt.density, draws, values)
+        marks = {} if gpc is None else {"gpc": gpc.marks(np.ones((len(draws), 1)))}
+        bands = bands_of(stack(samples), melt.density, draws, values, marks)
     tables = output.tables(spectrum)
     warnings = merge_cautions(
         polymer.warnings,
@@ -225,6 +237,7 @@ def predict(
         spectrum,
         Outputs(tables, values, bands),
         int(members),
+        gpc,
         warnings,
     )
 
@@ -283,7 +296,13 @@ def narrow_cautions(spectrum: Spectrum) -> tuple[Caution, ...]:
     return spectrum.flow_curve(np.array([1.0]))[1]
 
 
-def band_words(kernels: Sequence[str], belief: ExponentBelief, melt: Melt, members: int) -> str:
+def band_words(
+    kernels: Sequence[str],
+    belief: ExponentBelief,
+    melt: Melt,
+    members: int,
+    gpc: GpcBand | None = None,
+) -> str:
     """What the band spreads over, in a sentence."""
     if belief.low is not None:
         exponent = f"exponents from {belief.low:g} to {belief.high:g} ({belief.source})"
@@ -299,6 +318,8 @@ def band_words(kernels: Sequence[str], belief: ExponentBelief, melt: Melt, membe
     if melt.plateau_range is not None:
         low, high = melt.plateau_range
         text += f", and plateau moduli from {low:.3g} to {high:.3g} Pa"
+    if gpc is not None:
+        text += f", and {gpc.words()}"
     return text + "."
 
 

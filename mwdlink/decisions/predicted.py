@@ -83,13 +83,17 @@ def stack(samples: Sequence[Curves]) -> Curves:
 
 
 def bands_of(
-    curves: Curves, density: float | None, draws: Draws, values: Mapping[str, float | None]
+    curves: Curves,
+    density: float | None,
+    draws: Draws,
+    values: Mapping[str, float | None],
+    extra: Mapping[str, np.ndarray] | None = None,
 ) -> dict[str, Uncertain]:
     """Interval and budget of every property of an ensemble."""
     out = {}
     for name, x in properties_of(curves, density, draws.lost).items():
         if values.get(name) is not None:
-            out[name] = band(x, values[name], draws)
+            out[name] = band(x, values[name], draws, extra)
     return out
 
 

@@ -182,6 +182,29 @@ def lean(distribution: Distribution, most: int = MOST_NODES) -> Distribution:
     return Distribution.from_nodes((node[held] / mass[held]) ** (1 / 3.5), mass[held])
 
 
+@dataclass(frozen=True, eq=False)
+class Version:
+    """The components as they may be, on the bank's nodes.
+
+    Attributes
+    ----------
+    mass : sequence of ndarray of shape (n_M,)
+        Weights of each component, sum 1.
+    log_factor : ndarray of shape (n_i,)
+        ln of what multiplies each component's molar masses; small, a few per cent.
+    """
+
+    mass: Sequence[np.ndarray]
+    log_factor: np.ndarray
+
+
+def _time_exponent(d: Distribution, melt: Melt) -> float:
+    """How relaxation times grow with M about the chains that carry a distribution's viscosity."""
+    m = d.moment(3.5) ** (1 / 3.5)
+    step = 1.01
+    return float(np.log(melt.zero_shear_law(step * m) / melt.zero_shear_law(m)) / np.log(step))
+
+
 class Bank:
     """Responses of blends of given components, for any kernel, exponent and constants.
 
@@ -205,7 +228,9 @@ class Bank:
         self.melt, self.rouse = melt, rouse
         self.omega_max = max(float(omega_max), 1.0)
         self._decay: dict[tuple[str, float, float], tuple[np.ndarray, list[np.ndarray]]] = {}
-        self._rouse: dict[float, tuple[np.ndarray, np.ndarray]] = {}
+        self._rouse: dict[float, tuple[np.ndarray, np.ndarray, list[np.ndarray]]] = {}
+        self.own_weights = tuple(d.mass for d in self.components)
+        self.time_exponents = np.array([_time_exponent(d, melt) for d in self.components])
 
     def melt_of(self, plateau: float) -> Melt:
         """The melt with another plateau modulus [Pa]."""
@@ -255,23 +280,39 @@ class Bank:
         return np.log(np.maximum(mu, 1e-300))
 
     def survivals(
-        self, kernel: str, exponent: float, plateau: float | None = None
+        self,
+        kernel: str,
+        exponent: float,
+        plateau: float | None = None,
+        version: Version | None = None,
     ) -> tuple[np.ndarray, np.ndarray]:
         """Times [s] (n_t,) and S_i(t) of each component (n_i, n_t)."""
         melt = self.melt_of(self.melt.plateau_modulus if plateau is None else plateau)
         t, columns = self._log_decay(kernel, exponent, melt)
         power = 1.0 / exponent if kernel in ("power-law", "exponential") else 1.0
-        s = np.stack(
-            [np.exp(power * c) @ d.mass for c, d in zip(columns, self.components, strict=True)]
-        )
-        if kernel == "fluctuation":
-            return t, s
-        one = np.ones(1)
-        k = get_kernel(kernel, melt)
-        move = float(k.constant(2.0, melt, one)[0] / k.constant(exponent, melt, one)[0])
+        weights = self.own_weights if version is None else version.mass
+        s = np.stack([np.exp(power * c) @ w for c, w in zip(columns, weights, strict=True)])
+        move = 1.0
+        if kernel != "fluctuation":
+            one = np.ones(1)
+            k = get_kernel(kernel, melt)
+            move = float(k.constant(2.0, melt, one)[0] / k.constant(exponent, melt, one)[0])
+        if version is not None and np.any(version.log_factor != 0.0):
+            # longer chains relax later: what all components share moves the times, the rest
+            # of each is a shift along them
+            later = self.time_exponents * version.log_factor
+            common = float(later.mean())
+            move *= float(np.exp(common))
+            x = np.log(t)
+            for i, gap in enumerate(later - common):
+                if abs(gap) > 1e-12:
+                    at = np.clip(x - gap, x[0], x[-1])
+                    s[i] = _cubic_rows(x, s[i : i + 1], at)[0]
         return t * move, s
 
-    def rouse_parts(self, melt: Melt) -> tuple[np.ndarray, np.ndarray]:
+    def rouse_parts(
+        self, melt: Melt, version: Version | None = None
+    ) -> tuple[np.ndarray, np.ndarray]:
         """Rouse modes of each component on common times: (n_r,) [s] and (n_i, n_r) [Pa]."""
         if not self.rouse:
             return np.empty(0), np.empty((len(self.components), 0))
@@ -279,13 +320,18 @@ class Bank:
         if key not in self._rouse:
             masses = np.concatenate([d.molar_mass for d in self.components])
             tau, each = rouse_on_lattice(masses, None, melt, 30.0 * self.omega_max)
-            parts, first = [], 0
-            for d in self.components:
-                last = first + d.molar_mass.size
-                parts.append(each[:, first:last] @ d.mass)
-                first = last
-            self._rouse[key] = (tau, np.stack(parts))
-        return self._rouse[key]
+            ends = np.cumsum([d.molar_mass.size for d in self.components])[:-1]
+            chains = np.split(each, ends, axis=1)
+            parts = [c @ w for c, w in zip(chains, self.own_weights, strict=True)]
+            self._rouse[key] = (tau, np.stack(parts), chains)
+        tau, own, chains = self._rouse[key]
+        if version is None:
+            return tau, own
+        parts = [c @ w for c, w in zip(chains, version.mass, strict=True)]
+        # tau_R goes with M^2 and the strength of a mode with 1/M; the times are common to all
+        # components, and so is the factor here
+        f = float(np.exp(np.mean(version.log_factor)))
+        return tau * f**2, np.stack(parts) / f
 
     def response(
         self,
@@ -294,6 +340,7 @@ class Bank:
         exponent: float,
         plateau: float | None = None,
         time_factor: float = 1.0,
+        version: Version | None = None,
     ) -> Response:
         """Blends of fractions (k, n_i), rows summing to 1.
 
@@ -306,12 +353,14 @@ class Bank:
             G_N [Pa]; the card's by default.
         time_factor : float
             Multiplies the viscosity law [-].
+        version : Version, optional
+            Other weights and molar masses of the components than their own.
         """
         phi = np.atleast_2d(np.asarray(fractions, dtype=float))
         melt = self.melt_of(self.melt.plateau_modulus if plateau is None else plateau)
-        t, s = self.survivals(kernel, exponent, plateau)
+        t, s = self.survivals(kernel, exponent, plateau, version)
         g = melt.plateau_modulus * np.maximum(phi @ s, 0.0) ** exponent
-        tau_r, rouse = self.rouse_parts(melt)
+        tau_r, rouse = self.rouse_parts(melt, version)
         return from_modulus(t, g, tau_r, phi @ rouse).scaled(time_factor)
 
 
