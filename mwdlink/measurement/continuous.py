@@ -28,9 +28,12 @@ BEND = 12.0
 # decade: melts flow in the end, and a second, slower process that no point has seen is not to be
 # made up by the smoothing prior.
 RISE = 1.0
-# Spectra of melts that need lambda far below one are rare, chance evidence for it is not: decades
-# below one cost as a normal law of this width would have it.
-ROUGH_DECADES = 2.0
+# What is known of log10 lambda before any data: a normal law with unlike flanks. One lambda has to
+# serve the smooth body of a spectrum and its end, where it bends most; chance evidence for a
+# curve without any bend (lambda far above) or for wiggles (far below) is common at a few per cent
+# of noise, melts that have either are not [chosen on made-up melts for the least sum of spread and
+# bias, docs/spectrum.md].
+CENTRE, ROUGHER, SMOOTHER = -0.25, 1.0, 0.75
 LEVEL = 0.9
 
 
@@ -204,14 +207,15 @@ class _Problem:
         return chi2, cost, r, J, J.T @ J, rise
 
     def evidence(self, lam: float, cost: float, N: np.ndarray) -> tuple[float, float]:
-        """Log evidence up to a constant, and the effective number of parameters."""
+        """Log evidence times prior of lambda up to a constant, and effective parameters."""
         P = lam * self.R3 + self.R2
         M = N + P
         _, logdet = np.linalg.slogdet(M)
         _, prior = np.linalg.slogdet(P + 1e-9 * np.eye(P.shape[0]))
         trace = float(np.trace(np.linalg.solve(M, N)))
-        rough = min(np.log10(lam), 0.0) / ROUGH_DECADES
-        return -0.5 * (cost + logdet - prior + rough * rough), trace
+        off = np.log10(lam) - CENTRE
+        off /= ROUGHER if off < 0 else SMOOTHER
+        return -0.5 * (cost + logdet - prior + off * off), trace
 
 
 def fit_continuous(
