@@ -24,6 +24,7 @@ from mwdlink.cli.options import (
     rouse_option,
     temperature_option,
 )
+from mwdlink.cli.predict import gpc_error_option
 
 
 class Fractions(click.ParamType):
@@ -83,6 +84,7 @@ class TargetText(click.ParamType):
 @ensemble_options
 @reading_options
 @calibration_option
+@gpc_error_option
 @output_options
 def command(
     inputs: tuple[Path, ...],
@@ -102,6 +104,7 @@ def command(
     seed: int,
     reading: dict[str, Any],
     calibration: str,
+    gpc_error: float | None,
     output: Output,
 ) -> None:
     """Predict a blend of INPUTS: distributions, sweeps, or a study file.
@@ -144,6 +147,7 @@ def command(
             fraction_uncertainty=uncertainty,
             members=members,
             seed=seed,
+            gpc_error=gpc_error,
         )
     model = {"kernels": result.kernels, "exponent": result.model.exponent, "rouse": rouse}
     if result.route == "sweeps":

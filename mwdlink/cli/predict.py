@@ -10,6 +10,7 @@ import click
 from mwdlink.cli.deliver import deliver, working
 from mwdlink.cli.options import (
     INPUT,
+    Number,
     Output,
     calibration_option,
     ensemble_options,
@@ -21,6 +22,14 @@ from mwdlink.cli.options import (
 )
 
 
+gpc_error_option = click.option(
+    "--gpc-error",
+    type=Number("R", 0, 0.5, percent=True, open_low=False),
+    help="Relative error of a row of a GPC table; its baseline's is a tenth of that, in parts of "
+    "the peak. Default: 3 % for tables as measured.",
+)
+
+
 @click.command()
 @click.argument("dist", type=INPUT)
 @model_options
@@ -28,6 +37,7 @@ from mwdlink.cli.options import (
 @ensemble_options
 @reading_options
 @calibration_option
+@gpc_error_option
 @output_options
 def command(
     dist: Path,
@@ -40,6 +50,7 @@ def command(
     members: int,
     seed: int,
     calibration: str,
+    gpc_error: float | None,
     reading: dict[str, Any],
     output: Output,
 ) -> None:
@@ -49,7 +60,8 @@ def command(
     mwdlink predict gpc.csv --polymer hdpe --temperature 190 --out predicted
 
     DIST is a table of a molecular-weight distribution, such as a GPC export.
-    The bands hold the card's constants, the kernels and the mixing exponent.
+    The bands hold the GPC's own error (rows, baseline, and by --calibration its
+    molar masses), the card's constants, the kernels and the mixing exponent.
     """
     from mwdlink.decisions.predict import predict
     from mwdlink.files.cards import read_polymer
@@ -68,6 +80,7 @@ def command(
             omega=frequencies(omega),
             members=members,
             seed=seed,
+            gpc_error=gpc_error,
         )
     model = {
         "kernels": result.kernels,
