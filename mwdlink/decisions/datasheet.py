@@ -9,12 +9,14 @@ import numpy as np
 from scipy.stats import norm
 
 from mwdlink.chains.polymer import Polymer, builtin
-from mwdlink.decisions.branching_signs import branching_index
+from mwdlink.decisions.branching_signs import LCBI_POLYMERS, LCBI_TEMPERATURE, branching_index
+from mwdlink.decisions.datasheet_causes import shadows, tried
 from mwdlink.decisions.datasheet_claims import Claim, Sheet
 from mwdlink.decisions.datasheet_fit import Expected, claim_sigma, expect, model_sigma
-from mwdlink.decisions.datasheet_model import FAMILIES, sheet_model
+from mwdlink.decisions.datasheet_model import FAMILIES, SheetModel, sheet_model
 from mwdlink.decisions.datasheet_result import DataSheet, Judged
-from mwdlink.decisions.datasheet_words import explain, shadows, verdict_of
+from mwdlink.decisions.datasheet_search import MOST, Finding, find, follows
+from mwdlink.decisions.datasheet_words import explain, verdict_of
 from mwdlink.errors import Caution, InputError, merge_cautions
 from mwdlink.quantity import Uncertain, quantiles
 from mwdlink.relaxation.kernels import get_kernel
@@ -22,8 +24,6 @@ from mwdlink.relaxation.kernels import get_kernel
 STRAINED, INCONSISTENT = 2.0, 3.25
 # others that leave a factor of more than 2.5 open (90 %) do not determine a claim
 OPEN = float(np.log(2.5) / (2 * 1.645))
-# two claims are told apart when leaving out the one leaves this much less misfit than the other
-TELL_APART = 4.0
 LEVEL = 0.9
 # the realistic kernel, and the one furthest from it: what they differ by is what one does not know
 KERNELS = ("power-law", "exponential")
@@ -75,26 +75,53 @@ def check_datasheet(
             path=sheet.paths[0] if sheet.paths else None,
             remedy="At least two are needed: an average or a viscosity with a melt flow rate, say.",
         )
-    extra = shadows(usable, card)
-    quantities = (*usable, *extra)
-    models = [sheet_model(card, quantities, k) for k in names]
-    _, left_out = expect(models, len(usable), seed)
+    models = [sheet_model(card, usable, k) for k in names]
+    n = len(usable)
+    counted = np.ones(n)
+    dependent = follows(usable)
+    counted[list(dependent)] = 0.0
+    *left_out, everything = expect(models, n, np.vstack([_one_left_out(counted), counted]), seed)
     judged = _judged(usable, left_out)
-    odd, rivals = _odd_one_out(judged, left_out)
-    if odd is not None and len(usable) > 2:
-        judged = _without(odd, rivals, usable, card, names, judged, seed)
-    index = _branching_index(sheet)
-    words = explain(sheet, judged, odd, rivals, index, quantities, left_out, card)
+    first = judged
+    fits: dict[int, tuple[str, ...]] = {}
+    for least in range(1, MOST + 1):
+        finding = find(
+            models,
+            usable,
+            [j.verdict == "inconsistent" for j in first],
+            [e.cost for e in left_out],
+            everything.cost,
+            counted,
+            least,
+        )
+        if not finding.named:
+            break
+        judged, fits, more = _again(models, usable, card, first, finding, counted, seed)
+        if not more or not finding.rest_agrees:
+            break
+    clear = ("inconsistent", "strained")
+    rivals = {i: s for i, s in finding.rivals.items() if judged[i].verdict in clear}
+    finding = replace(finding, rivals=rivals)
+    named = sorted(finding.named, key=lambda i: -abs(judged[i].z or 0.0))
+    odd = usable[named[0]].quantity if named else None
+    index = _branching_index(sheet, card)
     return DataSheet(
         claims=judged,
         odd_one_out=odd,
-        verdict=verdict_of(judged, odd, rivals),
-        explanations=words,
+        also_off=tuple(usable[i].quantity for i in named[1:]),
+        rivals=tuple(usable[i].quantity for i in finding.rivals),
+        verdict=verdict_of(usable, judged, named, finding),
+        explanations=explain(sheet, usable, judged, named, finding, fits, dependent, index, card),
         branching_index=index,
         model={"kernels": list(names), "exponent": "2.0 +- 0.2", "rouse": True,
                "families": list(FAMILIES)},
         warnings=merge_cautions(sheet.warnings, melt.warnings, notes),
     )  # fmt: skip
+
+
+def _one_left_out(counted: np.ndarray) -> np.ndarray:
+    """A row for each claim, without it, shape (n, n)."""
+    return np.tile(counted, (counted.size, 1)) * (1.0 - np.eye(counted.size))
 
 
 def _usable(sheet: Sheet, card: Polymer) -> tuple[tuple[Claim, ...], tuple[Caution, ...]]:
@@ -148,22 +175,50 @@ def _usable(sheet: Sheet, card: Polymer) -> tuple[tuple[Claim, ...], tuple[Cauti
     return tuple(out), tuple(notes)
 
 
-def _without(
-    odd: str,
-    rivals: Sequence[str],
+def _again(
+    models: Sequence[SheetModel],
     claims: Sequence[Claim],
     card: Polymer,
-    kernels: Sequence[str],
     judged: Sequence[Judged],
+    finding: Finding,
+    counted: np.ndarray,
     seed: int,
-) -> tuple[Judged, ...]:
-    """The other claims judged again without the one that stands out, which leads them astray."""
-    kept = [c for c in claims if c.quantity != odd]
-    models = [sheet_model(card, kept, k) for k in kernels]
-    again = {j.quantity: j for j in _judged(kept, expect(models, len(kept), seed)[1])}
-    return tuple(
-        j if j.quantity == odd or j.quantity in rivals else again[j.quantity] for j in judged
+) -> tuple[tuple[Judged, ...], dict[int, tuple[str, ...]], bool]:
+    """All claims judged without those that do not belong, which would lead them astray.
+
+    Returns
+    -------
+    judged : tuple of Judged
+        A rival is judged by what is left without it and with the claim it contradicts.
+    fits : dict
+        Claim -> causes that would bring its number in line.
+    more : bool
+        Whether others still stand out, so that more claims must be off.
+    """
+    suspects = [*finding.named, *finding.rivals]
+    quantities = (*claims, *shadows([claims[i] for i in suspects], card))
+    rows = _one_left_out(counted)
+    rows[:, list(finding.named)] = 0.0
+    others = _one_left_out(counted)[list(finding.rivals)]
+    for row, left in zip(others, finding.rivals.values(), strict=True):
+        row[list(left)] = 0.0
+    wider = [replace(m, claims=quantities) for m in models]
+    expected = list(expect(wider, len(claims), np.vstack([rows, others]), seed))
+    again = list(_judged(claims, expected[: len(claims)]))
+    more = any(
+        j.verdict == "inconsistent" and counted[i] > 0 and i not in finding.named
+        for i, j in enumerate(again)
     )
+    if not finding.rest_agrees:
+        # no few claims explain it: each against all the others is all one can say
+        again = [again[i] if i in finding.named else j for i, j in enumerate(judged)]
+    for k, i in enumerate(finding.rivals):
+        expected[i] = expected[len(claims) + k]
+        again[i] = _judged(claims, expected[: len(claims)])[i]
+        if again[i].verdict in ("consistent", "strained"):
+            again[i] = judged[i]
+    fits = {i: tried(claims[i], i, quantities, expected[i]) for i in suspects}
+    return tuple(again), fits, more
 
 
 def _judged(claims: Sequence[Claim], left_out: Sequence[Expected]) -> tuple[Judged, ...]:
@@ -216,25 +271,16 @@ def _interval(
     )
 
 
-def _odd_one_out(
-    judged: Sequence[Judged], left_out: Sequence[Expected]
-) -> tuple[str | None, tuple[str, ...]]:
-    """The claim without which all the others agree best, and others that come close to that."""
-    marked = sorted(
-        (e.cost, j.quantity)
-        for j, e in zip(judged, left_out, strict=True)
-        if j.verdict == "inconsistent"
-    )
-    if not marked:
-        return None, ()
-    least, first = marked[0]
-    return first, tuple(name for cost, name in marked[1:] if cost < least + TELL_APART)
-
-
-def _branching_index(sheet: Sheet) -> float | None:
-    """LCBI of the claimed viscosities, where the sheet has both under the index's conditions."""
+def _branching_index(sheet: Sheet, card: Polymer) -> float | None:
+    """LCBI of the claimed viscosities: of polyethylene, carried to 190 C by the card."""
     eta0 = next((c for c in sheet.claims if c.kind == "eta0"), None)
     iv = next((c for c in sheet.claims if c.kind == "intrinsic viscosity"), None)
-    if eta0 is None or iv is None or abs((eta0.temperature_C or 190.0) - 190.0) > 0.5:
+    if eta0 is None or iv is None or card.name.lower() not in LCBI_POLYMERS:
         return None
-    return float(branching_index(eta0.value, iv.value))
+    T = card.temperature_C if eta0.temperature_C is None else eta0.temperature_C
+    factor = 1.0
+    if abs(T - LCBI_TEMPERATURE) > 0.5:
+        if card.shift is None:
+            return None
+        factor = float(card.shift.factor(LCBI_TEMPERATURE, T))
+    return float(branching_index(eta0.value * factor, iv.value))

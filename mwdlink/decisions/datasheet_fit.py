@@ -64,9 +64,13 @@ def model_sigma(claims: Sequence[Claim]) -> np.ndarray:
 
 
 def expect(
-    models: Sequence[SheetModel], claims: int, seed: int = 0, draws: int = DRAWS
-) -> tuple[Expected, tuple[Expected, ...]]:
-    """Fits to all claims, and to all but each one.
+    models: Sequence[SheetModel],
+    claims: int,
+    masks: np.ndarray,
+    seed: int = 0,
+    draws: int = DRAWS,
+) -> tuple[Expected, ...]:
+    """What the claims that each mask keeps lead one to expect of every quantity.
 
     Parameters
     ----------
@@ -74,22 +78,20 @@ def expect(
         One per kernel; the first `claims` of their quantities are the sheet's, the others are
         wanted but not claimed.
     claims : int
+    masks : ndarray of shape (k, claims)
+        1 where a claim is kept, 0 where it is left out.
     seed : int
     draws : int
         Per fit.
 
     Returns
     -------
-    everything : Expected
-    left_out : tuple of Expected
-        One for each claim.
+    tuple of Expected
+        One for each mask.
     """
-    held = models[0].claims
-    target = np.log(np.array([c.value for c in held[:claims]]))
-    sigma = np.hypot(claim_sigma(held), model_sigma(held))[:claims]
-    masks = np.vstack([np.ones(claims), 1.0 - np.eye(claims)])
+    target, sigma = _target(models[0].claims[:claims])
     rng = np.random.default_rng(seed)
-    collected: list[list[tuple[np.ndarray, np.ndarray, float, float]]] = [[] for _ in masks]
+    collected: list[list[tuple[np.ndarray, np.ndarray, float]]] = [[] for _ in masks]
     for model in models:
         for family in FAMILIES:
             z, cost, chol, evidence = _fit(model, family, target, sigma, masks)
@@ -106,7 +108,7 @@ def expect(
                 exact = _cost(y[i, :, :claims], drawn[i], target, sigma, mask)
                 gauss = cost[i] + np.sum(push**2, axis=1)
                 log_weight = np.clip(-0.5 * (exact - gauss), -30.0, 3.0)
-                collected[i].append((y[i], log_weight + evidence[i], float(cost[i]), evidence[i]))
+                collected[i].append((y[i], log_weight + evidence[i], float(cost[i])))
     out = []
     for parts in collected:
         log_weight = np.concatenate([p[1] for p in parts])
@@ -118,7 +120,37 @@ def expect(
                 min(p[2] for p in parts),
             )
         )
-    return out[0], tuple(out[1:])
+    return tuple(out)
+
+
+def least_costs(
+    models: Sequence[SheetModel],
+    claims: int,
+    masks: np.ndarray,
+    shift: np.ndarray | float = 0.0,
+) -> np.ndarray:
+    """Least misfit over families and kernels of the claims that each mask keeps, shape (k,).
+
+    With the distance from the prior in it: for claims of one melt, right within their tolerances,
+    it scatters about as chi squared with as many degrees of freedom as claims were kept.
+
+    Parameters
+    ----------
+    models, claims, masks
+        As of `expect`.
+    shift : ndarray of shape (k, claims), optional
+        To add to ln of the claims.
+    """
+    target, sigma = _target(models[0].claims[:claims])
+    target = target + shift
+    return np.min(
+        [_fit(m, family, target, sigma, masks)[1] for m in models for family in FAMILIES], axis=0
+    )
+
+
+def _target(claims: Sequence[Claim]) -> tuple[np.ndarray, np.ndarray]:
+    target = np.log(np.array([c.value for c in claims]))
+    return target, np.hypot(claim_sigma(claims), model_sigma(claims))
 
 
 def _cost(
@@ -149,33 +181,36 @@ def _fit(
         ln of the evidence by Laplace's approximation.
     """
     d = len(FAMILIES[family]) + len(CARD)
-    n, k = target.size, masks.shape[0]
+    k, n = masks.shape
+    target = np.broadcast_to(target, (k, n))
     z = np.zeros((k, d))
     damping = np.full(k, 0.3)
     y, slope = model.predict_and_slope(z, family, n)
     cost = _cost(y, z, target, sigma, masks)
     eye = np.eye(d)
+    live = np.arange(k)
     for _ in range(STEPS):
-        r = np.clip(np.nan_to_num((y - target) / sigma, nan=0.0), -200, 200) * masks
-        j = slope / sigma[:, None] * masks[:, :, None]
-        gradient = np.einsum("knd,kn->kd", j, r) + z
+        kept, wanted, now = masks[live], target[live], cost[live]
+        r = np.clip(np.nan_to_num((y[live] - wanted) / sigma, nan=0.0), -200, 200) * kept
+        j = slope[live] / sigma[:, None] * kept[:, :, None]
+        gradient = np.einsum("knd,kn->kd", j, r) + z[live]
         hessian = np.einsum("knd,kne->kde", j, j) + eye
-        step = np.linalg.solve(
-            hessian + damping[:, None, None] * eye * np.einsum("kdd->kd", hessian)[:, None, :],
-            -gradient[:, :, None],
-        )[:, :, 0]
+        damped = damping[live][:, None, None] * eye * np.einsum("kdd->kd", hessian)[:, None, :]
+        step = np.linalg.solve(hessian + damped, -gradient[:, :, None])[:, :, 0]
         step *= np.minimum(1.0, 1.5 / np.maximum(np.abs(step).max(axis=1), 1e-12))[:, None]
-        trial = np.clip(z + step, -FARTHEST, FARTHEST)
+        trial = np.clip(z[live] + step, -FARTHEST, FARTHEST)
         new_y, new_slope = model.predict_and_slope(trial, family, n)
-        new_cost = _cost(new_y, trial, target, sigma, masks)
-        better = new_cost <= cost + 1e-9
-        gain = np.where(better, cost - new_cost, 0.0)
-        z = np.where(better[:, None], trial, z)
-        y = np.where(better[:, None], new_y, y)
-        slope = np.where(better[:, None, None], new_slope, slope)
-        cost = np.where(better, new_cost, cost)
-        damping = np.where(better, np.maximum(damping * 0.2, 1e-4), np.minimum(damping * 8.0, 1e4))
-        if np.all(gain[better] < 1e-2) and np.all(better):
+        new_cost = _cost(new_y, trial, wanted, sigma, kept)
+        better = new_cost <= now + 1e-9
+        won = live[better]
+        z[won], y[won], slope[won] = trial[better], new_y[better], new_slope[better]
+        cost[won] = new_cost[better]
+        damping[won] = np.maximum(damping[won] * 0.2, 1e-4)
+        lost = live[~better]
+        damping[lost] = np.minimum(damping[lost] * 8.0, 1e4)
+        # rows that have arrived are not run again
+        live = live[~(better & (now - new_cost < 1e-2))]
+        if live.size == 0:
             break
     j = slope / sigma[:, None] * masks[:, :, None]
     hessian = np.einsum("knd,kne->kde", j, j) + eye

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from scipy.special import gammaln
@@ -68,6 +69,37 @@ MASS = 10.0**NODES
 OMEGA = np.geomspace(1e-5, 1e5, 61)
 
 
+class _Seen:
+    """Curves, and what has been read off them, each once."""
+
+    def __init__(self, curves: Curves) -> None:
+        self.curves = curves
+        self.rates: dict[float, np.ndarray] = {}
+
+    @cached_property
+    def crossing(self) -> tuple[np.ndarray, np.ndarray]:
+        """ln of frequency and modulus."""
+        omega, level = crossovers(self.curves)
+        return np.log(omega), np.log(level)
+
+    @cached_property
+    def viscosity(self) -> np.ndarray:
+        """ln of |eta*|."""
+        return np.log(self.curves.viscosity)
+
+    def rows(self, k: int, *, keep_rates: bool) -> _Seen:
+        """The first k melts, with what has been read off them."""
+        c = self.curves
+        out = _Seen(Curves(c.omega, c.storage[:k], c.loss[:k], c.eta0[:k], c.Je0[:k]))
+        if "crossing" in self.__dict__:
+            out.crossing = (self.crossing[0][:k], self.crossing[1][:k])
+        if "viscosity" in self.__dict__:
+            out.viscosity = self.viscosity[:k]
+        if keep_rates:
+            out.rates = {load: rate[:k] for load, rate in self.rates.items()}
+        return out
+
+
 @dataclass(frozen=True, eq=False)
 class SheetModel:
     """Everything that does not depend on the unknowns.
@@ -112,7 +144,7 @@ class SheetModel:
         """
         own = len(FAMILIES[family])
         w, curves = self._costly(z, own, family)
-        return self._all(self.claims, w, curves, z[:, own:], {})
+        return self._all(self.claims, w, _Seen(curves), z[:, own:])
 
     def predict_and_slope(
         self, z: np.ndarray, family: str, count: int
@@ -124,17 +156,18 @@ class SheetModel:
         costly = [*range(own), own + EXPONENT]
         moved = np.concatenate([z, *[z + STEP * np.eye(d)[i] for i in costly]])
         w, curves = self._costly(moved, own, family)
-        y = self._all(claims, w, curves, moved[:, own:], {}).reshape(len(costly) + 1, k, -1)
+        seen = _Seen(curves)
+        y = self._all(claims, w, seen, moved[:, own:]).reshape(len(costly) + 1, k, -1)
         slope = np.zeros((k, count, d))
         for j, i in enumerate(costly):
             slope[:, :, i] = (y[j + 1] - y[0]) / STEP
-        first = Curves(OMEGA, curves.storage[:k], curves.loss[:k], curves.eta0[:k], curves.Je0[:k])
         for i in range(own, d):
             acts = [c for c, q in enumerate(claims) if i - own in ACTS[q.kind]]
             if i in costly or not acts:
                 continue
             card = z[:, own:] + STEP * np.eye(d - own)[i - own]
-            changed = self._all([claims[c] for c in acts], w[:k], first, card, {})
+            first = seen.rows(k, keep_rates=i - own not in (MODULUS, ENTRANCE))
+            changed = self._all([claims[c] for c in acts], w[:k], first, card)
             slope[:, acts, i] = (changed - y[0][:, acts]) / STEP
         return y[0], np.nan_to_num(slope)
 
@@ -143,27 +176,20 @@ class SheetModel:
         return w, self._curves(w, EXPONENT_PRIOR[0] + EXPONENT_PRIOR[1] * z[:, own + EXPONENT])
 
     def _all(
-        self,
-        claims: Sequence[Claim],
-        w: np.ndarray,
-        curves: Curves,
-        card: np.ndarray,
-        rates: dict[float, np.ndarray],
+        self, claims: Sequence[Claim], w: np.ndarray, seen: _Seen, card: np.ndarray
     ) -> np.ndarray:
         with np.errstate(invalid="ignore", divide="ignore"):
-            return np.column_stack([self._one(c, w, curves, card, rates) for c in claims])
+            return np.column_stack([self._one(c, w, seen, card) for c in claims])
 
-    def _rate(
-        self, load: float, curves: Curves, card: np.ndarray, rates: dict[float, np.ndarray]
-    ) -> np.ndarray:
+    def _rate(self, load: float, seen: _Seen, card: np.ndarray) -> np.ndarray:
         """ln of the melt flow rate at unit density and unmoved times; one run a load."""
-        if load not in rates:
+        if load not in seen.rates:
             lost = np.clip(ENTRANCE_PRIOR[0] + ENTRANCE_PRIOR[1] * card[:, ENTRANCE], 0.0, 0.5)
             modulus = self.modulus_spread * card[:, MODULUS]
             # a factor on the modulus is a factor on the stress that drives the flow
             effective = 1.0 - (1.0 - lost) / np.exp(modulus)
-            rates[load] = np.log(melt_flow_rates(curves, load, 1000.0, effective))
-        return rates[load]
+            seen.rates[load] = np.log(melt_flow_rates(seen.curves, load, 1000.0, effective))
+        return seen.rates[load]
 
     def _curves(self, w: np.ndarray, exponent: np.ndarray) -> Curves:
         beta = np.clip(exponent, 1.35, 2.65)
@@ -184,9 +210,8 @@ class SheetModel:
         self,
         c: Claim,
         w: np.ndarray,
-        curves: Curves,
+        seen: _Seen,
         card: np.ndarray,
-        rates: dict[float, np.ndarray],
     ) -> np.ndarray:
         m = MASS
         if c.kind in ("Mn", "Mw", "Mz", "dispersity"):
@@ -200,26 +225,22 @@ class SheetModel:
             return np.log(k * (w @ m**a)) + INTRINSIC_SPREAD * card[:, INTRINSIC]
         if c.kind == "activation energy":
             return np.log(self._energy(card) / 1000.0)
-        melt = self.polymer.melt(self.polymer.temperature_C)
         law = self.time_spread * card[:, TIME]
         modulus = self.modulus_spread * card[:, MODULUS]
-        T = melt.temperature_C if c.temperature_C is None else c.temperature_C
+        T = self.polymer.temperature_C if c.temperature_C is None else c.temperature_C
         shift = self._log_shift(T, card)
         moved = law - modulus + shift  # ln of the factor on all times
         if c.kind == "eta0":
-            return np.log(curves.eta0) + law + shift
+            return np.log(seen.curves.eta0) + law + shift
         if c.kind.startswith("crossover"):
-            omega, level = crossovers(curves)
-            return np.log(omega) - moved if c.kind.endswith("omega") else np.log(level) + modulus
+            omega, level = seen.crossing
+            return omega - moved if c.kind.endswith("omega") else level + modulus
         if c.kind == "viscosity":
-            return (
-                _along(np.log(OMEGA), np.log(curves.viscosity), np.log(c.omega) + moved)
-                + modulus
-                + moved
-            )
-        rate = self._rate(float(c.load_kg or 0.0), curves, card, rates)
+            at = np.log(float(c.omega or 1.0)) + moved
+            return _along(np.log(OMEGA), seen.viscosity, at) + modulus + moved
+        rate = self._rate(float(c.load_kg or 0.0), seen, card)
         if c.kind == "flow rate ratio":
-            return rate - self._rate(float(c.second_load_kg or 0.0), curves, card, rates)
+            return rate - self._rate(float(c.second_load_kg or 0.0), seen, card)
         if c.volume:
             return rate - moved
         return rate - moved + np.log(self.polymer.density(T) / 1000.0)

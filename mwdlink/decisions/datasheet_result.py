@@ -55,7 +55,11 @@ class DataSheet(Result):
     ----------
     claims : tuple of Judged
     odd_one_out : str or None
-        The claim that stands out most, if one does.
+        The claim without which the rest agrees best, if one stands out.
+    also_off : tuple of str
+        Other claims that have to be left out with it before the rest agrees.
+    rivals : tuple of str
+        Claims that could be the culprit instead: the sheet cannot tell which.
     verdict : str
         In one sentence.
     explanations : tuple of str
@@ -71,6 +75,8 @@ class DataSheet(Result):
 
     claims: tuple[Judged, ...]
     odd_one_out: str | None
+    also_off: tuple[str, ...]
+    rivals: tuple[str, ...]
     verdict: str
     explanations: tuple[str, ...]
     branching_index: float | None
@@ -81,6 +87,8 @@ class DataSheet(Result):
         return {
             "claims": [c.to_dict() for c in self.claims],
             "odd_one_out": self.odd_one_out,
+            "also_off": list(self.also_off),
+            "rivals": list(self.rivals),
             "verdict": self.verdict,
             "explanations": list(self.explanations),
             "branching_index": self.branching_index,

@@ -1,59 +1,35 @@
-"""What may be behind a claim that stands out, in words one can send to a supplier.
-
-Some causes can be tried on the numbers: a unit slip, another load or temperature, averages
-relative to polystyrene. For these the quantity under the other conditions is predicted beside the
-claims ("shadows") and compared.
-"""
+"""What may be behind claims that stand out, in words one can send to a supplier."""
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from dataclasses import replace
+from collections.abc import Mapping, Sequence
 
 import numpy as np
 
 from mwdlink.chains.polymer import Polymer
+from mwdlink.decisions.datasheet_causes import SOLID_OVER_MELT
 from mwdlink.decisions.datasheet_claims import Claim, Sheet
-from mwdlink.decisions.datasheet_fit import Expected
 from mwdlink.decisions.datasheet_result import Judged
+from mwdlink.decisions.datasheet_search import MOST, Finding
 
-LOADS = (2.16, 5.0, 10.0, 21.6)
-TEMPERATURES = (150.0, 190.0, 200.0, 230.0, 260.0)
-# another cause fits when it brings the claim within this many standard deviations
-FITS = 1.5
-SLIPS = (1e-3, 1e-2, 0.1, 10.0, 100.0, 1e3)
-# solid over melt density of polyolefins, about (common practice)
-SOLID_OVER_MELT = 1.25
 # linear polyethylenes of dispersity 2 to 4 lie within about 0.2 of the line (derived)
 BRANCHED_INDEX = 0.2
+# an MFR over an MVR within this of the solid's density, and further than this from the melt's
+NEAR_SOLID = 0.07
+MASSES = ("Mn", "Mw", "Mz")
 
-
-def shadows(claims: Sequence[Claim], card: Polymer) -> tuple[Claim, ...]:
-    """Quantities under other conditions, named so that the words can find them again."""
-    out: list[Claim] = []
-    for c in claims:
-        if c.kind == "melt flow":
-            for load in LOADS:
-                if abs(load - float(c.load_kg or 0)) > 0.01:
-                    out.append(replace(c, quantity=f"{c.quantity}|load {load:g} kg", load_kg=load))
-            out.append(replace(c, quantity=f"{c.quantity}|volume", volume=not c.volume))
-        if (
-            c.kind in ("melt flow", "eta0", "viscosity", "crossover omega")
-            and card.shift is not None
-        ):
-            low, high = card.shift.reach_C
-            for T in TEMPERATURES:
-                if low - 30 <= T <= high + 30 and abs(T - float(c.temperature_C or T)) > 1.0:
-                    out.append(replace(c, quantity=f"{c.quantity}|at {T:g} C", temperature_C=T))
-        if c.kind in ("Mn", "Mw", "Mz"):
-            if c.calibration != "equivalent":
-                out.append(
-                    replace(c, quantity=f"{c.quantity}|equivalent", calibration="equivalent")
-                )
-            for other in ("Mn", "Mw", "Mz"):
-                if other != c.kind:
-                    out.append(replace(c, quantity=f"{c.quantity}|{other}", kind=other))
-    return tuple(out)
+TYPICAL = (
+    "Sheets often quote typical values rather than limits of a specification, from different lots "
+    "and laboratories: asking which lot and which method each number is from is the first step."
+)
+STIFFER = (
+    "sparse long-chain branching, a high-molar-mass tail that the averages miss, filler, or "
+    "crosslinking"
+)
+EASIER = (
+    "a plasticising or lubricating additive, visbreaking or degradation after the molar masses "
+    "were measured, or moisture"
+)
 
 
 def spoken(quantity: str) -> str:
@@ -72,159 +48,266 @@ def spoken(quantity: str) -> str:
     }
     if quantity in plain:
         return plain[quantity]
-    if quantity.startswith("melt_flow"):
-        return "the melt flow at" + quantity.removeprefix("melt_flow")
+    for key, words in (("melt_flow ", "the melt flow at "), ("viscosity ", "the viscosity at ")):
+        if quantity.startswith(key):
+            rest = quantity.removeprefix(key)
+            place = rest.removesuffix(" MVR").removesuffix(" C")
+            if place != rest.removesuffix(" MVR"):
+                load, _, T = place.rpartition(" ")
+                place = f"{load} and {T} C"
+            return words + place + (" (volume rate)" if rest.endswith(" MVR") else "")
     return "the " + quantity
+
+
+def unit_of(claim: Claim) -> str:
+    """Unit of a claim's number, for a sentence; empty where it has none."""
+    if claim.kind == "melt flow":
+        return "cm3/10 min" if claim.volume else "g/10 min"
+    return {
+        "Mn": "g/mol",
+        "Mw": "g/mol",
+        "Mz": "g/mol",
+        "eta0": "Pa s",
+        "viscosity": "Pa s",
+        "crossover omega": "rad/s",
+        "crossover G": "Pa",
+        "intrinsic viscosity": "dL/g",
+        "activation energy": "kJ/mol",
+    }.get(claim.kind, "")
 
 
 def _listed(names: Sequence[str]) -> str:
     words = [spoken(n) for n in names]
-    return words[0] if len(words) == 1 else ", ".join(words[:-1]) + " and " + words[-1]
+    return words[0] if len(words) == 1 else _joined(words)
 
 
-def verdict_of(judged: Sequence[Judged], odd: str | None, rivals: Sequence[str]) -> str:
-    """The verdict in one or two sentences."""
+def _given(claim: Claim, one: Judged, *, brief: bool = False) -> str:
+    """What is claimed and what the others lead one to expect."""
+    unit = unit_of(claim)
+    e = one.expected
+    number = f"{one.claimed:.3g}{' ' + unit if unit else ''}"
+    open_to_all = e.value is None or one.verdict == "cannot judge"
+    expected = "" if open_to_all else f"{e.value:.3g} ({e.low:.3g} to {e.high:.3g})"
+    if brief:
+        beside = "which the others do not determine" if open_to_all else f"expected {expected}"
+        return f"{spoken(claim.quantity)} ({number}; {beside})"
+    text = f"{spoken(claim.quantity)} is given as {number}, "
+    if open_to_all:
+        return text + "which the other claims do not determine"
+    return text + f"the other claims lead one to expect {expected}"
+
+
+def verdict_of(
+    claims: Sequence[Claim], judged: Sequence[Judged], named: Sequence[int], finding: Finding
+) -> str:
+    """The verdict in one to four sentences."""
+    if named:
+        return _disagreement(claims, judged, named, finding)
     strained = [j.quantity for j in judged if j.verdict == "strained"]
-    open_ones = [j for j in judged if j.verdict == "cannot judge"]
-    if odd is not None:
-        one = next(j for j in judged if j.quantity == odd)
-        expected = one.expected.value or float("nan")
-        text = (
-            f"One claim does not fit the others: {spoken(odd)} is given as {one.claimed:.3g}, the "
-            f"other claims lead one to expect {expected:.3g} ({one.expected.low:.3g} to "
-            f"{one.expected.high:.3g})."
-        )
-        if rivals:
-            text += (
-                f" The same disagreement shows in {_listed(rivals)}; which of them is off cannot "
-                "be told from the sheet alone."
-            )
-        return text
+    open_ones = [j.quantity for j in judged if j.verdict == "cannot judge"]
     if len(open_ones) == len(judged):
         return "The claims do not determine each other: nothing can be said about the sheet."
-    text = "The sheet hangs together within its tolerances"
+    few = 2 * len(open_ones) > len(judged)
+    text = "What can be judged of the sheet" if few else "The sheet"
+    text += " hangs together within its tolerances"
     if strained:
         text += f", though {_listed(strained)} " + ("lies" if len(strained) == 1 else "lie")
         text += " near the edge of what the others allow"
-    return text + "."
+    text += "."
+    if open_ones:
+        text += f" {_upper(_listed(open_ones))} cannot be judged from the others."
+    return text
+
+
+def _disagreement(
+    claims: Sequence[Claim], judged: Sequence[Judged], named: Sequence[int], finding: Finding
+) -> str:
+    alone = _given(claims[named[0]], judged[named[0]])
+    if not finding.rest_agrees:
+        return (
+            f"The claims do not hang together, and leaving out up to {MOST} of them does not mend "
+            "it: which of them are off cannot be told from the sheet alone. What stands out most: "
+            f"{alone}."
+        )
+    suspects = [*named, *finding.rivals]
+    given = [_given(claims[i], judged[i], brief=True) for i in suspects]
+    rest = len(claims) > len(suspects)
+    if finding.rivals:
+        count = "Two" if len(suspects) == 2 else "Some"
+        text = f"{count} claims contradict each other: {_joined(given)}."
+        if len(named) == 1:
+            text += " Any one of them may be off" if len(suspects) > 2 else " Either may be off"
+            text += ": without it the rest hangs together" if rest else ""
+        else:
+            text += f" {_number(len(named))} of them are off"
+        return text + ". Which, cannot be told from the sheet alone."
+    end = " The rest hangs together." if len(claims) - len(named) > 1 else ""
+    if len(named) == 1:
+        return f"One claim does not fit the others: {alone}.{end}"
+    return f"{_number(len(named))} claims do not fit the others: {_joined(given)}.{end}"
+
+
+def _number(count: int) -> str:
+    return {2: "Two", 3: "Three", 4: "Four"}.get(count, str(count))
+
+
+def _joined(words: Sequence[str]) -> str:
+    return ", ".join(words[:-1]) + " and " + words[-1]
 
 
 def explain(
     sheet: Sheet,
+    claims: Sequence[Claim],
     judged: Sequence[Judged],
-    odd: str | None,
-    rivals: Sequence[str],
+    named: Sequence[int],
+    finding: Finding,
+    fits: Mapping[int, Sequence[str]],
+    dependent: Sequence[int],
     index: float | None,
-    quantities: Sequence[Claim],
-    left_out: Sequence[Expected],
     card: Polymer,
 ) -> tuple[str, ...]:
-    """Sentences on what may be behind it; none for a sheet that hangs together."""
-    by_name = {j.quantity: j for j in judged}
+    """Sentences on what may be behind it; none for a sheet that hangs together.
+
+    Parameters
+    ----------
+    sheet : Sheet
+    claims, judged : sequences
+    named : sequence of int
+        Claims that do not belong, the one that stands out most first.
+    finding : Finding
+    fits : mapping
+        Claim -> causes that bring its number in line.
+    dependent : sequence of int
+        Claims that follow from others on the sheet.
+    index : float or None
+        Branching index of the claimed viscosities.
+    card : Polymer
+    """
     out: list[str] = []
-    if odd is not None:
-        names = [c.quantity for c in quantities]
-        i = names.index(odd)
-        claim, one = quantities[i], by_name[odd]
-        tried = _tried(claim, one, i, quantities, left_out[i])
-        if tried:
-            out.append("It would fit " + "; or ".join(tried) + ".")
-        out.extend(_by_nature(claim, one, judged, card))
+    if finding.causes:
+        out.append("All claims would fit each other " + "; or ".join(finding.causes) + ".")
+    several = len(named) + len(finding.rivals) > 1
+    for i in (*named, *finding.rivals):
+        if fits.get(i) and not finding.causes:
+            subject = _upper(spoken(claims[i].quantity)) if several else "It"
+            out.append(f"{subject} would fit " + "; or ".join(fits[i]) + ".")
+    for i in (*named, *finding.rivals):
+        text = by_nature(claims[i], judged[i])
+        if text and text not in out:
+            out.append(text)
+    for i in dependent:
+        if judged[i].verdict in ("strained", "inconsistent") and named:
+            out.append(
+                f"{_upper(spoken(claims[i].quantity))} is the quotient of two numbers of the "
+                "sheet and goes with them."
+            )
+    out += _densities(claims, card)
     if index is not None and index > BRANCHED_INDEX and sheet.branching != "some":
         out.append(
             f"Zero-shear and intrinsic viscosity together give a branching index of {index:.2f}, "
             "where linear polyethylene gives 0: long-chain branches raise it, and so does a "
             "viscosity that was extrapolated."
         )
-    if odd is not None or any(j.verdict == "strained" for j in judged):
-        out.append(
-            "Sheets often quote typical values rather than limits of a specification, from "
-            "different lots and laboratories: asking which lot and which method each number is "
-            "from is the first step."
-        )
+    if named or any(j.verdict == "strained" for j in judged):
+        out.append(TYPICAL)
     return tuple(out)
 
 
-def _tried(
-    claim: Claim, one: Judged, i: int, quantities: Sequence[Claim], left_out: Expected
-) -> list[str]:
-    """Causes that bring the number in line, the best first."""
-    found: list[tuple[float, str]] = []
-    mean, spread = left_out.mean_and_spread(i)
-    width = float(np.hypot(spread, 0.5 * claim.tolerance))
-    gap = float(np.log(claim.value)) - mean
-    for slip in SLIPS:
-        distance = abs(gap - np.log(slip)) / width
-        if distance < FITS and abs(gap) > 1.5:
-            found.append((distance, f"if a unit had slipped by a factor {slip:g}"))
-    for k, other in enumerate(quantities):
-        if not other.quantity.startswith(f"{claim.quantity}|"):
-            continue
-        centre, scatter = left_out.mean_and_spread(k)
-        if not np.isfinite(centre):
-            continue
-        distance = abs(np.log(claim.value) - centre) / np.hypot(scatter, 0.5 * claim.tolerance)
-        if distance < FITS:
-            found.append((float(distance) + 0.2, _said(other.quantity.split("|")[1], claim)))
-    if claim.kind == "melt flow":
-        for factor in (SOLID_OVER_MELT, 1 / SOLID_OVER_MELT):
-            if abs(gap - np.log(factor)) / width < FITS and width < 0.09:
-                found.append(
-                    (
-                        abs(gap - np.log(factor)) / width + 0.4,
-                        "if mass and volume rate had been converted with the solid's density",
-                    )
+def _densities(claims: Sequence[Claim], card: Polymer) -> list[str]:
+    """Mass over volume rate of one load is a density: the melt's, if both are of one test."""
+    out = []
+    rates = [c for c in claims if c.kind == "melt flow"]
+    for mass in (c for c in rates if not c.volume):
+        for volume in (c for c in rates if c.volume):
+            same = abs(float(mass.load_kg or 0) - float(volume.load_kg or 0)) < 0.01
+            if not same or mass.temperature_C != volume.temperature_C:
+                continue
+            melt = card.density(mass.temperature_C) / 1000.0
+            found = mass.value / volume.value
+            if abs(np.log(found / (SOLID_OVER_MELT * melt))) < NEAR_SOLID:
+                out.append(
+                    f"Mass over volume rate at {mass.load_kg:g} kg gives a density of {found:.3g} "
+                    f"g/cm3, about the solid's; the melt's is {melt:.3g} g/cm3. One of the two may "
+                    "have been converted with the solid's density."
                 )
-    return [text for _, text in sorted(found)[:3]]
+    return out
 
 
-def _said(what: str, claim: Claim) -> str:
-    if what.startswith("load "):
-        return f"if it had been measured at {what.removeprefix('load ')}"
-    if what.startswith("at "):
-        return f"if it had been measured {what}"
-    if what == "volume":
-        mass, volume = "a mass rate in g/10 min", "a volume rate in cm3/10 min"
-        return f"if it were {mass if claim.volume else volume}"
-    if what == "equivalent":
-        return "if the average were relative to polystyrene standards"
-    words = {"Mn": "number", "Mw": "weight", "Mz": "z"}
-    return f"if it were the {words[what]} average"
-
-
-def _by_nature(claim: Claim, one: Judged, judged: Sequence[Judged], card: Polymer) -> list[str]:
-    """Causes in the material that would push this number this way."""
-    high = (one.z or 0) > 0
-    if claim.kind in ("eta0", "viscosity") and high:
-        return [
-            "A higher low-shear viscosity than the molar masses suggest is what sparse long-chain "
-            "branching, a high-molar-mass tail that the averages miss, or a filler would give."
-        ]
+def by_nature(claim: Claim, one: Judged) -> str:
+    """Causes in the material or the method that would push this number this way."""
+    if one.z is None or one.verdict in ("consistent", "cannot judge"):
+        return ""
+    high = one.z > 0
     if claim.kind in ("eta0", "viscosity"):
-        return [
-            "A lower low-shear viscosity than expected is what highly branched chains, a "
-            "plasticising additive or degradation in the test would give."
-        ]
-    if claim.kind == "melt flow" and high:
-        return [
-            "A higher melt flow than expected is what a processing aid or lubricant, visbreaking "
-            "after the molar masses were measured, or moisture would give."
-        ]
+        if high:
+            return (
+                "A higher low-shear viscosity than the other numbers suggest is what "
+                f"{STIFFER} would give."
+            )
+        return (
+            "A lower low-shear viscosity than the other numbers suggest is what highly branched "
+            f"chains, {EASIER} would give."
+        )
     if claim.kind == "melt flow":
-        return [
-            "A lower melt flow than expected is what filler, crosslinking in the test or a "
-            "high-molar-mass tail would give."
-        ]
+        cause = EASIER if high else STIFFER
+        return (
+            f"A {'higher' if high else 'lower'} melt flow than the other numbers suggest is what "
+            f"{cause} would give."
+        )
     if claim.kind == "flow rate ratio":
-        return [
-            "A flow rate ratio off the others is what branching (more) or visbreaking (less) "
-            "would give, or rates from two different lots."
-        ]
-    if claim.kind == "activation energy" and high:
-        return ["A higher activation energy than the linear polymer's speaks for branches."]
-    if claim.kind in ("Mn", "Mw", "Mz", "dispersity"):
-        return [
-            "Averages depend on calibration, baseline and integration limits: it is worth asking "
-            "whether the masses are absolute, universal or relative to standards."
-        ]
-    return []
+        if high:
+            return (
+                "A higher flow rate ratio than the other numbers suggest is what long-chain "
+                "branching or a broader distribution would give, or rates from two lots."
+            )
+        return (
+            "A lower flow rate ratio than the other numbers suggest is what visbreaking, which "
+            "narrows the distribution, would give, or rates from two lots."
+        )
+    if claim.kind == "crossover omega":
+        return (
+            f"A crossover at a {'higher' if high else 'lower'} frequency than the other numbers "
+            f"suggest is what {EASIER if high else STIFFER} would give."
+        )
+    if claim.kind == "crossover G":
+        return (
+            "The crossover modulus goes with the breadth of the distribution "
+            f"({'narrower' if high else 'broader'} here): visbreaking narrows it, blending and "
+            "long-chain branching broaden it."
+        )
+    if claim.kind == "activation energy":
+        if high:
+            return (
+                "A higher activation energy than the linear polymer's is what long-chain "
+                "branching or comonomer would give."
+            )
+        return (
+            "A lower activation energy than the linear polymer's is what crosslinking during the "
+            "test, or temperatures that the sample did not reach, would give."
+        )
+    if claim.kind == "intrinsic viscosity":
+        if high:
+            return (
+                "A higher intrinsic viscosity than the other numbers suggest points to another "
+                "solvent or temperature, or to the melt having changed after it was measured."
+            )
+        return (
+            "A lower intrinsic viscosity than the other numbers suggest is what long-chain "
+            "branching (coils are smaller) or gel lost in filtering would give."
+        )
+    if claim.kind == "dispersity":
+        return (
+            "The dispersity hangs on Mn, and so on the GPC's baseline and integration limits: "
+            "asking for them is worth while."
+        )
+    return (
+        f"{'Higher' if high else 'Lower'} molar masses than the other numbers suggest: averages "
+        "depend on calibration, baseline and integration limits, and it is worth asking whether "
+        "they are absolute, universal or relative to standards. Read the other way round, the melt "
+        f"flows {'more' if high else 'less'} easily than these masses suggest, which "
+        f"{EASIER if high else STIFFER} would give."
+    )
+
+
+def _upper(text: str) -> str:
+    return text[:1].upper() + text[1:]
