@@ -66,7 +66,18 @@ class TargetText(click.ParamType):
 @click.command()
 @click.argument("inputs", type=INPUT, nargs=-1, required=True)
 @click.option("--fractions", type=Fractions(), help="By weight, of polymer; sum 1 or 100.")
-@click.option("--target", type=TargetText(), help="Seek the first component's fraction for this.")
+@click.option(
+    "--target",
+    "targets",
+    type=TargetText(),
+    multiple=True,
+    help="Seek the fraction for this value, or range LOW:HIGH. May be given again: all at once.",
+)
+@click.option(
+    "--vary",
+    metavar="NAME",
+    help="Component whose fraction is varied, the others in their proportions. Default: the first.",
+)
 @click.option("--trust", type=INPUT, help="What blendcheck found: trust.toml.")
 @click.option(
     "--route",
@@ -89,7 +100,8 @@ class TargetText(click.ParamType):
 def command(
     inputs: tuple[Path, ...],
     fractions: tuple[float, ...] | None,
-    target: str | None,
+    targets: tuple[str, ...],
+    vary: str | None,
     trust: Path | None,
     route: str | None,
     polymer: str | None,
@@ -115,11 +127,12 @@ def command(
 
     Targets: viscosity_Pa_s@OMEGA, eta0_Pa_s, MFR_g_per_10min@KG, tan_delta@OMEGA,
     crossover_omega_rad_per_s. Every property against the fraction is written too.
+    With more than two components the others keep their proportions.
     """
     from mwdlink.decisions.blend import blend
     from mwdlink.files.study import read_trust
 
-    if fractions is None and target is None:
+    if fractions is None and not targets:
         raise click.UsageError("Give --fractions, or a --target to find them.")
     components, card, celsius, uncertainty, read = _components(
         inputs, polymer, temperature, reading, calibration, outside
@@ -136,7 +149,8 @@ def command(
             fractions,
             card,
             trust=found,
-            target=target,
+            target=list(targets),
+            vary=vary,
             route=route,
             kernels=kernels or None,
             exponent=exponent,

@@ -21,7 +21,6 @@ from mwdlink.cli.options import (
     reading_options,
 )
 
-
 gpc_error_option = click.option(
     "--gpc-error",
     type=Number("R", 0, 0.5, percent=True, open_low=False),

@@ -2,233 +2,26 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
-from typing import Any, ClassVar
+from collections.abc import Sequence
+from typing import Any
 
 import numpy as np
 
-from mwdlink.chains.distribution import Distribution
 from mwdlink.chains.melt import Melt
 from mwdlink.chains.polymer import Polymer
-from mwdlink.decisions.blend_compute import Computed, Settings, compute
-from mwdlink.decisions.blend_live import live_payload
-from mwdlink.decisions.blend_routes import Map, map_columns
-from mwdlink.decisions.blend_target import Target, TargetFound, parse_target
+from mwdlink.decisions.blend_compute import Settings, compute
+from mwdlink.decisions.blend_result import Blend
+from mwdlink.decisions.blend_target import Target, parse_target
 from mwdlink.decisions.components import (
     Component,
-    Validity,
     as_components,
     check_fractions,
     settled,
     validity_of,
 )
-from mwdlink.decisions.ensemble import ExponentBelief
-from mwdlink.decisions.gpc_band import error_asked, gpc_limits
-from mwdlink.decisions.predict import band_words, model_payload
-from mwdlink.decisions.predicted import Outputs, frames, quoted
+from mwdlink.decisions.gpc_band import error_asked
 from mwdlink.decisions.trust import Trust
 from mwdlink.errors import Caution, InputError, merge_cautions
-from mwdlink.quantity import Uncertain
-from mwdlink.relaxation.mixing import Model
-from mwdlink.relaxation.spectrum import Spectrum
-from mwdlink.result import Result
-
-
-@dataclass(frozen=True, eq=False)
-class Blend(Result):
-    """A predicted blend.
-
-    Attributes
-    ----------
-    components : tuple of Component
-    fractions : ndarray of shape (n,)
-        Weight fractions of polymer [-], sum 1.
-    polymer : Polymer
-    melt : Melt
-    route : str
-        `sweeps` or `distributions`: what the curves rest on.
-    model : Model
-        Of the central curves; the kernel has no part in the route through sweeps.
-    kernels : tuple of str
-        In the band.
-    belief : ExponentBelief
-    distribution : Distribution or None
-        The blend's, where every component's is known.
-    averages, average_bands : mapping
-        Mn, Mw, Mz, dispersity; empty where a distribution is missing.
-    spectrum : Spectrum
-    outputs : Outputs
-    map : Map
-        Every property against the fraction of the first component.
-    difference : mapping or None
-        How the other route differs: `storage_decades`, `loss_decades` (root mean square over the
-        common frequencies), `eta0_ratio`.
-    classical : mapping
-        What the log-additive and the Mw-additive rule give for eta0, where the components' is
-        known.
-    validity : Validity
-    target : TargetFound or None
-    trust : Trust or None
-    computed : Computed
-        What the pictures that move need.
-    members : int
-    warnings : tuple of Caution
-    """
-
-    command: ClassVar[str] = "blend"
-    main_table: ClassVar[str] = "sweep.csv"
-
-    components: tuple[Component, ...]
-    fractions: np.ndarray
-    polymer: Polymer
-    melt: Melt
-    route: str
-    model: Model
-    kernels: tuple[str, ...]
-    belief: ExponentBelief
-    distribution: Distribution | None
-    averages: Mapping[str, float]
-    average_bands: Mapping[str, Uncertain]
-    spectrum: Spectrum
-    outputs: Outputs
-    map: Map
-    difference: Mapping[str, Any] | None
-    classical: Mapping[str, Any]
-    validity: Validity
-    target: TargetFound | None
-    trust: Trust | None
-    computed: Computed = field(repr=False)
-    members: int = 0
-    warnings: tuple[Caution, ...] = ()
-
-    @property
-    def names(self) -> tuple[str, ...]:
-        """The components' names."""
-        return tuple(c.name for c in self.components)
-
-    def payload(self) -> dict[str, Any]:
-        blocks = self.outputs.blocks(self.averages, self.average_bands)
-        model = model_payload(self.model, self.kernels, self.belief, self.members)
-        c = self.computed
-        model["band_gpc"] = c.gpc.to_dict() if c.gpc is not None and c.gpc_in_curves else None
-        if self.route == "sweeps":
-            model |= {"kernel": None, "band_kernels": []}
-        return {
-            **blocks,
-            "blend": {
-                "fractions": dict(zip(self.names, self.fractions.tolist(), strict=True)),
-                "route": self.route,
-                "Gr": self.validity.Gr,
-                "Mw_ratio": self.validity.ratio,
-                "Z": dict(self.validity.Z),
-                "routes_differ": self.difference,
-                "trust": None if self.trust is None else list(self.trust.blends),
-            },
-            "target": None if self.target is None else self.target.to_dict(),
-            "classical": dict(self.classical),
-            "temperature_C": self.melt.temperature_C,
-            "central_model": model,
-        }
-
-    def tables(self) -> dict[str, Any]:
-        import pandas as pd
-
-        out = frames(self.outputs)
-        if self.distribution is not None:
-            out["distribution.csv"] = self.distribution.to_frame()
-        out["fractions.csv"] = pd.DataFrame(map_columns(self.map, list(self.names), self.fractions))
-        if self.computed.classical_columns:
-            out["classical.csv"] = pd.DataFrame(dict(self.computed.classical_columns))
-        return out
-
-    def live_data(self) -> dict[str, Any] | None:
-        """Curves and properties for a page with a slider; None unless there are two components."""
-        return live_payload(self)
-
-    def answer(self) -> str:
-        recipe = " + ".join(
-            f"{100 * f:.4g} % {n}" for n, f in zip(self.names, self.fractions, strict=True)
-        )
-        eta0 = self.outputs.bands.get("eta0_Pa_s", self.outputs.values.get("eta0_Pa_s"))
-        bound = isinstance(eta0, Uncertain) and eta0.status == "lower_bound"
-        least = "at least " if bound else ""
-        text = f"{recipe} has a zero-shear viscosity of {least}{quoted(eta0, 'Pa s')}"
-        text += f" at {self.melt.temperature_C:g} C."
-        if self.target is not None:
-            text += f" {self._target_words()}"
-        return text
-
-    def _target_words(self) -> str:
-        t = self.target
-        assert t is not None  # called only with a target
-        if not t.fractions:
-            return f"Target {t.target.key} = {t.target.wanted:.4g}: {t.reason}"
-        parts = []
-        for f in t.fractions:
-            span = ""
-            if f.low is not None and f.high is not None:
-                span = f" ({100 * f.low:.3g} to {100 * f.high:.3g} %)"
-            parts.append(f"{100 * (f.value or 0.0):.3g} %{span}")
-        return (
-            f"{t.target.key} = {t.target.wanted:.4g} is met at {' and '.join(parts)} of "
-            f"{t.component}."
-        )
-
-    def paragraph(self) -> str:
-        if self.route == "sweeps":
-            how = (
-                "Predicted from the components' own measured spectra, "
-                f"G = (sum of phi G_i^(1/b))^b with b = {self.model.exponent:.3g} "
-                f"({self.belief.source}); no distribution and no kernel enters."
-            )
-        else:
-            how = (
-                f"Predicted from the components' distributions with the {self.model.kernel} kernel "
-                f"and a mixing exponent of {self.model.exponent:.3g} ({self.belief.source})."
-            )
-            if self.members:
-                gpc = self.computed.gpc if self.computed.gpc_in_curves else None
-                how += " " + band_words(self.kernels, self.belief, self.melt, self.members, gpc)
-        text = f"{self.answer()} {how}"
-        if self.trust is not None:
-            text += (
-                f" The band holds the error found on {len(self.trust.blends)} measured blends of "
-                "known fractions."
-            )
-        if self.difference is not None:
-            text += (
-                f" The route through {self.difference['other_route']} differs by "
-                f"{self.difference['loss_decades']:.2g} decades in G''."
-            )
-        return text
-
-    def cannot_say(self) -> tuple[str, ...]:
-        out = [
-            "The rule is for linear chains of one polymer, mixed on the scale of molecules: a "
-            "powder mix that is not molecularly mixed obeys no rule.",
-        ]
-        if self.trust is None:
-            out.append(
-                "Without measured blends of known fractions (blendcheck) the rule's own error is "
-                "only the spread of kernels and exponents."
-            )
-        if self.route == "sweeps" and not self.computed.terminal:
-            out.append(
-                "The components' sweeps do not reach terminal flow: zero-shear viscosity and "
-                "compliance of the blend are lower bounds, the melt flow rate may be unknown."
-            )
-        if self.distribution is not None:
-            own = [c.distribution for c in self.components]
-            c = self.computed
-            if self.route == "distributions" and c.gpc is not None and not c.gpc_in_curves:
-                out.append(
-                    "Errors of the GPC are in the band as part of the error that the measured "
-                    "blends of the same components have shown, not a second time."
-                )
-            elif self.route == "distributions":
-                out.extend(gpc_limits(own, c.gpc))  # type: ignore[arg-type]
-        return tuple(out)
 
 
 def blend(
@@ -237,7 +30,8 @@ def blend(
     polymer: Polymer,
     *,
     trust: Trust | None = None,
-    target: Target | str | None = None,
+    target: Any = None,
+    vary: str | None = None,
     route: str | None = None,
     kernels: Any = None,
     exponent: Any = None,
@@ -262,9 +56,12 @@ def blend(
     polymer : Polymer
     trust : Trust, optional
         What `check_blends` found: exponent and error of the rule.
-    target : str or Target, optional
-        `viscosity_Pa_s@0.1=2e4` and the like; the first component's fraction is sought, the
-        others keep their proportions.
+    target : str or Target, or a sequence of them, optional
+        `viscosity_Pa_s@0.1=2e4` and the like, or a range `eta0_Pa_s=1e4:2e4` with either end
+        left out; one component's fraction is sought, the others keep their proportions.
+    vary : str, optional
+        Name of the component whose fraction is varied, in the map and for targets; it comes first
+        in the result. Default: the first.
     route : str, optional
         `sweeps` or `distributions`; default sweeps where all components have them.
     kernels, exponent, rouse, temperature_C, members, seed
@@ -296,8 +93,9 @@ def blend(
     if fractions is None:
         fractions = np.full(len(parts), 1.0 / len(parts))
     phi = check_fractions(fractions, len(parts))
+    parts, phi = _varied_first(parts, phi, vary)
     melt = polymer.melt(temperature_C)
-    wish = None if target is None else parse_target(target)
+    wishes = _targets(target)
     ready, notes = settled(parts, polymer, melt.temperature_C)
     valid = validity_of(ready, phi, melt)
     if trust is not None and trust.polymer and trust.polymer != polymer.name:
@@ -316,7 +114,7 @@ def blend(
         members=int(members),
         seed=int(seed),
         trust=trust,
-        target=wish,
+        targets=wishes,
         gpc_error=error_asked(gpc_error),
     )
     c = compute(ready, phi, melt, settings)
@@ -346,12 +144,46 @@ def blend(
         difference=c.difference,
         classical=c.classical,
         validity=valid,
-        target=c.target,
+        targets=c.targets,
+        all_met=c.all_met,
         trust=trust,
         computed=c,
         members=int(members),
         warnings=warnings,
     )
+
+
+def _targets(given: Any) -> tuple[Target, ...]:
+    if given is None:
+        return ()
+    # a tuple may be one target, (name, value)
+    one = isinstance(given, (str, Target)) or (isinstance(given, tuple) and _is_pair(given))
+    several = [given] if one else list(given)
+    found = tuple(parse_target(t) for t in several)
+    if len(set(found)) < len(found):
+        raise InputError("one target is given twice.", remedy="Give each once.")
+    return found
+
+
+def _is_pair(given: tuple[Any, ...]) -> bool:
+    return len(given) == 2 and not isinstance(given[1], (Target, tuple)) and "=" not in str(given)
+
+
+def _varied_first(
+    parts: tuple[Component, ...], phi: np.ndarray, vary: str | None
+) -> tuple[tuple[Component, ...], np.ndarray]:
+    """Components and fractions with the one to vary in front."""
+    if vary is None:
+        return parts, phi
+    names = [c.name for c in parts]
+    if vary not in names:
+        raise InputError(
+            f"there is no component {vary!r} to vary.",
+            remedy=f"Components are {', '.join(names)}.",
+        )
+    i = names.index(vary)
+    order = [i, *[j for j in range(len(parts)) if j != i]]
+    return tuple(parts[j] for j in order), phi[order]
 
 
 def _route(components: Sequence[Component], wanted: str | None) -> str:

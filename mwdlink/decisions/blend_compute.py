@@ -42,7 +42,8 @@ from mwdlink.decisions.blend_sweeps import (
     Quadratic,
     modes_of,
 )
-from mwdlink.decisions.blend_target import Target, TargetFound, find_fractions
+from mwdlink.decisions.blend_target import Target, TargetFound
+from mwdlink.decisions.blend_targets import AllMet, find_all
 from mwdlink.decisions.components import Component
 from mwdlink.decisions.ensemble import (
     Draws,
@@ -85,7 +86,7 @@ class Settings:
     members: int = 200
     seed: int = 0
     trust: Trust | None = None
-    target: Target | None = None
+    targets: tuple[Target, ...] = ()
     gpc_error: GpcError | None = None
 
     @property
@@ -112,7 +113,8 @@ class Computed:
     classical_columns: Mapping[str, np.ndarray]
     gpc: GpcBand | None
     gpc_in_curves: bool
-    target: TargetFound | None
+    targets: tuple[TargetFound, ...]
+    all_met: AllMet | None
     terminal: bool
     quadratic: Quadratic | None
     central: Any
@@ -184,7 +186,7 @@ def compute(components: Sequence[Component], phi: np.ndarray, melt: Melt, s: Set
         )
     terminal = s.route == "distributions" or measured is None or measured.terminal
     offsets = RuleOffsets.of(error, s.members, s.seed) if error and s.members else None
-    frequencies_at, loads = _asked(s.target)
+    frequencies_at, loads = _asked(s.targets)
 
     central = route.central(phi)
     recorder = Recorder(w)
@@ -227,19 +229,9 @@ def compute(components: Sequence[Component], phi: np.ndarray, melt: Melt, s: Set
         route, phi, sample_first, inner, melt.density, loads, frequencies_at, fix, offsets, s
     )
     m = band_map(first, central_values, sample_first, sampled)
-    others = [c.name for c in components[1:]]
-    target = None
-    if s.target is not None:
-        nothing = np.full(first.size, np.nan)
-        target = find_fractions(
-            s.target,
-            components[0].name,
-            first,
-            m.values.get(s.target.key, nothing),
-            sample_first,
-            sampled.get(s.target.key),
-            others,
-        )
+    targets, all_met = find_all(
+        s.targets, [c.name for c in components], phi, first, m.values, (sample_first, sampled)
+    )
     averages = {}
     if known:
         averages = {k: float(v[0]) for k, v in exact_averages(components, phi[None, :]).items()}
@@ -278,7 +270,8 @@ def compute(components: Sequence[Component], phi: np.ndarray, melt: Melt, s: Set
         classical_columns=columns,
         gpc=gpc,
         gpc_in_curves=gpc_in_curves,
-        target=target,
+        targets=targets,
+        all_met=all_met,
         terminal=terminal,
         quadratic=quadratic,
         central=route,
@@ -297,10 +290,12 @@ def _belief(melt: Melt, s: Settings) -> ExponentBelief:
     return exponent_belief(melt, s.exponent)
 
 
-def _asked(target: Target | None) -> tuple[tuple[float, ...], tuple[float, ...]]:
-    """Frequencies and loads of the properties, the target's among them."""
+def _asked(targets: Sequence[Target]) -> tuple[tuple[float, ...], tuple[float, ...]]:
+    """Frequencies and loads of the properties, the targets' among them."""
     w, loads = list(INDEX_FREQUENCIES), list(STANDARD_LOADS_KG)
-    if target is not None and target.at is not None:
+    for target in targets:
+        if target.at is None:
+            continue
         into = loads if target.name.startswith("MFR") else w
         if not any(abs(x / target.at - 1) < 1e-9 for x in into):
             into.append(target.at)

@@ -10,7 +10,7 @@ from mwdlink.decisions.blend_routes import along, column_of
 from mwdlink.quantity import to_plain
 
 if TYPE_CHECKING:
-    from mwdlink.decisions.blend import Blend
+    from mwdlink.decisions.blend_result import Blend
 
 GRID = 41
 
@@ -46,7 +46,7 @@ def live_payload(blend: Blend) -> dict[str, Any] | None:
     if band:
         out["band"] = band
     out["properties"] = _properties(blend)
-    if blend.target is not None:
+    if blend.target is not None and blend.target.target.wanted is not None:
         out["target"] = {
             "key": blend.target.target.key,
             "wanted": blend.target.target.wanted,

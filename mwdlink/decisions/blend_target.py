@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
@@ -24,41 +24,62 @@ TARGETS_AT = {"viscosity_Pa_s": "rad/s", "tan_delta": "rad/s", "MFR_g_per_10min"
 
 _FORMS = (
     "viscosity_Pa_s@0.1=2e4, eta0_Pa_s=1e4, MFR_g_per_10min@2.16=1.5, tan_delta@0.1=3 or "
-    "crossover_omega_rad_per_s=20"
+    "crossover_omega_rad_per_s=20, or with a range, eta0_Pa_s=1e4:2e4, eta0_Pa_s=:2e4, "
+    "eta0_Pa_s=1e4:"
 )
 
 
 @dataclass(frozen=True)
 class Target:
-    """A wanted value of a property.
+    """A wanted value of a property, or a range it must lie in.
 
     Attributes
     ----------
     name : str
         Property, such as `viscosity_Pa_s`.
-    wanted : float
-        > 0.
+    wanted : float or None
+        > 0; None where a range is wanted.
     at : float or None
         Frequency [rad/s] or load [kg].
+    low, high : float or None
+        Ends of the range; None is open. Both None where one value is wanted.
     """
 
     name: str
-    wanted: float
+    wanted: float | None
     at: float | None = None
+    low: float | None = None
+    high: float | None = None
 
     @property
     def key(self) -> str:
         """Its name among the properties: `viscosity_Pa_s@0.1`."""
         return self.name if self.at is None else f"{self.name}@{self.at:g}"
 
+    def words(self) -> str:
+        """What is wanted, for a sentence."""
+        if self.wanted is not None:
+            return f"{self.key} = {self.wanted:.4g}"
+        if self.low is None:
+            return f"{self.key} up to {self.high:.4g}"
+        if self.high is None:
+            return f"{self.key} from {self.low:.4g} up"
+        return f"{self.key} from {self.low:.4g} to {self.high:.4g}"
+
+    def holds(self, values: np.ndarray) -> np.ndarray:
+        """Whether values lie in the range (NaN does not)."""
+        low = 0.0 if self.low is None else self.low * (1 - 1e-12)
+        high = np.inf if self.high is None else self.high * (1 + 1e-12)
+        return (values >= low) & (values <= high)
+
 
 def parse_target(text: Any) -> Target:
-    """A target from `NAME=VALUE` or `NAME@AT=VALUE`.
+    """A target from `NAME=VALUE` or `NAME@AT=VALUE`; the value may be a range `LOW:HIGH`.
 
     Raises
     ------
     InputError
-        Another form, an unknown property, or a value that is not positive.
+        Another form, an unknown property, a value that is not positive, a range upside down.
     """
     if isinstance(text, Target):
         return text
@@ -73,18 +94,29 @@ def parse_target(text: Any) -> Target:
     if (at is None) != (name in PLAIN_TARGETS):
         where = f"needs its {TARGETS_AT[name]}" if at is None else "takes no @"
         raise InputError(f"the target {name} {where}.", remedy=f"Targets read {_FORMS}.")
-    numbers = []
-    for part in (value, at):
-        try:
-            x = None if part is None else float(part)
-        except ValueError:
-            x = -1.0
-        if x is not None and not (np.isfinite(x) and x > 0):
-            raise InputError(
-                f"{part!r} in the target is no positive number.", remedy=f"Targets read {_FORMS}."
-            )
-        numbers.append(x)
-    return Target(name, float(numbers[0]), numbers[1])  # type: ignore[arg-type]
+    place = None if at is None else _positive(at)
+    if ":" not in value:
+        return Target(name, _positive(value), place)
+    first, _, second = value.partition(":")
+    low = _positive(first) if first else None
+    high = _positive(second) if second else None
+    if (low is None and high is None) or (low is not None and high is not None and low >= high):
+        raise InputError(
+            f"{value!r} in the target is no range that rises.", remedy=f"Targets read {_FORMS}."
+        )
+    return Target(name, None, place, low, high)
+
+
+def _positive(part: str) -> float:
+    try:
+        x = float(part)
+    except ValueError:
+        x = -1.0
+    if not (np.isfinite(x) and x > 0):
+        raise InputError(
+            f"{part!r} in the target is no positive number.", remedy=f"Targets read {_FORMS}."
+        )
+    return x
 
 
 @dataclass(frozen=True)
@@ -97,13 +129,20 @@ class TargetFound:
     component : str
         Whose fraction is given; the others keep their proportions.
     fractions : tuple of Uncertain
-        Each fraction that meets it [-], rising.
+        Each fraction that meets it [-], rising; of a range the best one in each stretch that
+        lies within, without an interval.
     shares : tuple of float
         Of the ensemble's members, how many meet the target near that fraction.
     reachable : (float, float) or None
         Range of the property over all fractions, central prediction.
     reason : str
         Why there is none or more than one, or what the interval holds.
+    windows : tuple of (float, float)
+        Of a range: each stretch of fractions [-] over which the central prediction lies in it.
+    sure : tuple of (float, float) or None
+        Of each stretch the part over which nine in ten members do.
+    rest : mapping of str to float
+        Shares of the other components in what is not `component`, sum 1.
     """
 
     target: Target
@@ -112,6 +151,9 @@ class TargetFound:
     shares: tuple[float, ...]
     reachable: tuple[float, float] | None
     reason: str
+    windows: tuple[tuple[float, float], ...] = ()
+    sure: tuple[tuple[float, float] | None, ...] = ()
+    rest: Mapping[str, float] = field(default_factory=dict)
 
     def to_dict(self) -> dict[str, Any]:
         out: dict[str, Any] = {
@@ -122,8 +164,35 @@ class TargetFound:
             "members_that_meet_it": list(self.shares),
             "reachable": None if self.reachable is None else list(self.reachable),
             "reason": self.reason,
+            "rest": dict(self.rest),
         }
+        if self.target.wanted is None:
+            out["range"] = {"low": self.target.low, "high": self.target.high}
+            out["windows"] = [
+                {
+                    "low": low,
+                    "high": high,
+                    "sure": None if sure is None else {"low": sure[0], "high": sure[1]},
+                }
+                for (low, high), sure in zip(self.windows, self.sure, strict=True)
+            ]
         return out
+
+    def words(self) -> str:
+        """Where it is met, in a sentence."""
+        if not self.fractions:
+            return f"Target {self.target.words()}: {self.reason}"
+        parts = []
+        for i, f in enumerate(self.fractions):
+            span = ""
+            if self.windows:
+                low, high = self.windows[i]
+                parts.append(f"{100 * low:.3g} to {100 * high:.3g} %")
+                continue
+            if f.low is not None and f.high is not None:
+                span = f" ({100 * f.low:.3g} to {100 * f.high:.3g} %)"
+            parts.append(f"{100 * (f.value or 0.0):.3g} %{span}")
+        return f"{self.target.words()} is met at {' and '.join(parts)} of {self.component}."
 
 
 def roots_along(phi: np.ndarray, values: np.ndarray, wanted: float) -> list[float]:
@@ -162,6 +231,7 @@ def find_fractions(
     Parameters
     ----------
     target : Target
+        With a wanted value.
     component : str
     phi, values : ndarray of shape (n,)
         Central property against the fraction.
@@ -172,7 +242,7 @@ def find_fractions(
         The remaining components, for words.
     """
     good = np.isfinite(values) & (values > 0)
-    wanted, name = target.wanted, target.key
+    wanted, name = float(target.wanted or 0.0), target.key
     if not np.any(good):
         reason = f"{name} cannot be predicted at any fraction (out of reach of the curves)."
         return TargetFound(target, component, (), (), None, reason)
