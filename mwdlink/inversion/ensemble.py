@@ -43,6 +43,10 @@ WIDEN, LEAN = 1.1, 0.6
 UNMOVED = 0.15
 # the fit may narrow the exponent's prior to half its spread at most
 MOST_PRECISION = 3.0
+# at another exponent only lambdas within this of the best ln evidence are tried, this many
+SPOKEN, ASKED = 4.0, 4
+# a first scan, which only shows where there is weight, may stop this early
+ROUGHLY = 0.1
 
 
 @dataclass(frozen=True)
@@ -123,7 +127,7 @@ class Members:
 
 def local_scan(problem: Problem, u0: np.ndarray | None = None) -> tuple[Problem, Scan]:
     """Scan, relax the prior where there is no weight, scan again."""
-    first = scan(problem, u0, SCAN[::2], tolerance=2e-2)
+    first = scan(problem, u0, SCAN[::3], tolerance=ROUGHLY, give_up=10.0)
     mean = np.zeros(problem.size)
     for share, fit in zip(first.weights, first.fits, strict=True):
         mean += share * fit.w
@@ -150,7 +154,7 @@ def fit_branch(
         if mean != prior.mean:
             melt, model, moved = build.problem(kernel, mean)
             problem = replace(moved, prior=problem.prior)
-            found = scan(problem, found.fits[found.best].u, found.smoothing)
+            found = scan(problem, None, found.smoothing, known=found)
     return Branch(kernel, melt, model, spread, problem, found, build.plateau_factor)
 
 
@@ -169,7 +173,7 @@ def plateau_variants(make: Any, melt: Melt, rouse: bool, branch: Branch) -> list
         build = BranchBuilder(make, melt, rouse, factor)
         other, model, problem = build.problem(branch.kernel, branch.model.exponent)
         problem = replace(problem, prior=branch.problem.prior, sigma=branch.problem.sigma)
-        found = scan(problem, branch.fit.u, branch.scan.smoothing)
+        found = scan(problem, None, branch.scan.smoothing, known=branch.scan)
         out.append(
             Branch(branch.kernel, other, model, branch.exponent_spread, problem, found, factor)
         )
@@ -222,16 +226,16 @@ def _exponent_posterior(
     offsets = np.array([max(centre - reach, 1.0) - centre, 0.0, reach])
     if offsets[0] > -0.5 * reach:
         return centre, prior.spread
-    u = found.fits[found.best].u
-    values = np.unique(np.append(found.smoothing[::4], found.smoothing[found.best]))[::-1]
+    held = np.flatnonzero(found.log_evidence > found.log_evidence.max() - SPOKEN)
+    held = np.unique(held[np.linspace(0, held.size - 1, min(held.size, ASKED)).round().astype(int)])
+    values = found.smoothing[held]
     totals = []
     for d in offsets:
         if d == 0.0:
-            held = np.isin(found.smoothing, values)
             totals.append(mean_evidence(found.log_evidence[held]))
             continue
         other = build.problem(kernel, centre + d)[2]
-        side = scan(replace(other, prior=problem.prior), u, values, tolerance=2e-2)
+        side = scan(replace(other, prior=problem.prior), None, values, known=found)
         totals.append(mean_evidence(side.log_evidence))
     c2, c1, _ = np.polyfit(offsets, totals, 2)
     # the shape prior speaks in this evidence too, so it may not narrow the exponent without limit

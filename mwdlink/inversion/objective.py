@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
+from typing import Any
 
 import numpy as np
 
@@ -40,29 +42,54 @@ class Forward:
     exponent: float
     times: np.ndarray | None = None
 
+    def evaluate(self, w: np.ndarray) -> tuple[np.ndarray, Any]:
+        """Data rows [Pa], shape (n_r,), of weights w of shape (n + 2,), and what `slope` needs."""
+        s = self.survival @ w
+        p = s ** (self.exponent - 1.0)
+        return self.rows @ (p * s) + self.linear @ w, p
+
+    def slope(self, known: Any) -> np.ndarray:
+        """Derivatives of the data rows with respect to w, shape (n_r, n + 2), after `evaluate`."""
+        return self.rows @ ((self.exponent * known)[:, None] * self.survival) + self.linear
+
     def values(self, w: np.ndarray) -> np.ndarray:
         """Data rows [Pa], shape (n_r,), of weights w of shape (n + 2,)."""
-        s = self.survival @ w
-        return self.rows @ s**self.exponent + self.linear @ w
+        return self.evaluate(w)[0]
 
     def values_and_slope(self, w: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Data rows and their derivatives with respect to w, shapes (n_r,) and (n_r, n + 2)."""
-        s = self.survival @ w
-        p = s ** (self.exponent - 1.0)
-        values = self.rows @ (p * s) + self.linear @ w
-        slope = self.rows @ ((self.exponent * p)[:, None] * self.survival) + self.linear
-        return values, slope
+        values, known = self.evaluate(w)
+        return values, self.slope(known)
 
 
 def sweep_forward(omega: np.ndarray, melt: Melt, model: Model, window: Window) -> Forward:
-    """The forward map of a frequency sweep on the nodes of a window."""
+    """The forward map of a frequency sweep on the nodes of a window; kept for the next lot."""
+    return _sweep_forward(np.asarray(omega, dtype=float).tobytes(), melt, model, window)
+
+
+# three kernels at three exponents are nine; lots of one kind of measurement share them, and an
+# exponent that a lot's own data moved comes and goes (0.2 MB each)
+@lru_cache(maxsize=24)
+def _sweep_forward(omega_bytes: bytes, melt: Melt, model: Model, window: Window) -> Forward:
+    operator = time_operator(np.frombuffer(omega_bytes), LEAN_MARGIN, LEAN_TIMES)
+    rows, linear = _sweep_rows(omega_bytes, melt, model.rouse, window)
+    survival = time_columns(operator.times, melt, model, window)
+    survival.setflags(write=False)
+    return Forward(survival, rows, linear, model.exponent, operator.times)
+
+
+@lru_cache(maxsize=8)
+def _sweep_rows(
+    omega_bytes: bytes, melt: Melt, rouse: bool, window: Window
+) -> tuple[np.ndarray, np.ndarray]:
+    """What no exponent enters: the operator in Pa, and the Rouse part of each node."""
+    omega = np.frombuffer(omega_bytes)
     operator: TimeOperator = time_operator(omega, LEAN_MARGIN, LEAN_TIMES)
-    k = time_columns(operator.times, melt, model, window)
-    r = rouse_columns(omega, melt, model, window)
-    linear = np.vstack([r.real, r.imag])
-    return Forward(
-        k, operator.matrix * melt.plateau_modulus, linear, model.exponent, operator.times
-    )
+    r = rouse_columns(omega, melt, Model(rouse=rouse), window)
+    rows, linear = operator.matrix * melt.plateau_modulus, np.vstack([r.real, r.imag])
+    rows.setflags(write=False)
+    linear.setflags(write=False)
+    return rows, linear
 
 
 def time_columns(times: np.ndarray, melt: Melt, model: Model, window: Window) -> np.ndarray:

@@ -18,6 +18,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, field, replace
+from typing import Any
 
 import numpy as np
 
@@ -55,20 +56,21 @@ class ViscosityForward(Forward):
 
     omega: np.ndarray = field(default_factory=lambda: np.ones(1))
 
-    def values(self, w: np.ndarray) -> np.ndarray:
-        """|eta*| [Pa s], shape (n_w,)."""
-        moduli = super().values(w)
+    def evaluate(self, w: np.ndarray) -> tuple[np.ndarray, Any]:
+        """|eta*| [Pa s], shape (n_w,), and what `slope` needs."""
+        moduli, known = super().evaluate(w)
         n = self.omega.size
-        return np.hypot(moduli[:n], moduli[n:]) / self.omega
+        return np.hypot(moduli[:n], moduli[n:]) / self.omega, (moduli, known)
 
-    def values_and_slope(self, w: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-        """|eta*| [Pa s] and its derivatives, shapes (n_w,) and (n_w, n + 2)."""
-        moduli, slope = super().values_and_slope(w)
+    def slope(self, known: Any) -> np.ndarray:
+        """Derivatives of |eta*| [Pa s] with respect to w, shape (n_w, n + 2)."""
+        moduli, inner = known
+        rows = super().slope(inner)
         n = self.omega.size
         size = np.hypot(moduli[:n], moduli[n:])
         up, out = moduli[:n] / size, moduli[n:] / size
-        rows = up[:, None] * slope[:n] + out[:, None] * slope[n:]
-        return size / self.omega, rows / self.omega[:, None]
+        both = up[:, None] * rows[:n] + out[:, None] * rows[n:]
+        return both / self.omega[:, None]
 
 
 def relaxation_problem(

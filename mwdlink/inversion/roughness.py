@@ -9,6 +9,7 @@ and curvature keeps it a distribution.
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from functools import cached_property, lru_cache
 
 import numpy as np
 
@@ -40,7 +41,28 @@ class Roughness:
 
     def precision(self, smoothing: float) -> np.ndarray:
         """Precision matrix of the linear rows, shape (n + 2, n + 2)."""
-        return smoothing * self.third.T @ self.third + self.weak.T @ self.weak
+        return smoothing * self.rough + self.soft
+
+    @cached_property
+    def rough(self) -> np.ndarray:
+        """Of the third differences, at lambda 1."""
+        return self.third.T @ self.third
+
+    @cached_property
+    def soft(self) -> np.ndarray:
+        """Of the weak rows."""
+        return self.weak.T @ self.weak
+
+    @cached_property
+    def _log_det_at_one(self) -> float:
+        # third differences and weak rows are together as many as the nodes
+        n = self.third.shape[1] - 2
+        square = np.vstack([self.third, self.weak])[:, :n]
+        return 2.0 * float(np.linalg.slogdet(square)[1]) - 4.0 * float(np.log(LUMP_SPREAD))
+
+    def log_det(self, smoothing: float) -> float:
+        """ln det of `precision` and the lumps' own prior."""
+        return self._log_det_at_one + self.third.shape[0] * float(np.log(smoothing))
 
 
 # below this share of its highest weight a smooth ln w is a belief, not an observation: the prior is
@@ -64,6 +86,7 @@ def relieved(prior: Roughness, w: np.ndarray) -> Roughness:
     return replace(prior, third=prior.third * np.sqrt(middle)[:, None])
 
 
+@lru_cache(maxsize=16)
 def roughness(n: int, spacing: float) -> Roughness:
     """Prior rows for n nodes `spacing` decades apart.
 
@@ -80,4 +103,7 @@ def roughness(n: int, spacing: float) -> Roughness:
     pad = np.zeros((n - 3, 2))
     # the level of u is only a gauge of the softmax; its row keeps u near ln(1/n)
     centre = np.array([np.log(1.0 / n) / LEVEL_SPREAD, 0.0, CURVATURE / CURVATURE_SPREAD])
-    return Roughness(np.hstack([d3, pad]), np.hstack([rows, np.zeros((3, 2))]), centre)
+    made = (np.hstack([d3, pad]), np.hstack([rows, np.zeros((3, 2))]), centre)
+    for part in made:
+        part.setflags(write=False)
+    return Roughness(*made)

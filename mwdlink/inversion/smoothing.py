@@ -5,14 +5,16 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.linalg.lapack import dpotrf, dpotri
 
-from mwdlink.inversion.objective import LUMP_SPREAD, Problem
+from mwdlink.inversion.objective import Problem
+from mwdlink.inversion.solve import TOLERANCE as FINISH
 from mwdlink.inversion.solve import Fit, minimise
 
 # from almost log-normal to almost free, for int (d3u/dx3)^2 dx over decades
 SCAN = np.geomspace(1e1, 1e-7, 17)
 # where the scan begins: free enough to fit anything, smooth enough to converge at once
-FIRST = 1e-4
+FIRST = 1e-2
 
 
 @dataclass(frozen=True, eq=False)
@@ -85,19 +87,43 @@ def good_start(problem: Problem) -> np.ndarray:
 
 def log_evidence(problem: Problem, fit: Fit) -> float:
     """ln p(data | lambda) up to a constant of the data, by Laplace's approximation."""
+    a = problem.prior.log_det(fit.smoothing)
+    return -0.5 * fit.objective + 0.5 * a - 0.5 * _log_det(_factor(fit))
+
+
+def effective_freedom(problem: Problem, fit: Fit) -> float:
+    """Trace of the hat matrix: how many parameters the data, not the prior, fix."""
+    return _freedom(problem, fit, _factor(fit))
+
+
+def _factor(fit: Fit) -> np.ndarray:
+    """Cholesky factor of a fit's Hessian, in the upper triangle; kept off zero by a little."""
+    a = fit.hessian.copy()
+    a.flat[:: a.shape[0] + 1] += 1e-9
+    c, info = dpotrf(a.T, overwrite_a=True)
+    if info:
+        raise np.linalg.LinAlgError("the Hessian is not positive definite")
+    return c
+
+
+def _log_det(factor: np.ndarray) -> float:
+    return 2.0 * float(np.sum(np.log(factor.diagonal())))
+
+
+def _freedom(problem: Problem, fit: Fit, factor: np.ndarray) -> float:
+    inverse, _ = dpotri(factor)
     prior = problem.prior.precision(fit.smoothing)
-    n = problem.size
-    prior[n - 2, n - 2] += 1.0 / LUMP_SPREAD**2
-    prior[n - 1, n - 1] += 1.0 / LUMP_SPREAD**2
-    a = np.linalg.slogdet(prior)[1]
-    b = np.linalg.slogdet(fit.hessian + 1e-9 * np.eye(n))[1]
-    return float(-0.5 * fit.objective + 0.5 * a - 0.5 * b)
+    # LAPACK fills the upper triangle only; both matrices are symmetric
+    diagonal = np.sum(inverse.diagonal() * prior.diagonal())
+    return float(fit.u.size - 2.0 * np.sum(np.triu(inverse) * prior) + diagonal)
 
 
-# along the scan a fit may stop this early; the one chosen is finished
-ALONG = 2e-3
-# and one that is forced to be far too smooth need not be finished: its evidence is nothing
-ALONG_STEPS = 40
+# along the scan a fit may stop this early (a tenth of a standard deviation); the one chosen
+# is finished
+ALONG = 1e-2
+# and one that is forced to be far too smooth, or left far too free, need not be finished: it is
+# given this many steps, and when its neighbour's evidence was e^-HOPELESS of the best this few
+ALONG_STEPS, FEW_STEPS, HOPELESS = 40, 5, 15.0
 
 
 def scan(
@@ -105,40 +131,69 @@ def scan(
     u0: np.ndarray | None = None,
     values: np.ndarray = SCAN,
     tolerance: float = ALONG,
+    *,
+    known: Scan | None = None,
+    give_up: float | None = None,
 ) -> Scan:
     """Fit at each lambda, each started from its neighbour; from the middle both ways.
 
     A fit forced to be too smooth for the data is the hard one: it is met last, from a good start.
+
+    Parameters
+    ----------
+    problem : Problem
+    u0 : ndarray of shape (n + 2,), optional
+        Start of the first fit.
+    values : ndarray of shape (k,)
+        lambda, falling.
+    tolerance : float
+        See `minimise`.
+    known : Scan, optional
+        Of nearly the same problem: each lambda starts from its own fit there.
+    give_up : float, optional
+        Leave out what lies beyond a lambda whose ln evidence is this much below the best.
     """
+    fits: dict[int, Fit] = {}
+    factors: dict[int, np.ndarray] = {}
+    evidence: dict[int, float] = {}
+    own = {} if known is None else dict(zip(known.smoothing, known.fits, strict=True))
+
+    def keep(i: int, fit: Fit) -> None:
+        fits[i] = fit
+        factors[i] = _factor(fit)
+        half = 0.5 * (problem.prior.log_det(fit.smoothing) - _log_det(factors[i]))
+        evidence[i] = half - 0.5 * fit.objective
+
+    def solve(i: int, near: Fit | None, most: int) -> None:
+        u, damping = (u0, 1e-6) if near is None else (near.u, near.damping)
+        if values[i] in own:
+            # what moved its neighbour away from where it was before moves this one likewise
+            u = own[values[i]].u + (0.0 if near is None else near.u - own[near.smoothing].u)
+        u = good_start(problem) if u is None else u
+        value = float(values[i])
+        keep(i, minimise(problem, u, value, tolerance=tolerance, most=most, damping=damping))
+
     order = np.argsort(np.abs(np.log(values / FIRST)), kind="stable")
     first = int(order[0])
-    fits: dict[int, Fit] = {}
-    start_u = good_start(problem) if u0 is None else u0
-    fits[first] = minimise(
-        problem, start_u, float(values[first]), tolerance=tolerance, most=ALONG_STEPS
-    )
+    solve(first, None, ALONG_STEPS)
     for direction in (range(first + 1, len(values)), range(first - 1, -1, -1)):
-        u = fits[first].u
+        last = first
         for i in direction:
-            fits[i] = minimise(problem, u, float(values[i]), tolerance=tolerance, most=ALONG_STEPS)
-            u = fits[i].u
-    evidence = [log_evidence(problem, fits[i]) for i in range(len(values))]
-    best = int(np.argmax(evidence))
-    fits[best] = minimise(problem, fits[best].u, float(values[best]))
-    ordered = tuple(fits[i] for i in range(len(values)))
+            behind = max(evidence.values()) - evidence[last]
+            if give_up is not None and behind > give_up:
+                break
+            solve(i, fits[last], FEW_STEPS if behind > HOPELESS else ALONG_STEPS)
+            last = i
+    best = max(evidence, key=lambda i: evidence[i])
+    if tolerance > FINISH:
+        keep(best, minimise(problem, fits[best].u, float(values[best])))
+    index = sorted(fits)
+    ordered = tuple(fits[i] for i in index)
     rough = [float(np.sum((problem.prior.third @ f.u) ** 2)) for f in ordered]
     return Scan(
-        np.asarray(values, dtype=float),
+        np.asarray(values, dtype=float)[index],
         ordered,
-        np.array([log_evidence(problem, f) for f in ordered]),
+        np.array([evidence[i] for i in index]),
         np.asarray(rough),
-        np.array([effective_freedom(problem, f) for f in ordered]),
+        np.array([_freedom(problem, fits[i], factors[i]) for i in index]),
     )
-
-
-def effective_freedom(problem: Problem, fit: Fit) -> float:
-    """Trace of the hat matrix: how many parameters the data, not the prior, fix."""
-    prior = problem.prior.precision(fit.smoothing)
-    data = fit.hessian - prior
-    solved = np.linalg.solve(fit.hessian + 1e-9 * np.eye(problem.size), data)
-    return float(np.trace(solved))

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any, NamedTuple
 
 import numpy as np
 from scipy.linalg.lapack import dposv
@@ -13,6 +14,12 @@ from mwdlink.inversion.roughness import LUMP_CENTRE, LUMP_SPREAD
 MAX_STEPS = 300
 # a step that promises less than this much of the objective (0.03 standard deviations) is the end
 TOLERANCE = 1e-3
+# no weight changes by more than a factor of e^3 in one step
+LONGEST = 3.0
+# a step that gained this many times what it promised goes along a valley: the next one is doubled
+SLOW, FARTHEST = 1.3, 16.0
+# a fit that goes on from another begins with no more damping than this
+MOST_KEPT = 1e-2
 
 
 @dataclass(frozen=True, eq=False)
@@ -30,6 +37,8 @@ class Fit:
     steps : int
     hessian : ndarray of shape (n + 2, n + 2)
         Gauss-Newton matrix of the data part and the prior at the minimum.
+    damping : float
+        Of the last step: where a fit that goes on from here had better begin.
     """
 
     u: np.ndarray
@@ -39,6 +48,7 @@ class Fit:
     converged: bool
     steps: int
     hessian: np.ndarray
+    damping: float = 1e-6
 
     @property
     def w(self) -> np.ndarray:
@@ -83,6 +93,7 @@ def minimise(
     shift: Shift | None = None,
     tolerance: float = TOLERANCE,
     most: int = MAX_STEPS,
+    damping: float = 1e-6,
 ) -> Fit:
     """Minimise |misfit|^2 + lambda |third u|^2 + weak prior from a start.
 
@@ -99,6 +110,8 @@ def minimise(
         The last step promised less than this much of the objective.
     most : int
         Steps at most.
+    damping : float
+        To begin with, relative to the diagonal of the Gauss-Newton matrix.
 
     Returns
     -------
@@ -109,75 +122,117 @@ def minimise(
     root = np.sqrt(smoothing)
     third, weak = prior.third, prior.weak
     precision = prior.precision(smoothing)
-    target = prior.weak_centre.copy()
+    target = prior.weak_centre
     data = problem.data
     inverse = 1.0 / problem.sigma
-    pull = np.zeros(third.shape[0])
-    lump_target = np.zeros(2)
+    pull: np.ndarray | None = None
+    lump_target = LUMP_CENTRE
+    pulled = weak.T @ target
     if shift is not None:
         data = data + problem.sigma * shift.data
-        pull, target, lump_target = shift.third, target + shift.weak, shift.lumps
+        pull, target = shift.third, target + shift.weak
+        lump_target = LUMP_CENTRE + LUMP_SPREAD * shift.lumps
+        # the linear rows' part of the gradient is precision u less this
+        pulled = root * (third.T @ pull) + weak.T @ target
+    size = u0.size
 
-    # the linear rows' part of the gradient is precision u less this
-    pulled = root * (third.T @ pull) + weak.T @ target
-
-    def cost(u: np.ndarray) -> tuple[float, float, np.ndarray, np.ndarray]:
-        w = weights(u)
-        with np.errstate(invalid="ignore", divide="ignore"):
-            # far from the data a modulus can come out negative: the step is then refused
-            r = (np.log(f.values(w)) - data) * inverse
-        t = root * (third @ u) - pull
+    def cost(u: np.ndarray) -> _Point:
+        e = np.exp(u - u.max())
+        w = e / e.sum()
+        y, known = f.evaluate(w)
+        r = (np.log(y) - data) * inverse
+        t = root * (third @ u)
+        if pull is not None:
+            t -= pull
         k = weak @ u - target
-        lump = (np.log(np.maximum(w[-2:], 1e-300)) - LUMP_CENTRE) / LUMP_SPREAD - lump_target
+        lump = (np.log(np.maximum(w[-2:], 1e-300)) - lump_target) / LUMP_SPREAD
         chi2 = float(r @ r)
-        return chi2 + float(t @ t + k @ k + lump @ lump), chi2, w, lump
+        return _Point(u, chi2 + float(t @ t + k @ k + lump @ lump), chi2, w, y, known, r, lump)
 
-    u = np.array(u0, dtype=float)
-    value, chi2, w, lump = cost(u)
-    # relative to the diagonal, so that directions the data hardly see are not held back by it
-    damping = 1e-6
+    lump_j = np.empty((2, size))
+    # damping is relative to the diagonal: directions the data hardly see are not held back by it
     converged = False
     hessian = precision
     steps = 0
-    while steps < min(most, MAX_STEPS):
-        steps += 1
-        y, j = f.values_and_slope(w)
-        j *= (inverse / y)[:, None]
-        # d/du through the softmax: J diag(w) - (J w) w'
-        j -= (j @ w)[:, None]
-        j *= w
-        r = (np.log(y) - data) * inverse
-        lump_j = np.empty((2, w.size))
-        lump_j[:] = -w / LUMP_SPREAD
-        lump_j[0, -2] += 1.0 / LUMP_SPREAD
-        lump_j[1, -1] += 1.0 / LUMP_SPREAD
-        gradient = r @ j + precision @ u - pulled + lump @ lump_j
-        hessian = j.T @ j
-        hessian += precision
-        hessian += lump_j.T @ lump_j
-        diagonal = hessian.diagonal().copy()
-        while True:
-            lhs = hessian.copy()
-            lhs.flat[:: lhs.shape[0] + 1] += damping * diagonal + 1e-12
-            _, step, info = dposv(lhs, -gradient, overwrite_a=True)
-            if info == 0 and np.isfinite(step).all():
-                trial = u + step
-                new, new_chi2, new_w, new_lump = cost(trial)
+    stretch = 1.0
+    # far from the data a modulus can come out negative: the step is then refused
+    with np.errstate(invalid="ignore", divide="ignore"):
+        at = cost(np.array(u0, dtype=float))
+        while steps < min(most, MAX_STEPS):
+            steps += 1
+            w = at.w
+            j = f.slope(at.known)
+            j *= (inverse / at.y)[:, None]
+            # d/du through the softmax: J diag(w) - (J w) w'
+            j -= (j @ w)[:, None]
+            j *= w
+            lump_j[:] = w / -LUMP_SPREAD
+            lump_j[0, -2] += 1.0 / LUMP_SPREAD
+            lump_j[1, -1] += 1.0 / LUMP_SPREAD
+            pushed = at.r @ j
+            gradient = pushed + precision @ at.u - pulled + at.lump @ lump_j
+            hessian = j.T @ j
+            hessian += precision
+            hessian += lump_j.T @ lump_j
+            # y is all but linear in w = exp(u): its second derivative in u is the first one again.
+            # Where the data push a weight down that is the curvature Gauss-Newton lacks, and steps
+            # without it go far too long. P' diag(g+) P with P u = u - w.u: the level of u is free.
+            # Far from a fit the misfit is not what it will be, and the term would only hold it back
+            push = np.maximum(pushed, 0.0) * min(1.0, at.r.size / at.chi2) ** 2
+            cross = np.outer(push - 0.5 * push.sum() * w, w)
+            curved = hessian - cross
+            curved -= cross.T
+            diagonal = curved.diagonal() + push
+            refused = False
+            while True:
+                lhs = curved.copy()
+                lhs.flat[:: size + 1] = (1.0 + damping) * diagonal + 1e-12
+                # symmetric: its transpose is it, in the order LAPACK wants
+                _, step, info = dposv(lhs.T, -gradient, overwrite_a=True, overwrite_b=True)
                 promised = -float(gradient @ step)
-                if new <= value + 1e-12 * abs(value):
+                if info == 0 and np.isfinite(promised):
+                    longest = max(float(step.max()), -float(step.min()))
+                    if longest > LONGEST:
+                        step *= LONGEST / longest
+                    trial = cost(at.u + stretch * step)
+                    if trial.value <= at.value + 1e-12 * abs(at.value):
+                        break
+                    if stretch > 1.0:
+                        # tried again as it was
+                        stretch = 1.0
+                        trial = cost(at.u + step)
+                        if trial.value <= at.value + 1e-12 * abs(at.value):
+                            break
+                    if promised < tolerance:
+                        converged = True
+                        break
+                refused = True
+                damping = max(damping * 6.0, 1e-6)
+                if damping > 1e8:
                     break
-                if promised < tolerance:
-                    converged = True
-                    break
-            damping = max(damping * 6.0, 1e-6)
-            if damping > 1e8:
+            if converged or damping > 1e8:
                 break
-        if converged or damping > 1e8:
-            break
-        gain = value - new
-        u, value, chi2, w, lump = trial, new, new_chi2, new_w, new_lump
-        damping = max(damping * (0.15 if gain > 0.25 * promised else 2.0), 1e-9)
-        if promised < tolerance * (1.0 + 1e-3 * value):
-            converged = True
-            break
-    return Fit(u, smoothing, value, chi2, converged, steps, hessian)
+            gain = at.value - trial.value
+            at = trial
+            good = gain > 0.25 * promised
+            stretch = min(2.0 * stretch, FARTHEST) if gain > SLOW * promised else 1.0
+            damping = max(damping * ((1.0 if refused else 0.15) if good else 2.0), 1e-9)
+            if promised < tolerance * (1.0 + 1e-3 * at.value):
+                converged = True
+                break
+    return Fit(
+        at.u, smoothing, at.value, at.chi2, converged, steps, hessian, min(damping, MOST_KEPT)
+    )
+
+
+class _Point(NamedTuple):
+    """What is known of the objective at one u: a step that is taken has it already."""
+
+    u: np.ndarray
+    value: float
+    chi2: float
+    w: np.ndarray
+    y: np.ndarray
+    known: Any
+    r: np.ndarray
+    lump: np.ndarray

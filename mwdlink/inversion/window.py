@@ -3,9 +3,9 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
-from scipy.optimize import brentq
 
 from mwdlink.chains.melt import Melt
 from mwdlink.errors import InputError
@@ -19,6 +19,8 @@ SUPPORT = float(np.exp(np.pi / 2))
 BELOW_DECADES = 1.5
 ABOVE_DECADES = 0.7
 NODES = 60
+# masses the time law is looked up at before it is inverted, and rounds of closing in
+GRID, MOST_HALVINGS = 128, 40
 
 
 @dataclass(frozen=True, eq=False)
@@ -52,25 +54,64 @@ class Window:
         return 10.0 ** np.concatenate([x - h / 2, [x[-1] + h / 2]])
 
 
-def mass_at_time(tau: float, melt: Melt, model: Model) -> float:
-    """Molar mass whose kernel time is tau [s]; inverse of the time law, [g/mol].
+def masses_at_times(tau: np.ndarray, melt: Melt, model: Model) -> np.ndarray:
+    """Molar masses whose kernel times are tau [s]; inverse of the time law, [g/mol].
 
     Below the shortest entangled chain (Z = 1) that chain is returned.
+
+    Parameters
+    ----------
+    tau : ndarray of shape (k,)
+        [s], > 0.
+
+    Returns
+    -------
+    ndarray of shape (k,)
+
+    Raises
+    ------
+    InputError
+        If a time belongs to chains longer than 1e10 g/mol.
     """
     floor = max(0.8 * melt.entanglement_molar_mass * 1.0001, 50.0)
-
-    def gap(x: float) -> float:
-        return float(np.log(relaxation_times(np.array([np.exp(x)]), melt, model)[0] / tau))
-
-    a, b = np.log(floor), np.log(1e10)
-    if gap(a) >= 0:
-        return float(np.exp(a))
-    if gap(b) <= 0:
+    goal = np.log(np.asarray(tau, dtype=float))
+    x = np.linspace(np.log(floor), np.log(1e10), GRID)
+    y = np.log(relaxation_times(np.exp(x), melt, model))
+    if np.any(goal >= y[-1]):
         raise InputError(
-            f"a relaxation time of {tau:.3g} s belongs to chains longer than 1e10 g/mol.",
+            f"a relaxation time of {np.exp(goal.max()):.3g} s belongs to chains longer than "
+            "1e10 g/mol.",
             remedy="Check the frequency unit (Hz, rad/s), the temperature and the polymer.",
         )
-    return float(np.exp(brentq(gap, a, b, xtol=1e-9)))
+    # the last grid point below each goal; the cell is then halved and halved again
+    cell = np.array([np.flatnonzero(y <= g)[-1] if y[0] < g else 0 for g in goal])
+    low, high = x[cell], x[np.minimum(cell + 1, GRID - 1)]
+    below = y[cell]
+    above = y[np.minimum(cell + 1, GRID - 1)]
+    for _ in range(MOST_HALVINGS):
+        # regula falsi, kept off the ends, closes in faster than halving where the law is smooth
+        share = np.clip((goal - below) / np.maximum(above - below, 1e-300), 0.0, 1.0)
+        middle = low + share * (high - low)
+        found = np.log(relaxation_times(np.exp(middle), melt, model)) - goal
+        if np.all(np.abs(found) < 1e-11):
+            break
+        left = found < 0
+        low, below = np.where(left, middle, low), np.where(left, found + goal, below)
+        high, above = np.where(left, high, middle), np.where(left, above, found + goal)
+        half = 0.5 * (low + high)
+        found = np.log(relaxation_times(np.exp(half), melt, model)) - goal
+        left = found < 0
+        low, below = np.where(left, half, low), np.where(left, found + goal, below)
+        high, above = np.where(left, high, half), np.where(left, above, found + goal)
+        if np.all(high - low < 1e-10):
+            break
+    middle = np.where(y[0] >= goal, x[0], middle)
+    return np.exp(middle)
+
+
+def mass_at_time(tau: float, melt: Melt, model: Model) -> float:
+    """`masses_at_times` of one time."""
+    return float(masses_at_times(np.array([tau]), melt, model)[0])
 
 
 def find_window(omega: np.ndarray, melt: Melt, model: Model, nodes: int = NODES) -> Window:
@@ -81,18 +122,29 @@ def find_window(omega: np.ndarray, melt: Melt, model: Model, nodes: int = NODES)
     InputError
         If the frequencies see no entangled chain of this polymer.
     """
-    low_time, high_time = 1.0 / float(np.max(omega)), 1.0 / float(np.min(omega))
-    first = mass_at_time(low_time / 10**BELOW_DECADES, melt, model)
-    last = mass_at_time(high_time * 10**ABOVE_DECADES, melt, model)
-    low = mass_at_time(low_time * SUPPORT, melt, model)
-    high = mass_at_time(high_time / SUPPORT, melt, model)
+    return _find_window(float(np.max(omega)), float(np.min(omega)), melt, model, nodes)
+
+
+# lots of one kind of measurement share their window
+@lru_cache(maxsize=32)
+def _find_window(highest: float, lowest: float, melt: Melt, model: Model, nodes: int) -> Window:
+    low_time, high_time = 1.0 / highest, 1.0 / lowest
+    wanted = [
+        low_time / 10**BELOW_DECADES,
+        high_time * 10**ABOVE_DECADES,
+        low_time * SUPPORT,
+        high_time / SUPPORT,
+    ]
+    first, last, low, high = masses_at_times(np.array(wanted), melt, model).tolist()
     if last / first < 1.5:
         raise InputError(
             "the frequencies see no entangled chains of this polymer at this temperature.",
             remedy="Check the unit of frequency, the temperature and the polymer card.",
         )
     x = np.linspace(np.log10(first), np.log10(last), nodes)
-    return Window(10.0**x, float(x[1] - x[0]), low, max(high, low), 10.0 * _time(last, melt, model))
+    mass = 10.0**x
+    mass.setflags(write=False)
+    return Window(mass, float(x[1] - x[0]), low, max(high, low), 10.0 * _time(last, melt, model))
 
 
 def _time(mass: float, melt: Melt, model: Model) -> float:
