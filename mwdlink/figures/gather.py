@@ -14,6 +14,7 @@ import pandas as pd
 
 from mwdlink.figures import (
     blend,
+    blendcheck,
     choices,
     claims,
     decay,
@@ -349,8 +350,8 @@ def _blendcheck(shelf: _Shelf) -> None:
             "recovered",
             "Recovered against weighed fractions",
             table_of(blends),
-            lambda: blend.plot_recovered(blends),
-            lambda: blend.describe_recovered(blends),
+            lambda: blendcheck.plot_recovered(blends),
+            lambda: blendcheck.describe_recovered(blends),
         )
     residuals = shelf.table("residuals.csv")
     if residuals is not None:
@@ -358,8 +359,8 @@ def _blendcheck(shelf: _Shelf) -> None:
             "residuals",
             "Predicted against measured, by decade",
             residuals,
-            lambda: blend.plot_blend_residuals(residuals),
-            lambda: blend.describe_blend_residuals(residuals),
+            lambda: blendcheck.plot_blend_residuals(residuals),
+            lambda: blendcheck.describe_blend_residuals(residuals),
         )
     rules = shelf.record.get("rules") or []
     if any(value_of(r.get("scatter_decades")) is not None for r in rules):
@@ -367,8 +368,8 @@ def _blendcheck(shelf: _Shelf) -> None:
             "rules",
             "Rules ranked",
             table_of(rules),
-            lambda: blend.plot_rules(rules),
-            lambda: blend.describe_rules(rules),
+            lambda: blendcheck.plot_rules(rules),
+            lambda: blendcheck.describe_rules(rules),
         )
 
 

@@ -6,7 +6,7 @@ from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
 from mwdlink.figures import (
-    blend,
+    blendcheck,
     claims,
     decay,
     distribution,
@@ -82,9 +82,9 @@ def plot_result(result: Any, ax: Axes | None = None) -> Axes:
     if command == "blendcheck":
         blends = [b for b in record.get("blends") or [] if b.get("weighed") and b.get("recovered")]
         return (
-            blend.plot_recovered(blends, ax=ax)
+            blendcheck.plot_recovered(blends, ax=ax)
             if blends
-            else blend.plot_blend_residuals(table("residuals.csv"), ax=ax)
+            else blendcheck.plot_blend_residuals(table("residuals.csv"), ax=ax)
         )
     if command == "tail":
         tail = record.get("tail") or {}
