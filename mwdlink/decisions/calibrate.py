@@ -12,6 +12,7 @@ from mwdlink.chains.distribution import Distribution
 from mwdlink.chains.melt import Melt
 from mwdlink.chains.polymer import Polymer
 from mwdlink.decisions.blend_sweeps import modes_of
+from mwdlink.decisions.calibrate_card import WIDENED, card_toml, fitted_card, scatter_of
 from mwdlink.decisions.calibrate_fit import (
     INDEPENDENT,
     MODEL_ERROR,
@@ -20,18 +21,15 @@ from mwdlink.decisions.calibrate_fit import (
     SAMPLE_SHIFT,
     Fitted,
     Sample,
-    changed,
     fit,
 )
 from mwdlink.decisions.components import Study, settled
 from mwdlink.decisions.ensemble import central_kernel, exponent_belief, kernels_to_use
-from mwdlink.decisions.trust import toml_text
 from mwdlink.errors import Caution, InputError, NotConverged, merge_cautions
 from mwdlink.measurement.noise import noise_of
 from mwdlink.quantity import Uncertain
 from mwdlink.result import Result
 
-WIDENED = 1.645
 # a constant counts as fixed by the data when they narrow its prior to less than this share
 NARROWED = 0.6
 # Mw of the samples must differ by this factor before a law's exponent can be told
@@ -247,7 +245,7 @@ def calibrate(
     viscosity, network, exponent = _quantities(
         first, spread, melt, study.polymer, pivot, kept, samples
     )
-    card = _card(study, first, spread, melt, pivot, kept, samples, masses)
+    card = fitted_card(study, first, spread, melt, pivot, kept, samples, masses)
     said = {_WORDS[k]: v for k, v in kept.items()}
     return Calibration(
         polymer=study.polymer,
@@ -375,7 +373,7 @@ def _quantities(
             e0, e0 * float(np.exp(-s[0])), e0 * float(np.exp(s[0])), "level" in kept
         ),
         "pivot_g_per_mol": pivot,
-        "scatter_decades": _scatter(f, samples),
+        "scatter_decades": scatter_of(f, samples),
         "temperature_C": melt.temperature_C,
     }
     if "exponent" in kept:
@@ -389,86 +387,6 @@ def _quantities(
         float(beta), max(float(beta - s[3]), 1.0), float(beta + s[3]), "mixing_exponent" in kept
     )
     return viscosity, network, exponent
-
-
-def _scatter(f: Fitted, samples: Sequence[Sample]) -> float | None:
-    """Scatter of the samples about the law [decades]."""
-    n = len(samples)
-    if n < 3:
-        return None
-    return float(np.sqrt(np.sum(f.shifts**2) / (n - 2)) / np.log(10.0))
-
-
-def _card(
-    study: Study,
-    f: Fitted,
-    spread: np.ndarray,
-    melt: Melt,
-    pivot: float,
-    kept: Mapping[str, str],
-    samples: Sequence[Sample],
-    masses: np.ndarray,
-) -> dict[str, Any]:
-    """The old card with the fitted numbers in place, status `fitted` and the data's names."""
-    card: dict[str, Any] = {}
-    for section, block in study.polymer.to_dict().items():
-        card[section] = dict(block) if isinstance(block, Mapping) else block
-    card["name"] = f"{study.polymer.name}-own"
-    card["title"] = f"{study.polymer.title}, fitted to own samples"
-    source = "fitted to " + ", ".join(s.name for s in samples)
-
-    def put(section: str, key: str, value: Any) -> None:
-        block = card.setdefault(section, {})
-        block[key] = value
-        block[f"{key}_status"], block[f"{key}_source"] = "fitted", source
-
-    def drop(section: str, key: str) -> None:
-        for tail in ("", "_status", "_source"):
-            card.get(section, {}).pop(key + tail, None)
-
-    new = changed(melt, f.values, pivot)
-    own = study.polymer
-    if "level" not in kept or "exponent" not in kept:
-        # the coefficient at the card's own temperature: times and moduli shift back
-        factor = new.law_coefficient / (melt.a_T * melt.b_T)
-        put("viscosity", "coefficient", float(factor))
-        if "exponent" not in kept:
-            put("viscosity", "exponent", float(new.law_exponent))
-            put("viscosity", "range_g_per_mol", [float(masses.min()), float(masses.max())])
-        scatter = _scatter(f, samples)
-        error = float(spread[0] / np.log(10.0))
-        put("viscosity", "scatter_decades", max(scatter or 0.0, error, 0.02))
-    drop("network", "molar_mass_g_per_mol")
-    if "plateau_modulus" not in kept:
-        g = float(own.get("network.plateau_modulus_Pa") * np.exp(f.values[2]))
-        put("network", "plateau_modulus_Pa", g)
-        s = WIDENED * float(spread[2])
-        put("network", "plateau_modulus_range_Pa", [g * np.exp(-s), g * np.exp(s)])
-        drop("network", "plateau_modulus_disputed_Pa")
-        # a strand's friction stands: tau_e goes with the square of its length
-        tau_e = card.get("network", {}).get("equilibration_time_s")
-        if tau_e is not None and card["network"].get("equilibration_time_s_status") != "computed":
-            put("network", "equilibration_time_s", tau_e * float(np.exp(f.values[0])))
-            card["network"]["equilibration_time_s"] *= float(np.exp(-2.0 * f.values[2]))
-            drop("network", "equilibration_time_molar_mass_g_per_mol")
-    if card.get("network", {}).get("equilibration_time_s_status") == "computed":
-        drop("network", "equilibration_time_s")
-    if "mixing_exponent" not in kept:
-        beta, s = float(f.values[3]), WIDENED * float(spread[3])
-        put("kernel", "mixing_exponent", beta)
-        put("kernel", "mixing_exponent_range", [max(beta - s, 1.0), beta + s])
-    for block in card.values():
-        if isinstance(block, dict):
-            for key in [k for k, v in block.items() if k.endswith("_status") and v == "assumed"]:
-                name = key.removesuffix("_status")
-                for tail in ("", "_status", "_source"):
-                    block.pop(name + tail, None)
-    return {k: v for k, v in card.items() if not (isinstance(v, dict) and not v)}
-
-
-def card_toml(card: Mapping[str, Any]) -> str:
-    """Text of card.toml."""
-    return "# Written by `mwdlink calibrate`.\n" + toml_text(card)
 
 
 def _spoken(u: Uncertain) -> str:
