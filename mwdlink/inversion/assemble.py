@@ -68,7 +68,9 @@ def assemble(
     low = max(b.problem.window.low for b in nominal)
     high = min(b.problem.window.high for b in nominal)
     single = Cells.make(centre.problem.window.edges, centre.fit.w)
-    prior = Cells.make(centre.problem.window.edges, prior_weights(centre, PRIOR_DRAWS, prior_seed))
+    # what no data would say is held against the members; without any there is no need of it
+    draws = PRIOR_DRAWS if pool is not None else 1
+    prior = Cells.make(centre.problem.window.edges, prior_weights(centre, draws, prior_seed))
     averages = _averages(single, pool, prior, low, high, level)
     outside = {
         "above": _fraction(centre, single, pool, prior, high, level),

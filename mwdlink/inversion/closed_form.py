@@ -182,13 +182,19 @@ def smooth_modes(
     free = _non_negative(rows, target)
     allowed = float(np.sum((rows @ free - target) ** 2)) + np.sqrt(2.0 * data.size)
     best = free
-    for strength in np.geomspace(1e-3, 3e3, 12):
+    strengths = np.geomspace(1e-3, 3e3, 12)
+    # the misfit grows with the strength: halving finds the last one that is allowed
+    low_end, high_end = 0, strengths.size
+    while low_end < high_end:
+        middle = (low_end + high_end) // 2
         x_s = _non_negative(
-            np.vstack([rows, strength * bend]), np.concatenate([target, np.zeros(len(bend))])
+            np.vstack([rows, strengths[middle] * bend]),
+            np.concatenate([target, np.zeros(len(bend))]),
         )
         if float(np.sum((rows @ x_s - target) ** 2)) > allowed:
-            break
-        best = x_s
+            high_end = middle
+        else:
+            best, low_end = x_s, middle + 1
     held = best > 0
     return Spectrum(tau[held], (best * scale)[held])
 
@@ -264,6 +270,7 @@ def _kernel_moment(kernel: str, s: float, exponent: float, n: float) -> float:
     return float(np.sum(f * np.exp(s * x)) * (x[1] - x[0]))
 
 
+@lru_cache(maxsize=64)
 def kernel_area(kernel: str, exponent: float, n: float = 0.23) -> float | None:
     """c = int_0^inf F dz, by the same quadrature; None for a kernel that is not scale-free."""
     if kernel == "fluctuation":

@@ -126,7 +126,7 @@ def minimise(
     data = problem.data
     inverse = 1.0 / problem.sigma
     pull: np.ndarray | None = None
-    lump_target = LUMP_CENTRE
+    lump_target: Any = LUMP_CENTRE
     pulled = weak.T @ target
     if shift is not None:
         data = data + problem.sigma * shift.data
@@ -178,7 +178,7 @@ def minimise(
             # Where the data push a weight down that is the curvature Gauss-Newton lacks, and steps
             # without it go far too long. P' diag(g+) P with P u = u - w.u: the level of u is free.
             # Far from a fit the misfit is not what it will be, and the term would only hold it back
-            push = np.maximum(pushed, 0.0) * min(1.0, at.r.size / at.chi2) ** 2
+            push = np.maximum(pushed, 0.0) * min(1.0, at.r.size / max(at.chi2, 1e-300)) ** 2
             cross = np.outer(push - 0.5 * push.sum() * w, w)
             curved = hessian - cross
             curved -= cross.T

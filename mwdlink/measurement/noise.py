@@ -8,6 +8,7 @@ much larger than the second, the curves are smooth but do not belong together.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from scipy.stats import chi2 as chi2_law
@@ -106,6 +107,17 @@ def estimate_noise(sweep: Sweep, *, level: float = 0.9) -> NoiseEstimate:
             path=sweep.path,
             remedy="State the noise (relative, for example 0.02), or give more points.",
         )
+    return _estimate(
+        sweep.omega.tobytes(), sweep.storage.tobytes(), sweep.loss.tobytes(), float(level)
+    )
+
+
+# the fit and the checks ask for it of the same sweep
+@lru_cache(maxsize=4)
+def _estimate(omega: bytes, storage: bytes, loss: bytes, level: float) -> NoiseEstimate:
+    sweep = Sweep(
+        omega=np.frombuffer(omega), storage=np.frombuffer(storage), loss=np.frombuffer(loss)
+    )
     keep = np.ones((2, len(sweep)), dtype=bool)
     fit = _fit(sweep, np.where(keep, 1.0, 1e6))
     for _ in range(3):
@@ -162,16 +174,14 @@ def roughness(sweep: Sweep) -> float | None:
     # sparser than four a decade, the curve's own bends look like noise [measured]
     if x.size < 8 or np.median(np.diff(x)) > np.log(10) / 3.9:
         return None
-    scaled = []
-    for i in range(3, x.size - 3):
-        near = np.array([i - 3, i - 2, i - 1, i + 1, i + 2, i + 3])
-        V = np.vander(x[near] - x[i], 4, increasing=True)
-        # weights of the prediction at the middle: first row of the pseudo-inverse
-        c = np.linalg.pinv(V)[0]
-        norm = np.sqrt(1.0 + c @ c)
-        for y in (np.log(sweep.storage), np.log(sweep.loss)):
-            scaled.append((y[i] - c @ y[near]) / norm)
-    square = np.square(scaled)
+    i = np.arange(3, x.size - 3)
+    near = i[:, None] + np.array([-3, -2, -1, 1, 2, 3])
+    away = (x[near] - x[i][:, None])[:, :, None] ** np.arange(4)
+    # weights of the prediction at the middle: first row of the pseudo-inverse
+    c = np.linalg.pinv(away)[:, 0, :]
+    norm = np.sqrt(1.0 + np.sum(c * c, axis=1))
+    y = np.log([sweep.storage, sweep.loss])
+    square = np.square((y[:, i] - np.sum(c * y[:, near], axis=2)) / norm).ravel()
     # 0.4549 is the median of a chi-square with one degree of freedom
     middle = float(np.median(square)) / 0.4549
     # the plain mean of all but far points scatters less than the median; a normal law loses 1.1 %

@@ -13,6 +13,7 @@ import shutil
 import stat
 import time
 from collections.abc import Callable, Mapping, Sequence
+from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -112,22 +113,54 @@ class DiskTrouble(MwdlinkError):
 
 
 def run_chunk(job: Job, chunk: Sequence[tuple[int, Lot]]) -> list[Outcome]:
-    """Work on some inputs, one after the other."""
-    return [run_one(job, index, lot) for index, lot in chunk]
+    """Work on some inputs, one after the other.
+
+    A disk takes its time to say that a folder is safe: that is waited for in a thread of its own
+    while the next input is worked on.
+    """
+    if job.out is None or len(chunk) == 1:
+        return [run_one(job, index, lot) for index, lot in chunk]
+    with ThreadPoolExecutor(1) as pen:
+        begun = [_outcome(job, index, lot, pen.submit) for index, lot in chunk]
+    return [o.result() if isinstance(o, Future) else o for o in begun]
 
 
 def run_one(job: Job, index: int, lot: Lot) -> Outcome:
     """Work on one input; never raises for a fault of the input."""
+    return _outcome(job, index, lot, lambda write: write())
+
+
+def _outcome(job: Job, index: int, lot: Lot, hand_over: Callable[..., Any]) -> Any:
+    """The outcome of an input, or what `hand_over` makes of the function that writes it."""
     began = time.perf_counter()
-    try:
+
+    def found(row: Mapping[str, Any], digest: str, reused: bool = False) -> Outcome:
+        seconds = time.perf_counter() - began
+        return Outcome(index, row, digest, reused=reused, seconds=seconds)
+
+    def work() -> Any:
         if lot.reason is not None:
             raise InputError(lot.reason, path=lot.path)
-        found = _finished(job, lot)
-        if found is not None:
-            row, digest = found
-            return Outcome(index, row, digest, reused=True, seconds=time.perf_counter() - began)
-        row, digest = _work(job, lot)
-        return Outcome(index, row, digest, seconds=time.perf_counter() - began)
+        known = _finished(job, lot)
+        if known is not None:
+            return found(*known, reused=True)
+        row, digest, write = _work(job, lot)
+        if write is None:
+            return found(row, digest)
+
+        def finish() -> Outcome:
+            write()
+            return found(row, digest)
+
+        return hand_over(lambda: _guarded(index, finish))
+
+    return _guarded(index, work)
+
+
+def _guarded(index: int, work: Callable[[], Any]) -> Any:
+    """What comes of some work on an input; its faults come back as reasons."""
+    try:
+        return work()
     except DiskTrouble as error:
         return Outcome(index, reason=str(error), kind="disk")
     except MwdlinkError as error:
@@ -281,7 +314,8 @@ def _regular(path: str) -> None:
         )
 
 
-def _work(job: Job, lot: Lot) -> tuple[dict[str, Any], str]:
+def _work(job: Job, lot: Lot) -> tuple[dict[str, Any], str, Callable[[], None] | None]:
+    """Row and digest of an input, and what writes its folder."""
     card = polymer_of(job, lot)
     temperature = _temperature(job, lot)
     curve, digest = read_measured(lot.path, job.reading, temperature)
@@ -302,13 +336,13 @@ def _work(job: Job, lot: Lot) -> tuple[dict[str, Any], str]:
             **to_plain(compare(curve, result, job.reference)),
         }
     record["batch"] = {"fingerprint": fingerprint(job, lot)}
-    if job.out is not None:
-        _write(job, lot, result, record)
+    write = None if job.out is None else _writer(job, lot, result, record)
     # through the text that is written, so that a row read back later is the same to the last digit
-    return row_of(json.loads(json.dumps(record)), lot), digest
+    return row_of(json.loads(json.dumps(record)), lot), digest, write
 
 
-def _write(job: Job, lot: Lot, result: Any, record: Mapping[str, Any]) -> None:
+def _writer(job: Job, lot: Lot, result: Any, record: Mapping[str, Any]) -> Callable[[], None]:
+    """Everything an input's folder holds, drawn and ready, in a function that writes it."""
     made = result.tables()
     if not job.members:
         made.pop("members.csv", None)
@@ -329,19 +363,23 @@ def _write(job: Job, lot: Lot, result: Any, record: Mapping[str, Any]) -> None:
         page = render(result, record, pictures)
     source = f"{os.path.basename(lot.shown)} sha256 {record['inputs'][0]['sha256'][:16]}"
     provenance = f"mwdlink {record['version']} batch from {source}"
-    assert job.out is not None
-    for wait in (*WAITS, None):
-        try:
-            if not (Path(job.out) / MARK).is_file():  # writing would make the folder anew, empty
-                raise MwdlinkError(f"the folder {job.out} has vanished.")
-            there = Path(job.out) / lot.name
-            write_result(there, record, made, files, page, replace=True, provenance=provenance)
-            return
-        except MwdlinkError as error:
-            # a share that was away for a moment is worth waiting for
-            if wait is None:
-                raise DiskTrouble(str(error)) from None
-            time.sleep(wait)
+
+    def write() -> None:
+        assert job.out is not None
+        for wait in (*WAITS, None):
+            try:
+                if not (Path(job.out) / MARK).is_file():  # writing would make it anew, empty
+                    raise MwdlinkError(f"the folder {job.out} has vanished.")
+                there = Path(job.out) / lot.name
+                write_result(there, record, made, files, page, replace=True, provenance=provenance)
+                return
+            except MwdlinkError as error:
+                # a share that was away for a moment is worth waiting for
+                if wait is None:
+                    raise DiskTrouble(str(error)) from None
+                time.sleep(wait)
+
+    return write
 
 
 def make_reference(job: Job, path: str) -> tuple[Reference, str]:

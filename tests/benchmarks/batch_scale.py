@@ -100,7 +100,7 @@ def where_time_goes(lots: Path, members: int) -> dict[str, float]:
         (one, "read_measured", "reading"),
         (objective, "sweep_forward", "operators"),
         (ensemble, "_survival_of", "operators"),
-        (one, "_write", "writing"),
+        (one, "write_result", "writing"),
         (one, "fingerprint", "fingerprint"),
     )
     kept = [(home, attribute, getattr(home, attribute)) for home, attribute, _ in places]
