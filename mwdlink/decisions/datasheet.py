@@ -12,8 +12,9 @@ from mwdlink.chains.polymer import Polymer, builtin
 from mwdlink.decisions.branching_signs import LCBI_POLYMERS, LCBI_TEMPERATURE, branching_index
 from mwdlink.decisions.datasheet_causes import shadows, tried
 from mwdlink.decisions.datasheet_claims import Claim, Sheet
+from mwdlink.decisions.datasheet_families import FAMILIES
 from mwdlink.decisions.datasheet_fit import Expected, claim_sigma, expect, model_sigma
-from mwdlink.decisions.datasheet_model import FAMILIES, SheetModel, sheet_model
+from mwdlink.decisions.datasheet_model import SheetModel, sheet_model
 from mwdlink.decisions.datasheet_result import DataSheet, Judged
 from mwdlink.decisions.datasheet_search import MOST, Finding, find, follows
 from mwdlink.decisions.datasheet_words import explain, verdict_of
@@ -69,9 +70,10 @@ def check_datasheet(
         get_kernel(name, melt)
     usable, notes = _usable(sheet, card)
     if len(usable) < 2:
+        lost = " ".join(n.text for n in notes if n.code == "claim_not_used")
         raise InputError(
             f"the sheet has {len(usable)} claim{'' if len(usable) == 1 else 's'} that can be "
-            "compared.",
+            f"compared.{' ' if lost else ''}{lost}",
             path=sheet.paths[0] if sheet.paths else None,
             remedy="At least two are needed: an average or a viscosity with a melt flow rate, say.",
         )
@@ -136,6 +138,9 @@ def _usable(sheet: Sheet, card: Polymer) -> tuple[tuple[Claim, ...], tuple[Cauti
             reason = "the card has no Mark-Houwink constants"
         elif c.kind == "activation energy" and shift is None:
             reason = "the card has no shift law"
+        elif c.kind == "activation energy" and shift is not None and shift.kind != "arrhenius":
+            # 100 to 160 kJ/mol within 40 K for polystyrene: without its temperature it says little
+            reason = f"that of {card.name} depends on the temperature, which a sheet does not say"
         elif c.temperature_C is not None and abs(c.temperature_C - card.temperature_C) > 0.1:
             if shift is None:
                 reason = f"the card has no shift law to {c.temperature_C:g} C"

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
+from itertools import combinations
 
 import numpy as np
 
@@ -187,6 +188,13 @@ def shared_causes(
         shift[list(members)] = by
         return [Cause(text, tuple(members), shift)] if len(members) > 1 else []
 
+    def exchanged(one: int, other: int) -> list[Cause]:
+        shift = np.zeros(n)
+        shift[one] = np.log(claims[other].value / claims[one].value)
+        shift[other] = -shift[one]
+        text = f"if {claims[one].kind} and {claims[other].kind} had been exchanged"
+        return [Cause(text, (one, other), shift)]
+
     def read(members: Sequence[int], **changed: object) -> list[SheetModel]:
         other = tuple(
             replace(c, **changed) if i in members else c  # type: ignore[arg-type]
@@ -206,6 +214,8 @@ def shared_causes(
             for f in factors:
                 text = slip(f, kinds[0], " in all of them")
                 units += moved(members, -float(np.log(f)), text)
+        for first, second in combinations(of(*AVERAGES), 2):
+            units += exchanged(first, second)
         if units:
             yield models, units
         for now, other in (("", "equivalent"), ("equivalent", "absolute")):

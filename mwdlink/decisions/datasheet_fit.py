@@ -14,7 +14,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from mwdlink.decisions.datasheet_claims import Claim
-from mwdlink.decisions.datasheet_model import CARD, FAMILIES, FLOW_ERROR, SheetModel
+from mwdlink.decisions.datasheet_families import FAMILIES
+from mwdlink.decisions.datasheet_model import CARD, FLOW_ERROR, SheetModel
 
 STEPS = 14
 DRAWS = 48

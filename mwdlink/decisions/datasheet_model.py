@@ -12,23 +12,18 @@ from dataclasses import dataclass
 from functools import cached_property
 
 import numpy as np
-from scipy.special import gammaln
 
 from mwdlink.chains.polymer import Polymer
 from mwdlink.chains.shift import GAS_CONSTANT, ZERO_CELSIUS
 from mwdlink.decisions.datasheet_claims import Claim
+from mwdlink.decisions.datasheet_families import FAMILIES, MASS, distribution_rows
 from mwdlink.decisions.gpc_scale import STANDARD_A, STANDARD_K, STANDARD_SOLVENT
 from mwdlink.decisions.properties import Curves, crossovers, melt_flow_rates
 from mwdlink.relaxation.mixing import Model, survival_matrix
 from mwdlink.relaxation.operator import LEAN_MARGIN, time_operator
 from mwdlink.relaxation.rouse import rouse_moduli, rouse_viscosity
 
-# unknowns of the distribution (per family) and, after them, of the card and the tests
-FAMILIES = {
-    "log-normal": ("Mw", "breadth"),
-    "generalised exponential": ("Mw", "rise", "cut"),
-    "two parts": ("Mw", "breadth", "share", "ratio"),
-}
+# unknowns of the card and the tests, after those of the distribution
 CARD = ("exponent", "time law", "modulus", "entrance", "energy", "intrinsic", "equivalent")
 EXPONENT, TIME, MODULUS, ENTRANCE, ENERGY, INTRINSIC, EQUIVALENT = range(7)
 
@@ -46,27 +41,8 @@ BLIND_FACTOR, BLIND_SPREAD = 2.0, 0.25
 # what Cox-Merz and the flow integral themselves are good for, beside the claims' tolerances
 FLOW_ERROR = 0.04
 STEP = 1e-3
-# which of CARD's unknowns act on what, the exponent aside
-_TIMES = (TIME, MODULUS, ENERGY)
-ACTS: dict[str, tuple[int, ...]] = {
-    "Mn": (EQUIVALENT,),
-    "Mw": (EQUIVALENT,),
-    "Mz": (EQUIVALENT,),
-    "dispersity": (),
-    "eta0": (TIME, ENERGY),
-    "melt flow": (*_TIMES, ENTRANCE),
-    "flow rate ratio": (MODULUS, ENTRANCE),
-    "crossover omega": _TIMES,
-    "crossover G": (MODULUS,),
-    "viscosity": _TIMES,
-    "intrinsic viscosity": (INTRINSIC,),
-    "activation energy": (ENERGY,),
-}
-# ln of the weight average, before anything is known
-MASS_PRIOR = (float(np.log(1.3e5)), 1.0)
-NODES = np.linspace(2.0, 7.6, 92)
-MASS = 10.0**NODES
 OMEGA = np.geomspace(1e-5, 1e5, 61)
+LN_OMEGA = np.log(OMEGA)
 
 
 class _Seen:
@@ -74,7 +50,7 @@ class _Seen:
 
     def __init__(self, curves: Curves) -> None:
         self.curves = curves
-        self.rates: dict[float, np.ndarray] = {}
+        self.rates: dict[tuple[float, float], np.ndarray] = {}
 
     @cached_property
     def crossing(self) -> tuple[np.ndarray, np.ndarray]:
@@ -87,7 +63,7 @@ class _Seen:
         """ln of |eta*|."""
         return np.log(self.curves.viscosity)
 
-    def rows(self, k: int, *, keep_rates: bool) -> _Seen:
+    def rows(self, k: int) -> _Seen:
         """The first k melts, with what has been read off them."""
         c = self.curves
         out = _Seen(Curves(c.omega, c.storage[:k], c.loss[:k], c.eta0[:k], c.Je0[:k]))
@@ -95,8 +71,7 @@ class _Seen:
             out.crossing = (self.crossing[0][:k], self.crossing[1][:k])
         if "viscosity" in self.__dict__:
             out.viscosity = self.viscosity[:k]
-        if keep_rates:
-            out.rates = {load: rate[:k] for load, rate in self.rates.items()}
+        out.rates = {key: rate[:k] for key, rate in self.rates.items()}
         return out
 
 
@@ -161,15 +136,54 @@ class SheetModel:
         slope = np.zeros((k, count, d))
         for j, i in enumerate(costly):
             slope[:, :, i] = (y[j + 1] - y[0]) / STEP
-        for i in range(own, d):
-            acts = [c for c, q in enumerate(claims) if i - own in ACTS[q.kind]]
-            if i in costly or not acts:
-                continue
-            card = z[:, own:] + STEP * np.eye(d - own)[i - own]
-            first = seen.rows(k, keep_rates=i - own not in (MODULUS, ENTRANCE))
-            changed = self._all([claims[c] for c in acts], w[:k], first, card)
-            slope[:, acts, i] = (changed - y[0][:, acts]) / STEP
+        first = seen.rows(k)
+        for c, claim in enumerate(claims):
+            for unknown, change in self._card_slopes(claim, first, z[:, own:]).items():
+                slope[:, c, own + unknown] = change
         return y[0], np.nan_to_num(slope)
+
+    def _card_slopes(
+        self, c: Claim, seen: _Seen, card: np.ndarray
+    ) -> dict[int, np.ndarray | float]:
+        """Derivatives of ln of one quantity by the card's unknowns: all in closed form but flow."""
+        law, modulus = self.time_spread, self.modulus_spread
+        if c.kind in ("Mn", "Mw", "Mz"):
+            return {EQUIVALENT: self._equivalent_spread(c)}
+        if c.kind == "intrinsic viscosity":
+            return {INTRINSIC: INTRINSIC_SPREAD}
+        if c.kind == "activation energy":
+            return {ENERGY: ENERGY_SPREAD}
+        if c.kind == "dispersity":
+            return {}
+        if c.kind == "crossover G":
+            return {MODULUS: modulus}
+        energy = self._log_shift_slope(c, card)
+        if c.kind == "eta0":
+            return {TIME: law, ENERGY: energy}
+        if c.kind == "crossover omega":
+            return {TIME: -law, MODULUS: modulus, ENERGY: -energy}
+        if c.kind == "viscosity":
+            at = np.log(float(c.omega or 1.0)) + self._log_times(c, card)
+            thinning = (_along(LN_OMEGA, seen.viscosity, at + STEP)
+                        - _along(LN_OMEGA, seen.viscosity, at)) / STEP  # fmt: skip
+            return {
+                TIME: law * (1 + thinning),
+                MODULUS: -modulus * thinning,
+                ENERGY: energy * (1 + thinning),
+            }
+        # a factor on the modulus and a loss at the entrance both act on the driving stress
+        by_stress = self._by_stress(float(c.load_kg or 0.0), seen, card)
+        if c.kind == "flow rate ratio":
+            by_stress = by_stress - self._by_stress(float(c.second_load_kg or 0.0), seen, card)
+        lost = ENTRANCE_PRIOR[0] + ENTRANCE_PRIOR[1] * card[:, ENTRANCE]
+        inside = (lost > 0.0) & (lost < 0.5)
+        out: dict[int, np.ndarray | float] = {
+            ENTRANCE: by_stress * np.where(inside, -ENTRANCE_PRIOR[1] / (1 - lost), 0.0),
+            MODULUS: -modulus * by_stress,
+        }
+        if c.kind == "melt flow":
+            out |= {TIME: -law, MODULUS: modulus * (1.0 - by_stress), ENERGY: -energy}
+        return out
 
     def _costly(self, z: np.ndarray, own: int, family: str) -> tuple[np.ndarray, Curves]:
         w = distribution_rows(z[:, :own], family)
@@ -181,15 +195,34 @@ class SheetModel:
         with np.errstate(invalid="ignore", divide="ignore"):
             return np.column_stack([self._one(c, w, seen, card) for c in claims])
 
-    def _rate(self, load: float, seen: _Seen, card: np.ndarray) -> np.ndarray:
+    def _rate(self, load: float, seen: _Seen, card: np.ndarray, more: float = 0.0) -> np.ndarray:
         """ln of the melt flow rate at unit density and unmoved times; one run a load."""
-        if load not in seen.rates:
+        if (load, more) not in seen.rates:
             lost = np.clip(ENTRANCE_PRIOR[0] + ENTRANCE_PRIOR[1] * card[:, ENTRANCE], 0.0, 0.5)
             modulus = self.modulus_spread * card[:, MODULUS]
             # a factor on the modulus is a factor on the stress that drives the flow
-            effective = 1.0 - (1.0 - lost) / np.exp(modulus)
-            seen.rates[load] = np.log(melt_flow_rates(seen.curves, load, 1000.0, effective))
-        return seen.rates[load]
+            effective = 1.0 - (1.0 - lost) * np.exp(more - modulus)
+            rate = melt_flow_rates(seen.curves, load, 1000.0, effective)
+            seen.rates[load, more] = np.log(rate)
+        return seen.rates[load, more]
+
+    def _by_stress(self, load: float, seen: _Seen, card: np.ndarray) -> np.ndarray:
+        """Slope of ln of the melt flow rate by ln of the driving stress."""
+        return (self._rate(load, seen, card, STEP) - self._rate(load, seen, card)) / STEP
+
+    def _log_times(self, c: Claim, card: np.ndarray) -> np.ndarray:
+        """ln of the factor on all times."""
+        T = self.polymer.temperature_C if c.temperature_C is None else c.temperature_C
+        law = self.time_spread * card[:, TIME] - self.modulus_spread * card[:, MODULUS]
+        return law + self._log_shift(T, card)
+
+    def _log_shift_slope(self, c: Claim, card: np.ndarray) -> np.ndarray | float:
+        T = self.polymer.temperature_C if c.temperature_C is None else c.temperature_C
+        own = self.polymer.temperature_C
+        if abs(T - own) < 0.05:
+            return 0.0
+        reciprocal = 1.0 / (T + ZERO_CELSIUS) - 1.0 / (own + ZERO_CELSIUS)
+        return self._energy(card) * ENERGY_SPREAD / GAS_CONSTANT * reciprocal
 
     def _curves(self, w: np.ndarray, exponent: np.ndarray) -> Curves:
         beta = np.clip(exponent, 1.35, 2.65)
@@ -225,24 +258,22 @@ class SheetModel:
             return np.log(k * (w @ m**a)) + INTRINSIC_SPREAD * card[:, INTRINSIC]
         if c.kind == "activation energy":
             return np.log(self._energy(card) / 1000.0)
-        law = self.time_spread * card[:, TIME]
         modulus = self.modulus_spread * card[:, MODULUS]
-        T = self.polymer.temperature_C if c.temperature_C is None else c.temperature_C
-        shift = self._log_shift(T, card)
-        moved = law - modulus + shift  # ln of the factor on all times
+        moved = self._log_times(c, card)
         if c.kind == "eta0":
-            return np.log(seen.curves.eta0) + law + shift
+            return np.log(seen.curves.eta0) + moved + modulus
         if c.kind.startswith("crossover"):
             omega, level = seen.crossing
             return omega - moved if c.kind.endswith("omega") else level + modulus
         if c.kind == "viscosity":
             at = np.log(float(c.omega or 1.0)) + moved
-            return _along(np.log(OMEGA), seen.viscosity, at) + modulus + moved
+            return _along(LN_OMEGA, seen.viscosity, at) + modulus + moved
         rate = self._rate(float(c.load_kg or 0.0), seen, card)
         if c.kind == "flow rate ratio":
             return rate - self._rate(float(c.second_load_kg or 0.0), seen, card)
         if c.volume:
             return rate - moved
+        T = self.polymer.temperature_C if c.temperature_C is None else c.temperature_C
         return rate - moved + np.log(self.polymer.density(T) / 1000.0)
 
     @property
@@ -256,18 +287,23 @@ class SheetModel:
         span = self.polymer.get("network.plateau_modulus_range_Pa")
         return 0.07 if span is None else max(0.03, 0.25 * float(np.log(span[1] / span[0])))
 
+    def _equivalent_spread(self, c: Claim) -> float:
+        if c.calibration != "equivalent":
+            return 0.0
+        solvent = str(self.polymer.get("mark_houwink.solvent", "")).upper()
+        return EQUIVALENT_SPREAD if solvent == STANDARD_SOLVENT else BLIND_SPREAD
+
     def _equivalent(self, c: Claim, card: np.ndarray) -> np.ndarray:
+        """ln of the factor from own to quoted masses."""
         if c.calibration != "equivalent":
             return np.zeros(card.shape[0])
+        spread = self._equivalent_spread(c) * card[:, EQUIVALENT]
         k, a = self.polymer.get("mark_houwink.K_dL_per_g"), self.polymer.get("mark_houwink.a")
-        if (
-            k is None
-            or str(self.polymer.get("mark_houwink.solvent", "")).upper() != STANDARD_SOLVENT
-        ):
-            return np.log(BLIND_FACTOR) + BLIND_SPREAD * card[:, EQUIVALENT]
+        if str(self.polymer.get("mark_houwink.solvent", "")).upper() != STANDARD_SOLVENT:
+            return np.log(BLIND_FACTOR) + spread
         own = np.log(max(c.value, 1.0) / BLIND_FACTOR)
         standard = ((1 + a) * own + np.log(k / STANDARD_K)) / (1 + STANDARD_A)
-        return standard - own + EQUIVALENT_SPREAD * card[:, EQUIVALENT]
+        return standard - own + spread
 
     def _energy(self, card: np.ndarray) -> np.ndarray:
         """Flow activation energy at the card's temperature [J/mol]."""
@@ -305,43 +341,6 @@ def sheet_model(polymer: Polymer, claims: Sequence[Claim], kernel: str) -> Sheet
         rouse_viscosity(mass, melt),
         operator.times,
     )
-
-
-def distribution_rows(z: np.ndarray, family: str) -> np.ndarray:
-    """Weights on NODES of members of a family, shape (k, n).
-
-    Parameters
-    ----------
-    z : ndarray of shape (k, number of the family's unknowns)
-        In standard deviations of their priors.
-    """
-    x = NODES * np.log(10.0)
-    Mw = MASS_PRIOR[0] + MASS_PRIOR[1] * z[:, 0]
-    if family == "log-normal":
-        return _lognormal(x, Mw, np.exp(np.log(3.0) + 0.8 * z[:, 1]))
-    if family == "two parts":
-        spread = np.exp(np.log(2.0) + 0.7 * z[:, 1])
-        share = 1.0 / (1.0 + np.exp(1.5 - 1.5 * z[:, 2]))
-        ratio = np.exp(np.log(6.0) + 0.6 * z[:, 3])
-        first = Mw - np.log((1.0 - share) + share * ratio)
-        a = _lognormal(x, first, spread)
-        b = _lognormal(x, first + np.log(ratio), np.ones_like(first))
-        return (1.0 - share)[:, None] * a + share[:, None] * b
-    rise = np.exp(0.6 * z[:, 1])
-    cut = np.exp(np.log(0.7) + 0.35 * z[:, 2])
-    scale = Mw - (gammaln((rise + 2) / cut) - gammaln((rise + 1) / cut))
-    r = x - scale[:, None]
-    log = (rise + 1)[:, None] * r - np.exp(np.minimum(cut[:, None] * r, 50.0))
-    w = np.exp(log - log.max(axis=1, keepdims=True))
-    return w / w.sum(axis=1, keepdims=True)
-
-
-def _lognormal(x: np.ndarray, Mw: np.ndarray, excess: np.ndarray) -> np.ndarray:
-    """Log-normals of weight average exp(Mw) and dispersity 1 + excess."""
-    s2 = np.log1p(np.maximum(excess, 0.03))
-    log = -0.5 * (x - Mw[:, None] + 0.5 * s2[:, None]) ** 2 / s2[:, None]
-    w = np.exp(log)
-    return w / np.maximum(w.sum(axis=1, keepdims=True), 1e-300)
 
 
 def _polynomial(at: np.ndarray) -> np.ndarray:

@@ -19,12 +19,14 @@ from mwdlink.decisions.datasheet_claims import Claim
 from mwdlink.decisions.datasheet_fit import least_costs
 from mwdlink.decisions.datasheet_model import SheetModel
 
-# a clean sheet misfits by more than this once in a thousand
-RARE = 0.001
+# a clean sheet misfits by more than this once in a thousand, or once in twenty
+RARE, UNUSUAL = 0.001, 0.05
 # two choices are told apart when the one leaves this much less misfit than the other
 TELL_APART = 4.0
 # more claims are left out only where that leaves this much less misfit: there are many pairs
 WORTH = 10.0
+# a shared cause is believed where no claim stands out if it leaves this much less misfit
+HIDDEN = 14.0
 MOST = 3
 # claims of one kind of test, which may be off together (another lot, another laboratory)
 TESTS: tuple[Callable[[Claim], bool], ...] = (
@@ -122,7 +124,7 @@ def find(
     marked = [i for i in active if inconsistent[i]]
     if not marked:
         if total <= _limit(n):
-            return Finding()
+            return _hidden(models, claims, total, counted)
         marked = active
     ranked = sorted((float(without[i]), i) for i in marked)
     cost, first = ranked[0]
@@ -136,10 +138,9 @@ def find(
     if not found and not shared and to_beat == np.inf:
         shared = _fitting(models, claims, counted, _limit(n), easy=False)
     if shared and shared[0][0] < min(pair_cost + TELL_APART, to_beat + WORTH - TELL_APART):
-        members = tuple(i for i in shared[0][1].members if counted[i] > 0)
-        if len(members) >= least:
-            near_texts = tuple(c.text for v, c in shared if v < shared[0][0] + TELL_APART)
-            return Finding(members, {}, True, near_texts[:2])
+        by_cause = _shared(shared, counted)
+        if len(by_cause.named) >= least:
+            return by_cause
     if found and pair_cost < to_beat and least <= 2:
         return Finding(found, rivals)
     if to_beat < np.inf:
@@ -155,8 +156,26 @@ def _usual(count: int) -> float:
     return float(chi2.median(max(count, 1)))
 
 
-def _limit(count: int) -> float:
-    return float(chi2.ppf(1.0 - RARE, max(count, 1)))
+def _hidden(
+    models: Sequence[SheetModel], claims: Sequence[Claim], total: float, counted: np.ndarray
+) -> Finding:
+    """A cause that so many claims share that none of them stands out."""
+    if total <= _limit(int(counted.sum()), UNUSUAL):
+        return Finding()
+    shared = _fitting(models, claims, counted, total - HIDDEN, easy=True)
+    shared = shared or _fitting(models, claims, counted, total - HIDDEN, easy=False)
+    return _shared(shared, counted) if shared else Finding()
+
+
+def _shared(shared: Sequence[tuple[float, Cause]], counted: np.ndarray) -> Finding:
+    best, cause = shared[0]
+    members = tuple(i for i in cause.members if counted[i] > 0)
+    near = tuple(c.text for v, c in shared if v < best + TELL_APART)
+    return Finding(members, {}, True, near[:2])
+
+
+def _limit(count: int, rare: float = RARE) -> float:
+    return float(chi2.ppf(1.0 - rare, max(count, 1)))
 
 
 def _rows(counted: np.ndarray, sets: Sequence[Sequence[int]]) -> np.ndarray:

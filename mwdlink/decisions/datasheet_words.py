@@ -191,7 +191,9 @@ def explain(
         if fits.get(i) and not finding.causes:
             subject = _upper(spoken(claims[i].quantity)) if several else "It"
             out.append(f"{subject} would fit " + "; or ".join(fits[i]) + ".")
-    for i in (*named, *finding.rivals):
+    # an activation energy that is merely strained still speaks for or against branches
+    energy = [i for i, c in enumerate(claims) if c.kind == "activation energy" and named]
+    for i in dict.fromkeys((*named, *finding.rivals, *energy)):
         text = by_nature(claims[i], judged[i])
         if text and text not in out:
             out.append(text)
@@ -201,6 +203,7 @@ def explain(
                 f"{_upper(spoken(claims[i].quantity))} is the quotient of two numbers of the "
                 "sheet and goes with them."
             )
+    out += _order(claims)
     out += _densities(claims, card)
     if index is not None and index > BRANCHED_INDEX and sheet.branching != "some":
         out.append(
@@ -211,6 +214,22 @@ def explain(
     if named or any(j.verdict == "strained" for j in judged):
         out.append(TYPICAL)
     return tuple(out)
+
+
+def _order(claims: Sequence[Claim]) -> list[str]:
+    """Averages that stand in an order that no distribution has."""
+    out = []
+    averages = {c.kind: c for c in claims if c.kind in MASSES}
+    for low, high in (("Mn", "Mw"), ("Mw", "Mz")):
+        if low not in averages or high not in averages:
+            continue
+        a, b = averages[low], averages[high]
+        if a.calibration == b.calibration and a.value > b.value:
+            out.append(
+                f"{_upper(spoken(a.quantity))} is above {spoken(b.quantity)}, which no "
+                "distribution allows: the two may have been exchanged."
+            )
+    return out
 
 
 def _densities(claims: Sequence[Claim], card: Polymer) -> list[str]:
@@ -295,10 +314,11 @@ def by_nature(claim: Claim, one: Judged) -> str:
             "A lower intrinsic viscosity than the other numbers suggest is what long-chain "
             "branching (coils are smaller) or gel lost in filtering would give."
         )
-    if claim.kind == "dispersity":
+    if claim.kind in ("dispersity", "Mn"):
         return (
-            "The dispersity hangs on Mn, and so on the GPC's baseline and integration limits: "
-            "asking for them is worth while."
+            f"{_upper(spoken(claim.quantity))} hangs on the GPC's baseline, its integration limits "
+            "and its calibration: it is worth asking for them, and whether the masses are "
+            "absolute, universal or relative to standards."
         )
     return (
         f"{'Higher' if high else 'Lower'} molar masses than the other numbers suggest: averages "

@@ -169,7 +169,7 @@ class _Reader:
         return Claim(key, kind, value, tolerance, given, **named)
 
     def melt_flow(self, entries: Any) -> list[Claim]:
-        out = []
+        out: list[Claim] = []
         for entry in self.blocks(entries, "melt_flow"):
             keys = ("load_kg", "temperature_C", "MFR_g_per_10min", "MVR_cm3_per_10min")
             self.table(entry, (*keys, *_COMMON), "melt_flow")
@@ -184,16 +184,21 @@ class _Reader:
             tolerance, said = self.tolerance(entry, "melt_flow", "melt flow")
             T = self.temperature(entry, "melt_flow")
             place = "" if T is None else f" {T:g} C"
+            quantity = f"melt_flow {load:g} kg{place}"
+            volume = given[0].startswith("MVR")
+            # a sheet may give both rates of one test
+            if any(c.quantity == quantity and c.volume != volume for c in out):
+                quantity += " MVR" if volume else " MFR"
             out.append(
                 Claim(
-                    f"melt_flow {load:g} kg{place}",
+                    quantity,
                     "melt flow",
                     value,
                     tolerance,
                     said,
                     temperature_C=T,
                     load_kg=load,
-                    volume=given[0].startswith("MVR"),
+                    volume=volume,
                 )
             )
         return out

@@ -27,7 +27,8 @@ import numpy as np
 from mwdlink.chains.polymer import builtin
 from mwdlink.decisions.datasheet import check_datasheet
 from mwdlink.decisions.datasheet_claims import KINDS, Claim, Sheet
-from mwdlink.decisions.datasheet_model import CARD, FAMILIES, SheetModel, sheet_model
+from mwdlink.decisions.datasheet_families import FAMILIES
+from mwdlink.decisions.datasheet_model import CARD, SheetModel, sheet_model
 
 M2, M5, M21 = (f"melt_flow {load} kg 190 C" for load in ("2.16", "5", "21.6"))
 POSSIBLE = (

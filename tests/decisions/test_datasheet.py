@@ -15,14 +15,8 @@ from mwdlink.chains.distribution import Distribution
 from mwdlink.chains.polymer import builtin
 from mwdlink.decisions.datasheet import check_datasheet
 from mwdlink.decisions.datasheet_claims import Claim, Sheet
-from mwdlink.decisions.datasheet_model import (
-    CARD,
-    ENTRANCE_PRIOR,
-    FAMILIES,
-    MASS,
-    distribution_rows,
-    sheet_model,
-)
+from mwdlink.decisions.datasheet_families import FAMILIES, MASS, distribution_rows
+from mwdlink.decisions.datasheet_model import CARD, ENTRANCE_PRIOR, sheet_model
 from mwdlink.errors import InputError
 from mwdlink.files.sheet import read_sheet
 from mwdlink.relaxation.flow import melt_flow_rate
