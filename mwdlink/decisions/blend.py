@@ -16,6 +16,7 @@ from mwdlink.decisions.components import (
     Component,
     as_components,
     check_fractions,
+    fractions_without_filler,
     settled,
     validity_of,
 )
@@ -122,6 +123,7 @@ def blend(
         polymer.warnings,
         melt.warnings,
         notes,
+        fractions_without_filler(ready, phi),
         valid.warnings,
         c.warnings,
         _trust_cautions(trust, ready, melt, settings.route),

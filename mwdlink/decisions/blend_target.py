@@ -164,8 +164,9 @@ class TargetFound:
             "members_that_meet_it": list(self.shares),
             "reachable": None if self.reachable is None else list(self.reachable),
             "reason": self.reason,
-            "rest": dict(self.rest),
         }
+        if len(self.rest) > 1:
+            out["rest"] = dict(self.rest)
         if self.target.wanted is None:
             out["range"] = {"low": self.target.low, "high": self.target.high}
             out["windows"] = [

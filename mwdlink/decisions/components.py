@@ -214,7 +214,7 @@ def settled(
     """
     out, notes = [], []
     for c in components:
-        if c.polymer is not None and c.polymer != polymer.name:
+        if c.polymer is not None and c.polymer.casefold() != polymer.name.casefold():
             raise InputError(
                 f"component {c.name!r} is {c.polymer}, the blend {polymer.name}: blends of "
                 "different polymers are not predicted.",
@@ -245,6 +245,27 @@ def settled(
             notes.extend(c.distribution.warnings)
         out.append(replace(c, sweep=sweep))
     return tuple(out), merge_cautions(notes)
+
+
+def fractions_without_filler(
+    components: Sequence[Component], fractions: np.ndarray
+) -> tuple[Caution, ...]:
+    """Of filled components, what the fractions of polymer would be of bags weighed with filler."""
+    filler = np.array([c.filler for c in components])
+    if not np.any(filler > 0):
+        return ()
+    polymer = fractions * (1.0 - filler)
+    if not polymer.sum() > 0:
+        return ()
+    told = ", ".join(
+        f"{100 * x:.3g} % {c.name}"
+        for c, x in zip(components, polymer / polymer.sum(), strict=True)
+    )
+    text = (
+        f"The fractions are taken as of polymer. If the bags were weighed with their filler, those "
+        f"of polymer are {told}."
+    )
+    return (Caution("fractions_of_polymer", text),)
 
 
 @dataclass(frozen=True)

@@ -157,7 +157,8 @@ def average_bands(
     for k, v in averages.items():
         whole, part = float(np.log(rows[k]).var()), float(np.log(alone[k]).var())
         share = min(part / whole, 1.0) if whole > 0 else 1.0
-        budget = {"noise": 1.0 - share, "gpc": share} if share < 1.0 - 1e-9 else {"gpc": 1.0}
+        # of one source alone there is nothing to share out
+        budget = {"noise": 1.0 - share, "gpc": share} if share < 1.0 - 1e-9 else {}
         out[k] = Uncertain.from_samples(rows[k], v, budget=budget)
     return out
 

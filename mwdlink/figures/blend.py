@@ -103,6 +103,22 @@ def target_header(table: DataFrame, target: Any) -> str | None:
     return None
 
 
+def range_of(target: Any) -> tuple[float | None, float | None] | None:
+    """Ends of the range a target asks for, if it asks for one."""
+    ends = target.get("range") if isinstance(target, Mapping) else None
+    if not isinstance(ends, Mapping):
+        return None
+    return value_of(ends.get("low")), value_of(ends.get("high"))
+
+
+def range_words(ends: tuple[float | None, float | None]) -> str:
+    """`1e4 to 2e4`, `up to 2e4` or `from 1e4`."""
+    low, high = ends
+    if low is None:
+        return f"up to {short(high or 0.0)}"
+    return f"from {short(low)}" if high is None else f"{short(low)} to {short(high)}"
+
+
 @style.styled
 def plot_property(
     table: DataFrame,
@@ -123,7 +139,8 @@ def plot_property(
     header : str, optional
         Property column; the first one unless given.
     target : mapping, optional
-        `wanted` (in the column's unit) and `fractions` (uncertain quantities).
+        `wanted` (in the column's unit) and `fractions` (uncertain quantities); or `range` {low,
+        high} and `windows` [{low, high}], the fractions over which it is kept.
     fraction : float, optional
         The fraction asked for, marked.
     """
@@ -193,6 +210,26 @@ def plot_property(
                 textcoords="offset points",
                 fontsize=8.0,
             )
+    ends = range_of(target)
+    if ends is not None:
+        ys += [v for v in ends if v is not None]
+        floor, top = min(ys), max(ys)
+        low, high = (floor if ends[0] is None else ends[0]), (top if ends[1] is None else ends[1])
+        ax.axhspan(
+            low,
+            high,
+            color=style.VERMILION,
+            alpha=0.10,
+            linewidth=0,
+            zorder=0,
+            label=f"target {range_words(ends)}",
+        )
+        for w in (target or {}).get("windows") or []:
+            a, b = value_of(w.get("low")), value_of(w.get("high"))
+            if a is None or b is None:
+                continue
+            kept = (x >= 100 * a - 1e-9) & (x <= 100 * b + 1e-9)
+            ax.plot(x[kept], y[kept], color=style.VERMILION, linewidth=3.2, zorder=3)
     if fraction is not None:
         ax.axvline(
             100 * fraction,
@@ -240,5 +277,16 @@ def describe_property(
             f" The target {number(wanted)} is met at {listed(met)}."
             if met
             else f" The target {number(wanted)} is not met."
+        )
+    ends = range_of(target)
+    if ends is not None:
+        kept = [
+            f"{percent(value_of(w.get('low')))} to {percent(value_of(w.get('high')))}"
+            for w in (target or {}).get("windows") or []
+        ]
+        text += (
+            f" The target {range_words(ends)} is kept from {listed(kept)}."
+            if kept
+            else f" The target {range_words(ends)} is not met."
         )
     return text

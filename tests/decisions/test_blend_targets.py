@@ -14,6 +14,7 @@ from mwdlink.decisions.blend_target import parse_target
 from mwdlink.decisions.blend_targets import find_all, find_range, within
 from mwdlink.decisions.components import Component
 from mwdlink.errors import InputError
+from mwdlink.figures import pictures_of
 from mwdlink.report.blend_live import check
 
 PHI = np.linspace(0, 1, 101)
@@ -123,6 +124,8 @@ def test_targets_of_a_blend():
     ranged = blend([A, B], None, HDPE, target="viscosity_Pa_s@1=4e3:7e3", **more)
     assert "target" not in check(ranged.live_data())
     assert "is met at" in ranged.answer()
+    picture = pictures_of("blend", ranged.to_dict(), ranged.tables())["fractions"]
+    assert "The target 4000 to 7000 is kept from" in picture.description
     assert blend([A, B], None, HDPE, target=("eta0_Pa_s", 2e4), members=0).target is not None
     with pytest.raises(InputError, match="twice"):
         blend([A, B], None, HDPE, target=["eta0_Pa_s=2e4", "eta0_Pa_s=2e4"], members=0)
@@ -155,3 +158,10 @@ def test_three_components_say_what_the_rest_is():
     f = r.tables()["fractions.csv"]
     assert str(f.columns[0]) == "fraction B [-]"
     assert f["fraction A [-]"].iloc[0] == pytest.approx(5 / 7)
+
+
+def test_fractions_of_filled_bags_are_explained():
+    """Compared with 60/40 bags, 30 % filler in the first: 42/(42 + 40) of polymer (derived)."""
+    parts = [Component("A", A, filler=0.3), Component("B", B)]
+    told = {w.code: w.text for w in blend(parts, [60, 40], HDPE, members=0).warnings}
+    assert "51.2 % A, 48.8 % B" in told["fractions_of_polymer"]
