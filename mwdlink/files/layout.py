@@ -11,19 +11,22 @@ from dataclasses import dataclass, field
 
 from mwdlink.errors import Caution, InputError
 from mwdlink.files.decode import MAX_ROWS
-from mwdlink.files.headers import count_known, list_headers, recognise, shorten
+from mwdlink.files.header_rows import (
+    find_headers,
+    guess_header,
+    kind_of,
+    next_data,
+    trim,
+    units_row,
+)
+from mwdlink.files.headers import list_headers, recognise, shorten
 from mwdlink.files.numbers import looks_numeric
 from mwdlink.files.split import (
     NAMES,
     Row,
     find_delimiter,
-    split_header,
     split_lines,
 )
-from mwdlink.files.units import is_any_unit, is_empty
-
-# cells of text tried as headers before a file is given up: a book is no table
-_MAX_TRIED = 200_000
 
 
 @dataclass(frozen=True)
@@ -122,10 +125,10 @@ def build_blocks(
         raise InputError(
             f"the table has more than {MAX_ROWS} rows.", path=path, remedy="Give fewer points."
         )
-    kinds = [_kind(row) for row in rows]
-    headers = _find_headers(rows, kinds, comments, named, delimiter)
+    kinds = [kind_of(row) for row in rows]
+    headers = find_headers(rows, kinds, comments, named, delimiter)
     if not headers:
-        headers = _guess_header(rows, kinds, comments, delimiter)
+        headers = guess_header(rows, kinds, comments, delimiter)
     if not headers:
         texts = [row for row in rows if row is not None]
         raise InputError(
@@ -144,7 +147,7 @@ def build_blocks(
         cells, line, from_comment = headers[start]
         head = _texts(rows[begin:start], comments, _line_before(rows, begin), line)
         first = start if from_comment else start + 1
-        units, first = _units_row(rows, kinds, first, len(cells))
+        units, first = units_row(rows, kinds, first, len(cells))
         stop = _end_of_data(rows, kinds, first, end, is_last=k + 1 == len(starts))
         drafts += _collect(rows, kinds, first, stop, cells, units, line, head)
         begin = stop
@@ -160,7 +163,7 @@ def _refuse_rows_above(
     rows: Sequence[Row | None], kinds: Sequence[str], start: int, path: str | None
 ) -> None:
     """Rows like those of the table above its header: the order of the lines is broken."""
-    below = _next_data(rows, kinds, start)
+    below = next_data(rows, kinds, start)
     pattern = None if below is None else _pattern(rows[below])
     if pattern is None or pattern.count("n") < 2:
         return
@@ -176,118 +179,8 @@ def _refuse_rows_above(
 
 def _pattern(row: Row | None) -> str:
     """What stands in each cell: a number, a text, nothing."""
-    cells = [] if row is None else _trim(row.cells)
+    cells = [] if row is None else trim(row.cells)
     return "".join(" " if not c else "n" if looks_numeric(c) else "t" for c in cells)
-
-
-def _kind(row: Row | None) -> str:
-    """'blank', 'data' (some number in it) or 'text' (no number)."""
-    if row is None:
-        return "blank"
-    for cell in row.cells:
-        if cell and looks_numeric(cell):
-            return "data"
-    return "text"
-
-
-def _find_headers(
-    rows: Sequence[Row | None],
-    kinds: Sequence[str],
-    comments: dict[int, str],
-    named: Collection[str],
-    delimiter: str,
-) -> dict[int, tuple[list[str], int, bool]]:
-    """Position of each header row -> (cells, line, whether it stands in a comment)."""
-    wanted = {n.strip().casefold() for n in named}
-    found: dict[int, tuple[list[str], int, bool]] = {}
-    tried = 0
-    for i, row in enumerate(rows):
-        if row is None or kinds[i] != "text" or tried > _MAX_TRIED:
-            continue
-        below = _next_data(rows, kinds, i)
-        if below is None:
-            continue
-        cells = _trim(split_header(row.text, delimiter, len(_trim(rows[below].cells)))  # type: ignore[union-attr]
-                      if delimiter == " " else row.cells)  # fmt: skip
-        tried += len(cells)
-        have = {c.strip().casefold() for c in cells}
-        if (
-            count_known(cells) >= 2
-            or (wanted and wanted <= have)
-            or (len(wanted & have) + count_known(cells) >= 2 and wanted & have)
-        ):
-            found[i] = (cells, row.line, False)
-    if not found:
-        found = _header_in_comment(rows, kinds, comments, delimiter)
-    return found
-
-
-def _next_data(rows: Sequence[Row | None], kinds: Sequence[str], i: int) -> int | None:
-    """The first row of numbers at most four rows of text below a header."""
-    texts = 0
-    for j in range(i + 1, min(i + 12, len(rows))):
-        if kinds[j] == "data":
-            return j
-        texts += kinds[j] == "text"
-        if texts > 4:
-            return None
-    return None
-
-
-def _header_in_comment(
-    rows: Sequence[Row | None], kinds: Sequence[str], comments: dict[int, str], delimiter: str
-) -> dict[int, tuple[list[str], int, bool]]:
-    """Some programs write the header behind a comment mark, right above the data."""
-    first = next((i for i, kind in enumerate(kinds) if kind == "data"), None)
-    if first is None:
-        return {}
-    row = rows[first]
-    width = len(_trim(row.cells))  # type: ignore[union-attr]
-    above = [n for n in sorted(comments) if n < row.line]  # type: ignore[union-attr]
-    for number in reversed(above[-6:]):
-        for mark in (delimiter, "\t", ";", ",", "|", " "):
-            cells = _trim(split_header(comments[number], mark, width))
-            if len(cells) == width and count_known(cells) >= 2:
-                return {first: (cells, number, True)}
-    return {}
-
-
-def _guess_header(
-    rows: Sequence[Row | None], kinds: Sequence[str], comments: dict[int, str], delimiter: str
-) -> dict[int, tuple[list[str], int, bool]]:
-    """No known name anywhere: the last row of text above the longest run of numbers."""
-    best, start, length = None, 0, 0
-    for i, kind in enumerate([*kinds, "end"]):
-        if kind == "data":
-            if length == 0:
-                start = i
-            length += 1
-        elif kind in ("text", "end") and length:
-            if best is None or length > best[1]:
-                best = (start, length)
-            length = 0
-    if best is None:
-        return {}
-    start = best[0]
-    width = len(_trim(rows[start].cells))  # type: ignore[union-attr]
-    for i in range(start - 1, max(-1, start - 8), -1):
-        row = rows[i]
-        if row is None or kinds[i] != "text":
-            continue
-        cells = _trim(split_header(row.text, delimiter, width) if delimiter == " " else row.cells)
-        if len(cells) >= 2 and not _is_units(cells):
-            return {i: (cells, row.line, False)}
-    if width < 2:
-        return {}
-    return {start: ([f"#{n + 1}" for n in range(width)], 0, True)}
-
-
-def _trim(cells: Sequence[str]) -> list[str]:
-    """Without the empty cells at the end."""
-    out = list(cells)
-    while out and not out[-1]:
-        out.pop()
-    return out
 
 
 def _line_before(rows: Sequence[Row | None], begin: int) -> int:
@@ -306,31 +199,6 @@ def _texts(
     if comments:
         found |= {n: text for n, text in comments.items() if after < n < before}
     return [found[n] for n in sorted(found)]
-
-
-def _is_units(cells: Sequence[str]) -> bool:
-    """Whether a row of cells is a row of units: mostly known ones, none a column name with unit."""
-    given = [c for c in cells if c]
-    known = sum(1 for c in given if is_any_unit(c))
-    real = sum(1 for c in given if not is_empty(c) and is_any_unit(c))
-    bracketed = sum(1 for c in given if c[0] in "[(" and c[-1] in "])")
-    return bool(given) and (real >= 1 or bracketed >= 2) and 2 * (known + bracketed) >= len(given)
-
-
-def _units_row(
-    rows: Sequence[Row | None], kinds: Sequence[str], first: int, width: int
-) -> tuple[list[str] | None, int]:
-    i = first
-    while i < len(rows) and kinds[i] == "blank":
-        i += 1
-    if i >= len(rows):
-        return None, first
-    row = rows[i]
-    cells = _trim(row.cells)  # type: ignore[union-attr]
-    text_only = kinds[i] == "text" or all(is_empty(c) or not looks_numeric(c) for c in cells)
-    if text_only and len(cells) <= width and _is_units(cells) and count_known(cells) < 2:
-        return cells + [""] * (width - len(cells)), i + 1
-    return None, first
 
 
 def _data_like(row: Row, pattern: Row) -> bool:
@@ -357,7 +225,7 @@ def _end_of_data(
         if (
             row is not None
             and kinds[i - 1] == "data"
-            and (_data_like(row, pattern) and len(_trim(row.cells)) >= 2)
+            and (_data_like(row, pattern) and len(trim(row.cells)) >= 2)
         ):
             break
         i -= 1
@@ -367,9 +235,9 @@ def _end_of_data(
     if is_last:
         return end
     # no blank line: texts right above a header are its title, if they are short of cells
-    width = len(_trim(pattern.cells))
+    width = len(trim(pattern.cells))
     j = i
-    while j < end and not (kinds[j] == "text" and len(_trim(rows[j].cells)) < width):  # type: ignore[union-attr]
+    while j < end and not (kinds[j] == "text" and len(trim(rows[j].cells)) < width):  # type: ignore[union-attr]
         j += 1
     return j
 
@@ -414,7 +282,7 @@ def _is_title(row: Row | None, pattern: Row | None, width: int) -> bool:
     """A line between blocks: words in the first cell, and fewer cells than a row of the table."""
     if row is None or pattern is None:
         return False
-    return len(_trim(row.cells)) < min(width, 3) and not _data_like(row, pattern)
+    return len(trim(row.cells)) < min(width, 3) and not _data_like(row, pattern)
 
 
 def _restarts(row: Row, draft: _Draft, abscissa: int | None) -> bool:
@@ -451,7 +319,7 @@ def _finish(draft: _Draft, path: str | None, sheet: str, delimiter: str) -> Bloc
             else f"Name every column, and check row {row.line}."
         )
         raise InputError(
-            f"{len(_trim(row.cells))} cells under {width} column names "
+            f"{len(trim(row.cells))} cells under {width} column names "
             f"({list_headers(draft.headers)})"
             + (f", and so in {len(over)} rows." if len(over) > 1 else "."),
             path=path,
