@@ -174,7 +174,7 @@ class JointProblem:
         slope = np.zeros((self.data.size + self.gpc.size + 1, self.size))
         top = slice(0, self.data.size)
         # d/du through the softmax: J diag(w) - (J w) w'
-        slope[top, : n + 1] = dw * w - np.outer(dw @ w, w)
+        slope[top, : n + 1] = (dw - (dw @ w)[:, None]) * w
         slope[top, n + 1 + TIME] = d_time
         slope[top, n + 1 + EXPONENT] = d_exponent
         slope[top, n + 1 + MODULUS] = 1.0

@@ -274,7 +274,14 @@ def _draw(
         k = int(rng.choice(len(chosen.fits), p=chosen.weights))
         noise = joint_fit.draw_noise(chosen.problem, rng)
         first = chosen.fits[k]
-        fit = joint_fit.minimise(chosen.problem, first.z, first.smoothing, noise, tolerance=0.05)
+        fit = joint_fit.minimise(
+            chosen.problem,
+            first.z,
+            first.smoothing,
+            noise,
+            tolerance=0.05,
+            known=first.residuals,
+        )
         own = rng.standard_normal(alone.prior_rows)
         if fit.converged:
             fits.append(fit)

@@ -48,6 +48,8 @@ class JointFit:
     hessian : ndarray of shape (size, size)
     converged : bool
     steps : int
+    residuals : tuple of ndarray
+        What `JointProblem.residuals` gives at z, so that a fit that starts here need not ask again.
     """
 
     z: np.ndarray
@@ -61,6 +63,7 @@ class JointFit:
     hessian: np.ndarray
     converged: bool
     steps: int
+    residuals: tuple[np.ndarray, np.ndarray, np.ndarray]
 
 
 @dataclass(frozen=True, eq=False)
@@ -104,6 +107,7 @@ def minimise(
     noise: Noise | None = None,
     tolerance: float = TOLERANCE,
     bound: float = np.inf,
+    known: tuple[np.ndarray, np.ndarray, np.ndarray] | None = None,
 ) -> JointFit:
     """Damped Gauss-Newton, of the data as they are or perturbed (randomise, then optimise).
 
@@ -121,6 +125,8 @@ def minimise(
     bound : float
         A fit that will not come below this is left early: another one explains the data far
         better, and how badly this one does it does not matter.
+    known : tuple of ndarray, optional
+        The problem's residuals at z0, where an earlier fit has them.
     """
     rows, target = problem.prior_rows(smoothing)
     shift = 0.0 if noise is None else noise.data
@@ -130,14 +136,16 @@ def minimise(
     low, high = problem.response.exponent_limits
     at = problem.n + 1 + EXPONENT
 
-    def cost(z: np.ndarray) -> tuple[float, np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
-        r, slope, w = problem.residuals(z)
+    def cost(
+        z: np.ndarray, known: tuple[np.ndarray, np.ndarray, np.ndarray] | None = None
+    ) -> tuple[float, np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+        r, slope, w = problem.residuals(z) if known is None else known
         r = r - shift
         q = rows @ z - target
         return float(r @ r + q @ q), r, slope, w, q
 
     z = np.array(z0, dtype=float)
-    value, r, slope, w, q = cost(z)
+    value, r, slope, w, q = cost(z, known)
     damping = 1e-3
     converged = False
     steps = slow = 0
@@ -196,6 +204,7 @@ def minimise(
         hessian,
         converged,
         steps,
+        (r + shift, slope, w),
     )
 
 

@@ -29,8 +29,13 @@ SLOW_SHARES = SLOW_RATIOS**-0.5 / np.sum(SLOW_RATIOS**-0.5)
 PLATEAU_LOSS = 0.05
 
 
-def lagrange_rows(x: np.ndarray, at: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Local cubic interpolation on a uniform grid, as a matrix, and its derivative.
+# the four cubics through a point's neighbours, as powers of its place among them (0 to 3)
+CUBICS = np.array([[6, 0, 0, 0], [-11, 18, -9, 2], [6, -15, 12, -3], [-1, 3, -3, 1]]) / 6.0
+CUBIC_SLOPES = CUBICS[1:] * np.array([[1.0], [2.0], [3.0]])
+
+
+def lagrange_weights(x: np.ndarray, at: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Local cubic interpolation on a uniform grid, as four neighbours each, and its derivative.
 
     Parameters
     ----------
@@ -41,29 +46,31 @@ def lagrange_rows(x: np.ndarray, at: np.ndarray) -> tuple[np.ndarray, np.ndarray
 
     Returns
     -------
-    rows, slope : ndarray of shape (m, n)
-        Values and derivatives with respect to `at`.
+    column : ndarray of int of shape (m, 4)
+        The neighbours.
+    value, slope : ndarray of shape (m, 4)
+        Their weights, and the derivatives of these with respect to `at`.
     """
     h = float(x[1] - x[0])
     place = (at - x[0]) / h
-    i = np.minimum(np.maximum(np.floor(place).astype(int) - 1, 0), x.size - 4)
-    # distances to the four nodes, in steps
-    a = place - i
-    b, c, d = a - 1.0, a - 2.0, a - 3.0
-    ab, cd = a * b, c * d
-    column = i[:, None] + np.arange(4)
-    row = np.arange(at.size)[:, None]
-    rows = np.zeros((at.size, x.size))
-    slope = np.zeros((at.size, x.size))
-    rows[row, column] = np.column_stack([-b * cd / 6.0, a * cd / 2.0, -ab * d / 2.0, ab * c / 6.0])
-    slope[row, column] = np.column_stack(
-        [
-            -(cd + b * d + b * c) / (6.0 * h),
-            (cd + a * d + a * c) / (2.0 * h),
-            -(b * d + a * d + ab) / (2.0 * h),
-            (b * c + a * c + ab) / (6.0 * h),
-        ]
-    )
+    first = np.minimum(np.maximum(np.floor(place).astype(int) - 1, 0), x.size - 4)
+    powers = (place - first)[:, None] ** np.arange(4)
+    return first[:, None] + np.arange(4), powers @ CUBICS, powers[:, :3] @ CUBIC_SLOPES / h
+
+
+def lagrange_rows(x: np.ndarray, at: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """The same as matrices.
+
+    Returns
+    -------
+    rows, slope : ndarray of shape (m, n)
+        Values and derivatives with respect to `at`.
+    """
+    column, value, change = lagrange_weights(x, at)
+    flat = (column + x.size * np.arange(at.size)[:, None]).ravel()
+    rows, slope = np.zeros((2, at.size, x.size))
+    rows.ravel()[flat] = value.ravel()
+    slope.ravel()[flat] = change.ravel()
     return rows, slope
 
 
@@ -95,6 +102,11 @@ class Response:
     rows: np.ndarray
     linear: np.ndarray
     floor: float
+
+    @cached_property
+    def _both(self) -> np.ndarray:
+        """What acts on the relaxation and what acts on the weights, side by side."""
+        return np.hstack([self.rows, self.linear])
 
     @cached_property
     def _coefficients(self) -> np.ndarray:
@@ -132,17 +144,20 @@ class Response:
         y = self.rows @ net + self.linear @ w
         good = y > self.floor
         y = np.maximum(y, self.floor)
-        slope = self.rows @ ((exponent * p)[:, None] * k) + self.linear
-        slope = np.where(good[:, None], slope, 0.0) / y[:, None]
         d_beta = np.where(good, self.rows @ (net * np.log(s) + exponent * p * ds), 0.0) / y
-        a, da = lagrange_rows(self.grid, self.log_omega + log_factor)
-        m = self.grid.size
-        log_y = np.log(y)
-        both = (log_y[:m], log_y[m:])
-        value = np.concatenate([a @ b for b in both])
-        d_factor = np.concatenate([da @ b for b in both])
-        d_weight = np.vstack([a @ slope[:m], a @ slope[m:]])
-        d_exponent = np.concatenate([a @ d_beta[:m], a @ d_beta[m:]])
+        # between the frequencies of the grid: four neighbours of G' and of G'' each
+        column, a, da = lagrange_weights(self.grid, self.log_omega + log_factor)
+        column = np.concatenate([column, column + self.grid.size])
+        a, da = np.concatenate([a, a]), np.concatenate([da, da])
+        log_y = np.log(y)[column]
+        value = (a * log_y).sum(axis=1)
+        d_factor = (da * log_y).sum(axis=1)
+        d_exponent = (a * d_beta[column]).sum(axis=1)
+        part = a * np.where(good, 1.0 / y, 0.0)[column]
+        # (interpolation of rows) times k is a smaller product than rows times k
+        read = (part[:, None, :] @ self._both[column])[:, 0]
+        times = self.rows.shape[1]
+        d_weight = (read[:, :times] * (exponent * p)) @ k + read[:, times:]
         return value, d_weight, d_factor, d_exponent
 
     def extra_process(self, kind: str, q: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
