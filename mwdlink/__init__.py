@@ -48,6 +48,7 @@ _HOME = {
     "find_tail": "mwdlink.decisions.tail",
     "check_datasheet": "mwdlink.decisions.datasheet",
     "calibrate": "mwdlink.decisions.calibrate",
+    "batch": "mwdlink.runs.batch",
 }
 
 __all__ = ["__version__", *_HOME]

@@ -16,10 +16,13 @@ from mwdlink.cli.options import (
     INPUT,
     Number,
     Output,
+    above_option,
     ensemble_options,
     exponent_option,
     kernel_option,
+    method_options,
     noise_option,
+    output_options,
     polymer_option,
     reading_options,
     rouse_option,
@@ -42,22 +45,8 @@ EVERY = 15.0
 @exponent_option
 @rouse_option
 @noise_option
-@click.option(
-    "--above",
-    type=Number("M", 1),
-    multiple=True,
-    help="Also the weight above this molar mass [g/mol]; repeatable.",
-)
-@click.option(
-    "--method",
-    type=click.Choice(["smooth", "tikhonov", "mixture", "generalised-exponential"]),
-    default="smooth",
-    show_default=True,
-    help="How the distribution is sought.",
-)
-@click.option(
-    "--smoothing", type=Number("LAMBDA", 0), help="A fixed smoothing. Default: by the evidence."
-)
+@above_option
+@method_options
 @click.option("--against", type=INPUT, help="Sweep of a retained sample: compare each lot with it.")
 @ensemble_options
 @reading_options
@@ -72,14 +61,11 @@ EVERY = 15.0
 @click.option("--report", is_flag=True, help="A page for each input too.")
 @click.option("--write-members", is_flag=True, help="Every input's members.csv too.")
 @click.option(
-    "--label", type=click.UNPROCESSED, multiple=True, help="KEY=VALUE for the report's head."
+    "--limit-seconds",
+    type=Number("S", 0),
+    help="Give an input up, with a reason, when it takes longer. Default: no limit.",
 )
-@click.option("--out", type=click.Path(path_type=Path), help="Folder to write.")
-@click.option("--json", "as_json", is_flag=True, help="Only result.json's content on stdout.")
-@click.option(
-    "--replace", is_flag=True, help="Replace an earlier result; what is unchanged is taken over."
-)
-@click.option("--quiet", is_flag=True, help="No notes and no progress.")
+@output_options
 def command(
     inputs: tuple[str, ...],
     polymer: str | None,
@@ -90,6 +76,7 @@ def command(
     noise: float | None,
     above: tuple[float, ...],
     method: str,
+    choose: str,
     smoothing: float | None,
     against: Path | None,
     members: int,
@@ -101,11 +88,8 @@ def command(
     figures: bool,
     report: bool,
     write_members: bool,
-    label: tuple[str, ...],
-    out: Path | None,
-    as_json: bool,
-    replace: bool,
-    quiet: bool,
+    limit_seconds: float | None,
+    output: Output,
 ) -> None:
     """Invert many INPUTS into one table, with a folder for each.
 
@@ -117,7 +101,8 @@ def command(
     INPUTS are files, folders, patterns, or tables with a column `path` (and
     `lot`, `polymer`, `temperature [C]`). One that cannot be used stops none of
     the others: it is listed in failed.csv, and the exit status is 5. A run that
-    was broken off goes on where it was when the command is given again.
+    was broken off goes on where it was when the command is given again, and
+    --replace takes over from an earlier result what is unchanged.
     """
     for name in ("OPENBLAS", "OMP", "MKL"):
         # before numpy loads: a second thread gains nothing on matrices this small, and the last
@@ -126,20 +111,21 @@ def command(
     from mwdlink.files.results import json_text
     from mwdlink.runs.batch import batch, record_of, why_not_batch
 
-    output = Output(out, as_json, replace, quiet, _labels(label))
+    out = output.out
     if out is not None:
-        reason = why_not_batch(out, replace)
+        reason = why_not_batch(out, output.replace)
         if reason:
             raise click.UsageError(reason)
-    bar = _Progress(quiet)
+    bar = _Progress(output.quiet)
     try:
         result = batch(
             inputs,
             polymer,
             out=out,
-            replace=replace,
+            replace=output.replace,
             workers=workers,
             cluster=cluster,
+            limit_seconds=limit_seconds,
             anywhere=anywhere,
             against=against,
             temperature_C=temperature,
@@ -159,6 +145,7 @@ def command(
             seed=seed,
             noise=noise,
             method=method,
+            choose=choose,
             smoothing=smoothing,
         )
     except BaseException:
@@ -167,7 +154,7 @@ def command(
         raise
     bar.end()
     record = record_of(result, output.labels)
-    if as_json:
+    if output.json:
         click.echo(json_text(record), nl=False)
     else:
         told = {k: v for k, v in record.items() if k not in ("throughput_per_s", "taken_over")}
@@ -180,12 +167,6 @@ def command(
         note(f"written to {out}", output, kind="done")
     if result.failed:
         click.get_current_context().exit(PART_FAILED)
-
-
-def _labels(pairs: tuple[str, ...]) -> dict[str, str]:
-    from mwdlink.cli.options import Pair
-
-    return dict(Pair().convert(pair, None, None) for pair in pairs)
 
 
 def _typed() -> str:

@@ -11,10 +11,11 @@ from mwdlink.cli.deliver import deliver, working
 from mwdlink.cli.inputs import MEASURED, read_one
 from mwdlink.cli.options import (
     INPUT,
-    Number,
     Output,
     Wanted,
+    above_option,
     ensemble_options,
+    method_options,
     model_options,
     noise_option,
     output_options,
@@ -26,35 +27,14 @@ from mwdlink.cli.options import (
 @click.argument("sweep", type=INPUT)
 @model_options
 @noise_option
-@click.option(
-    "--above",
-    type=Number("M", 1),
-    multiple=True,
-    help="Also the weight above this molar mass [g/mol]; repeatable.",
-)
+@above_option
 @click.option(
     "--want",
     type=Wanted(),
     multiple=True,
     help="Say which measurement brings a quantity to this relative precision, as in Mz=0.1.",
 )
-@click.option(
-    "--method",
-    type=click.Choice(["smooth", "tikhonov", "mixture", "generalised-exponential"]),
-    default="smooth",
-    show_default=True,
-    help="How the distribution is sought.",
-)
-@click.option(
-    "--choose",
-    type=click.Choice(["evidence", "gcv", "l-curve", "discrepancy"]),
-    default="evidence",
-    show_default=True,
-    help="How tikhonov chooses its smoothing.",
-)
-@click.option(
-    "--smoothing", type=Number("LAMBDA", 0), help="A fixed smoothing. Default: by the evidence."
-)
+@method_options
 @ensemble_options
 @reading_options
 @click.option("--write-members", is_flag=True, help="Write every ensemble member to members.csv.")

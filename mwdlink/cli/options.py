@@ -227,6 +227,29 @@ noise_option = click.option(
     type=Number("R", 0, 1, percent=True),
     help="Relative error of the moduli. Default: from the table, else estimated, at least 1 %.",
 )
+above_option = click.option(
+    "--above",
+    type=Number("M", 1),
+    multiple=True,
+    help="Also the weight above this molar mass [g/mol]; repeatable.",
+)
+method_option = click.option(
+    "--method",
+    type=click.Choice(["smooth", "tikhonov", "mixture", "generalised-exponential"]),
+    default="smooth",
+    show_default=True,
+    help="How the distribution is sought.",
+)
+choose_option = click.option(
+    "--choose",
+    type=click.Choice(["evidence", "gcv", "l-curve", "discrepancy"]),
+    default="evidence",
+    show_default=True,
+    help="How tikhonov chooses its smoothing.",
+)
+smoothing_option = click.option(
+    "--smoothing", type=Number("LAMBDA", 0), help="A fixed smoothing. Default: by the evidence."
+)
 members_option = click.option(
     "--members",
     type=click.IntRange(0, 100_000),
@@ -244,6 +267,7 @@ model_options = _family(
     polymer_option(), temperature_option, kernel_option, exponent_option, rouse_option
 )
 ensemble_options = _family(members_option, seed_option)
+method_options = _family(method_option, choose_option, smoothing_option)
 calibration_option = click.option(
     "--calibration",
     type=click.Choice(("absolute", "universal", "equivalent", "unstated")),

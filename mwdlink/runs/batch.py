@@ -32,6 +32,9 @@ from mwdlink.runs.lots import Lot, find_lots, shown
 from mwdlink.runs.one import MARK, DiskTrouble, Job, Outcome
 from mwdlink.runs.workers import Hands, hands_for
 
+# in the name of a folder that is being written (files/results.py)
+HALF = ".mwdlink-new-"
+
 
 @dataclass(frozen=True)
 class Progress:
@@ -61,6 +64,7 @@ def batch(
     workers: int | None = 1,
     executor: Executor | None = None,
     cluster: str | None = None,
+    limit_seconds: float | None = None,
     anywhere: bool = False,
     against: str | os.PathLike[str] | None = None,
     temperature_C: float | None = None,
@@ -92,6 +96,9 @@ def batch(
         Works instead; results do not depend on it.
     cluster : str, optional
         Address of a dask scheduler.
+    limit_seconds : float, optional
+        [s] An input that takes longer is given up and listed in `failed` (kind `time`). Only with
+        processes of this machine, as a thread or a cluster's worker cannot be stopped safely.
     anywhere : bool
         May a manifest name files outside its folder?
     against : path, optional
@@ -115,8 +122,8 @@ def batch(
     Raises
     ------
     InputError
-        If no input is found, or polymer or reference cannot be used. An input's own fault never
-        raises: it is listed in `failed`.
+        If no input is found, polymer or reference cannot be used, or a time limit cannot be kept.
+        An input's own fault never raises: it is listed in `failed`.
     MwdlinkError
         If the folder cannot be written or another run holds it.
     """
@@ -145,7 +152,7 @@ def batch(
     with _work_folder(target, out, replace, say) as folder:
         if folder is not None and target is not None:
             job = _with(job, out=str(folder), earlier=(str(target),) if target.is_dir() else ())
-        hands = hands_for(len(lots), workers, executor, cluster)
+        hands = hands_for(len(lots), workers, executor, cluster, limit_seconds)
         done = False
         try:
             if against is not None:
@@ -161,6 +168,8 @@ def batch(
             done = True
         finally:
             hands.stop(at_once=not done)
+            if folder is not None and not done and hands.ended:
+                _sweep(folder)
         result = _result(job, lots, outcomes, seconds, own, notes)
         if folder is not None and target is not None:
             _finish(folder, target, result, job, command_line)
@@ -389,6 +398,14 @@ def _finish(folder: Path, target: Path, result: Batch, job: Job, command_line: s
     # where there was an earlier result, it now stands under the work folder's name
     if folder.is_dir():
         shutil.rmtree(folder, ignore_errors=True)
+
+
+def _sweep(folder: Path) -> None:
+    """Take away what workers that were stopped in the middle had half written."""
+    with contextlib.suppress(OSError):
+        for name in os.listdir(folder):
+            if name.startswith(".") and HALF in name:
+                shutil.rmtree(folder / name, ignore_errors=True)
 
 
 def _clear(folder: Path, kept: set[str]) -> None:

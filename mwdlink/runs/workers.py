@@ -17,8 +17,9 @@ from concurrent.futures import FIRST_COMPLETED, Executor, Future, ProcessPoolExe
 from typing import Any
 
 from mwdlink.errors import InputError, MwdlinkError
+from mwdlink.runs.limit import in_main_thread, limit_can_be_kept, run_within
 from mwdlink.runs.lots import Lot
-from mwdlink.runs.one import Job, Outcome, make_reference, run_chunk, run_one
+from mwdlink.runs.one import Job, Outcome, make_reference, run_chunk
 
 THREADS = (
     "OPENBLAS_NUM_THREADS",
@@ -52,6 +53,9 @@ class Hands:
 
     width = 1
     chunk = 1
+    limit_seconds: float | None = None
+    # after `stop`, does nobody write any more?
+    ended = True
 
     def reference(self, job: Job, path: str) -> Any:
         """Invert the reference where the other inputs are inverted."""
@@ -59,8 +63,14 @@ class Hands:
 
     def outcomes(self, job: Job, lots: Sequence[tuple[int, Lot]]) -> Iterator[Outcome]:
         """Outcomes in any order, each input once."""
-        for index, lot in lots:
-            yield run_one(job, index, lot)
+        for item in lots:
+            yield from self.work(job, [item])
+
+    def work(self, job: Job, chunk: Sequence[tuple[int, Lot]]) -> list[Outcome]:
+        """Outcomes of a chunk, worked on here."""
+        if self.limit_seconds is None:
+            return run_chunk(job, chunk)
+        return run_within(job, chunk, self.limit_seconds)
 
     def stop(self, at_once: bool = False) -> None:
         """End the workers; at once if the run is broken off."""
@@ -80,6 +90,7 @@ class ExecutorHands(Hands):
 
     def __init__(self, executor: Executor | None, width: int = 8, chunk: int = 1) -> None:
         self.executor, self.width, self.chunk = executor, width, chunk
+        self.ended = False
 
     def renew(self) -> None:
         """Replace an executor that broke; one that was given cannot be."""
@@ -91,6 +102,12 @@ class ExecutorHands(Hands):
     def submit(self, function: Any, *arguments: Any) -> Future[Any]:
         assert self.executor is not None
         return self.executor.submit(function, *arguments)
+
+    def send(self, job: Job, chunk: Sequence[tuple[int, Lot]]) -> Future[list[Outcome]]:
+        """Have a chunk worked on."""
+        if self.limit_seconds is None:
+            return self.submit(run_chunk, job, chunk)
+        return self.submit(run_within, job, chunk, self.limit_seconds)
 
     def reference(self, job: Job, path: str) -> Any:
         return self.submit(make_reference, job, path).result()
@@ -111,7 +128,7 @@ class ExecutorHands(Hands):
             while waiting and len(flying) < self.width:
                 part = waiting.popleft()
                 try:
-                    flying[self.submit(run_chunk, job, part)] = part
+                    flying[self.send(job, part)] = part
                 except (RuntimeError, OSError):  # a broken pool refuses work
                     waiting.appendleft(part)
                     broken = True
@@ -155,6 +172,7 @@ class Processes(ExecutorHands):
     def __init__(self, workers: int) -> None:
         super().__init__(None, 2 * workers, MOST_IN_CHUNK)
         self.workers = workers
+        self.ended = True
         self._before = {name: os.environ.get(name) for name in THREADS}
         hold_threads()  # children take them over as they start
         self._start()
@@ -258,7 +276,11 @@ def version_here() -> str:
 
 
 def hands_for(
-    count: int, workers: int | None, executor: Executor | None, cluster: str | None
+    count: int,
+    workers: int | None,
+    executor: Executor | None,
+    cluster: str | None,
+    limit_seconds: float | None = None,
 ) -> Hands:
     """Who works on `count` inputs.
 
@@ -268,7 +290,16 @@ def hands_for(
         Processes; 1 works in this one; None takes the cores there are, one for four inputs at most.
     executor, cluster : optional
         Instead of processes.
+    limit_seconds : float, optional
+        [s] For each input.
+
+    Raises
+    ------
+    InputError
+        If the limit cannot be kept by who works.
     """
+    if limit_seconds is not None:
+        limit_can_be_kept(limit_seconds, executor is None and cluster is None)
     if executor is not None:
         return ExecutorHands(executor)
     if cluster is not None:
@@ -276,14 +307,18 @@ def hands_for(
     if workers is None:
         workers = min(usable_cores(), max(1, count // 4))
     workers = min(workers, count)
-    return Hands() if workers <= 1 else Processes(workers)
+    if limit_seconds is not None and workers <= 1 and not in_main_thread():
+        workers = 2  # their work runs in main threads of their own
+    hands = Hands() if workers <= 1 else Processes(workers)
+    hands.limit_seconds = limit_seconds
+    return hands
 
 
 @contextlib.contextmanager
 def _without_interrupt() -> Iterator[None]:
     """Ctrl-C waits until the block has ended; processes started in it never see one."""
     mask = getattr(signal, "pthread_sigmask", None)
-    if mask is None or threading.current_thread() is not threading.main_thread():
+    if mask is None or not in_main_thread():
         yield
         return
     before = mask(signal.SIG_BLOCK, {signal.SIGINT})
