@@ -67,9 +67,14 @@ class GpcError:
 
     @classmethod
     def of(cls, row: float | None = None, molar_mass: float | None = None) -> GpcError:
-        """From the error of a row; the baseline's keeps its usual proportion (a tenth)."""
+        """From the error of a row; the baseline's keeps its usual proportion (a tenth).
+
+        No error of a row, with none of the molar masses given, is no error at all.
+        """
         if row is None:
             return cls(molar_mass=molar_mass)
+        if row == 0.0 and molar_mass is None:
+            return cls(0.0, 0.0, 0.0)
         return cls(row, row * BASELINE_ERROR / RELATIVE_ERROR, molar_mass)
 
     def spread_of(self, d: Distribution) -> float:

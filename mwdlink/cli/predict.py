@@ -25,7 +25,7 @@ gpc_error_option = click.option(
     "--gpc-error",
     type=Number("R", 0, 0.5, percent=True, open_low=False),
     help="Relative error of a row of a GPC table; its baseline's is a tenth of that, in parts of "
-    "the peak. Default: 3 % for tables as measured.",
+    "the peak. 0: the table is exact. Default: 3 %.",
 )
 
 

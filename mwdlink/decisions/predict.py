@@ -161,8 +161,8 @@ def predict(
     seed : int
     gpc_error : float or GpcError, optional
         Error of the distribution: a number is that of a row, relative [-]. By default a measured
-        table has the errors of `GpcError` and a distribution from averages is exact; 0 takes the
-        rows as exact and leaves the error of the molar masses.
+        table has the errors of `GpcError` and a distribution from averages is exact; 0 takes it
+        as exact.
 
     Returns
     -------

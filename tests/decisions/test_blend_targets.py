@@ -6,9 +6,11 @@ import json
 
 import numpy as np
 import pytest
+from click.testing import CliRunner
 from decisions.made_up import HDPE, A, B
 
 from mwdlink.chains.families import lognormal
+from mwdlink.cli.main import main
 from mwdlink.decisions.blend import blend
 from mwdlink.decisions.blend_target import parse_target
 from mwdlink.decisions.blend_targets import find_all, find_range, within
@@ -165,3 +167,26 @@ def test_fractions_of_filled_bags_are_explained():
     parts = [Component("A", A, filler=0.3), Component("B", B)]
     told = {w.code: w.text for w in blend(parts, [60, 40], HDPE, members=0).warnings}
     assert "51.2 % A, 48.8 % B" in told["fractions_of_polymer"]
+
+
+def test_targets_on_the_command_line(tmp_path):
+    """Compared with the same through Python: repeated targets, a range, the component varied."""
+    paths = []
+    for d in (A, B):
+        x = np.linspace(3, 7, 81)
+        y = np.interp(x, np.log10(d.molar_mass), d.density, left=0.0, right=0.0)
+        paths.append(tmp_path / f"{d.label}.csv")
+        rows = "\n".join(f"{10**m:.6g},{w:.6g}" for m, w in zip(x, y, strict=True))
+        paths[-1].write_text(f"M [g/mol],dW/dlog10M\n{rows}\n")
+    words = ["blend", *map(str, paths), "--polymer", "hdpe", "--calibration", "absolute", "--json"]
+    words += ["--target", "eta0_Pa_s=2e4", "--target", "viscosity_Pa_s@1=:7e3", "--vary", "B"]
+    words += ["--members", "20", "--gpc-error", "5%", "--quiet"]
+    run = CliRunner().invoke(main, words)
+    assert run.exit_code == 0, run.output
+    d = json.loads(run.stdout)
+    assert [t["component"] for t in d["targets"]] == ["B", "B"]
+    assert d["targets"][1]["range"] == {"low": None, "high": 7000.0}
+    assert d["central_model"]["band_gpc"]["relative"] == 0.05
+    assert CliRunner().invoke(main, [*words, "--target", "eta0=1:2"]).exit_code == 2
+    unknown = CliRunner().invoke(main, [*words, "--vary", "X"])
+    assert isinstance(unknown.exception, InputError)

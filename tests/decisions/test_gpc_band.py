@@ -190,6 +190,7 @@ def test_averages_are_exact_and_tables_are_not():
     asked = predict(A, HDPE, members=20, gpc_error=0.05)
     assert asked.gpc is not None and asked.gpc.errors[0].baseline == pytest.approx(0.005)
     assert predict(table(A), HDPE, members=0).gpc is None
+    assert predict(table(A), HDPE, members=20, gpc_error=0).gpc is None
     mixed = blend([table(A), B], [0.5, 0.5], HDPE, members=20)
     assert any(s.startswith("1 of 2 distributions") for s in mixed.cannot_say())
     for bad in (-0.1, 0.9, float("nan")):
