@@ -12,7 +12,6 @@ from mwdlink.chains.polymer import Polymer, builtin
 from mwdlink.decisions.branching_signs import LCBI_POLYMERS, LCBI_TEMPERATURE, branching_index
 from mwdlink.decisions.datasheet_causes import shadows, tried
 from mwdlink.decisions.datasheet_claims import Claim, Sheet
-from mwdlink.decisions.datasheet_families import FAMILIES
 from mwdlink.decisions.datasheet_fit import Expected, claim_sigma, expect, model_sigma
 from mwdlink.decisions.datasheet_model import SheetModel, sheet_model
 from mwdlink.decisions.datasheet_result import DataSheet, Judged
@@ -116,7 +115,7 @@ def check_datasheet(
         explanations=explain(sheet, usable, judged, named, finding, fits, dependent, index, card),
         branching_index=index,
         model={"kernels": list(names), "exponent": "2.0 +- 0.2", "rouse": True,
-               "families": list(FAMILIES)},
+               "families": list(models[0].families)},
         warnings=merge_cautions(sheet.warnings, melt.warnings, notes),
     )  # fmt: skip
 

@@ -14,7 +14,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from mwdlink.decisions.datasheet_claims import Claim
-from mwdlink.decisions.datasheet_families import FAMILIES
+from mwdlink.decisions.datasheet_families import FAMILIES, RARITY
 from mwdlink.decisions.datasheet_model import CARD, FLOW_ERROR, SheetModel
 
 STEPS = 14
@@ -94,7 +94,7 @@ def expect(
     rng = np.random.default_rng(seed)
     collected: list[list[tuple[np.ndarray, np.ndarray, float]]] = [[] for _ in masks]
     for model in models:
-        for family in FAMILIES:
+        for family in model.families:
             z, cost, chol, evidence = _fit(model, family, target, sigma, masks)
             d = z.shape[1]
             push = rng.standard_normal((draws // 2, d))
@@ -107,7 +107,7 @@ def expect(
             y = model.predict(drawn.reshape(-1, d), family).reshape(len(masks), len(push), -1)
             for i, mask in enumerate(masks):
                 exact = _cost(y[i, :, :claims], drawn[i], target, sigma, mask)
-                gauss = cost[i] + np.sum(push**2, axis=1)
+                gauss = cost[i] - 2.0 * RARITY.get(family, 0.0) + np.sum(push**2, axis=1)
                 log_weight = np.clip(-0.5 * (exact - gauss), -30.0, 3.0)
                 collected[i].append((y[i], log_weight + evidence[i], float(cost[i])))
     out = []
@@ -145,7 +145,7 @@ def least_costs(
     target, sigma = _target(models[0].claims[:claims])
     target = target + shift
     return np.min(
-        [_fit(m, family, target, sigma, masks)[1] for m in models for family in FAMILIES], axis=0
+        [_fit(m, family, target, sigma, masks)[1] for m in models for family in m.families], axis=0
     )
 
 
@@ -216,5 +216,6 @@ def _fit(
     j = slope / sigma[:, None] * masks[:, :, None]
     hessian = np.einsum("knd,kne->kde", j, j) + eye
     chol = np.linalg.cholesky(hessian)
+    cost = cost + 2.0 * RARITY.get(family, 0.0)
     evidence = -0.5 * cost - np.sum(np.log(np.einsum("kdd->kd", chol)), axis=1)
     return z, cost, chol, evidence

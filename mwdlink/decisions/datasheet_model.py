@@ -16,7 +16,13 @@ import numpy as np
 from mwdlink.chains.polymer import Polymer
 from mwdlink.chains.shift import GAS_CONSTANT, ZERO_CELSIUS
 from mwdlink.decisions.datasheet_claims import Claim
-from mwdlink.decisions.datasheet_families import FAMILIES, MASS, distribution_rows
+from mwdlink.decisions.datasheet_families import (
+    FAMILIES,
+    MASS,
+    NARROW_BELOW,
+    USUAL,
+    distribution_rows,
+)
 from mwdlink.decisions.gpc_scale import STANDARD_A, STANDARD_K, STANDARD_SOLVENT
 from mwdlink.decisions.properties import Curves, crossovers, melt_flow_rates
 from mwdlink.relaxation.mixing import Model, survival_matrix
@@ -84,6 +90,8 @@ class SheetModel:
     polymer : Polymer
     claims : tuple of Claim
     kernel : str
+    families : tuple of str
+        Of distributions that the claims may be of.
     tables : ndarray of shape (5, n_t, n)
         F^(1/beta) at each of EXPONENTS.
     matrix : ndarray of shape (2 n_w, n_t)
@@ -97,6 +105,7 @@ class SheetModel:
     polymer: Polymer
     claims: tuple[Claim, ...]
     kernel: str
+    families: tuple[str, ...]
     tables: np.ndarray
     matrix: np.ndarray
     linear: np.ndarray
@@ -322,6 +331,14 @@ class SheetModel:
         return factor + (self._energy(card) - base) / GAS_CONSTANT * reciprocal
 
 
+def families_of(claims: Sequence[Claim]) -> tuple[str, ...]:
+    """Families that the claims may be of: narrow ones where the sheet speaks of a narrow melt."""
+    value = {c.kind: c.value for c in claims if c.calibration != "equivalent"}
+    ratios = [value[a] / value[b] for a, b in (("Mw", "Mn"), ("Mz", "Mw")) if {a, b} <= set(value)]
+    ratios += [value[k] for k in ("dispersity",) if k in value]
+    return (*USUAL, "narrow") if any(1.0 <= r < NARROW_BELOW for r in ratios) else USUAL
+
+
 def sheet_model(polymer: Polymer, claims: Sequence[Claim], kernel: str) -> SheetModel:
     """The model of one polymer and one kernel."""
     melt = polymer.melt(polymer.temperature_C)
@@ -335,6 +352,7 @@ def sheet_model(polymer: Polymer, claims: Sequence[Claim], kernel: str) -> Sheet
         polymer,
         tuple(claims),
         kernel,
+        families_of(claims),
         tables,
         operator.matrix,
         np.vstack([part.real, part.imag]),

@@ -153,7 +153,7 @@ def find(
 
 
 def _usual(count: int) -> float:
-    return float(chi2.median(max(count, 1)))
+    return float(chi2.ppf(0.75, max(count, 1)))
 
 
 def _hidden(

@@ -35,6 +35,10 @@ def spoken(quantity: str) -> str:
     }
     if quantity in plain:
         return plain[quantity]
+    # where a sheet gives both rates of one test
+    for end, kind in ((" MVR", "volume flow"), (" MFR", "mass flow")):
+        if quantity.endswith(end):
+            quantity = quantity.removesuffix(end).replace("melt_flow", kind)
     text = quantity.replace("_", " ")
     for key, words in (
         ("crossover omega rad per s", "crossover frequency"),
@@ -120,7 +124,7 @@ def plot_claims(claims: Sequence[Mapping[str, Any]], *, ax: Axes | None = None) 
         ends.append(x)
         if z is not None:
             ax.annotate(
-                f"z = {z:+.1f}".replace("-", "−"),
+                "z = " + (f"{z:+.1f}".replace("-", "−") if abs(z) >= 0.05 else "0.0"),
                 (1.0, row),
                 xycoords=ax.get_yaxis_transform(),
                 xytext=(4, 0),
@@ -132,21 +136,31 @@ def plot_claims(claims: Sequence[Mapping[str, Any]], *, ax: Axes | None = None) 
     ax.set_yticks(range(len(claims)), rows)
     ax.set_ylim(len(claims) - 0.5, -0.5)
     ax.tick_params(axis="y", which="both", length=0)
-    reach = min(1.12 * max(abs(min(ends)), abs(max(ends))), 3.0)
+    reach = min(1.12 * max(abs(min(ends)), abs(max(ends))), 6.0)
     ax.set_xlim(-reach, reach)
-    factors = (1.1, 1.25, 1.5, 2.0, 3.0, 5.0, 10.0, 30.0, 100.0, 300.0, 1000.0)
-    below = (0.9, 0.8, 0.7, 0.5, 0.3, 0.2, 0.1, 0.03, 0.01, 0.003, 0.001)
-    steps = [f for f in (1.0, *factors, *below) if abs(np.log10(f)) <= reach]
-    ticks: list[float] = []
-    for f in sorted(steps, key=lambda f: abs(np.log10(f))):
-        # far apart enough for their labels
-        if all(abs(np.log10(f) - np.log10(g)) > 0.19 * reach for g in ticks):
-            ticks.append(f)
-    ticks.sort()
-    ax.set_xticks([float(np.log10(f)) for f in ticks], [f"{f:g}" for f in ticks])
+    _mark_factors(ax, reach)
     ax.set_xlabel("claimed / expected from all the others")
     style.legend_above(ax, over_figure=own)
     return ax
+
+
+# what a factor below one is written as: a fraction where that reads more easily
+FACTORS = {1.1: "0.91", 1.25: "0.8", 1.5: "0.67", 2.0: "1/2", 3.0: "1/3", 5.0: "1/5",
+           10.0: "0.1", 100.0: "0.01", 1000.0: "0.001", 1e4: "1e−4", 1e5: "1e−5"}  # fmt: skip
+
+
+def _mark_factors(ax: Axes, reach: float) -> None:
+    """Ticks in pairs of a factor up and the same factor down, far enough apart for their labels."""
+    chosen: list[float] = []
+    nearest = reach
+    for f in sorted(FACTORS, reverse=True):
+        x = float(np.log10(f))
+        if x <= 0.95 * reach and x > 0.26 * reach and (not chosen or nearest - x > 0.26 * reach):
+            chosen.append(f)
+            nearest = x
+    ticks = [-np.log10(f) for f in chosen] + [0.0] + [np.log10(f) for f in reversed(chosen)]
+    labels = [FACTORS[f] for f in chosen] + ["1"] + [f"{f:g}" for f in reversed(chosen)]
+    ax.set_xticks([float(t) for t in ticks], labels)
 
 
 def describe_claims(claims: Sequence[Mapping[str, Any]]) -> str:
