@@ -21,11 +21,11 @@ from mwdlink.decisions.blend_parts import (
     member_map,
     noise_marks,
     offset_of,
+    properties_known,
     routes_differ,
     shown,
     spectrum_of_blend,
     sweep_cautions,
-    without_flow,
 )
 from mwdlink.decisions.blend_routes import (
     Map,
@@ -33,9 +33,9 @@ from mwdlink.decisions.blend_routes import (
     ThroughDistributions,
     ThroughSweeps,
     band_map,
-    bounded,
     moved,
     property_bands,
+    reached,
 )
 from mwdlink.decisions.blend_sweeps import (
     MeasuredBank,
@@ -43,7 +43,7 @@ from mwdlink.decisions.blend_sweeps import (
     modes_of,
 )
 from mwdlink.decisions.blend_target import Target, TargetFound
-from mwdlink.decisions.blend_targets import AllMet, find_all
+from mwdlink.decisions.blend_targets import AllMet, bound_said, find_all
 from mwdlink.decisions.components import Component
 from mwdlink.decisions.ensemble import (
     Draws,
@@ -56,11 +56,11 @@ from mwdlink.decisions.ensemble import (
 from mwdlink.decisions.gpc_band import GpcBand
 from mwdlink.decisions.predict import frequencies, narrow_cautions
 from mwdlink.decisions.predicted import Outputs, Recorder, stack
-from mwdlink.decisions.properties import INDEX_FREQUENCIES, properties_of
+from mwdlink.decisions.properties import INDEX_FREQUENCIES
 from mwdlink.decisions.response import Bank, inner_frequencies
 from mwdlink.decisions.trust import RuleError, Trust
 from mwdlink.errors import Caution, merge_cautions
-from mwdlink.quantity import Uncertain
+from mwdlink.quantity import Uncertain, finite
 from mwdlink.relaxation.flow import STANDARD_LOADS_KG
 from mwdlink.relaxation.melt_response import Relaxation
 from mwdlink.relaxation.mixing import Model
@@ -195,15 +195,17 @@ def compute(components: Sequence[Component], phi: np.ndarray, melt: Melt, s: Set
     spectrum = spectrum_of_blend(
         central, w, measured, None if s.route == "sweeps" else relaxation, error
     )
-    fix = (lambda c: c) if terminal else bounded
     values = {
-        k: float(v[0]) if np.isfinite(v[0]) else None
-        for k, v in properties_of(
-            fix(central.curves(inner)), melt.density, 0.0, loads, frequencies_at
+        k: finite(v[0])
+        for k, v in properties_known(
+            reached(central.curves(inner), terminal),
+            terminal,
+            melt.density,
+            0.0,
+            loads,
+            frequencies_at,
         ).items()
     }
-    if not terminal:
-        values = without_flow(values, central, inner)
     shares, extra = fraction_draws(phi, s)
     bands: dict[str, Uncertain] = {}
     if draws is not None:
@@ -211,7 +213,7 @@ def compute(components: Sequence[Component], phi: np.ndarray, melt: Melt, s: Set
         for i in range(len(draws)):
             r = route.member(i, shares[i])
             recorder.member(r, None if offsets is None else offset_of(offsets, i))
-            samples.append(moved(fix(r.curves(inner)), offsets, i))
+            samples.append(moved(reached(r.curves(inner), terminal), offsets, i))
         status = {} if terminal else dict.fromkeys(_TERMINAL, "lower_bound")
         if s.route == "sweeps" and measured is not None:
             marks = noise_marks(measured, len(draws))
@@ -222,16 +224,18 @@ def compute(components: Sequence[Component], phi: np.ndarray, melt: Melt, s: Set
             stack(samples), melt.density, draws, values, extra, frequencies_at, status
         )
     first, quadratic, central_values = central_map(
-        route, phi, inner, melt.density, loads, frequencies_at, fix, belief
+        route, phi, inner, melt.density, loads, frequencies_at, terminal, belief
     )
     sample_first = np.linspace(0.0, 1.0, SAMPLE_POINTS)
     sampled = member_map(
-        route, phi, sample_first, inner, melt.density, loads, frequencies_at, fix, offsets, s
+        route, phi, sample_first, inner, melt.density, loads, frequencies_at, terminal, offsets, s
     )
     m = band_map(first, central_values, sample_first, sampled)
     targets, all_met = find_all(
         s.targets, [c.name for c in components], phi, first, m.values, (sample_first, sampled)
     )
+    if not terminal:
+        targets = tuple(bound_said(t) if t.target.name in _TERMINAL else t for t in targets)
     averages = {}
     if known:
         averages = {k: float(v[0]) for k, v in exact_averages(components, phi[None, :]).items()}

@@ -9,7 +9,7 @@ import numpy as np
 
 from mwdlink.chains.distribution import Distribution
 from mwdlink.chains.melt import Melt
-from mwdlink.decisions.blend_routes import RuleOffsets, along, moved
+from mwdlink.decisions.blend_routes import RuleOffsets, along, moved, reached
 from mwdlink.decisions.blend_sweeps import (
     MeasuredBank,
     Modes,
@@ -88,17 +88,27 @@ def spectrum_of_blend(
     return trimmed(Spectrum(tau[x > 0], x[x > 0]))
 
 
-def without_flow(
-    values: dict[str, float | None], central: Response, inner: np.ndarray
-) -> dict[str, float | None]:
-    """Melt flow rates only where most of the flow lies within the measured frequencies."""
-    c = central.curves(inner)
-    lowest = float(np.hypot(c.storage[0, 0], c.loss[0, 0]))
-    out = dict(values)
-    for key in values:
+def properties_known(
+    curves: Curves,
+    terminal: bool,
+    density: float | None,
+    lost: float | np.ndarray,
+    loads: Sequence[float],
+    at: Sequence[float],
+) -> dict[str, np.ndarray]:
+    """All properties; short of terminal flow a melt flow rate that is mostly unmeasured is NaN.
+
+    Most of the flow must lie within the frequencies of the curves.
+    """
+    out = properties_of(curves, density, lost, loads, at)
+    if terminal:
+        return out
+    lowest = np.hypot(curves.storage[:, 0], curves.loss[:, 0])
+    for key in out:
         # the integral weighs with stress cubed: what lies below a tenth of it is a thousandth
-        if key.startswith("MFR") and lowest > 0.1 * float(wall_stress(float(key.split("@")[1]))):
-            out[key] = None
+        if key.startswith("MFR"):
+            unknown = lowest > 0.1 * float(wall_stress(float(key.split("@")[1])))
+            out[key] = np.where(unknown, np.nan, out[key])
     return out
 
 
@@ -156,7 +166,7 @@ def central_map(
     density: float,
     loads: Sequence[float],
     at: Sequence[float],
-    fix: Any,
+    terminal: bool,
     belief: ExponentBelief,
     points: int = MAP_POINTS,
 ) -> tuple[np.ndarray, Quadratic | None, dict[str, np.ndarray]]:
@@ -169,7 +179,8 @@ def central_map(
         curves = Curves(inner, *quadratic.curves(first))
     else:
         curves = route.central(along(first, phi)).curves(inner)
-    return first, quadratic, properties_of(fix(curves), density, 0.0, loads, at)
+    curves = reached(curves, terminal)
+    return first, quadratic, properties_known(curves, terminal, density, 0.0, loads, at)
 
 
 def member_map(
@@ -180,7 +191,7 @@ def member_map(
     density: float,
     loads: Sequence[float],
     at: Sequence[float],
-    fix: Any,
+    terminal: bool,
     offsets: RuleOffsets | None,
     s: Settings,
 ) -> dict[str, np.ndarray]:
@@ -191,9 +202,10 @@ def member_map(
     picked = np.unique(np.linspace(0, s.members - 1, min(MOST_MAP_MEMBERS, s.members)).astype(int))
     found: dict[str, list[np.ndarray]] = {}
     for i in picked:
-        curves = moved(fix(route.member(int(i), rows).curves(inner)), offsets, int(i))
+        own = reached(route.member(int(i), rows).curves(inner), terminal)
+        curves = moved(own, offsets, int(i))
         lost = 0.0 if route.draws is None else float(route.draws.lost[i])
-        for name, x in properties_of(curves, density, lost, loads, at).items():
+        for name, x in properties_known(curves, terminal, density, lost, loads, at).items():
             found.setdefault(name, []).append(x)
     return {k: np.array(v) for k, v in found.items()}
 

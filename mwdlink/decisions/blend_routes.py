@@ -142,6 +142,11 @@ def bounded(curves: Curves) -> Curves:
     )
 
 
+def reached(curves: Curves, terminal: bool) -> Curves:
+    """The curves, with bounds in place of terminal values that the sweeps do not reach."""
+    return curves if terminal else bounded(curves)
+
+
 @dataclass(frozen=True, eq=False)
 class Map:
     """Every property against the fraction of the first component.

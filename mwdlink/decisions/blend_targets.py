@@ -94,6 +94,15 @@ def find_all(
     return tuple(found), _together(found, phi, members)
 
 
+def bound_said(found: TargetFound) -> TargetFound:
+    """The same, saying that the property is only a lower bound."""
+    text = (
+        " The components' sweeps do not reach terminal flow: the property is a lower bound, and "
+        "the fraction belongs to the bound."
+    )
+    return replace(found, reason=found.reason + text)
+
+
 def _rest_words(shares: Mapping[str, float]) -> str:
     return " and ".join(f"{100 * x:.3g} % {n}" for n, x in shares.items())
 

@@ -164,7 +164,7 @@ def speed() -> None:
             759.0,
             (2.16, 5.0, 21.6),
             (0.1, 1.0, 10.0, 100.0),
-            lambda x: x,
+            True,
             c.belief,
         )  # fmt: skip
     )

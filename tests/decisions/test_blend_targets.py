@@ -7,7 +7,7 @@ import json
 import numpy as np
 import pytest
 from click.testing import CliRunner
-from decisions.made_up import HDPE, A, B
+from decisions.made_up import HDPE, A, B, sweep
 
 from mwdlink.chains.families import lognormal
 from mwdlink.cli.main import main
@@ -17,6 +17,7 @@ from mwdlink.decisions.blend_targets import find_all, find_range, within
 from mwdlink.decisions.components import Component
 from mwdlink.errors import InputError
 from mwdlink.figures import pictures_of
+from mwdlink.relaxation.mixing import Model
 from mwdlink.report.blend_live import check
 
 PHI = np.linspace(0, 1, 101)
@@ -190,3 +191,20 @@ def test_targets_on_the_command_line(tmp_path):
     assert CliRunner().invoke(main, [*words, "--target", "eta0=1:2"]).exit_code == 2
     unknown = CliRunner().invoke(main, [*words, "--vary", "X"])
     assert isinstance(unknown.exception, InputError)
+
+
+def test_what_the_sweeps_do_not_reach_is_no_answer():
+    """Compared with the blend's own values: no melt flow rate of the map where it has none."""
+    rng = np.random.default_rng(5)
+    model = Model("reptation", 2.0)
+    high = np.geomspace(3.0, 300.0, 21)
+    parts = [Component(d.label, None, sweep(d, model, rng, omega=high)) for d in (A, B)]
+    r = blend(
+        parts, [0.2, 0.8], HDPE, members=20, target=["MFR_g_per_10min@2.16=0.3", "eta0_Pa_s=2e4"]
+    )
+    assert r.outputs.values["MFR_g_per_10min@2.16"] is None
+    m = r.map
+    at = int(np.argmin(np.abs(m.first - 0.2)))
+    assert np.isnan(m.values["MFR_g_per_10min@2.16"][at])
+    assert r.targets[0].fractions == ()
+    assert "lower bound" in r.targets[1].reason
