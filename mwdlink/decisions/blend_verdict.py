@@ -81,10 +81,10 @@ def verdict_of(
             "is to blame"
         )
         out.append(_common_cause(blends, odd, plain))
-    good = [d for d in error.decades if d.trusted]
-    if good and judged:
+    if error.trusted and judged:
+        spans = " and ".join(f"from {low:.2g} to {high:.2g}" for low, high in error.trusted)
         out.append(
-            f"The rule may be trusted from {good[0].low:.2g} to {good[-1].high:.2g} rad/s "
+            f"The rule may be trusted {spans} rad/s "
             f"(error at most {trusted:.2g} decades in each decade of frequency)"
         )
     elif judged:

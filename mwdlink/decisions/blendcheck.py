@@ -88,9 +88,8 @@ class BlendCheck(Result):
 
     @property
     def trusted(self) -> tuple[float, float] | None:
-        """Range of frequency in which the rule may be trusted [rad/s]."""
-        good = [d for d in self.trust.routes[self.route].decades if d.trusted]
-        return (good[0].low, good[-1].high) if good else None
+        """Widest range of frequency in which the rule may be trusted [rad/s]."""
+        return max(self.trust.routes[self.route].trusted, key=lambda s: s[1] / s[0], default=None)
 
     def payload(self) -> dict[str, Any]:
         span = self.trusted

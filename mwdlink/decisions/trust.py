@@ -77,6 +77,19 @@ class RuleError:
         spread = max((self.high - self.low) / 3.29, 1e-3)
         return ExponentBelief(self.exponent, None, None, spread, "of measured blends")
 
+    @property
+    def trusted(self) -> tuple[tuple[float, float], ...]:
+        """Stretches of frequency [rad/s] in which every decade may be trusted, rising."""
+        out: list[tuple[float, float]] = []
+        for d in self.decades:
+            if not d.trusted:
+                continue
+            if out and d.low <= out[-1][1] * (1 + 1e-9):
+                out[-1] = (out[-1][0], d.high)
+            else:
+                out.append((d.low, d.high))
+        return tuple(out)
+
     def offset(self, omega: Any, which: str = "loss") -> np.ndarray:
         """Standard deviation of ln(predicted/measured) at frequencies [rad/s].
 

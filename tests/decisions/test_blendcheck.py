@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import time
 import tomllib
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -13,9 +14,10 @@ from decisions.made_up import HDPE, OMEGA, A, B, study, sweep
 from mwdlink.chains.distribution import Distribution
 from mwdlink.chains.families import lognormal
 from mwdlink.decisions.blend import blend
+from mwdlink.decisions.blend_verdict import verdict_of
 from mwdlink.decisions.blendcheck import check_blends
 from mwdlink.decisions.components import Component, MeasuredBlend, Study
-from mwdlink.decisions.trust import Trust, toml_text
+from mwdlink.decisions.trust import Decade, RuleError, Trust, toml_text
 from mwdlink.errors import InputError
 from mwdlink.relaxation.mixing import Model
 
@@ -238,3 +240,17 @@ def test_all_rules_on_six_blends_are_quick(full):
     start = time.perf_counter()
     check_blends(made)
     assert time.perf_counter() - start < 10.0
+
+
+def test_a_decade_that_is_missed_breaks_the_range_of_trust(checked):
+    """Compared with made-up decades: what lies between two good ones is not called good."""
+    decades = tuple(
+        Decade(10.0**k, 10.0 ** (k + 1), 0.02, 0.02, trusted=k != 0) for k in range(-2, 3)
+    )
+    error = RuleError("measured spectra", 2.0, 1.9, 2.1, 0.03, decades=decades)
+    assert error.trusted == ((0.01, 1.0), (10.0, 1000.0))
+    plain = [0.0] * len(checked.blends)
+    text = verdict_of(checked.blends, 0.03, checked.exponent, error, [], plain, 0.05)
+    assert "trusted from 0.01 to 1 and from 10 to 1e+03 rad/s" in text
+    broken = replace(checked, trust=replace(checked.trust, routes={"sweeps": error}))
+    assert broken.to_dict()["trusted"]["omega_low_rad_per_s"] in (0.01, 10.0)
