@@ -84,6 +84,18 @@ def test_bad_usage(lots: Path, tmp_path: Path) -> None:
     assert isinstance(done.exception, mwdlink.InputError)
 
 
+def test_time_limit(lots: Path, tmp_path: Path) -> None:
+    """Contract: what takes too long is a part that failed (5), said in the table; never a crash."""
+    out = tmp_path / "out"
+    asked = ["batch", str(lots / "lot 1.csv"), *QUICK, "--limit-seconds", "0.001"]
+    done = CliRunner().invoke(main, [*asked, "--out", str(out)])
+    assert done.exit_code == 5 and "0 of 1 inputs" in done.stdout
+    assert "longer than the 0.001 s allowed" in (out / "failed.csv").read_text()
+    assert CliRunner().invoke(main, [*asked[:-1], "-1"]).exit_code == 2
+    done = CliRunner().invoke(main, [*asked, "--cluster", "tcp://127.0.0.1:1"])
+    assert isinstance(done.exception, mwdlink.InputError)
+
+
 @pytest.mark.parametrize(
     "number, status", [(signal.SIGTERM, 143), (signal.SIGINT, 130)], ids=["SIGTERM", "Ctrl-C"]
 )
