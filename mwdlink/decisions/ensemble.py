@@ -229,7 +229,12 @@ def budget(
         if not np.any(np.abs(c) > 1e-12):
             continue
         fitted = c @ np.linalg.lstsq(c, y - y.mean(), rcond=1e-9)[0]
-        out[name] = float(fitted.var() / y.var())
+        share = float(fitted.var() / y.var())
+        if extra is not None and name in extra:
+            # of many columns of chance numbers some fit by chance
+            rank, most = int(np.linalg.matrix_rank(c)), y.size - 1
+            share = max((share * most - rank) / max(most - rank, 1), 0.0)
+        out[name] = share
     total = sum(out.values())
     return {k: v / total for k, v in out.items()} if total > 0 else {}
 

@@ -18,6 +18,11 @@ from mwdlink.decisions.response import Version, lean
 from mwdlink.quantity import Uncertain
 
 MOMENTS = (-1, 1, 2)
+"""Moments that Mn, Mw, Mz and dispersity come from."""
+
+BETWEEN = (0.5, 1.5)
+"""Further ones that tell a member's shape: with them five sixths or more of what the curve's errors
+do to any property are traced (tried on three melts)."""
 
 
 def error_asked(error: Any) -> GpcError | None:
@@ -47,17 +52,14 @@ class GpcBand:
         Standard deviation of ln M, the largest of them [-].
     draws : GpcDraws
         On the nodes that a `Bank` of the same distributions uses.
-    own : ndarray of shape (3, n)
-        Moments of order -1, 1 and 2 of each distribution as given.
-    members : ndarray of shape (3, m, n)
-        The same of each member.
+    members : ndarray of shape (5, m, n)
+        Moments of each member's distributions, by the orders of `MOMENTS` and `BETWEEN`.
     """
 
     errors: tuple[GpcError | None, ...]
     kinds: tuple[str, ...]
     spread: float
     draws: GpcDraws
-    own: np.ndarray
     members: np.ndarray
 
     @classmethod
@@ -81,11 +83,12 @@ class GpcBand:
             return None
         held = [lean(d) for d in distributions]
         draws = draw_curves(held, errors, members, seed)
-        own = np.array([[d.moment(k) for d in distributions] for k in MOMENTS])
+        orders = (*MOMENTS, *BETWEEN)
+        own = np.array([[d.moment(k) for d in distributions] for k in orders])
         # nodes may have been merged: only the ratio to what was merged is the member's
-        base = np.array([[d.moment(k) for d in held] for k in MOMENTS])
+        base = np.array([[d.moment(k) for d in held] for k in orders])
         nodes = [d.molar_mass for d in held]
-        drawn = np.stack([draws.moments(nodes, k) for k in MOMENTS])
+        drawn = np.stack([draws.moments(nodes, k) for k in orders])
         kinds = [d.calibration for d, e in zip(distributions, errors, strict=True) if e is not None]
         return cls(
             errors,
@@ -94,7 +97,6 @@ class GpcBand:
                 e.spread_of(d) for d, e in zip(distributions, errors, strict=True) if e is not None
             ),
             draws,
-            own,
             drawn * (own / base)[:, None, :],
         )
 
@@ -104,12 +106,11 @@ class GpcBand:
 
     def averages(self, shares: np.ndarray) -> dict[str, np.ndarray]:
         """Mn, Mw, Mz, dispersity of each member's blend of fractions (m, n)."""
-        return averages_from(*(np.sum(shares * x, axis=1) for x in self.members))
+        return averages_from(*(np.sum(shares * x, axis=1) for x in self.members[: len(MOMENTS)]))
 
     def marks(self, shares: np.ndarray) -> np.ndarray:
-        """Numbers that say how far off each member's blend is, shape (m, 3), for budgets."""
-        a = self.averages(shares)
-        return np.log(np.column_stack([a[f"{k}_g_per_mol"] for k in ("Mn", "Mw", "Mz")]))
+        """Numbers that say how far off each member's blend is, shape (m, 5), for budgets."""
+        return np.log(np.sum(shares * self.members, axis=2)).T
 
     def words(self) -> str:
         """What it is, for a sentence."""
