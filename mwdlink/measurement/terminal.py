@@ -24,9 +24,10 @@ def terminal_values(
 ) -> tuple[dict[str, Uncertain], bool]:
     """eta0, Je0 and mean time with their status, from the continuous spectrum and its members.
 
-    Where they are resolved, the interval also holds the value of the discrete modes: the smoothing
-    broadens a spectrum of single lines a little, and the members cannot know it. What lies beyond
-    the lowest frequency adds a tenth of itself.
+    Where they are resolved, the interval of the members is longer by the distance to the value of
+    the discrete modes, on their side: noise moves both ways of fitting alike, and what smoothing
+    does to the spectrum the members cannot know. A tenth of what lies beyond the lowest frequency
+    is the least addition, to either side.
 
     Parameters
     ----------
@@ -71,9 +72,11 @@ def terminal_values(
             if samples.size == 0:
                 return Uncertain(float(value), level=c.level)
             q = Uncertain.from_samples(samples, value, level=c.level)
-            low, high = min(q.low or lines, lines), max(q.high or lines, lines)
+            low, high = (value if end is None else end for end in (q.low, q.high))
             unseen = MISSED * abs(value - bound)
-            return Uncertain(q.value, low - unseen, high + unseen, c.level)
+            low -= max(value - lines, unseen)
+            high += max(lines - value, unseen)
+            return Uncertain(q.value, low, high, c.level)
         if bounds.size == 0 or samples.size == 0:
             return Uncertain(float(bound), level=c.level, status="lower_bound")
         low = float(np.quantile(bounds, (1 - c.level) / 2))
