@@ -3,38 +3,36 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import replace
 from typing import Any
 
 import numpy as np
-from scipy.stats import norm
 
 from mwdlink.chains.distribution import Distribution
 from mwdlink.chains.polymer import Polymer, builtin
-from mwdlink.decisions import tail_words
+from mwdlink.decisions import tail_cautions, tail_words
 from mwdlink.decisions.gpc_scale import on_own_scale
+from mwdlink.decisions.tail_interval import (
+    LEAST_SAMPLES,
+    heard,
+    uncertain,
+    unresolved,
+    widened,
+)
 from mwdlink.decisions.tail_result import Tail
 from mwdlink.decisions.tail_tables import budget, distribution_table, fit_table, gpc_table
 from mwdlink.errors import Caution, InputError, NotConverged, merge_cautions
 from mwdlink.inversion import joint
 from mwdlink.inversion.invert import exponent_prior
-from mwdlink.inversion.joint_ensemble import Joint, infer, settle, weight_beyond
+from mwdlink.inversion.joint_ensemble import HEARD, Joint, infer, settle, weight_beyond
 from mwdlink.inversion.joint_explain import weigh
 from mwdlink.inversion.joint_limit import detection_limit
 from mwdlink.inversion.window import SUPPORT
-from mwdlink.measurement.noise import chi2_in_words, noise_of
+from mwdlink.measurement.noise import noise_of
 from mwdlink.measurement.sweep import Sweep
 from mwdlink.quantity import Uncertain
 from mwdlink.relaxation.kernels import KERNEL_NAMES, available_kernels, get_kernel
 from mwdlink.relaxation.mixing import Model, relaxation_times
 
-# a nuisance unknown this many prior standard deviations out strains the model
-STRAINED = 2.5
-# sum of their squares up to which nothing is stretched
-EXPECTED_STRAIN = 2.0
-# weight fraction that kernel, mixing rule and continuation are worth at best, one standard
-# deviation (assumed): a hundredth of a per cent is not told from nothing
-WORTH = 2e-4
 # this much of a moment beyond the window makes the average a bound
 BOUND = 0.1
 
@@ -68,7 +66,8 @@ def find_tail(
     beyond : float, optional
         Where the tail begins [g/mol]; default the last M that the GPC supports.
     kernels : sequence of str, optional
-        Default all the card has constants for; those the data allow share the members.
+        Default all the card has constants for; those the data allow share the members. The others
+        are tried all the same, and intervals reach as far as the data speak for them.
     exponent : float, (low, high) or None
         Mixing exponent: a number fixes it, a pair is its 90 % range, None the card's or 2.0 +- 0.2.
     rouse : bool
@@ -107,6 +106,7 @@ def find_tail(
     temperature, notes = _temperature(sweep, card, temperature_C)
     melt = card.melt(temperature)
     names = _kernels(kernels, melt)
+    beside = tuple(k for k in available_kernels(melt) if k not in names)
     prior, _ = exponent_prior(exponent, melt)
     gpc, scale_notes = on_own_scale(distribution, card)
     weights = noise_of(sweep, noise)
@@ -122,8 +122,9 @@ def find_tail(
         exponent=(prior.mean, prior.spread),
         trust_range=trust_range,
         rouse=rouse,
+        beside=beside,
     )
-    found = infer(setting, names, members, seed)
+    found = infer(setting, names, members, seed, beside)
     if not found.best.converged:
         raise NotConverged(
             "no fit of GPC and sweep together converged: check that both are of one sample and "
@@ -179,39 +180,6 @@ def _kernels(asked: Sequence[str] | None, melt: Any) -> tuple[str, ...]:
     return tuple(k for k in KERNEL_NAMES if k in set(asked))
 
 
-def _uncertain(
-    samples: np.ndarray,
-    level: float,
-    status: str = "resolved",
-    single: float | None = None,
-    **more: Any,
-) -> Uncertain:
-    if samples.size < 5:
-        return Uncertain(single, None, None, level, status)
-    return Uncertain.from_samples(samples, level=level, status=status, **more)
-
-
-def _stretch(found: Joint) -> float:
-    """Factor on the intervals of a pair that agrees only by stretching what was thought known.
-
-    The squares of the nuisance unknowns' distances from their priors add up to about 1 to 3 where
-    card, kernel and data belong together; a kernel that is not the melt's makes 20 and more.
-    """
-    priors = found.setting.priors
-    z = (found.best.nuisance - priors.centre) / priors.spread
-    return float(np.sqrt(max(1.0, float(z @ z) / EXPECTED_STRAIN)))
-
-
-def _widened(u: Uncertain, stretch: float, least: float | None = None) -> Uncertain:
-    """The interval stretched, with what no model of this kind is better than in quadrature."""
-    if u.value is None or u.low is None or u.high is None:
-        return u
-    more = float(norm.ppf((1 + u.level) / 2)) * WORTH
-    low = u.value - float(np.hypot(stretch * (u.value - u.low), more))
-    high = u.value + float(np.hypot(stretch * (u.high - u.value), more))
-    return replace(u, low=low if least is None else max(low, least), high=high)
-
-
 def _assemble(
     found: Joint,
     gpc: Distribution,
@@ -237,24 +205,30 @@ def _assemble(
     # -- the tail -------------------------------------------------------------------------------
     part = weight_beyond(x, w, beyond)
     more = part - weight_beyond(x, alone, beyond)
-    status = "resolved" if beyond <= reach else "assumed"
-    shares = budget(found, part, nuisance)
-    stretch = _stretch(found)
-    fraction = _uncertain(part, level, status, float(part[0]), budget=shares)
-    fraction = _widened(fraction, stretch, 0.0)
-    shares = budget(found, more, nuisance)
-    excess = _widened(_uncertain(more, level, status, float(more[0]), budget=shares), stretch)
+    second = heard(found)
+    other_part = other_more = None
+    if second is not None:
+        other_part = weight_beyond(x, second.w, beyond)
+        other_more = other_part - weight_beyond(x, second.alone_w, beyond)
+    status = "resolved" if beyond <= reach and not unresolved(found) else "assumed"
+
+    def amount(own: np.ndarray, other: np.ndarray | None, least: float | None) -> Uncertain:
+        shares = budget(found, own, nuisance)
+        u = uncertain(own, level, status, other=other, doubt=found.doubt, budget=shares)
+        return widened(u, found, least)
+
+    fraction, excess = amount(part, other_part, 0.0), amount(more, other_more, None)
     limit = detection_limit(leader.smooth.problem, leader.smooth.best, beyond)
 
     # -- what went with it ----------------------------------------------------------------------
     def factor(index: int) -> Uncertain:
-        values = np.exp(nuisance[:, index])
-        return _uncertain(values, level, single=float(values[0]))
+        other = None if second is None else np.exp(second.nuisance[:, index])
+        return uncertain(np.exp(nuisance[:, index]), level, other=other, doubt=found.doubt)
 
-    exponents = nuisance[:, joint.EXPONENT]
-    exponent = _uncertain(exponents, level, single=float(exponents[0]))
+    other = None if second is None else second.nuisance[:, joint.EXPONENT]
+    exponent = uncertain(nuisance[:, joint.EXPONENT], level, other=other, doubt=found.doubt)
     explanations = weigh(leader)
-    averages = _averages(x, w, gpc, reach, window[1], level)
+    averages = _averages(found, w, gpc, reach, window[1], level)
     needed = _frequency_for(2.0 * beyond, found)
     is_found = excess.low is not None and excess.low > 0
     cautions = merge_cautions(
@@ -262,7 +236,7 @@ def _assemble(
         gpc.warnings,
         setting.melt.warnings,
         notes,
-        _cautions(found, beyond, window[1], reach, noise_source),
+        tail_cautions.cautions(found, beyond, window[1], reach, noise_source),
     )
     return Tail(
         beyond=beyond,
@@ -280,9 +254,7 @@ def _assemble(
         ),
         window=window,
         gpc_range=(setting.gpc.low, setting.gpc.high),
-        kernels=tuple(
-            _kernel_row(found, i, beyond, part, level) for i in range(len(found.kernels))
-        ),
+        kernels=_kernel_rows(found, beyond, level),
         fit={
             "chi2_per_point": best.chi2_sweep / leader.free.problem.data.size,
             "points": int(leader.free.problem.data.size),
@@ -307,33 +279,39 @@ def _assemble(
 
 
 def _averages(
-    x: np.ndarray, w: np.ndarray, gpc: Distribution, reach: float, high: float, level: float
+    found: Joint, w: np.ndarray, gpc: Distribution, reach: float, high: float, level: float
 ) -> dict[str, Uncertain]:
     # beyond its reach the sweep knows that chains are there, not how long: counted at the reach,
     # they give lower bounds
-    mass = np.minimum(10.0**x, max(reach, gpc.edges[-1]))
+    mass = np.minimum(found.setting.nodes, max(reach, gpc.edges[-1]))
     mass = np.append(mass, mass[-1])
-    first, second = w @ mass, w @ mass**2
+
+    def moments(w: np.ndarray) -> dict[str, np.ndarray]:
+        number, first, second = 1.0 / (w @ (1.0 / mass)), w @ mass, w @ mass**2
+        return {
+            "Mn_g_per_mol": number,
+            "Mw_g_per_mol": first,
+            "Mz_g_per_mol": second / first,
+            "dispersity": first / number,
+        }
+
     beyond = mass > high
-    number = 1.0 / (w @ (1.0 / mass))
-    share_w = float(np.median((w[:, beyond] @ mass[beyond]) / first))
-    share_z = float(np.median((w[:, beyond] @ mass[beyond] ** 2) / second))
-    cut = any(c.code == "cut_at_low_end" for c in gpc.warnings)
-
-    def status(share: float) -> str:
-        return "lower_bound" if share > BOUND else "resolved"
-
+    share_w = float(np.median((w[:, beyond] @ mass[beyond]) / (w @ mass)))
+    share_z = float(np.median((w[:, beyond] @ mass[beyond] ** 2) / (w @ mass**2)))
+    heavy = "lower_bound" if share_w > BOUND else "resolved"
+    status = {
+        "Mn_g_per_mol": "upper_bound"
+        if any(c.code == "cut_at_low_end" for c in gpc.warnings)
+        else "resolved",
+        "Mw_g_per_mol": heavy,
+        "Mz_g_per_mol": "lower_bound" if share_z > BOUND else "resolved",
+        "dispersity": heavy,
+    }
+    second = heard(found)
+    others = {} if second is None else moments(second.w)
     return {
-        "Mn_g_per_mol": _uncertain(
-            number, level, "upper_bound" if cut else "resolved", float(number[0])
-        ),
-        "Mw_g_per_mol": _uncertain(first, level, status(share_w), float(first[0])),
-        "Mz_g_per_mol": _uncertain(
-            second / first, level, status(share_z), float((second / first)[0])
-        ),
-        "dispersity": _uncertain(
-            first / number, level, status(share_w), float((first / number)[0])
-        ),
+        name: uncertain(own, level, status[name], other=others.get(name), doubt=found.doubt)
+        for name, own in moments(w).items()
     }
 
 
@@ -345,93 +323,24 @@ def _frequency_for(mass: float, found: Joint) -> float | None:
     return 1.0 / (tau * SUPPORT) if np.isfinite(tau) and tau > 0 else None
 
 
-def _kernel_row(
-    found: Joint, i: int, beyond: float, part: np.ndarray, level: float
-) -> dict[str, Any]:
-    k = found.kernels[i]
-    own = part[found.kernel == i] if found.kernel.size else part[:0]
-    single = float(weight_beyond(found.setting.x, k.best.w, beyond))
-    return {
-        "kernel": k.kernel,
-        "chi2_per_point": k.best.chi2_sweep / k.free.problem.data.size,
-        "admissible": k.share > 0,
-        "share": k.share,
-        "fraction": _uncertain(own, level, single=single),
-    }
-
-
-def _cautions(
-    found: Joint, beyond: float, high: float, reach: float, noise_source: str
-) -> list[Caution]:
-    setting, best, leader = found.setting, found.best, found.kernels[0]
-    out = []
-    if beyond > reach:
-        out.append(
-            Caution(
-                "beyond_the_sweep",
-                f"The sweep does not reach {beyond:.3g} g/mol (it feels chains up to {reach:.3g}): "
-                "the weight beyond is assumed, not measured.",
-            )
-        )
-    elif beyond > high:
-        out.append(
-            Caution(
-                "sweep_ends_early",
-                f"The sweep follows chains up to {high:.3g} g/mol; longer ones show only as stress "
-                "that has not relaxed yet. Lower frequencies would narrow the answer.",
-            )
-        )
-    if setting.gpc.high < beyond * (1 - 1e-6) and setting.gpc.high < 0.8 * beyond:
-        out.append(
-            Caution(
-                "gap_between",
-                f"The GPC is used up to {setting.gpc.high:.3g} g/mol only, below where the tail "
-                "begins: the weight between rests on the sweep alone.",
-            )
-        )
-    strained = [
-        (name, z)
-        for name, z in zip(
-            joint.NUISANCE,
-            (best.nuisance - setting.priors.centre) / setting.priors.spread,
-            strict=True,
-        )
-        if abs(z) > STRAINED
-    ]
-    if strained:
-        words = ", ".join(f"{name} by {abs(z):.1f}" for name, z in strained)
-        out.append(
-            Caution(
-                "priors_strained",
-                f"The pair agrees only by stretching what was thought known ({words} standard "
-                "deviations): the kernel, the card or the pairing of the samples is in doubt. The "
-                "intervals were widened for it. Let all kernels take part.",
-            )
-        )
-    points = leader.free.problem.data.size
-    words = chi2_in_words(best.chi2_sweep / points, points, noise_source)
-    if best.chi2_sweep / points > 1.5 and words:
-        out.append(Caution("poor_fit", words))
-    if found.setting.gpc_scale > 1.0:
-        out.append(
-            Caution(
-                "gpc_rough",
-                f"The GPC curve is {found.setting.gpc_scale:.1f} times rougher than the error "
-                "assumed for it (3 % of itself and 0.3 % of its peak); the error was raised.",
-            )
-        )
-    if found.unsettled > 0.1 * max(found.w.shape[0] + found.unsettled, 1):
-        out.append(
-            Caution(
-                "members_lost",
-                f"{found.unsettled} members did not converge and were left out.",
-            )
-        )
-    out.append(
-        Caution(
-            "column_broadening",
-            "Broadening in the GPC columns is not corrected: for narrow distributions it widens "
-            "the curve and its continuation.",
-        )
-    )
-    return out
+def _kernel_rows(found: Joint, beyond: float, level: float) -> tuple[dict[str, Any], ...]:
+    """What each kernel makes of the pair, those asked for first."""
+    rows = []
+    for one, asked in ((found, True), (found.beside, False)):
+        if one is None:
+            continue
+        part = weight_beyond(one.setting.x, one.w, beyond)
+        for i, k in enumerate(one.kernels):
+            own = part[one.kernel == i]
+            if own.size < LEAST_SAMPLES:
+                own = np.array([float(weight_beyond(one.setting.x, k.best.w, beyond))])
+            row = {
+                "kernel": k.kernel,
+                "chi2_per_point": k.best.chi2_sweep / k.free.problem.data.size,
+                "admissible": k.share > 0 if asked else k.share * found.doubt > HEARD,
+                "share": k.share if asked else 0.0,
+                "fraction": uncertain(own, level),
+                "asked": asked,
+            }
+            rows.append(row)
+    return tuple(rows)

@@ -125,9 +125,13 @@ class Tail(Result):
         }
 
     def answer(self) -> str:
-        return tail_words.answer(
+        text = tail_words.answer(
             self.found, self.beyond, self.fraction, self.excess, self.detection_limit
         )
+        codes = {w.code for w in self.warnings}
+        if self.fraction.status == "resolved":
+            return text
+        return f"{text} {tail_words.reservation(codes)}"
 
     def paragraph(self) -> str:
         best, *others = self.explanations

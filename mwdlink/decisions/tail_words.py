@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Collection, Sequence
 from typing import Any
 
 from mwdlink.inversion.joint_explain import Explanation
@@ -52,6 +52,15 @@ def answer(found: bool, beyond: float, fraction: Uncertain, excess: Uncertain, l
     if limit is not None:
         text += f"; these data would show a tail from about {percent(limit)} wt%"
     return text + "."
+
+
+def reservation(codes: Collection[str]) -> str:
+    """Why the weight beyond is assumed and not measured, from the codes of the cautions."""
+    if "kernel_doubted" in codes:
+        return "Assumed, not measured: the data speak for another kernel than the one asked for."
+    if "priors_strained" in codes:
+        return "Assumed, not measured: GPC and sweep do not agree within what is known of them."
+    return "Assumed, not measured: the sweep does not reach that far."
 
 
 def advice(

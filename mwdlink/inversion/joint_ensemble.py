@@ -31,6 +31,10 @@ BASELINE_SPREAD = 0.002
 # members by evidence to the power 1/TEMPER, as none of them is the truth
 ADMISSIBLE = 10.0
 TEMPER = 2.0
+# kernels that were not asked for are only asked whether they would do: every other lambda
+BESIDE = SMOOTHING[::2]
+# they are heard from this share of the evidence on
+HEARD = 0.01
 
 
 @dataclass(frozen=True, eq=False)
@@ -107,6 +111,7 @@ def settle(
     exponent: tuple[float, float] = EXPONENT_PRIOR,
     trust_range: tuple[float, float] | None = None,
     rouse: bool = True,
+    beside: tuple[str, ...] = (),
 ) -> Setting:
     """Nodes over the ranges of both instruments, rows of the GPC, priors.
 
@@ -114,9 +119,11 @@ def settle(
     ----------
     exponent : (float, float)
         Centre and spread of the exponent's prior; a spread of 0 fixes it.
+    beside : tuple of str
+        Kernels that were not asked for but may be tried.
     """
-    windows = {k: find_window(omega, melt, Model(k, exponent[0], rouse)) for k in kernels}
-    reach = max(float(v.nodes[-1]) for v in windows.values())
+    windows = {k: find_window(omega, melt, Model(k, exponent[0], rouse)) for k in kernels + beside}
+    reach = max(float(windows[k].nodes[-1]) for k in kernels)
     low, high = supported_range(distribution)
     if trust_range is not None:
         low, high = max(low, trust_range[0]), min(high, trust_range[1])
@@ -151,7 +158,7 @@ def settle(
         ]
     )
     priors = Priors(centre, spread)
-    return Setting(omega, storage, loss, sigma, melt, rows, x, priors, rouse, windows)
+    return Setting(omega, storage, loss, sigma, melt, rows, x, priors, rouse, windows, scale)
 
 
 @dataclass(frozen=True, eq=False)
@@ -214,6 +221,10 @@ class Joint:
         Whether the member's curve was free beyond the GPC.
     unsettled : int
         Members that did not converge and were left out.
+    beside : Joint or None
+        The same with the kernels that were not asked for, where there are any.
+    doubt : float
+        Share of these among all kernels: evidence for a kernel other than those asked for.
     """
 
     setting: Setting
@@ -226,6 +237,8 @@ class Joint:
     smoothing: np.ndarray
     tail_free: np.ndarray
     unsettled: int = 0
+    beside: Joint | None = None
+    doubt: float = 0.0
 
     @property
     def best(self) -> JointFit:
@@ -233,30 +246,67 @@ class Joint:
         return self.kernels[0].best
 
 
-def infer(setting: Setting, kernels: tuple[str, ...], members: int, seed: int) -> Joint:
+def infer(
+    setting: Setting,
+    kernels: tuple[str, ...],
+    members: int,
+    seed: int,
+    beside: tuple[str, ...] = (),
+) -> Joint:
     """Fit with every kernel, weigh lambda by evidence, and draw members.
 
     Members are drawn by perturbing all data and all priors by their own noise and fitting again
     (randomise, then optimise); each has its own child seed.
+
+    Parameters
+    ----------
+    beside : tuple of str
+        Kernels that were not asked for. They are tried all the same: where the data speak for one
+        of them, the answer with the kernels asked for knows less than its members say.
     """
     alone = smooth_curve(setting.x, setting.gpc)
+    found = _scans(setting, alone, kernels, SMOOTHING, np.inf)
+    others: list[KernelScan] = []
+    if beside:
+        rival = min(k.best.objective for k in found)
+        others = _scans(setting, alone, beside, BESIDE, rival)
+    own = _draw(setting, alone, _ranked(found), members, seed)
+    if not others:
+        return own
+    everything = _ranked(found + others)
+    doubt = sum(k.share for k in everything if k.kernel in beside)
+    drawn = members if doubt > HEARD else 0
+    second = _draw(setting, alone, _ranked(others), drawn, seed + 1)
+    return replace(own, beside=second, doubt=float(doubt))
+
+
+def _scans(
+    setting: Setting,
+    alone: AloneFit,
+    kernels: tuple[str, ...],
+    values: np.ndarray,
+    rival: float,
+) -> list[KernelScan]:
+    """Fits of each kernel, with the curve free beyond the GPC and smooth there."""
     found = []
-    rival = np.inf
     for kernel in kernels:
         problem, window = setting.problem(kernel)
-        free = joint_fit.scan(problem, joint_fit.start(problem, alone.u), SMOOTHING, rival)
+        free = joint_fit.scan(problem, joint_fit.start(problem, alone.u), values, rival)
         rival = min(rival, free.best.objective)
         stiff = problem.with_priors(replace(problem.priors, tail_free=False))
-        smooth = joint_fit.scan(stiff, joint_fit.start(stiff, alone.u), SMOOTHING, rival)
+        smooth = joint_fit.scan(stiff, joint_fit.start(stiff, alone.u), values, rival)
         rival = min(rival, smooth.best.objective)
         found.append(KernelScan(kernel, free, smooth, window))
-    found.sort(key=lambda k: -k.total)
-    gap = np.array([k.total - found[0].total for k in found])
+    return found
+
+
+def _ranked(found: list[KernelScan]) -> tuple[KernelScan, ...]:
+    """The best first, each with its share of the evidence among these."""
+    order = sorted(found, key=lambda k: -k.total)
+    gap = np.array([k.total - order[0].total for k in order])
     weight = np.where(gap > -ADMISSIBLE, np.exp(gap / TEMPER), 0.0)
-    ranked = tuple(
-        replace(k, share=float(v)) for k, v in zip(found, weight / weight.sum(), strict=True)
-    )
-    return _draw(setting, alone, ranked, members, seed)
+    share = weight / weight.sum()
+    return tuple(replace(k, share=float(v)) for k, v in zip(order, share, strict=True))
 
 
 def _draw(
