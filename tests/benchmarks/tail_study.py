@@ -67,12 +67,18 @@ def made(
     kinds: tuple[str, ...] = BODIES[:1],
     omega: tuple[float, float] = (1e-3, 1e3),
     exponent: float = 2.0,
+    noise: float = NOISE,
+    tail_shape: tuple[float, float] | None = None,
 ) -> tuple[Distribution, Distribution, Sweep, float]:
-    """True distribution, GPC, sweep and time-law factor of one invented sample."""
+    """True distribution, GPC, sweep and time-law factor of one invented sample.
+
+    `tail_shape` is Mw [g/mol] and dispersity of the tail; by default both are drawn.
+    """
     rng = np.random.default_rng([seed, 6])
     share = rng.uniform(0.003, 0.04) if tail is None else tail
     weights = (1 - share) * body(kinds[seed % len(kinds)], rng)
-    weights = weights + share * lognormal(rng.uniform(2e6, 4e6), rng.uniform(1.2, 1.6))
+    drawn = rng.uniform(2e6, 4e6), rng.uniform(1.2, 1.6)
+    weights = weights + share * lognormal(*(tail_shape or drawn))
     held = weights > 1e-13 * weights.max()
     true = Distribution.from_nodes(np.exp(GRID[held]), weights[held])
     factor = float(np.exp(rng.uniform(np.log(0.87), np.log(1.15))))
@@ -82,8 +88,8 @@ def made(
     storage, loss = Relaxation(true, melt, Model(kernel, exponent)).moduli(w)
     sweep = Sweep(
         w,
-        storage * np.exp(NOISE * rng.standard_normal(w.size)),
-        loss * np.exp(NOISE * rng.standard_normal(w.size)),
+        storage * np.exp(noise * rng.standard_normal(w.size)),
+        loss * np.exp(noise * rng.standard_normal(w.size)),
         temperature_C=190.0,
     )
     m = np.geomspace(1e3, EXCLUSION, 150)
