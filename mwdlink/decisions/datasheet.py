@@ -100,8 +100,7 @@ def check_datasheet(
         judged, fits, more = _again(models, usable, card, first, finding, counted, seed)
         if not more or not finding.rest_agrees:
             break
-    clear = ("inconsistent", "strained")
-    rivals = {i: s for i, s in finding.rivals.items() if judged[i].verdict in clear}
+    rivals = {i: s for i, s in finding.rivals.items() if judged[i].verdict != "consistent"}
     finding = replace(finding, rivals=rivals)
     named = sorted(finding.named, key=lambda i: -abs(judged[i].z or 0.0))
     odd = usable[named[0]].quantity if named else None

@@ -93,9 +93,13 @@ def expect(
     target, sigma = _target(models[0].claims[:claims])
     rng = np.random.default_rng(seed)
     collected: list[list[tuple[np.ndarray, np.ndarray, float]]] = [[] for _ in masks]
+    start: dict[str, np.ndarray] = {}
     for model in models:
         for family in model.families:
-            z, cost, chol, evidence = _fit(model, family, target, sigma, masks)
+            fitted = _fit(model, family, target, sigma, masks, start.get(family))
+            z, cost, chol, evidence = fitted
+            # kernels differ little: the next one starts where this one ended
+            start[family] = z
             d = z.shape[1]
             push = rng.standard_normal((draws // 2, d))
             push = np.concatenate([push, -push])
@@ -144,9 +148,14 @@ def least_costs(
     """
     target, sigma = _target(models[0].claims[:claims])
     target = target + shift
-    return np.min(
-        [_fit(m, family, target, sigma, masks)[1] for m in models for family in m.families], axis=0
-    )
+    start: dict[str, np.ndarray] = {}
+    costs = []
+    for model in models:
+        for family in model.families:
+            z, cost, _, _ = _fit(model, family, target, sigma, masks, start.get(family))
+            start[family] = z
+            costs.append(cost)
+    return np.min(costs, axis=0)
 
 
 def _target(claims: Sequence[Claim]) -> tuple[np.ndarray, np.ndarray]:
@@ -169,8 +178,9 @@ def _fit(
     target: np.ndarray,
     sigma: np.ndarray,
     masks: np.ndarray,
+    start: np.ndarray | None = None,
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
-    """Damped Gauss-Newton of all rows at once.
+    """Damped Gauss-Newton of all rows at once, from `start` (rows, d) or the prior's middle.
 
     Returns
     -------
@@ -184,7 +194,7 @@ def _fit(
     d = len(FAMILIES[family]) + len(CARD)
     k, n = masks.shape
     target = np.broadcast_to(target, (k, n))
-    z = np.zeros((k, d))
+    z = np.zeros((k, d)) if start is None else start.copy()
     damping = np.full(k, 0.3)
     y, slope = model.predict_and_slope(z, family, n)
     cost = _cost(y, z, target, sigma, masks)

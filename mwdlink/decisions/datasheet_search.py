@@ -128,7 +128,9 @@ def find(
         marked = active
     ranked = sorted((float(without[i]), i) for i in marked)
     cost, first = ranked[0]
-    near = [i for c, i in ranked[1:] if c < cost + TELL_APART]
+    # a claim may be the culprit even where the others leave it too open to call it inconsistent
+    close = min(cost + TELL_APART, 0.5 * (cost + total))
+    near = [i for i in active if i != first and without[i] < close]
     single = Finding((first,), {i: (i,) for i in near})
     if least == 1 and cost <= _usual(n - 1):
         return single

@@ -150,6 +150,116 @@ def test_claim_off_is_named(name: str, factor: float) -> None:
     assert "inconsistent" not in verdicts.values()
 
 
+M2, M21, V01 = "melt_flow 2.16 kg 190 C", "melt_flow 21.6 kg 190 C", "viscosity 0.1 rad/s 190 C"
+
+
+def _only(sheet: Sheet, *names: str) -> Sheet:
+    return replace(sheet, claims=tuple(c for c in sheet.claims if c.quantity in names))
+
+
+@pytest.mark.parametrize(
+    ("name", "factor"),
+    [("eta0_Pa_s", 1000.0), ("Mw_g_per_mol", 0.01), ("Mz_g_per_mol", 0.1), (M2, 10.0),
+     (M21, 0.1), ("intrinsic_viscosity", 3.0), ("activation_energy", 2.0),
+     ("crossover_omega_rad_per_s", 10.0), ("crossover_G_Pa", 5.0), (V01, 0.01)],
+)  # fmt: skip
+def test_one_claim_badly_off_does_not_taint_the_others(name: str, factor: float) -> None:
+    """Judged by the rest without it, all others are consistent, and only it is named."""
+    r = check_datasheet(_sheet(**{name: factor}))
+    assert (r.odd_one_out, r.also_off, r.rivals) == (name, (), ())
+    verdicts = {j.quantity: j.verdict for j in r.claims}
+    assert verdicts.pop(name) == "inconsistent"
+    assert set(verdicts.values()) == {"consistent"}
+    assert "One claim does not fit" in r.verdict and "The rest hangs together" in r.verdict
+    # and what it should be is what the clean sheet says
+    clean_value = next(c.value for c in _sheet().claims if c.quantity == name)
+    one = next(j for j in r.claims if j.quantity == name)
+    assert one.expected.value == pytest.approx(clean_value, rel=0.1)
+
+
+@pytest.mark.parametrize(
+    ("names", "changed"),
+    [(("Mw_g_per_mol", "eta0_Pa_s", V01), {V01: 0.35}),
+     (("Mw_g_per_mol", M2, V01, "activation_energy"), {V01: 2.5})],
+)  # fmt: skip
+def test_two_that_could_each_be_off_are_both_named(
+    names: tuple[str, ...], changed: dict[str, float]
+) -> None:
+    """The others fit either: both are named, and the words say that the sheet cannot tell."""
+    r = check_datasheet(_only(_sheet(**changed), *names))
+    suspects = {r.odd_one_out, *r.rivals}
+    assert suspects == set(names) - {"Mw_g_per_mol", "activation_energy"}
+    assert "Two claims contradict each other" in r.verdict
+    assert "cannot be told from the sheet alone" in r.verdict
+    for j in r.claims:
+        if j.quantity not in suspects:
+            assert j.verdict in ("consistent", "cannot judge")
+
+
+def test_culprit_that_the_others_leave_open_is_a_suspect() -> None:
+    """The rate is off, but too open to be called inconsistent; the viscosity is not the only one
+    that may be: with so few claims several are named."""
+    names = ("Mn_g_per_mol", M2, V01, "activation_energy")
+    r = check_datasheet(_only(_sheet(**{M2: 2.5}), *names))
+    assert {M2, V01} <= {r.odd_one_out, *r.rivals}
+    assert "activation_energy" not in {r.odd_one_out, *r.rivals}
+    assert "cannot be told from the sheet alone" in r.verdict
+
+
+@pytest.mark.parametrize(
+    "changed",
+    [{"eta0_Pa_s": 3.0, "activation_energy": 1.8}, {M2: 3.0, "Mz_g_per_mol": 0.3}],
+)
+def test_two_claims_off(changed: dict[str, float]) -> None:
+    """Two unrelated faults: both named, the others judged without either."""
+    r = check_datasheet(_sheet(**changed))
+    assert {r.odd_one_out, *r.also_off} == set(changed)
+    assert "Two claims do not fit the others" in r.verdict
+    for j in r.claims:
+        assert (j.verdict == "inconsistent") == (j.quantity in changed)
+
+
+def test_no_few_claims_to_blame() -> None:
+    """Every claim off by its own factor: the words do not pretend to know which."""
+    rng = np.random.default_rng(3)
+    sheet = _sheet()
+    claims = [replace(c, value=c.value * float(np.exp(rng.normal(0, 1.5)))) for c in sheet.claims]
+    r = check_datasheet(replace(sheet, claims=tuple(claims)))
+    assert r.odd_one_out is not None
+    assert "which of them are off cannot be told" in r.verdict
+
+
+def test_quotients_say_nothing_new() -> None:
+    """A flow rate ratio computed from two rates goes with the rate that is off, and is not
+    evidence for it; one that is no quotient of them is a claim of its own."""
+    sheet = _sheet(**{M2: 5.0})
+    value = {c.quantity: c.value for c in sheet.claims}
+    ratio = Claim("flow_rate_ratio", "flow rate ratio", round(value[M21] / value[M2], 1), 0.15,
+                  temperature_C=190.0, load_kg=21.6, second_load_kg=2.16)  # fmt: skip
+    r = check_datasheet(replace(sheet, claims=(*sheet.claims, ratio)))
+    assert (r.odd_one_out, r.also_off) == (M2, ())
+    assert "quotient of two numbers of the sheet" in r.paragraph()
+    right = _sheet()
+    off = replace(ratio, value=2.5 * ratio.value * 5.0)
+    r = check_datasheet(replace(right, claims=(*right.claims, off)))
+    assert r.odd_one_out == "flow_rate_ratio"
+
+
+def test_activation_energy_that_depends_on_temperature_is_left_out() -> None:
+    """Polystyrene's runs from 100 to 160 kJ/mol (WLF, Plazek & Agarwal 1978): a claim without its
+    temperature cannot be held against one number."""
+    claims = (
+        Claim("Mw_g_per_mol", "Mw", 2.8e5, 0.1),
+        Claim("eta0_Pa_s", "eta0", 3e4, 0.1, temperature_C=190.0),
+        Claim("activation_energy", "activation energy", 95.0, 0.1),
+    )
+    r = check_datasheet(Sheet(claims, builtin("polystyrene")))
+    assert [c.quantity for c in r.claims] == ["Mw_g_per_mol", "eta0_Pa_s"]
+    assert any(w.code == "claim_not_used" for w in r.warnings)
+    with pytest.raises(InputError, match="depends on the temperature"):
+        check_datasheet(Sheet(claims[1:], builtin("polystyrene")))
+
+
 def test_another_load_is_recognised() -> None:
     """A rate measured at 5 kg and printed as 2.16 kg: the words say so."""
     right = {c.quantity: c.value for c in _sheet().claims}
@@ -239,6 +349,38 @@ def test_sheet_file(tmp_path: Path) -> None:
     assert by_name["Mn_g_per_mol"].calibration == "equivalent"
     assert by_name["flow_rate_ratio"].load_kg == 21.6
     assert sheet.branching == "none" and sheet.polymer.name == "hdpe"
+
+
+def test_both_rates_of_one_test(tmp_path: Path) -> None:
+    """A sheet may give MFR and MVR at one load; the same rate twice is refused."""
+    both = """polymer = "hdpe"
+[claims]
+Mw_g_per_mol = 1.2e5
+melt_flow = [{load_kg = 2.16, temperature_C = 190, MFR_g_per_10min = 1.1},
+             {load_kg = 2.16, temperature_C = 190, MVR_cm3_per_10min = 1.45}]
+"""
+    names = [c.quantity for c in read_sheet(_written(tmp_path, both)).claims]
+    assert names[1:] == ["melt_flow 2.16 kg 190 C", "melt_flow 2.16 kg 190 C MVR"]
+    with pytest.raises(InputError, match="claimed twice"):
+        read_sheet(_written(tmp_path, both.replace("MVR_cm3", "MFR_g")))
+
+
+@pytest.mark.parametrize(
+    "line",
+    ["Mw_g_per_mol = 0", "eta0_Pa_s = {value = -5}", 'eta0_Pa_s = {value = "high"}',
+     "Mw_g_per_mol = inf", "dispersity = nan", "Mw_g_per_mol = {value = 1e5, tolerance = 0}",
+     "Mw_g_per_mol = {value = 1e5, tolerance = -0.1}", 'Mw_g_per_mol = "much"',
+     "Mw_g_per_mol = {}", "melt_flow = [{load_kg = 2.16}]", "melt_flow = 3.0",
+     "melt_flow = [{load_kg = 0, MFR_g_per_10min = 1}]", "crossover = {}", "colour = 3",
+     "flow_rate_ratio = {value = 30, loads_kg = [2.16, 2.16]}", "dispersity = 0.5",
+     "eta0_Pa_s = {value = 1e4, temperature_C = 900}", "activation_energy = true"],
+)  # fmt: skip
+def test_odd_inputs_are_refused_with_their_line(tmp_path: Path, line: str) -> None:
+    """Zero, negative, text, nothing, unknown names: an error of the input, never a crash."""
+    text = f'polymer = "hdpe"\n[claims]\nMz_g_per_mol = 5e5\n{line}\n'
+    with pytest.raises(InputError) as caught:
+        read_sheet(_written(tmp_path, text))
+    assert caught.value.row == 4 and caught.value.path is not None
 
 
 @pytest.mark.parametrize(
