@@ -51,8 +51,10 @@ def command(
         result = check_datasheet(data, kernels=kernels or None, seed=seed)
     checks = []
     if enforce:
-        odd = result.odd_one_out
-        checks.append((odd is None, f"{odd} does not fit the other claims."))
+        off = [n for n in (result.odd_one_out, *result.also_off, *result.rivals) if n]
+        does = "does" if len(off) == 1 else "do"
+        how = "each other" if result.rivals else "the other claims"
+        checks.append((not off, f"{', '.join(off)} {does} not fit {how}."))
     deliver(
         result,
         output,

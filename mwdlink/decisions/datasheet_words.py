@@ -76,6 +76,16 @@ def unit_of(claim: Claim) -> str:
     }.get(claim.kind, "")
 
 
+def said(x: float | None) -> str:
+    """A positive number to three digits, for a sentence."""
+    if x is None:
+        return "-"
+    text = f"{x:.3g}"
+    if 1e-2 <= x < 1e5:
+        return f"{float(text):g}"
+    return text.replace("e+0", "e").replace("e+", "e").replace("e-0", "e-")
+
+
 def _listed(names: Sequence[str]) -> str:
     words = [spoken(n) for n in names]
     return words[0] if len(words) == 1 else _joined(words)
@@ -85,9 +95,9 @@ def _given(claim: Claim, one: Judged, *, brief: bool = False) -> str:
     """What is claimed and what the others lead one to expect."""
     unit = unit_of(claim)
     e = one.expected
-    number = f"{one.claimed:.3g}{' ' + unit if unit else ''}"
+    number = f"{said(one.claimed)}{' ' + unit if unit else ''}"
     open_to_all = e.value is None or one.verdict == "cannot judge"
-    expected = "" if open_to_all else f"{e.value:.3g} ({e.low:.3g} to {e.high:.3g})"
+    expected = "" if open_to_all else f"{said(e.value)} ({said(e.low)} to {said(e.high)})"
     if brief:
         beside = "which the others do not determine" if open_to_all else f"expected {expected}"
         return f"{spoken(claim.quantity)} ({number}; {beside})"
@@ -195,6 +205,8 @@ def explain(
     energy = [i for i, c in enumerate(claims) if c.kind == "activation energy" and named]
     for i in dict.fromkeys((*named, *finding.rivals, *energy)):
         text = by_nature(claims[i], judged[i])
+        if text and finding.rivals:
+            text = f"{_upper(spoken(claims[i].quantity))}: {text[:1].lower()}{text[1:]}"
         if text and text not in out:
             out.append(text)
     for i in dependent:
