@@ -16,7 +16,7 @@ from mwdlink.inversion.solve import FARTHEST, LONGEST, SLOW
 MAX_STEPS = 100
 # a copy ends at a step that promised less of the objective than this: Mw is then good to 0.02 of
 # its own standard deviation (rms of 60 copies; with 2e-2 it was 0.21)
-TOLERANCE = 5e-3
+TOLERANCE = 1e-2
 # copies solved together: enough to hide the interpreter (25 took a tenth longer, 200 no less)
 STACK = 100
 
@@ -86,9 +86,9 @@ class _State:
         m = copies.u.shape[0]
         self.power = np.full(m, f.exponent) if copies.exponent is None else copies.exponent
         self.root = np.sqrt(copies.smoothing)[:, None]
-        prior = problem.prior
-        self.rough = prior.third.T @ prior.third
-        self.soft = prior.weak.T @ prior.weak
+        self.prior = prior = problem.prior
+        self.lean_rows, self.lean_linear = f.rows.astype(np.float32), f.linear.astype(np.float32)
+        self.lean_survival = self.survival.astype(np.float32)
         self.data = problem.data + problem.sigma * copies.data
         self.inverse = 1.0 / problem.sigma
         self.target = prior.weak_centre + copies.weak
@@ -114,6 +114,10 @@ class _State:
         """The survival matrix all copies share, or the copies' own."""
         return self.survival if self.survival.ndim == 2 else self.survival[index]
 
+    def lean(self, index: np.ndarray) -> np.ndarray:
+        """The same in single precision."""
+        return self.lean_survival if self.survival.ndim == 2 else self.lean_survival[index]
+
     def normal(
         self, known: tuple[np.ndarray, ...], index: np.ndarray
     ) -> tuple[np.ndarray, np.ndarray]:
@@ -123,30 +127,44 @@ class _State:
         """
         w, p, y, r, t, q, lump = known
         f = self.problem.forward
-        weighted = (self.power[index][:, None] * p)[:, :, None] * self.survival_of(index)
-        j = np.matmul(f.rows, weighted)
-        j += f.linear
-        j *= (self.inverse / y)[:, :, None]
-        j -= np.matmul(j, w[:, :, None])
-        j *= w[:, None, :]
-        jt = j.transpose(0, 2, 1)
         n = w.shape[1]
-        prior = self.problem.prior
-        h = np.matmul(jt, j)
-        h += self.c.smoothing[index][:, None, None] * self.rough + self.soft
-        lump_j = np.repeat(-w[:, None, :], 2, axis=1) / LUMP_SPREAD
-        lump_j[:, 0, n - 2] += 1.0 / LUMP_SPREAD
-        lump_j[:, 1, n - 1] += 1.0 / LUMP_SPREAD
-        h += np.matmul(lump_j.transpose(0, 2, 1), lump_j)
-        g = np.matmul(jt, r[:, :, None])[:, :, 0]
-        share = np.minimum(1.0, r.shape[1] / (r * r).sum(axis=1)) ** 2
+        slope = self.power[index][:, None] * p
+        k = self.survival_of(index)
+        # the gradient by the transposed map, in full precision
+        pull = r * (self.inverse / y)
+        back = (pull @ f.rows) * slope
+        g = (back @ k) if k.ndim == 2 else np.matmul(back[:, None, :], k)[:, 0, :]
+        g += pull @ f.linear
+        g -= np.sum(g * w, axis=1, keepdims=True)
+        g *= w
+        # the matrix only steers the step: single precision is plenty, and half the traffic
+        j = np.empty((len(w), r.shape[1] + 2, n), dtype=np.float32)
+        rows = j[:, :-2]
+        np.matmul(self.lean_rows, slope.astype(np.float32)[:, :, None] * self.lean(index), out=rows)
+        rows += self.lean_linear
+        rows *= (self.inverse / y).astype(np.float32)[:, :, None]
+        lean_w = w.astype(np.float32)
+        rows -= np.matmul(rows, lean_w[:, :, None])
+        rows *= lean_w[:, None, :]
+        j[:, -2:] = lean_w[:, None, :] / np.float32(-LUMP_SPREAD)
+        j[:, -2, n - 2] += 1.0 / LUMP_SPREAD
+        j[:, -1, n - 1] += 1.0 / LUMP_SPREAD
+        data = np.matmul(j.transpose(0, 2, 1), j)
+        share = np.minimum(1.0, r.shape[1] / np.sum(r * r, axis=1)) ** 2
         push = np.maximum(g, 0.0) * share[:, None]
-        cross = (push - 0.5 * push.sum(axis=1, keepdims=True) * w)[:, :, None] * w[:, None, :]
-        h -= cross
-        h -= cross.transpose(0, 2, 1)
+        side = (push - 0.5 * push.sum(axis=1, keepdims=True) * w).astype(np.float32)
+        cross = side[:, :, None] * lean_w[:, None, :]
+        data -= cross
+        data -= cross.transpose(0, 2, 1)
+        h = self.c.smoothing[index][:, None, None] * self.prior.rough
+        h += self.prior.soft
+        h += data
         h.reshape(len(h), -1)[:, :: n + 1] += push
+        prior = self.prior
         g += (self.root[index] * t) @ prior.third + q @ prior.weak
-        g += np.matmul(lump[:, None, :], lump_j)[:, 0, :]
+        lumps = lump / LUMP_SPREAD
+        g -= w * lumps.sum(axis=1, keepdims=True)
+        g[:, -2:] += lumps
         return h, g
 
 
@@ -169,14 +187,15 @@ def _stack(problem: Problem, copies: Copies) -> tuple[np.ndarray, np.ndarray]:
     for _ in range(MAX_STEPS):
         if active.size == 0:
             break
-        h, g = state.normal(tuple(part[active] for part in known), active)
+        everyone = active.size == m
+        h, g = state.normal(known if everyone else tuple(part[active] for part in known), active)
+        stiff = h[:, diag, diag]
         pending = np.arange(active.size)
         refused = np.zeros(active.size, dtype=bool)
         for _retry in range(12):
             who = active[pending]
-            lhs = h[pending]
-            d = lhs[:, diag, diag]
-            lhs[:, diag, diag] = d * (1.0 + damping[who][:, None]) + 1e-12
+            lhs = h if pending.size == active.size else h[pending]
+            lhs[:, diag, diag] = stiff[pending] * (1.0 + damping[who][:, None]) + 1e-12
             step = -np.linalg.solve(lhs, g[pending][:, :, None])[:, :, 0]
             longest = np.abs(step).max(axis=1, keepdims=True)
             step *= LONGEST / np.maximum(longest, LONGEST)
@@ -186,7 +205,10 @@ def _stack(problem: Problem, copies: Copies) -> tuple[np.ndarray, np.ndarray]:
                 new = _cost(found)
             promised = -(g[pending] * step).sum(axis=1)
             good = np.isfinite(new) & (new <= value[who] * (1 + 1e-12))
-            small = (promised < TOLERANCE) & (good | (stretch[who] == 1.0))
+            # along a valley steps promise little and there is far to go
+            valley = good & (value[who] - new > SLOW * promised)
+            end = np.where(valley, 0.3 * TOLERANCE, TOLERANCE)
+            small = (promised < end) & (good | (stretch[who] == 1.0))
             taken = who[good]
             gain = value[taken] - new[good]
             u[taken] = trial[good]

@@ -120,7 +120,7 @@ def _freedom(problem: Problem, fit: Fit, factor: np.ndarray) -> float:
 
 # along the scan a fit may stop this early (a tenth of a standard deviation); the one chosen
 # is finished
-ALONG = 1e-2
+ALONG = 5e-3
 # and one that is forced to be far too smooth, or left far too free, need not be finished: it is
 # given this many steps, and when its neighbour's evidence was e^-HOPELESS of the best this few
 ALONG_STEPS, FEW_STEPS, HOPELESS = 40, 5, 15.0

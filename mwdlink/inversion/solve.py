@@ -217,7 +217,9 @@ def minimise(
             good = gain > 0.25 * promised
             stretch = min(2.0 * stretch, FARTHEST) if gain > SLOW * promised else 1.0
             damping = max(damping * ((1.0 if refused else 0.15) if good else 2.0), 1e-9)
-            if promised < tolerance * (1.0 + 1e-3 * at.value):
+            end = tolerance * (1.0 + 1e-3 * at.value)
+            # along a valley steps promise little and there is far to go
+            if promised < (end if stretch == 1.0 else 1e-2 * end):
                 converged = True
                 break
     return Fit(
