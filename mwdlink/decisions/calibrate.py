@@ -21,13 +21,16 @@ from mwdlink.decisions.calibrate_fit import (
     SAMPLE_SHIFT,
     Fitted,
     Sample,
+    changed,
     fit,
+    with_gpc_errors,
 )
 from mwdlink.decisions.components import Study, settled
 from mwdlink.decisions.ensemble import central_kernel, exponent_belief, kernels_to_use
 from mwdlink.errors import Caution, InputError, NotConverged, merge_cautions
 from mwdlink.measurement.noise import noise_of
 from mwdlink.quantity import Uncertain
+from mwdlink.relaxation.mixing import Model
 from mwdlink.result import Result
 
 # a constant counts as fixed by the data when they narrow its prior to less than this share
@@ -211,7 +214,15 @@ def calibrate(
     start = np.array([0.0, melt.law_exponent, 0.0, belief.centre])
     kept = _unfixable(samples, masses)
     free = [n not in kept for n in NAMES]
+    model = Model(centre, belief.centre, rouse)
+    samples = with_gpc_errors(samples, melt, model, np.zeros(len(samples)))
     first = _converged(fit(samples, melt, centre, rouse, start, free, pivot))
+    if any(s.gpc is not None for s in samples):
+        # once more with the constants found: the errors' reach depends on them
+        found = changed(melt, first.values, pivot)
+        model = Model(centre, float(first.values[3]), rouse)
+        samples = with_gpc_errors(samples, found, model, first.shifts)
+        first = _converged(fit(samples, melt, centre, rouse, start, free, pivot))
     # whatever the data hardly narrow goes back to its published value
     for i, name in enumerate(NAMES):
         if first.free[i] and first.spread[i] > NARROWED * PRIOR[i]:

@@ -8,13 +8,17 @@ must not be blamed for. All have priors, so that what the data do not say stays 
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
+from scipy.linalg import solve_triangular
 
 from mwdlink.chains.distribution import Distribution
+from mwdlink.chains.gpc_error import GpcError
 from mwdlink.chains.melt import Melt
+from mwdlink.decisions.gpc_band import GpcBand
 from mwdlink.decisions.response import Bank, lean
+from mwdlink.relaxation.mixing import Model
 
 # priors: standard deviations of ln(level), exponent, ln(plateau modulus), mixing exponent
 PRIOR = np.array([1.2, 0.25, 0.3, 0.2])
@@ -31,6 +35,8 @@ NODES = 60
 FREEDOM = 3.0
 STEPS = (0.0, 0.01, 0.02, 0.02)
 MAX_ROUNDS = 20
+# members of the GPC's curve behind its covariance
+GPC_DRAWS = 80
 
 
 @dataclass(frozen=True, eq=False)
@@ -48,6 +54,9 @@ class Sample:
         Relative, inflated for what residuals have in common.
     eta0 : float or None
         Zero-shear viscosity where no sweep is given [Pa s].
+    gpc : ndarray of shape (2 n, r) or (1, r), or None
+        What errors of the GPC's curve do to ln of the moduli (or of eta0): columns whose products
+        sum to a covariance. None for a distribution that is exact.
     """
 
     name: str
@@ -56,6 +65,14 @@ class Sample:
     log_moduli: np.ndarray
     sigma: np.ndarray
     eta0: float | None = None
+    gpc: np.ndarray | None = None
+
+    def factor(self) -> np.ndarray:
+        """Lower triangle L with L L^T the covariance of the residuals, shape (k, k)."""
+        own = self.sigma if self.omega.size else np.array([ETA0_ERROR])
+        if self.gpc is None:
+            return np.diag(own)
+        return np.linalg.cholesky(np.diag(own**2) + self.gpc @ self.gpc.T)
 
 
 @dataclass(frozen=True, eq=False)
@@ -133,6 +150,7 @@ def fit(
         Standard deviation of ln of a sample's time shift [-].
     """
     parts = [lean(s.distribution, NODES) for s in samples]
+    factors = [s.factor() for s in samples]
     top = [float(s.omega[-1]) if s.omega.size else 1.0 for s in samples]
     index = np.flatnonzero(free)
 
@@ -146,9 +164,11 @@ def fit(
         s = samples[k]
         if s.omega.size == 0:
             eta0 = float(r.terminal[0][0]) * np.exp(shift)  # type: ignore[attr-defined]
-            return np.array([np.log(eta0 / float(s.eta0 or np.nan)) / ETA0_ERROR])
-        up, out = r.moduli(s.omega * np.exp(shift))  # type: ignore[attr-defined]
-        return (np.log(np.concatenate([up[0], out[0]])) - s.log_moduli) / s.sigma
+            miss = np.array([np.log(eta0 / float(s.eta0 or np.nan))])
+        else:
+            up, out = r.moduli(s.omega * np.exp(shift))  # type: ignore[attr-defined]
+            miss = np.log(np.concatenate([up[0], out[0]])) - s.log_moduli
+        return np.asarray(solve_triangular(factors[k], miss, lower=True))
 
     n = len(samples)
     p, d = np.array(start, dtype=float), np.zeros(n)
@@ -215,11 +235,54 @@ def fit(
     full = np.zeros((4, 4))
     full[np.ix_(index, index)] = covariance * max(1.0, chi2)
     spread = np.where(free, np.sqrt(np.diag(full)), PRIOR)
-    residuals = tuple(
-        x * (s.sigma if s.omega.size else ETA0_ERROR)
-        for x, s in zip(state[1], samples, strict=True)
-    )
+    residuals = tuple(factor @ x for x, factor in zip(state[1], factors, strict=True))
     eta0 = np.array([float(r.terminal[0][0]) for r in state[0]]) * np.exp(p[0])  # type: ignore[attr-defined]
     return Fitted(
         kernel, p, spread, full, tuple(bool(f) for f in free), d, chi2, residuals, eta0, converged
     )
+
+
+def with_gpc_errors(
+    samples: Sequence[Sample],
+    melt: Melt,
+    model: Model,
+    shifts: np.ndarray,
+    seed: int = 0,
+) -> list[Sample]:
+    """The samples with what their GPCs' errors do to the curves, by a melt's constants.
+
+    A few wrong rows far out in a GPC table move the low-frequency end of a prediction by more than
+    any rheometer's noise; constants must not make up for it. Only measured tables have such errors,
+    as `GpcError` says; the error of the molar masses is each sample's own shift of times.
+
+    Parameters
+    ----------
+    samples : sequence of Sample
+    melt : Melt
+        With the constants to judge by.
+    model : Model
+    shifts : ndarray of shape (n,)
+        ln of each sample's time shift.
+    seed : int
+    """
+    out = []
+    for k, s in enumerate(samples):
+        if not s.distribution.measured:
+            out.append(s)
+            continue
+        d = lean(s.distribution, NODES)
+        drawn = GpcBand.of([d], GpcError(molar_mass=0.0), GPC_DRAWS, seed + k)
+        assert drawn is not None  # an error was asked for
+        top = float(s.omega[-1]) if s.omega.size else 1.0
+        bank = Bank([d], melt, model.rouse, 30.0 * top)
+        one, rows = np.ones((1, 1)), []
+        for i in range(GPC_DRAWS):
+            r = bank.response(one, model.kernel, model.exponent, version=drawn.version(i))
+            if s.omega.size == 0:
+                rows.append(np.log(r.terminal[0]))
+                continue
+            up, loss = r.moduli(s.omega * np.exp(shifts[k]))
+            rows.append(np.log(np.concatenate([up[0], loss[0]])))
+        off = np.array(rows)
+        out.append(replace(s, gpc=(off - off.mean(axis=0)).T / np.sqrt(GPC_DRAWS - 1)))
+    return out
