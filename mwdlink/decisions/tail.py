@@ -13,7 +13,9 @@ from mwdlink.decisions import tail_cautions, tail_words
 from mwdlink.decisions.gpc_scale import on_own_scale
 from mwdlink.decisions.tail_interval import (
     LEAST_SAMPLES,
+    WORTH,
     heard,
+    stretch,
     uncertain,
     unresolved,
     widened,
@@ -218,7 +220,7 @@ def _assemble(
         return widened(u, found, least)
 
     fraction, excess = amount(part, other_part, 0.0), amount(more, other_more, None)
-    limit = detection_limit(leader.smooth.problem, leader.smooth.best, beyond)
+    limit = detection_limit(leader, found.alone, beyond, level, WORTH, stretch(found))
 
     # -- what went with it ----------------------------------------------------------------------
     def factor(index: int) -> Uncertain:

@@ -42,6 +42,11 @@ def strain(found: Joint) -> float:
     return float(z @ z)
 
 
+def stretch(found: Joint) -> float:
+    """Factor on the intervals: the root of the strain over what is expected of it, at least 1."""
+    return float(np.sqrt(max(1.0, strain(found) / EXPECTED_STRAIN)))
+
+
 def unresolved(found: Joint) -> bool:
     """Whether a value rests on something the data speak against."""
     return found.doubt > DOUBTED or strain(found) > AT_ODDS
@@ -107,8 +112,8 @@ def widened(u: Uncertain, found: Joint, least: float | None = None) -> Uncertain
     """
     if u.value is None or u.low is None or u.high is None:
         return u
-    stretch = float(np.sqrt(max(1.0, strain(found) / EXPECTED_STRAIN)))
+    factor = stretch(found)
     more = float(norm.ppf((1 + u.level) / 2)) * WORTH
-    low = u.value - float(np.hypot(stretch * (u.value - u.low), more))
-    high = u.value + float(np.hypot(stretch * (u.high - u.value), more))
+    low = u.value - float(np.hypot(factor * (u.value - u.low), more))
+    high = u.value + float(np.hypot(factor * (u.high - u.value), more))
     return replace(u, low=low if least is None else max(low, least), high=high)
