@@ -122,9 +122,9 @@ def _continuation(
     own = float(alone.w @ share)
     gradient = alone.w * (share - own)
     reach = np.linalg.solve(alone.hessian + 1e-9 * np.eye(n), gradient)
-    spread = PUSH * float(
-        np.sqrt(np.sum((alone.slope @ reach) ** 2) + np.sum((alone.rows @ reach) ** 2))
-    )
+    # members push the rows of the GPC by a part of their error, the smoothness by all of its own
+    rows = PUSH * (alone.slope @ reach)
+    spread = float(np.sqrt(np.sum(rows**2) + np.sum((alone.rows @ reach) ** 2)))
     gpc = problem.gpc
     mixed = (1 - STEP) * alone.w + STEP * shape
     before = gpc.model(problem.x, alone.u, 0.0, 0.0)[0]

@@ -79,11 +79,12 @@ def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--pairs", type=int, default=40)
     parser.add_argument("--members", type=int, default=60)
+    parser.add_argument("--first", type=int, default=0, help="seed of the first pair")
     a = parser.parse_args()
     print("| noise | lowest frequency rad/s | limit wt% | found at the limit | at half of it |")
     print("|---|---|---|---|---|", flush=True)
     for noise, low in SETTINGS:
-        r = power(a.pairs, noise, low, a.members)
+        r = power(a.pairs, noise, low, a.members, first=a.first)
         at, half = r["found"]  # type: ignore[misc]
         print(
             f"| {100 * noise:.0f} % | {low:g} | {r['limit']:.2f} | {at:.2f} | {half:.2f} |",

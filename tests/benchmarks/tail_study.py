@@ -100,15 +100,40 @@ def made(
 
 
 def study(
-    cases: int, fit: tuple[str, ...] | None, members: int, **made_with: object
+    cases: int,
+    fit: tuple[str, ...] | None,
+    members: int,
+    *,
+    first: int = 0,
+    asked: float | tuple[float, float] | None = None,
+    exponent_spread: float = 0.0,
+    **made_with: object,
 ) -> dict[str, float]:
-    """Errors, cover and findings over a number of cases."""
-    error, half, inside, found, limit, factor, seconds = [], [], [], [], [], [], []
-    for seed in range(cases):
-        true, gpc, sweep, law = made(seed, **made_with)  # type: ignore[arg-type]
+    """Errors, cover and findings over a number of cases.
+
+    Parameters
+    ----------
+    first : int
+        Seed of the first case.
+    asked : float, (low, high) or None
+        Exponent given to `find_tail`.
+    exponent_spread : float
+        Standard deviation of the melts' own exponents about 2.
+    """
+    error, half, inside, found, limit, factor, seconds, assumed = ([] for _ in range(8))
+    for seed in range(first, first + cases):
+        own = 2.0 + exponent_spread * float(np.random.default_rng([seed, 7]).standard_normal())
+        true, gpc, sweep, law = made(seed, exponent=max(own, 1.5), **made_with)  # type: ignore[arg-type]
         began = time.process_time()
         r = find_tail(
-            gpc, sweep, "hdpe", beyond=EXCLUSION, noise=NOISE, members=members, kernels=fit
+            gpc,
+            sweep,
+            "hdpe",
+            beyond=EXCLUSION,
+            noise=NOISE,
+            members=members,
+            kernels=fit,
+            exponent=asked,
         )
         seconds.append(time.process_time() - began)
         value = true.weight_above(EXCLUSION)
@@ -117,6 +142,7 @@ def study(
         half.append(50 * (f.high - f.low))
         inside.append(f.low <= value <= f.high)
         found.append(r.found)
+        assumed.append(f.status != "resolved")
         limit.append(100 * (r.detection_limit or 1.0))
         factor.append(r.time_law_factor.value / law - 1)
     size = np.abs(error)
@@ -124,27 +150,72 @@ def study(
         "cases": cases,
         "median error": float(np.median(size)),
         "worst error": float(size.max()),
+        "worst seed": first + int(np.argmax(size)),
         "bias": float(np.mean(error)),
+        "rms": float(np.sqrt(np.mean(size**2))),
         "half width": float(np.median(half)),
         "cover": float(np.mean(inside)),
         "found": int(np.sum(found)),
+        "assumed": int(np.sum(assumed)),
         "limit": float(np.median(limit)),
         "time law": float(np.median(np.abs(factor))),
         "seconds": float(np.median(seconds)),
     }
 
 
+def bound(cases: int, first: int = 0) -> dict[str, float]:
+    """What no reading of these sweeps can beat: the body and the kind of the tail known.
+
+    Standard deviation [wt%] of the tail's weight from the Fisher information of the sweep, where
+    only the tail's weight, mass and width, the time law, the level and the exponent are unknown,
+    with the exponent within 0.2 beforehand and with the exponent known.
+    """
+    melt = builtin("hdpe").melt(190.0)
+    omega = np.geomspace(1e-3, 1e3, 31)
+    spread = np.array([np.inf, 0.5, 0.3, 0.23, 0.03, 0.2])
+    steps = np.array([1e-3, 0.02, 0.02, 0.01, 0.01, 0.01])
+    with_it, without = [], []
+    for seed in range(first, first + cases):
+        rng = np.random.default_rng([seed, 6])
+        share = rng.uniform(0.003, 0.04)
+        main = body(BODIES[seed % len(BODIES)], rng)
+        centre = np.array([share, np.log(rng.uniform(2e6, 4e6)), rng.uniform(1.2, 1.6), 0, 0, 2.0])
+
+        def moduli(p: np.ndarray, main: np.ndarray = main) -> np.ndarray:
+            w = (1 - p[0]) * main + p[0] * lognormal(np.exp(p[1]), p[2])
+            held = w > 1e-13 * w.max()
+            d = Distribution.from_nodes(np.exp(GRID[held]), w[held])
+            law = melt.with_(time_factor=float(np.exp(p[3])))
+            storage, loss = Relaxation(d, law, Model("power-law", float(p[5]))).moduli(omega)
+            return np.log(np.concatenate([storage, loss])) + p[4]
+
+        slope = np.column_stack(
+            [
+                (moduli(centre + h) - moduli(centre - h)) / (2 * h.sum() * NOISE)
+                for h in np.diag(steps)
+            ]
+        )
+        information = slope.T @ slope + np.diag(spread**-2.0)
+        with_it.append(np.sqrt(np.linalg.inv(information)[0, 0]))
+        without.append(np.sqrt(np.linalg.inv(information[:5, :5])[0, 0]))
+    return {
+        "exponent within 0.2": 100 * float(np.median(with_it)),
+        "exponent known": 100 * float(np.median(without)),
+    }
+
+
 def line(name: str, s: dict[str, float]) -> str:
     return (
         f"| {name} | {s['cases']} | {s['median error']:.2f} | {s['worst error']:.2f} | "
-        f"{s['half width']:.2f} | {s['cover']:.2f} | {s['found']} | {s['limit']:.2f} | "
-        f"{100 * s['time law']:.0f} % | {s['seconds']:.1f} |"
+        f"{s['half width']:.2f} | {s['cover']:.2f} | {s['found']} | {s['assumed']} | "
+        f"{s['limit']:.2f} | {100 * s['time law']:.0f} % | {s['seconds']:.1f} |"
     )
 
 
 HEAD = (
-    "| data | cases | median error wt% | worst wt% | half width wt% | cover | found | "
-    "detection limit wt% | time law off by | CPU s |\n|---|---|---|---|---|---|---|---|---|---|"
+    "| data | cases | median error wt% | worst wt% | half width wt% | cover | found | assumed | "
+    "detection limit wt% | time law off by | CPU s |\n"
+    "|---|---|---|---|---|---|---|---|---|---|---|"
 )
 
 
@@ -152,22 +223,47 @@ def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--cases", type=int, default=200)
     parser.add_argument("--free", type=int, default=0)
+    parser.add_argument("--first", type=int, default=0, help="seed of the first case")
     parser.add_argument("--true", default="power-law")
     parser.add_argument("--fit", nargs="*")
     parser.add_argument("--bodies", choices=("log-normal", "all"), default="all")
     parser.add_argument("--members", type=int, default=100)
     parser.add_argument("--omega", default="1e-3:1e3")
+    parser.add_argument("--exponent", help="given to the fit: a number, or LOW:HIGH")
+    parser.add_argument(
+        "--exponent-spread", type=float, default=0.0, help="of the melts' own exponents"
+    )
+    parser.add_argument("--bound", type=int, default=0, help="cases for what nothing can beat")
     a = parser.parse_args()
+    if a.bound:
+        for name, value in bound(a.bound, a.first).items():
+            print(f"standard deviation at best, {name}: {value:.2f} wt%")
+        return
     low, high = (float(v) for v in a.omega.split(":"))
     kinds = BODIES if a.bodies == "all" else BODIES[:1]
     fit = tuple(a.fit) if a.fit else None
-    shared = {"kernel": a.true, "kinds": kinds, "omega": (low, high)}
+    asked: float | tuple[float, float] | None = None
+    if a.exponent:
+        ends = [float(v) for v in a.exponent.split(":")]
+        asked = ends[0] if len(ends) == 1 else (ends[0], ends[1])
+    shared = {
+        "kernel": a.true,
+        "kinds": kinds,
+        "omega": (low, high),
+        "first": a.first,
+        "asked": asked,
+        "exponent_spread": a.exponent_spread,
+    }
     print(HEAD, flush=True)
     name = f"{a.true} melt, fitted with {', '.join(fit) if fit else 'all kernels'}, {a.omega} rad/s"
     if a.cases:
-        print(line(name, study(a.cases, fit, a.members, **shared)), flush=True)
+        s = study(a.cases, fit, a.members, **shared)  # type: ignore[arg-type]
+        print(line(name, s), flush=True)
+        print(
+            f"bias {s['bias']:+.3f}, rms {s['rms']:.3f}, worst: seed {s['worst seed']}", flush=True
+        )
     if a.free:
-        free = study(a.free, fit, a.members, tail=0.0, **shared)
+        free = study(a.free, fit, a.members, tail=0.0, **shared)  # type: ignore[arg-type]
         print(line(f"{name}, no tail", free), flush=True)
 
 
