@@ -90,6 +90,20 @@ def spread(
     }
 
 
+def others() -> dict[str, Distribution]:
+    """Melts that had no part in the choice of what is known of the smoothing beforehand."""
+    make = Distribution.from_averages
+    return {
+        "log-normal, dispersity 1.08": make(Mw=2e5, dispersity=1.08),
+        "log-normal, dispersity 1.2": make(Mw=1.0e5, dispersity=1.2),
+        "log-normal, dispersity 3": make(Mw=0.8e5, dispersity=3.0),
+        "Schulz-Zimm, dispersity 1.4": make(Mw=1.5e5, dispersity=1.4, family="schulz-zimm"),
+        "two parts, 4e4 and 3e5": Distribution.blend(
+            [(make(Mw=4e4, dispersity=1.2), 0.6), (make(Mw=3e5, dispersity=1.2), 0.4)]
+        ),
+    }
+
+
 # The exponential kernel ends a spectrum more sharply than the default one.
 SHARPER = ("Schulz-Zimm, dispersity 2", "narrow, dispersity 1.1", "two narrow, 5e4 and 2e5")
 KEYS = ("median", "rms", "largest", "bias", "of modulus")
@@ -99,15 +113,20 @@ WINDOWS = (((-3, 3), 5), ((-2, 2), 5), ((-2, 2), 10))
 def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--sweeps", type=int, default=60)
-    sweeps = parser.parse_args().sweeps
+    parser.add_argument("--others", action="store_true", help="melts and a kernel not tuned on")
+    asked = parser.parse_args()
+    sweeps = asked.sweeps
     heads = ("melt", "kernel", "window [rad/s]", "points per decade", "nodes", "median")
     heads += ("root mean square", "largest", "distance", "largest, of G*")
     print("| " + " | ".join(heads) + " |\n|" + "---|" * len(heads))
     rows = [(name, "power-law") for name in melts()] + [(name, "exponential") for name in SHARPER]
+    known = melts()
+    if asked.others:
+        known, rows = others(), [(name, "reptation") for name in others()]
     for name, kernel in rows:
         for window, density in WINDOWS:
             s = spread(
-                melts()[name], decades=window, per_decade=density, sweeps=sweeps, kernel=kernel
+                known[name], decades=window, per_decade=density, sweeps=sweeps, kernel=kernel
             )
             span = f"1e{window[0]} to 1e{window[1]}"
             cells = [f"{100 * s[k]:.1f} %" for k in KEYS]
