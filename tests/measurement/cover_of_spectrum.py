@@ -87,17 +87,8 @@ def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--sweeps", type=int, default=100)
     sweeps = parser.parse_args().sweeps
-    heads = (
-        "melt",
-        "noise",
-        "resolved",
-        "eta0",
-        "Je0",
-        "mean time",
-        "band",
-        "error of eta0",
-        "half width",
-    )
+    heads = ("melt", "noise", "resolved", "eta0", "Je0", "mean time", "band of H")
+    heads += ("error of eta0", "half width of its interval")
     print("| " + " | ".join(heads) + " |\n|" + "---|" * len(heads))
     for name, distribution in melts().items():
         for noise, given in ((0.02, True), (0.02, False)):
@@ -105,9 +96,8 @@ def main() -> None:
             cells = [f"{s[k]:.2f}" for k in (*QUANTITIES, "band")]
             cells += [f"{100 * s[k]:.2f} %" for k in ("eta0 error", "eta0 half width")]
             how = "given" if given else "estimated"
-            print(
-                f"| {name} | {100 * noise:.0f} %, {how} | " + " | ".join(cells) + " |", flush=True
-            )
+            row = [name, f"{100 * noise:.0f} %, {how}", str(s["resolved"]), *cells]
+            print("| " + " | ".join(row) + " |", flush=True)
 
 
 if __name__ == "__main__":
