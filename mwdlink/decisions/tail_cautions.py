@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from mwdlink.decisions.tail_interval import AT_ODDS, DOUBTED, strain
+from mwdlink.decisions.tail_interval import AT_ODDS, DOUBTED, REFUTED, strain
 from mwdlink.decisions.tail_words import percent
 from mwdlink.errors import Caution
 from mwdlink.inversion import joint
@@ -64,7 +64,7 @@ def cautions(
     if strained:
         words = ", ".join(f"{name} by {abs(z):.1f}" for name, z in strained)
         after = (
-            "another kernel does without (see kernel_doubted)."
+            "the kernel is the likeliest cause (see kernel_doubted)."
             if doubted
             else "the intervals were widened for it, and the weight beyond counts as assumed."
             if strain(found) > AT_ODDS
@@ -81,13 +81,14 @@ def cautions(
     if doubted and found.beside is not None:
         rival = found.beside
         value = float(weight_beyond(setting.x, rival.best.w, beyond))
+        assumed = ", and the value is assumed, not measured" if found.doubt > REFUTED else ""
         out.append(
             Caution(
                 "kernel_doubted",
                 f"The data speak for the {rival.kernels[0].kernel} kernel "
                 f"({100 * found.doubt:.0f} % of the evidence) rather than for what was asked for; "
                 f"with it {percent(value)} wt% lie beyond {beyond:.3g} g/mol. The intervals reach "
-                "that far, and the value is assumed, not measured. Let all kernels take part.",
+                f"that far{assumed}. Let all kernels take part.",
             )
         )
     points = leader.free.problem.data.size

@@ -21,8 +21,9 @@ from mwdlink.quantity import Uncertain
 EXPECTED_STRAIN = 2.0
 # beyond this sum (one pair in a thousand, if the priors hold) the value is assumed, not resolved
 AT_ODDS = float(chi2.ppf(0.999, 5))
-# from this share of the evidence on, kernels that were not asked for speak against those that were
-DOUBTED = 0.5
+# from these shares of the evidence on, kernels that were not asked for put the others in doubt,
+# and leave next to nothing of them
+DOUBTED, REFUTED = 0.5, 0.99
 # weight fraction that kernel, mixing rule and continuation are worth at best, one standard
 # deviation (assumed): a hundredth of a per cent is not told from nothing
 WORTH = 2e-4
@@ -49,7 +50,7 @@ def stretch(found: Joint) -> float:
 
 def unresolved(found: Joint) -> bool:
     """Whether a value rests on something the data speak against."""
-    return found.doubt > DOUBTED or strain(found) > AT_ODDS
+    return found.doubt > REFUTED or strain(found) > AT_ODDS
 
 
 def heard(found: Joint) -> Joint | None:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 from scipy.stats import norm
 
@@ -19,6 +21,8 @@ POWER = 0.9
 LEAST_WAGER = 5.0
 # small enough for a derivative, large enough for nodes that hold next to nothing
 STEP = 1e-4
+# the moduli's logarithms grow ever less with a tail: what one of the limit's own size does counts
+ROUNDS = 4
 
 
 def detection_limit(
@@ -63,32 +67,35 @@ def detection_limit(
     if not shape.sum() > 0:
         return None
     shape = shape / shape.sum()
-    information = _information(problem, scan, alone, np.append(shape, 0.0))
-    if not information > 0:
-        return None
     # what a unit of tail adds to the excess, and how well the excess is known
     own, spread, taken = _continuation(problem, alone, shape, beyond)
     visible = float(weight_beyond(problem.x, shape, beyond)) - own - taken
     if not visible > 0:
         return None
-    known = stretch * float(np.hypot(spread, visible / np.sqrt(information)))
-    known = float(np.hypot(known, worth))
     miss = float(norm.ppf(POWER))
     edge = float(norm.ppf((1 + level) / 2))
-    by_interval = (edge + miss) * known / visible
     # ln odds of a tail that leave less than the interval's lower end to chance
-    wager = max(scan.smooth.total - scan.free.total, LEAST_WAGER) + np.log(
-        (1 + level) / (1 - level)
-    )
-    by_evidence = (miss + np.sqrt(2.0 * wager)) / np.sqrt(information)
-    limit = float(max(by_interval, by_evidence))
-    return limit if limit < 1.0 else None
+    wager = max(scan.smooth.total - scan.free.total, LEAST_WAGER)
+    wager += float(np.log((1 + level) / (1 - level)))
+    information = _information(problem, scan, alone, np.append(shape, 0.0))
+    limit = STEP
+    for _ in range(ROUNDS):
+        carried = information(limit)
+        if not carried > 0:
+            return None
+        known = stretch * float(np.hypot(spread, visible / np.sqrt(carried)))
+        by_interval = (edge + miss) * float(np.hypot(known, worth)) / visible
+        by_evidence = (miss + np.sqrt(2.0 * wager)) / np.sqrt(carried)
+        limit = float(max(by_interval, by_evidence))
+        if not limit < 1.0:
+            return None
+    return limit
 
 
 def _information(
     problem: JointProblem, scan: KernelScan, alone: AloneFit, shape: np.ndarray
-) -> float:
-    """Fisher information on the tail's weight, the other unknowns adjusting themselves.
+) -> Callable[[float], float]:
+    """Information on the weight of a tail of given size, the other unknowns adjusting themselves.
 
     Where the pair has a tail, the smooth curve fits it badly: the answer is worked out at the GPC's
     own curve and the nuisance unknowns of the best fit.
@@ -100,14 +107,18 @@ def _information(
     z[n + 1 : n + 1 + len(NUISANCE)] = scan.best.nuisance
     r, slope, w = problem.residuals(z)
     z[: n + 1] = np.log(np.maximum(w, 1e-300))
-    pushed = z.copy()
-    pushed[: n + 1] = np.log(np.maximum(w + STEP * (shape - w), 1e-300))
-    # the lump's prior is no datum
-    push = (problem.residuals(pushed)[0] - r)[:-1] / STEP
     rows, _ = problem.prior_rows(scan.best.smoothing)
     hessian = slope.T @ slope + rows.T @ rows + 1e-9 * np.eye(problem.size)
-    pull = slope[:-1].T @ push
-    return float(push @ push - pull @ np.linalg.solve(hessian, pull))
+
+    def information(size: float) -> float:
+        pushed = z.copy()
+        pushed[: n + 1] = np.log(np.maximum(w + size * (shape - w), 1e-300))
+        # the lump's prior is no datum
+        push = (problem.residuals(pushed)[0] - r)[:-1] / size
+        pull = slope[:-1].T @ push
+        return float(push @ push - pull @ np.linalg.solve(hessian, pull))
+
+    return information
 
 
 def _continuation(
