@@ -15,6 +15,7 @@ from scipy.stats import t as student
 
 from mwdlink.decisions.blend_sweeps import MeasuredBank
 from mwdlink.decisions.ensemble import PRIOR_EXPONENT, PRIOR_SPREAD
+from mwdlink.decisions.gpc_band import GpcBand
 from mwdlink.decisions.response import Bank, Response, _cubic_rows
 from mwdlink.relaxation.operator import log_grid
 
@@ -143,17 +144,39 @@ class Surface:
 
     def best(self, blends: Sequence[int]) -> tuple[float, float]:
         """Exponent and factor that suit the blends best, between grid points too."""
-        loss = self.loss(blends)
-        i, j = np.unravel_index(int(np.argmin(loss)), loss.shape)
-        e = _vertex(self.rule.exponents, loss[:, j], int(i))
-        f = np.exp(_vertex(np.log(self.rule.factors), loss[i, :], int(j)))
-        return float(e), float(f)
+        return lowest(self.rule.exponents, self.rule.factors, self.loss(blends))
 
     def factor_at(self, exponent_index: int, blends: Sequence[int]) -> float:
         """Best factor of a fixed exponent."""
         loss = self.loss(blends)[exponent_index]
         j = int(np.argmin(loss))
         return float(np.exp(_vertex(np.log(self.rule.factors), loss, j)))
+
+
+def lowest(exponents: np.ndarray, factors: np.ndarray, loss: np.ndarray) -> tuple[float, float]:
+    """Exponent and factor of the least loss (n_e, n_f), between grid points too.
+
+    Another exponent wants another factor: the valley is slanted, so each exponent is judged by the
+    best factor it can have.
+    """
+    x = np.log(factors)
+    own, depth = [], []
+    for row in loss:
+        j = int(np.argmin(row))
+        at = _vertex(x, row, j)
+        own.append(at)
+        depth.append(_depth(x, row, j, at))
+    i = int(np.argmin(depth))
+    e = _vertex(exponents, np.array(depth), i)
+    return float(e), float(np.exp(np.interp(e, exponents, own)))
+
+
+def _depth(x: np.ndarray, y: np.ndarray, i: int, at: float) -> float:
+    """Height of the parabola through the lowest point and its neighbours at its vertex."""
+    if x.size < 3 or i in (0, x.size - 1):
+        return float(y[i])
+    slope = (y[i + 1] - y[i - 1]) / (x[i + 1] - x[i - 1])
+    return float(max(y[i] + 0.5 * slope * (at - x[i]), 0.0))
 
 
 def _vertex(x: np.ndarray, y: np.ndarray, i: int) -> float:
@@ -247,6 +270,35 @@ def exponent_noise(
             loss.append(float(np.sum(x / (x + scale**2))))
         found.append(_vertex(grid, np.array(loss), int(np.argmin(loss))))
     return float(np.std(found)) if len(found) > 2 else 0.0
+
+
+def exponent_of_versions(
+    rule: KernelRule,
+    gpc: GpcBand | None,
+    data: Sequence[BlendData],
+    centre: float,
+    scale: float,
+    versions: int = 16,
+) -> float:
+    """Standard error of the exponent from errors of the components' GPC curves [-].
+
+    All blends share the components' curves, so that leaving one of them out does not show it. The
+    calibration of the molar masses is left to the factor on the time law.
+    """
+    if gpc is None:
+        return 0.0
+    phi = np.stack([d.phi for d in data])
+    grid = np.clip(centre + 0.125 * np.arange(-3, 4), 1.0, 8.0)
+    found = []
+    for k in range(versions):
+        loss = np.zeros((grid.size, rule.factors.size))
+        for i, e in enumerate(grid):
+            r = rule.bank.response(phi, rule.kernel, float(e), version=gpc.version(k))
+            for b, d in enumerate(data):
+                x = np.mean(residuals(r, b, d, rule.factors) ** 2, axis=1)
+                loss[i] += x / (x + scale**2)
+        found.append(lowest(grid, rule.factors, loss)[0])
+    return float(np.std(found))
 
 
 def ranking(

@@ -20,9 +20,11 @@ from mwdlink.decisions.blend_judge import (
 )
 from mwdlink.decisions.blend_rules import (
     KernelRule,
+    Preferred,
     Rule,
     SweptRule,
     exponent_noise,
+    exponent_of_versions,
     preferred,
     ranking,
     residuals,
@@ -37,6 +39,7 @@ from mwdlink.decisions.components import (
     validity_of,
 )
 from mwdlink.decisions.ensemble import kernels_to_use
+from mwdlink.decisions.gpc_band import GpcBand
 from mwdlink.decisions.response import Bank
 from mwdlink.decisions.trust import Trust
 from mwdlink.errors import Caution, InputError, merge_cautions
@@ -44,6 +47,7 @@ from mwdlink.quantity import Uncertain
 from mwdlink.result import Result
 
 REFITS = 80
+VERSIONS = 16
 
 
 @dataclass(frozen=True, eq=False)
@@ -245,16 +249,23 @@ def check_blends(
     surfaces = [surface(r, data) for r in rules]
     everyone = list(range(len(data)))
     chosen = main_surface(surfaces, main, everyone)
-    spread_noise = 0.0
+    spread_noise = of_tables = 0.0
     if isinstance(chosen.rule, SweptRule):
         spread_noise = exponent_noise(chosen.rule, data, chosen.best(everyone)[0], chosen.scale)
+    elif isinstance(chosen.rule, KernelRule):
+        # an error of the tables that all blends share bends the exponent, but then it is the
+        # exponent for these tables: it widens what is said of it, neither the verdict on a bag nor
+        # the trust in blends of the same components
+        own = [c.distribution for c in components]
+        gpc = GpcBand.of(own, None, VERSIONS, seed, masses=False)  # type: ignore[arg-type]
+        best = chosen.best(everyone)[0]
+        of_tables = exponent_of_versions(chosen.rule, gpc, data, best, chosen.scale, VERSIONS)
     checked, misses = check_each(study, components, chosen, data, measured, spread_noise, seed)
     good = [i for i, b in enumerate(checked) if b.agrees is not False] or everyone
     together = preferred(chosen, good, spread_noise)
-    low, high = together.interval()
-    exponent = Uncertain(together.exponent, low, high)
+    exponent = _interval(preferred(chosen, good, float(np.hypot(spread_noise, of_tables))))
     table = ranking(surfaces, data, good)
-    routes = {main: rule_error(chosen, data, checked, misses, good, together, exponent)}
+    routes = {main: rule_error(chosen, data, checked, misses, good, together, _interval(together))}
     for other in ("sweeps", "distributions"):
         mine = [s for s in surfaces if s.rule.route == other]
         if other == main or not mine:
@@ -262,10 +273,7 @@ def check_blends(
         s = main_surface(mine, other, good)
         also, errors = check_each(study, components, s, data, measured, 0.0, seed, recovering=False)
         p = preferred(s, good)
-        span = p.interval()
-        routes[other] = rule_error(
-            s, data, also, errors, good, p, Uncertain(p.exponent, span[0], span[1])
-        )
+        routes[other] = rule_error(s, data, also, errors, good, p, _interval(p))
     left_out = float(np.sqrt(np.mean([np.mean(misses[i] ** 2) for i in good])))
     trust = Trust(
         study.polymer.name,
@@ -306,3 +314,8 @@ def check_blends(
         temperature_C=melt.temperature_C,
         warnings=warnings,
     )
+
+
+def _interval(p: Preferred) -> Uncertain:
+    low, high = p.interval()
+    return Uncertain(p.exponent, low, high)

@@ -69,9 +69,13 @@ class GpcBand:
         error: GpcError | None,
         members: int,
         seed: int,
+        masses: bool = True,
     ) -> GpcBand | None:
-        """None where every distribution is exact or there are no members."""
-        usual = GpcError()
+        """None where every distribution is exact or there are no members.
+
+        Without `masses` the usual errors are of the curves alone, not of their molar masses.
+        """
+        usual = GpcError() if masses else GpcError(molar_mass=0.0)
         errors = tuple(
             error if error is not None else (usual if d.measured else None) for d in distributions
         )

@@ -10,9 +10,11 @@ from dataclasses import replace
 import numpy as np
 import pytest
 from decisions.made_up import HDPE, OMEGA, A, B, study, sweep
+from decisions.test_gpc_band import table
 
 from mwdlink.chains.distribution import Distribution
 from mwdlink.chains.families import lognormal
+from mwdlink.chains.gpc_error import GpcError, perturbed
 from mwdlink.decisions.blend import blend
 from mwdlink.decisions.blend_verdict import verdict_of
 from mwdlink.decisions.blendcheck import check_blends
@@ -254,3 +256,24 @@ def test_a_decade_that_is_missed_breaks_the_range_of_trust(checked):
     assert "trusted from 0.01 to 1 and from 10 to 1e+03 rad/s" in text
     broken = replace(checked, trust=replace(checked.trust, routes={"sweeps": error}))
     assert broken.to_dict()["trusted"]["omega_low_rad_per_s"] in (0.01, 10.0)
+
+
+def test_gpc_errors_widen_the_exponent_found_through_distributions():
+    """Compared with the exponent 2.0 of blends whose GPC tables are off by the model."""
+    inside, odd, found = [], 0, 0
+    for seed in (1, 3, 5, 7):
+        made = study("power-law", 2.0, seed, wrong=0.5, truth=0.38)
+        right = study("power-law", 2.0, seed)
+        parts = tuple(
+            replace(c, distribution=perturbed(table(c.distribution), GpcError(), 10 * seed + k),
+                    sweep=None)
+            for k, c in enumerate(made.components)
+        )  # fmt: skip
+        r = check_blends(replace(right, components=parts), kernels=["power-law"])
+        inside.append(r.exponent.low < 2.0 < r.exponent.high)
+        odd += sum(b.agrees is False for b in r.blends)
+        belief = r.trust.routes["distributions"].belief
+        assert belief.spread < (r.exponent.high - r.exponent.low) / 3.29
+        r = check_blends(replace(made, components=parts), kernels=["power-law"])
+        found += [b.name for b in r.blends if b.agrees is False] == ["A50"]
+    assert all(inside) and odd == 0 and found >= 3
