@@ -156,7 +156,7 @@ def minimise(
         refused = False
         while True:
             lhs = hessian.copy()
-            lhs[np.diag_indices_from(lhs)] += damping * diagonal + 1e-12
+            lhs.flat[:: lhs.shape[0] + 1] += damping * diagonal + 1e-12
             _, step, info = dposv(lhs, -gradient)
             promised = -float(gradient @ step) if info == 0 else np.inf
             if info == 0 and np.all(np.isfinite(step)):
@@ -271,7 +271,10 @@ def scan(
     bound = rival + BEYOND_RESCUE
     fits: dict[int, JointFit] = {middle: minimise(problem, z0, float(values[middle]), bound=bound)}
     top = fits[middle].log_evidence
-    for direction in (range(middle + 1, len(values)), range(middle - 1, -1, -1)):
+    lost = not fits[middle].converged and fits[middle].objective > bound
+    # what is beyond rescue in the middle is no better where it is smoother
+    smoother = range(0) if lost else range(middle - 1, -1, -1)
+    for direction in (range(middle + 1, len(values)), smoother):
         z = fits[middle].z
         for i in direction:
             bound = min(bound, min(f.objective for f in fits.values()) + BEYOND_RESCUE)

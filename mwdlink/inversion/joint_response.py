@@ -54,7 +54,12 @@ def lagrange_weights(x: np.ndarray, at: np.ndarray) -> tuple[np.ndarray, np.ndar
     h = float(x[1] - x[0])
     place = (at - x[0]) / h
     first = np.minimum(np.maximum(np.floor(place).astype(int) - 1, 0), x.size - 4)
-    powers = (place - first)[:, None] ** np.arange(4)
+    t = place - first
+    powers = np.empty((at.size, 4))
+    powers[:, 0] = 1.0
+    powers[:, 1] = t
+    powers[:, 2] = t * t
+    powers[:, 3] = powers[:, 2] * t
     return first[:, None] + np.arange(4), powers @ CUBICS, powers[:, :3] @ CUBIC_SLOPES / h
 
 
