@@ -130,10 +130,10 @@ def gpc_errors(cases: int = 200) -> None:
             seen = [perturbed(d, error, 2 * i + k).scaled(factor) for k, d in enumerate(true)]
             if ask is None:
                 truth = predict(true[0], own, members=0, **MATCHED)
-                told = predict(seen[0], own, members=100, seed=i, **MATCHED)
+                told = predict(seen[0], own, members=200, seed=i, **MATCHED)
             else:
                 truth = blend(true, [ask, 1 - ask], own, members=0, **MATCHED)
-                told = blend(seen, [ask, 1 - ask], own, members=100, seed=i, **MATCHED)
+                told = blend(seen, [ask, 1 - ask], own, members=200, seed=i, **MATCHED)
             covered(truth, told, hits)
             u = told.outputs.bands["eta0_Pa_s"]
             widths.append(50.0 * np.log(u.high / u.low))
