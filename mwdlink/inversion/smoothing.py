@@ -184,9 +184,14 @@ def scan(
                 break
             solve(i, fits[last], FEW_STEPS if behind > HOPELESS else ALONG_STEPS)
             last = i
-    best = max(evidence, key=lambda i: evidence[i])
-    if tolerance > FINISH:
+    # a finished fit has another evidence by a little: its neighbour may then be the best
+    finished: set[int] = set()
+    while tolerance > FINISH:
+        best = max(evidence, key=lambda i: evidence[i])
+        if best in finished:
+            break
         keep(best, minimise(problem, fits[best].u, float(values[best])))
+        finished.add(best)
     index = sorted(fits)
     ordered = tuple(fits[i] for i in index)
     rough = [float(np.sum((problem.prior.third @ f.u) ** 2)) for f in ordered]
