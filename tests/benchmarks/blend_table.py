@@ -8,12 +8,14 @@ from __future__ import annotations
 
 import sys
 import time
+from dataclasses import replace
 from pathlib import Path
 
 sys.path.insert(0, str(Path(__file__).parents[1]))
 
 import numpy as np  # noqa: E402
 from decisions.made_up import HDPE, OMEGA, A, B, study, sweep  # noqa: E402
+from decisions.test_calibrate import off  # noqa: E402
 from decisions.test_gpc_band import MATCHED, certain, covered, melts, table  # noqa: E402
 
 from mwdlink.chains.distribution import Distribution  # noqa: E402
@@ -27,6 +29,7 @@ from mwdlink.decisions.blend_sweeps import (  # noqa: E402
     root_additive,
 )
 from mwdlink.decisions.blendcheck import check_blends  # noqa: E402
+from mwdlink.decisions.calibrate import calibrate  # noqa: E402
 from mwdlink.decisions.predict import predict  # noqa: E402
 from mwdlink.decisions.response import Bank  # noqa: E402
 from mwdlink.relaxation.melt_response import Relaxation  # noqa: E402
@@ -142,6 +145,51 @@ def gpc_errors(cases: int = 200) -> None:
         say(f"| {name} | {cells} | {np.median(widths):.0f} |")
 
 
+def through_distributions(cases: int = 12) -> None:
+    """The check without components' sweeps, their GPC tables off by the model's errors."""
+    inside, alarms, bags, found = [], 0, 0, 0
+    for seed in range(cases):
+        made = study("power-law", 2.0, seed, 0.5, 0.4)
+        parts = tuple(
+            replace(
+                c,
+                distribution=perturbed(table(c.distribution), GpcError(), 10 * seed + k),
+                sweep=None,
+            )
+            for k, c in enumerate(made.components)
+        )
+        right = replace(study("power-law", 2.0, seed), components=parts)
+        r = check_blends(right, kernels=["power-law"])
+        inside.append(r.exponent.low <= 2.0 <= r.exponent.high)
+        alarms += sum(b.agrees is False for b in r.blends)
+        bags += len(r.blends)
+        r = check_blends(replace(made, components=parts), kernels=["power-law"])
+        found += [b.name for b in r.blends if b.agrees is False] == ["A50"]
+    say(
+        f"\nthrough distributions, tables off: exponent held in {sum(inside)} of {cases}, "
+        f"{alarms} false alarms of {bags} bags, a bag 10 wt% off found alone in {found}"
+    )
+
+
+def constants(cases: int = 20) -> None:
+    """`calibrate` on tables that are off, and the same taken as exact."""
+    for name in ("as measured", "as exact"):
+        misses, inside = [], []
+        for seed in range(cases):
+            made = off(seed)
+            if name == "as exact":
+                parts = tuple(
+                    replace(c, distribution=replace(c.distribution, measured=False))
+                    for c in made.components
+                )
+                made = replace(made, components=parts)
+            u = calibrate(made, kernels=["power-law"]).exponent
+            misses.append(u.value - 2.15)
+            inside.append(u.low is not None and u.low <= 2.15 <= u.high)
+        rms = np.sqrt(np.mean(np.square(misses)))
+        say(f"calibrate, tables off, {name}: exponent off by {rms:.2f}, held in {sum(inside)}")
+
+
 def speed() -> None:
     """Best of three, one core."""
     made = study("power-law", 2.0, 0)
@@ -178,4 +226,6 @@ if __name__ == "__main__":
     classical()
     recovered()
     gpc_errors()
+    through_distributions()
+    constants()
     speed()
