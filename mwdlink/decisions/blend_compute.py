@@ -255,8 +255,8 @@ def compute(components: Sequence[Component], phi: np.ndarray, melt: Melt, s: Set
     notes = narrow_cautions(spectrum)
     if s.route == "distributions":
         # Gr of the blend is judged from the components themselves
-        own = [c for c in relaxation.warnings if c.code != "dilated_tube"]
-        notes = merge_cautions(notes, own, frequency_cautions(float(w[-1]), melt))
+        kept = [c for c in relaxation.warnings if c.code != "dilated_tube"]
+        notes = merge_cautions(notes, kept, frequency_cautions(float(w[-1]), melt))
     else:
         notes = merge_cautions(notes, sweep_cautions(components, measured, w))
     return Computed(

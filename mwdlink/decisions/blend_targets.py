@@ -152,7 +152,9 @@ def find_range(
         if share is not None and share.max() > 0.02:
             reason += f" Within the band up to {100 * share.max():.0f} % of members meet it."
         return TargetFound(target, component, (), (), reach, reason)
-    best, shares, sure = [], [], []
+    best: list[Uncertain] = []
+    shares: list[float] = []
+    sure: list[tuple[float, float] | None] = []
     for low, high in windows:
         inside = (phi >= low) & (phi <= high)
         if share is None or not np.any(inside):

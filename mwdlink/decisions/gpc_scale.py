@@ -5,6 +5,8 @@ from __future__ import annotations
 import math
 from dataclasses import replace
 
+import numpy as np
+
 from mwdlink.chains.distribution import Distribution
 from mwdlink.chains.polymer import Polymer
 from mwdlink.errors import Caution
@@ -55,8 +57,8 @@ def on_own_scale(
 
     converted = replace(
         distribution,
-        molar_mass=[own(float(m)) for m in distribution.molar_mass],
-        edges=[own(float(m)) for m in distribution.edges],
+        molar_mass=np.array([own(float(m)) for m in distribution.molar_mass]),
+        edges=np.array([own(float(m)) for m in distribution.edges]),
         warnings=tuple(w for w in distribution.warnings if w.code != "calibration_equivalent"),
     )
     return converted, (
