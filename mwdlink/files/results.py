@@ -29,6 +29,7 @@ _OUR_SUFFIXES = {".csv", ".toml"}
 
 # a spreadsheet takes a cell that begins so for a formula and would run it
 _FORMULA = ("=", "+", "-", "@", "\t", "\r")
+_INNER_FORMULA = re.compile(r"([;\t]\s*)([=+\-@])")
 
 # -------------------------------------------------------------------------------- contents
 
@@ -73,7 +74,11 @@ def csv_text(table: Any, provenance: str = "") -> str:
 
 
 def harmless(text: str) -> str:
-    """Text that a spreadsheet shows instead of running it; numbers stay as they are."""
+    """Text that a spreadsheet shows instead of running it; numbers stay as they are.
+
+    One that splits at semicolons or tabs would run what stands behind them as well.
+    """
+    text = _INNER_FORMULA.sub(r"\1'\2", text)
     if not text.startswith(_FORMULA):
         return text
     try:

@@ -92,8 +92,8 @@ class Outcome:
         Its row of summary.csv.
     sha256 : str or None
     reason, kind : str or None
-        Why there is no row: `input`, `model`, `not converged`, `unexpected`, `worker`; or `disk`,
-        which is no fault of the input's.
+        Why there is no row: `input`, `model`, `not converged`, `unexpected`, `worker`, `time`; or
+        `disk`, which is no fault of the input's.
     reused : bool
         Taken over from an earlier run.
     seconds : float

@@ -217,6 +217,9 @@ def test_formulas_become_text(tmp_path: Path) -> None:
     cells = [line.split(",")[0] for line in lines[2:]]
     assert cells == ["'=1+1", "'@cmd", "'-lot", "'+x", "-5", "plain", ""]
     assert lines[2].endswith(",-1.5")
+    # a spreadsheet that splits at semicolons or tabs would find a formula behind them
+    text = results.csv_text(pd.DataFrame({"name": ["a;=1+1", "b; @x", "c\t-y", "d; e"]}))
+    assert "a;'=1+1" in text and "b; '@x" in text and "c\t'-y" in text and "d; e" in text
 
 
 def test_json_has_no_nan() -> None:
