@@ -22,6 +22,17 @@ PLAIN_TARGETS = (
 )
 TARGETS_AT = {"viscosity_Pa_s": "rad/s", "tan_delta": "rad/s", "MFR_g_per_10min": "kg"}
 
+_WORDS = {
+    "eta0_Pa_s": ("a zero-shear viscosity", "Pa s"),
+    "Je0_per_Pa": ("a steady compliance", "1/Pa"),
+    "mean_time_s": ("a mean relaxation time", "s"),
+    "crossover_omega_rad_per_s": ("a crossover frequency", "rad/s"),
+    "crossover_G_Pa": ("a crossover modulus", "Pa"),
+    "viscosity_Pa_s": ("a viscosity at {}", "Pa s"),
+    "tan_delta": ("a loss factor tan delta at {}", ""),
+    "MFR_g_per_10min": ("a melt flow rate at {}", "g/10 min"),
+}
+
 _FORMS = (
     "viscosity_Pa_s@0.1=2e4, eta0_Pa_s=1e4, MFR_g_per_10min@2.16=1.5, tan_delta@0.1=3 or "
     "crossover_omega_rad_per_s=20, or with a range, eta0_Pa_s=1e4:2e4, eta0_Pa_s=:2e4, "
@@ -57,14 +68,21 @@ class Target:
         return self.name if self.at is None else f"{self.name}@{self.at:g}"
 
     def words(self) -> str:
-        """What is wanted, for a sentence."""
+        """What is wanted, for a sentence: "a viscosity at 0.1 rad/s of 1.5e+04 Pa s"."""
+        noun, unit = _WORDS[self.name]
+        if self.at is not None:
+            noun = noun.format(f"{self.at:g} {TARGETS_AT[self.name]}")
+
+        def amount(value: float | None) -> str:
+            return f"{value:.4g} {unit}".rstrip()
+
         if self.wanted is not None:
-            return f"{self.key} = {self.wanted:.4g}"
+            return f"{noun} of {amount(self.wanted)}"
         if self.low is None:
-            return f"{self.key} up to {self.high:.4g}"
+            return f"{noun} up to {amount(self.high)}"
         if self.high is None:
-            return f"{self.key} from {self.low:.4g} up"
-        return f"{self.key} from {self.low:.4g} to {self.high:.4g}"
+            return f"{noun} from {amount(self.low)} up"
+        return f"{noun} from {self.low:.4g} to {amount(self.high)}"
 
     def holds(self, values: np.ndarray) -> np.ndarray:
         """Whether values lie in the range (NaN does not)."""
@@ -182,7 +200,7 @@ class TargetFound:
     def words(self) -> str:
         """Where it is met, in a sentence."""
         if not self.fractions:
-            return f"Target {self.target.words()}: {self.reason}"
+            return f"Wanted was {self.target.words()}: {self.reason}"
         parts = []
         for i, f in enumerate(self.fractions):
             span = ""
@@ -193,7 +211,9 @@ class TargetFound:
             if f.low is not None and f.high is not None:
                 span = f" ({100 * f.low:.3g} to {100 * f.high:.3g} %)"
             parts.append(f"{100 * (f.value or 0.0):.3g} %{span}")
-        return f"{self.target.words()} is met at {' and '.join(parts)} of {self.component}."
+        words = self.target.words()
+        where = f"{' and '.join(parts)} of {self.component}"
+        return f"{words[0].upper()}{words[1:]} is met at {where}."
 
 
 def roots_along(phi: np.ndarray, values: np.ndarray, wanted: float) -> list[float]:

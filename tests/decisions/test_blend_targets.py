@@ -28,9 +28,9 @@ C = lognormal(1e5, 2.0, label="C")
 @pytest.mark.parametrize(
     "text, low, high, words",
     [
-        ("eta0_Pa_s=1e4:2e4", 1e4, 2e4, "eta0_Pa_s from 1e+04 to 2e+04"),
-        ("MFR_g_per_10min@2.16=:1.5", None, 1.5, "MFR_g_per_10min@2.16 up to 1.5"),
-        ("tan_delta@0.1 = 2:", 2.0, None, "tan_delta@0.1 from 2 up"),
+        ("eta0_Pa_s=1e4:2e4", 1e4, 2e4, "a zero-shear viscosity from 1e+04 to 2e+04 Pa s"),
+        ("MFR_g_per_10min@2.16=:1.5", None, 1.5, "a melt flow rate at 2.16 kg up to 1.5 g/10 min"),
+        ("tan_delta@0.1 = 2:", 2.0, None, "a loss factor tan delta at 0.1 rad/s from 2 up"),
     ],
 )
 def test_ranges_are_read(text, low, high, words):
@@ -93,7 +93,7 @@ def test_several_targets_are_met_where_their_stretches_overlap():
     assert f.value == pytest.approx((f.low + f.high) / 2) and met.shares[0] == 1.0
     found, met = both("eta0_Pa_s=20:50", "Je0_per_Pa=1.2")
     assert met.fractions == () and met.reason.startswith("None meets all")
-    assert "Je0_per_Pa = 1.2 is met at 20 %" in met.reason
+    assert "A steady compliance of 1.2 1/Pa is met at 20 %" in met.reason
     found, met = both("eta0_Pa_s=20:50", "Je0_per_Pa=1.32")
     own = found[1].fractions[0]
     assert met.fractions[0].low == pytest.approx(max(own.low, np.log10(2)), abs=1e-3)
