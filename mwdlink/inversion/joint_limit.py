@@ -83,7 +83,9 @@ def detection_limit(
         carried = information(limit)
         if not carried > 0:
             return None
-        known = stretch * float(np.hypot(spread, visible / np.sqrt(carried)))
+        # a continuation that a tail has lifted is as uncertain in proportion
+        lifted = spread * (1.0 + taken * limit / max(own, STEP))
+        known = stretch * float(np.hypot(lifted, visible / np.sqrt(carried)))
         by_interval = (edge + miss) * float(np.hypot(known, worth)) / visible
         by_evidence = (miss + np.sqrt(2.0 * wager)) / np.sqrt(carried)
         limit = float(max(by_interval, by_evidence))
