@@ -144,6 +144,8 @@ def is_uncertain(x: Any) -> bool:
 
 def spoken_as(key: str, x: Any) -> str:
     """A value under its key: names of quantities are keys themselves."""
+    if key in {"also_off", "rivals"} and isinstance(x, (list, tuple)):
+        return ", ".join(spoken(q) for q in x) or "none"
     return spoken(x) if key in {"quantity", "odd_one_out"} and isinstance(x, str) else said(x)
 
 
