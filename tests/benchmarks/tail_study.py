@@ -20,6 +20,7 @@ import numpy as np
 from mwdlink.chains.distribution import Distribution
 from mwdlink.chains.gpc_error import BASELINE_ERROR, RELATIVE_ERROR
 from mwdlink.chains.polymer import builtin
+from mwdlink.decisions import tail
 from mwdlink.decisions.tail import find_tail
 from mwdlink.measurement.sweep import Sweep
 from mwdlink.relaxation.melt_response import Relaxation
@@ -242,7 +243,13 @@ def main() -> None:
         "--exponent-spread", type=float, default=0.0, help="of the melts' own exponents"
     )
     parser.add_argument("--bound", type=int, default=0, help="cases for what nothing can beat")
+    parser.add_argument(
+        "--unlisted", action="store_true", help="take the melts' own kernel off the list"
+    )
     a = parser.parse_args()
+    if a.unlisted:
+        listed = tail.available_kernels
+        tail.available_kernels = lambda melt: tuple(k for k in listed(melt) if k != a.true)
     if a.bound:
         for name, value in bound(a.bound, a.first).items():
             print(f"standard deviation at best, {name}: {value:.2f} wt%")
