@@ -34,11 +34,9 @@ from mwdlink.relaxation.mixing import Model
 # a kernel is impossible when its chi2 exceeds the best one's by this much, in units of the best
 # one's chi2 per degree of freedom (five standard deviations)
 REJECT = 25.0
-# members are perturbed by this many standard deviations, and lambda leans this much (in ln of the
-# evidence per half decade) to the free side. With 1 and 0 the 90 % intervals covered 0.78 to 0.93
-# by family (two-peak melts worst: smoothing also biases what it chooses); docs/accuracy.md has the
-# figures with these
-WIDEN, LEAN = 1.1, 0.6
+# among members lambda leans this much (in ln of the evidence per half decade) to the free side:
+# smoothing also biases what it chooses, in two-peak melts most; docs/accuracy.md has the covers
+LEAN = 0.6
 # a mean of the exponent that moves by less than this share of its spread is not worth another scan
 UNMOVED = 0.15
 # the fit may narrow the exponent's prior to half its spread at most
@@ -276,10 +274,10 @@ def draw_members(
     copies = Copies(
         np.array([found.fits[k].u for k in index]),
         found.smoothing[index],
-        WIDEN * rng.standard_normal((count, problem.data.size)),
-        WIDEN * rng.standard_normal((count, n - 5)),
-        WIDEN * rng.standard_normal((count, 3)),
-        WIDEN * rng.standard_normal((count, 2)),
+        rng.standard_normal((count, problem.data.size)),
+        rng.standard_normal((count, n - 5)),
+        rng.standard_normal((count, 3)),
+        rng.standard_normal((count, 2)),
         survival,
         exponent if branch.exponent_spread > 0 else None,
     )
