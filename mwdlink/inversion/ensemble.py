@@ -45,6 +45,8 @@ MOST_PRECISION = 3.0
 SPOKEN, ASKED = 4.0, 4
 # a first scan, which only shows where there is weight, may stop this early
 ROUGHLY = 0.1
+# and the scans at other exponents, of which only the mean evidence is wanted
+SIDEWAYS = 2e-2
 
 
 @dataclass(frozen=True)
@@ -125,7 +127,7 @@ class Members:
 
 def local_scan(problem: Problem, u0: np.ndarray | None = None) -> tuple[Problem, Scan]:
     """Scan, relax the prior where there is no weight, scan again."""
-    first = scan(problem, u0, SCAN[::3], tolerance=ROUGHLY, give_up=10.0)
+    first = scan(problem, u0, SCAN[::3], tolerance=ROUGHLY, give_up=10.0, freedom=False)
     mean = np.zeros(problem.size)
     for share, fit in zip(first.weights, first.fits, strict=True):
         mean += share * fit.w
@@ -233,7 +235,8 @@ def _exponent_posterior(
             totals.append(mean_evidence(found.log_evidence[held]))
             continue
         other = build.problem(kernel, centre + d)[2]
-        side = scan(replace(other, prior=problem.prior), None, values, known=found)
+        moved = replace(other, prior=problem.prior)
+        side = scan(moved, None, values, tolerance=SIDEWAYS, known=found, freedom=False)
         totals.append(mean_evidence(side.log_evidence))
     c2, c1, _ = np.polyfit(offsets, totals, 2)
     # the shape prior speaks in this evidence too, so it may not narrow the exponent without limit

@@ -124,6 +124,8 @@ ALONG = 5e-3
 # and one that is forced to be far too smooth, or left far too free, need not be finished: it is
 # given this many steps, and when its neighbour's evidence was e^-HOPELESS of the best this few
 ALONG_STEPS, FEW_STEPS, HOPELESS = 40, 5, 15.0
+# a lambda whose neighbour has this much less ln evidence than the best has no say in anything
+ROUGH, UNLIKELY = 5e-2, 8.0
 
 
 def scan(
@@ -134,6 +136,7 @@ def scan(
     *,
     known: Scan | None = None,
     give_up: float | None = None,
+    freedom: bool = True,
 ) -> Scan:
     """Fit at each lambda, each started from its neighbour; from the middle both ways.
 
@@ -150,6 +153,8 @@ def scan(
         See `minimise`.
     known : Scan, optional
         Of nearly the same problem: each lambda starts from its own fit there.
+    freedom : bool
+        Work out the effective number of parameters too; else they are NaN.
     give_up : float, optional
         Leave out what lies beyond a lambda whose ln evidence is this much below the best.
     """
@@ -164,25 +169,26 @@ def scan(
         half = 0.5 * (problem.prior.log_det(fit.smoothing) - _log_det(factors[i]))
         evidence[i] = half - 0.5 * fit.objective
 
-    def solve(i: int, near: Fit | None, most: int) -> None:
+    def solve(i: int, near: Fit | None, behind: float) -> None:
         u, damping = (u0, 1e-6) if near is None else (near.u, near.damping)
         if values[i] in own:
             # what moved its neighbour away from where it was before moves this one likewise
             u = own[values[i]].u + (0.0 if near is None else near.u - own[near.smoothing].u)
         u = good_start(problem) if u is None else u
-        value = float(values[i])
-        keep(i, minimise(problem, u, value, tolerance=tolerance, most=most, damping=damping))
+        most = FEW_STEPS if behind > HOPELESS else ALONG_STEPS
+        end = ROUGH if behind > UNLIKELY else tolerance
+        keep(i, minimise(problem, u, float(values[i]), None, end, most, damping))
 
     order = np.argsort(np.abs(np.log(values / FIRST)), kind="stable")
     first = int(order[0])
-    solve(first, None, ALONG_STEPS)
+    solve(first, None, 0.0)
     for direction in (range(first + 1, len(values)), range(first - 1, -1, -1)):
         last = first
         for i in direction:
             behind = max(evidence.values()) - evidence[last]
             if give_up is not None and behind > give_up:
                 break
-            solve(i, fits[last], FEW_STEPS if behind > HOPELESS else ALONG_STEPS)
+            solve(i, fits[last], behind)
             last = i
     # a finished fit has another evidence by a little: its neighbour may then be the best
     finished: set[int] = set()
@@ -200,5 +206,5 @@ def scan(
         ordered,
         np.array([evidence[i] for i in index]),
         np.asarray(rough),
-        np.array([_freedom(problem, fits[i], factors[i]) for i in index]),
+        np.array([_freedom(problem, fits[i], factors[i]) if freedom else np.nan for i in index]),
     )
