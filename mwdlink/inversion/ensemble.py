@@ -42,9 +42,9 @@ UNMOVED = 0.15
 # the fit may narrow the exponent's prior to half its spread at most
 MOST_PRECISION = 3.0
 # at another exponent only lambdas within this of the best ln evidence are tried, this many
-SPOKEN, ASKED = 4.0, 4
+SPOKEN, ASKED = 4.0, 3
 # a first scan, which only shows where there is weight, may stop this early
-ROUGHLY = 0.1
+ROUGHLY = 0.3
 # and the scans at other exponents, of which only the mean evidence is wanted
 SIDEWAYS = 2e-2
 

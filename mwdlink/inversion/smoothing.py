@@ -123,9 +123,9 @@ def _freedom(problem: Problem, fit: Fit, factor: np.ndarray) -> float:
 ALONG = 5e-3
 # and one that is forced to be far too smooth, or left far too free, need not be finished: it is
 # given this many steps, and when its neighbour's evidence was e^-HOPELESS of the best this few
-ALONG_STEPS, FEW_STEPS, HOPELESS = 40, 5, 15.0
+ALONG_STEPS, FEW_STEPS, HOPELESS = 40, 3, 15.0
 # a lambda whose neighbour has this much less ln evidence than the best has no say in anything
-ROUGH, UNLIKELY = 5e-2, 8.0
+ROUGH, UNLIKELY = 5e-2, 6.0
 
 
 def scan(

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from math import log
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -119,21 +120,18 @@ def minimise(
         `converged` tells the truth; nothing is raised.
     """
     f, prior = problem.forward, problem.prior
-    root = np.sqrt(smoothing)
-    third, weak = prior.third, prior.weak
+    linear = np.vstack([np.sqrt(smoothing) * prior.third, prior.weak])
     precision = prior.precision(smoothing)
-    target = prior.weak_centre
     data = problem.data
     inverse = 1.0 / problem.sigma
-    pull: np.ndarray | None = None
-    lump_target: Any = LUMP_CENTRE
-    pulled = weak.T @ target
+    aim = np.zeros(len(linear))
+    aim[-len(prior.weak) :] = prior.weak_centre
+    low_aim = high_aim = LUMP_CENTRE
     if shift is not None:
         data = data + problem.sigma * shift.data
-        pull, target = shift.third, target + shift.weak
-        lump_target = LUMP_CENTRE + LUMP_SPREAD * shift.lumps
-        # the linear rows' part of the gradient is precision u less this
-        pulled = root * (third.T @ pull) + weak.T @ target
+        aim[: -len(prior.weak)] = shift.third
+        aim[-len(prior.weak) :] += shift.weak
+        low_aim, high_aim = (LUMP_CENTRE + LUMP_SPREAD * shift.lumps).tolist()
     size = u0.size
 
     def cost(u: np.ndarray) -> _Point:
@@ -141,13 +139,14 @@ def minimise(
         w = e / e.sum()
         y, known = f.evaluate(w)
         r = (np.log(y) - data) * inverse
-        t = root * (third @ u)
-        if pull is not None:
-            t -= pull
-        k = weak @ u - target
-        lump = (np.log(np.maximum(w[-2:], 1e-300)) - lump_target) / LUMP_SPREAD
+        t = linear @ u
+        t -= aim
+        # plain numbers: two at a time are no work for arrays
+        low = (log(max(w[-2], 1e-300)) - low_aim) / LUMP_SPREAD
+        high = (log(max(w[-1], 1e-300)) - high_aim) / LUMP_SPREAD
         chi2 = float(r @ r)
-        return _Point(u, chi2 + float(t @ t + k @ k + lump @ lump), chi2, w, y, known, r, lump)
+        value = chi2 + float(t @ t) + low * low + high * high
+        return _Point(u, value, chi2, w, y, known, r, t, low, high)
 
     lump_j = np.empty((2, size))
     # damping is relative to the diagonal: directions the data hardly see are not held back by it
@@ -170,7 +169,11 @@ def minimise(
             lump_j[0, -2] += 1.0 / LUMP_SPREAD
             lump_j[1, -1] += 1.0 / LUMP_SPREAD
             pushed = at.r @ j
-            gradient = pushed + precision @ at.u - pulled + at.lump @ lump_j
+            gradient = at.t @ linear
+            gradient += pushed
+            gradient -= ((at.low + at.high) / LUMP_SPREAD) * w
+            gradient[-2] += at.low / LUMP_SPREAD
+            gradient[-1] += at.high / LUMP_SPREAD
             hessian = j.T @ j
             hessian += precision
             hessian += lump_j.T @ lump_j
@@ -237,4 +240,6 @@ class _Point(NamedTuple):
     y: np.ndarray
     known: Any
     r: np.ndarray
-    lump: np.ndarray
+    t: np.ndarray
+    low: float
+    high: float
