@@ -31,6 +31,9 @@ _OUR_SUFFIXES = {".csv", ".toml"}
 _FORMULA = ("=", "+", "-", "@", "\t", "\r")
 _INNER_FORMULA = re.compile(r"([;\t]\s*)([=+\-@])")
 
+# types of numbers whose shortest text Python and pandas agree on
+_PLAIN = {"float64", "int64", "int32", "uint64", "uint32"}
+
 # -------------------------------------------------------------------------------- contents
 
 
@@ -68,9 +71,25 @@ def csv_text(table: Any, provenance: str = "") -> str:
         if column.dtype.kind not in "fiub":
             cells = [harmless(v) if isinstance(v, str) else v for v in column]
             safe.isetitem(position, cells)
-    text: str = safe.to_csv(index=False, lineterminator="\n")
+    text = _plain_text(safe) or safe.to_csv(index=False, lineterminator="\n")
     note = re.sub(r"[\x00-\x1f\x7f,;\"']+", "_", provenance).strip()
     return f"# {note}\n{text}" if note else text
+
+
+def _plain_text(table: Any) -> str | None:
+    """The CSV of a table of numbers alone, as pandas writes it but quicker; else None."""
+    kinds = {dtype.kind for dtype in table.dtypes}
+    names = [str(c) for c in table.columns]
+    # a lone empty cell would be an empty line
+    if len(names) < 2 or not kinds <= {"f", "i", "u"} or any(set(n) & set(',"\n\r') for n in names):
+        return None
+    if any(str(d) not in _PLAIN for d in table.dtypes):
+        return None
+    columns = [
+        ["" if x != x else repr(x) for x in table.iloc[:, k].tolist()] for k in range(len(names))
+    ]
+    lines = [",".join(names), *(",".join(row) for row in zip(*columns, strict=True))]
+    return "\n".join(lines) + "\n"
 
 
 def harmless(text: str) -> str:

@@ -308,7 +308,7 @@ def moment_averages(
     if area is None:
         return none
     unit = melt.law_coefficient / (melt.plateau_modulus * area)  # tau = unit M^a
-    x = np.linspace(np.log(spectrum.tau[0]) - 30.0, np.log(700.0 * beta * spectrum.tau[-1]), 4000)
+    x = np.linspace(np.log(spectrum.tau[0]) - 30.0, np.log(700.0 * beta * spectrum.tau[-1]), 2000)
     t = np.exp(x)
     # modulus above G_N belongs to Rouse modes: S of the network cannot pass 1
     share = np.minimum(spectrum.relaxation_modulus(t) / melt.plateau_modulus, 1.0)

@@ -56,6 +56,10 @@ class Forward:
         """Data rows [Pa], shape (n_r,), of weights w of shape (n + 2,)."""
         return self.evaluate(w)[0]
 
+    def values_of_many(self, w: np.ndarray) -> np.ndarray:
+        """Data rows [Pa] of many weights, shapes (m, n + 2) and (m, n_r)."""
+        return (w @ self.survival.T) ** self.exponent @ self.rows.T + w @ self.linear.T
+
     def values_and_slope(self, w: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Data rows and their derivatives with respect to w, shapes (n_r,) and (n_r, n + 2)."""
         values, known = self.evaluate(w)

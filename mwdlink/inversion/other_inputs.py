@@ -62,6 +62,12 @@ class ViscosityForward(Forward):
         n = self.omega.size
         return np.hypot(moduli[:n], moduli[n:]) / self.omega, (moduli, known)
 
+    def values_of_many(self, w: np.ndarray) -> np.ndarray:
+        """|eta*| [Pa s] of many weights, shapes (m, n + 2) and (m, n_w)."""
+        moduli = super().values_of_many(w)
+        n = self.omega.size
+        return np.hypot(moduli[:, :n], moduli[:, n:]) / self.omega
+
     def slope(self, known: Any) -> np.ndarray:
         """Derivatives of |eta*| [Pa s] with respect to w, shape (n_w, n + 2)."""
         moduli, inner = known

@@ -74,15 +74,15 @@ def start(problem: Problem, centre: float | None = None, dispersity: float = 3.0
 def good_start(problem: Problem) -> np.ndarray:
     """The best of some log-normals by misfit."""
     nodes = problem.window.nodes
-    best, value = None, np.inf
-    for centre in np.geomspace(nodes[3], nodes[-4], 9):
-        for dispersity in (1.3, 3.0, 10.0):
-            u = start(problem, float(centre), dispersity)
-            e = np.exp(u - u.max())
-            chi2 = problem.chi2(e / e.sum())
-            if np.isfinite(chi2) and chi2 < value:
-                best, value = u, chi2
-    return start(problem) if best is None else best
+    centres = np.geomspace(nodes[3], nodes[-4], 9)
+    tried = [start(problem, float(c), d) for c in centres for d in (1.3, 3.0, 10.0)]
+    e = np.exp(np.array(tried) - np.max(tried, axis=1, keepdims=True))
+    y = problem.forward.values_of_many(e / e.sum(axis=1, keepdims=True))
+    with np.errstate(invalid="ignore", divide="ignore"):
+        chi2 = np.sum(((np.log(y) - problem.data) / problem.sigma) ** 2, axis=1)
+    if not np.isfinite(chi2).any():
+        return start(problem)
+    return tried[int(np.nanargmin(np.where(np.isfinite(chi2), chi2, np.inf)))]
 
 
 def log_evidence(problem: Problem, fit: Fit) -> float:
@@ -113,9 +113,9 @@ def _log_det(factor: np.ndarray) -> float:
 def _freedom(problem: Problem, fit: Fit, factor: np.ndarray) -> float:
     inverse, _ = dpotri(factor)
     prior = problem.prior.precision(fit.smoothing)
-    # LAPACK fills the upper triangle only; both matrices are symmetric
-    diagonal = np.sum(inverse.diagonal() * prior.diagonal())
-    return float(fit.u.size - 2.0 * np.sum(np.triu(inverse) * prior) + diagonal)
+    # LAPACK fills the upper triangle and leaves zeros below; both matrices are symmetric
+    diagonal = inverse.diagonal() @ prior.diagonal()
+    return float(fit.u.size - 2.0 * np.vdot(inverse, prior) + diagonal)
 
 
 # along the scan a fit may stop this early (a tenth of a standard deviation); the one chosen

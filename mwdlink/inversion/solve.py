@@ -182,7 +182,7 @@ def minimise(
             # without it go far too long. P' diag(g+) P with P u = u - w.u: the level of u is free.
             # Far from a fit the misfit is not what it will be, and the term would only hold it back
             push = np.maximum(pushed, 0.0) * min(1.0, at.r.size / max(at.chi2, 1e-300)) ** 2
-            cross = np.outer(push - 0.5 * push.sum() * w, w)
+            cross = (push - 0.5 * push.sum() * w)[:, None] * w
             curved = hessian - cross
             curved -= cross.T
             diagonal = curved.diagonal() + push

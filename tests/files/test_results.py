@@ -12,6 +12,7 @@ import textwrap
 import time
 from pathlib import Path
 
+import numpy as np
 import pandas as pd
 import pytest
 
@@ -220,6 +221,22 @@ def test_formulas_become_text(tmp_path: Path) -> None:
     # a spreadsheet that splits at semicolons or tabs would find a formula behind them
     text = results.csv_text(pd.DataFrame({"name": ["a;=1+1", "b; @x", "c\t-y", "d; e"]}))
     assert "a;'=1+1" in text and "b; '@x" in text and "c\t'-y" in text and "d; e" in text
+
+
+def test_numbers_are_written_as_pandas_writes_them() -> None:
+    """Compared with pandas.DataFrame.to_csv, byte for byte."""
+    rng = np.random.default_rng(0)
+    x = 10.0 ** rng.uniform(-300, 300, 500) * rng.choice([-1.0, 1.0], 500)
+    x[:8] = [np.nan, np.inf, -np.inf, 0.0, -0.0, 1e16, 1e-5, 123456789012345680.0]
+    for table in (
+        pd.DataFrame({"a [g]": x, "b": np.arange(500), "c": x.round(3)}),
+        pd.DataFrame({"a": [np.nan]}),
+        pd.DataFrame({"a": [1.0], "b, c": [2.0]}),
+        pd.DataFrame({"a": [1.0], "b": [np.float32(0.1)]}),
+        pd.DataFrame({"a": [True], "b": [1.5]}),
+        pd.DataFrame({"a": [], "b": []}, dtype=float),
+    ):
+        assert results.csv_text(table) == table.to_csv(index=False, lineterminator="\n")
 
 
 def test_json_has_no_nan() -> None:
