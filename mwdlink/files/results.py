@@ -110,7 +110,9 @@ def harmless(text: str) -> str:
 # ---------------------------------------------------------------------------------- folder
 
 
-def why_not(out_dir: str | os.PathLike[str], replace: bool = False) -> str | None:
+def why_not(
+    out_dir: str | os.PathLike[str], replace: bool = False, settle: bool = True
+) -> str | None:
     """Why a result cannot be written there, or None: to be asked before anything is computed.
 
     Parameters
@@ -118,10 +120,13 @@ def why_not(out_dir: str | os.PathLike[str], replace: bool = False) -> str | Non
     out_dir : path
     replace : bool
         May a folder that an earlier run wrote give way? Folders that hold anything else never do.
+    settle : bool
+        First undo what a killed run left.
     """
     out = Path(os.path.realpath(out_dir))
-    with contextlib.suppress(OSError):
-        _settle(out)
+    if settle:
+        with contextlib.suppress(OSError):
+            _settle(out)
     parent = next((p for p in out.parents if p.exists()), out.parent)
     if not parent.is_dir():
         return f"{out_dir} cannot be made: {parent} is not a folder."
@@ -161,6 +166,7 @@ def write_result(
     replace: bool = False,
     *,
     provenance: str = "",
+    settle: bool = True,
 ) -> Path:
     """Write a result's folder whole, or leave what was there as it was.
 
@@ -179,6 +185,9 @@ def write_result(
         Let a folder with an earlier result give way.
     provenance : str
         The `#` line of each CSV.
+    settle : bool
+        First undo what a killed run left. That lists the whole folder around, which costs time
+        where thousands are written side by side; who does so clears up once, at the end.
 
     Returns
     -------
@@ -190,7 +199,7 @@ def write_result(
     MwdlinkError
         If the folder may not be replaced or cannot be written; the old content is intact.
     """
-    reason = why_not(out_dir, replace)
+    reason = why_not(out_dir, replace, settle)
     if reason:
         raise MwdlinkError(reason)
     contents: dict[str, bytes] = {"result.json": json_text(record).encode()}
@@ -201,7 +210,7 @@ def write_result(
         contents[f"figures/{name}"] = picture
     if report_html is not None:
         contents["report.html"] = report_html.encode()
-    with folder_beside(out_dir, replace) as new:
+    with folder_beside(out_dir, replace, settle) as new:
         for name, data in contents.items():
             path = new / name
             path.parent.mkdir(parents=True, exist_ok=True)
@@ -210,7 +219,9 @@ def write_result(
 
 
 @contextlib.contextmanager
-def folder_beside(out_dir: str | os.PathLike[str], replace: bool = False) -> Iterator[Path]:
+def folder_beside(
+    out_dir: str | os.PathLike[str], replace: bool = False, settle: bool = True
+) -> Iterator[Path]:
     """A hidden folder to fill; it becomes `out_dir` when the block ends well, else it vanishes.
 
     Raises
@@ -222,7 +233,8 @@ def folder_beside(out_dir: str | os.PathLike[str], replace: bool = False) -> Ite
     new: Path | None = None
     try:
         out.parent.mkdir(parents=True, exist_ok=True)
-        _settle(out)
+        if settle:
+            _settle(out)
         new = Path(tempfile.mkdtemp(prefix=f".{out.name}.{_NEW}-", dir=out.parent))
         with _locked(new):
             yield new

@@ -260,7 +260,7 @@ def _record(home: Path) -> dict[str, Any] | None:
 
 def _take_over(home: Path, there: Path) -> None:
     """Copy a finished folder into the work folder, by links where the disk has them."""
-    with folder_beside(there, replace=True) as new:
+    with folder_beside(there, replace=True, settle=False) as new:
         shutil.copytree(home, new, copy_function=_link, dirs_exist_ok=True)
 
 
@@ -371,7 +371,10 @@ def _writer(job: Job, lot: Lot, result: Any, record: Mapping[str, Any]) -> Calla
                 if not (Path(job.out) / MARK).is_file():  # writing would make it anew, empty
                     raise MwdlinkError(f"the folder {job.out} has vanished.")
                 there = Path(job.out) / lot.name
-                write_result(there, record, made, files, page, replace=True, provenance=provenance)
+                # what killed runs left is cleared away once, when all is done
+                write_result(
+                    there, record, made, files, page, True, provenance=provenance, settle=False
+                )
                 return
             except MwdlinkError as error:
                 # a share that was away for a moment is worth waiting for

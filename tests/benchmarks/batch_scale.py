@@ -142,7 +142,7 @@ def where_time_goes(lots: Path, members: int) -> dict[str, float]:
     shares = {k: v / total for k, v in spent.items()}
     shares["other"] = 1.0 - sum(shares.values())
     shares["bare algebra of all steps"] = steps[0] * bare_step() / total
-    return shares | {"seconds an input": total / len(tried)}
+    return shares | {"seconds an input": total / max(len(tried), 1)}
 
 
 def bare_step() -> float:
