@@ -66,6 +66,7 @@ def run(lots: Path, out: Path, workers: int, members: int) -> dict[str, float]:
     result = batch(
         [lots], "hdpe", out=out, workers=workers, members=members, temperature_C=190.0
     )  # fmt: skip
+    wall, used = time.monotonic() - began, cpu() - spent
     shutil.rmtree(out)
     n = len(result.rows)
     peak = resource.getrusage(
@@ -73,8 +74,8 @@ def run(lots: Path, out: Path, workers: int, members: int) -> dict[str, float]:
     ).ru_maxrss
     return {
         "inputs": n,
-        "wall": time.monotonic() - began,
-        "cpu": cpu() - spent,
+        "wall": wall,
+        "cpu": used,
         "megabytes": peak / 1024,
     }
 
