@@ -127,7 +127,7 @@ class Members:
 
 def local_scan(problem: Problem, u0: np.ndarray | None = None) -> tuple[Problem, Scan]:
     """Scan, relax the prior where there is no weight, scan again."""
-    first = scan(problem, u0, SCAN[::3], tolerance=ROUGHLY, give_up=10.0, freedom=False)
+    first = scan(problem, u0, SCAN[::3], tolerance=ROUGHLY, give_up=10.0, finish=False)
     mean = np.zeros(problem.size)
     for share, fit in zip(first.weights, first.fits, strict=True):
         mean += share * fit.w
@@ -236,7 +236,7 @@ def _exponent_posterior(
             continue
         other = build.problem(kernel, centre + d)[2]
         moved = replace(other, prior=problem.prior)
-        side = scan(moved, None, values, tolerance=SIDEWAYS, known=found, freedom=False)
+        side = scan(moved, None, values, tolerance=SIDEWAYS, known=found, finish=False)
         totals.append(mean_evidence(side.log_evidence))
     c2, c1, _ = np.polyfit(offsets, totals, 2)
     # the shape prior speaks in this evidence too, so it may not narrow the exponent without limit

@@ -8,8 +8,8 @@ import numpy as np
 from scipy.linalg.lapack import dpotrf, dpotri
 
 from mwdlink.inversion.objective import Problem
+from mwdlink.inversion.solve import FIRST_DAMPING, Fit, minimise
 from mwdlink.inversion.solve import TOLERANCE as FINISH
-from mwdlink.inversion.solve import Fit, minimise
 
 # from almost log-normal to almost free, for int (d3u/dx3)^2 dx over decades
 SCAN = np.geomspace(1e1, 1e-7, 17)
@@ -136,7 +136,7 @@ def scan(
     *,
     known: Scan | None = None,
     give_up: float | None = None,
-    freedom: bool = True,
+    finish: bool = True,
 ) -> Scan:
     """Fit at each lambda, each started from its neighbour; from the middle both ways.
 
@@ -153,10 +153,11 @@ def scan(
         See `minimise`.
     known : Scan, optional
         Of nearly the same problem: each lambda starts from its own fit there.
-    freedom : bool
-        Work out the effective number of parameters too; else they are NaN.
     give_up : float, optional
         Leave out what lies beyond a lambda whose ln evidence is this much below the best.
+    finish : bool
+        Finish the best fit and work out the effective number of parameters; else that is NaN, and
+        only the evidence is of use.
     """
     fits: dict[int, Fit] = {}
     factors: dict[int, np.ndarray] = {}
@@ -170,7 +171,7 @@ def scan(
         evidence[i] = half - 0.5 * fit.objective
 
     def solve(i: int, near: Fit | None, behind: float) -> None:
-        u, damping = (u0, 1e-6) if near is None else (near.u, near.damping)
+        u, damping = (u0, FIRST_DAMPING) if near is None else (near.u, near.damping)
         if values[i] in own:
             # what moved its neighbour away from where it was before moves this one likewise
             u = own[values[i]].u + (0.0 if near is None else near.u - own[near.smoothing].u)
@@ -192,7 +193,7 @@ def scan(
             last = i
     # a finished fit has another evidence by a little: its neighbour may then be the best
     finished: set[int] = set()
-    while tolerance > FINISH:
+    while finish and tolerance > FINISH:
         best = max(evidence, key=lambda i: evidence[i])
         if best in finished:
             break
@@ -206,5 +207,5 @@ def scan(
         ordered,
         np.array([evidence[i] for i in index]),
         np.asarray(rough),
-        np.array([_freedom(problem, fits[i], factors[i]) if freedom else np.nan for i in index]),
+        np.array([_freedom(problem, fits[i], factors[i]) if finish else np.nan for i in index]),
     )
