@@ -249,6 +249,20 @@ def test_target_line_and_its_fraction_are_on_the_picture(drawn):
     assert drawn["blend"]["fractions"].title.startswith("Viscosity at 0.1 rad/s")
 
 
+def test_every_target_has_its_picture(made_up):
+    """Derived: of several targets each property is drawn, in their order, with its own line."""
+    result = made_up.blend()
+    record = result.to_dict()
+    other = {"quantity": "MFR_g_per_10min@2.16", "wanted": None, "range": {"low": 1.0, "high": 5.0}}
+    record["targets"] = [record["target"] | {"windows": []}, other | {"fractions": []}]
+    pictures = pictures_of("blend", record, result.tables())
+    titles = [p.title for n, p in pictures.items() if n.startswith("fractions")]
+    assert titles[0].startswith("Viscosity at 0.1 rad/s") and titles[1].startswith("Melt flow rate")
+    second = [p for n, p in pictures.items() if n.startswith("fractions")][1]
+    assert any(w.startswith("target 1 to 5") for w, _ in shown_texts(second.figure))
+    assert "target 1 to 5" in second.description
+
+
 def test_outlying_lot_is_named(drawn):
     """Derived: the made-up lot outside its limits stands on the picture and in the words."""
     assert "lot 018" in [w for w, _ in shown_texts(drawn["batch"]["trend-mw"].figure)]
