@@ -18,6 +18,8 @@ from mwdlink.inversion.solve import (
     LEAST_DAMPING,
     LONGEST,
     REFUSED_DAMPING,
+    SHORTER,
+    SHORTEST,
     SLOW,
 )
 
@@ -25,9 +27,6 @@ MAX_STEPS = 100
 # a copy ends at a step that promised less of the objective than this: Mw is then good to 0.02 of
 # its own standard deviation (rms of 60 copies; with 2e-2 it was 0.21)
 TOLERANCE = 1e-2
-# a refused step is tried again at the low point of the parabola through what is known of it, no
-# less and no more than these shares of it: that costs no other matrix
-SHORTEST, SHORTER = 0.2, 0.7
 # copies solved together: enough to hide the interpreter (25 took a tenth longer, 200 no less)
 STACK = 100
 

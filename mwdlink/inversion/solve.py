@@ -23,6 +23,9 @@ SLOW, FARTHEST = 1.3, 16.0
 # smooth changes, a thousandth of a millionth of it is a wall (members stopped short of their
 # minimum by 0.7 of the objective, and by 0.03 with these)
 FIRST_DAMPING, LEAST_DAMPING, REFUSED_DAMPING = 1e-12, 1e-13, 1e-10
+# a refused step is tried again at the low point of the parabola through what is known of it, no
+# less and no more than these shares of it: that costs no other matrix
+SHORTEST, SHORTER = 0.3, 0.6
 # a fit that goes on from another begins with no more damping than this
 MOST_KEPT = 1e-2
 
@@ -190,7 +193,7 @@ def minimise(
             curved = hessian - cross
             curved -= cross.T
             diagonal = curved.diagonal() + push
-            refused = False
+            refused = short = False
             while True:
                 lhs = curved.copy()
                 lhs.flat[:: size + 1] = (1.0 + damping) * diagonal + 1e-12
@@ -204,12 +207,15 @@ def minimise(
                     trial = cost(at.u + stretch * step)
                     if trial.value <= at.value + 1e-12 * abs(at.value):
                         break
-                    if stretch > 1.0:
-                        # tried again as it was
-                        stretch = 1.0
-                        trial = cost(at.u + step)
-                        if trial.value <= at.value + 1e-12 * abs(at.value):
-                            break
+                    # NaN where the model has no value there
+                    hope = stretch * promised
+                    share = hope / (trial.value - at.value + 2.0 * hope)
+                    share = min(max(share, SHORTEST), SHORTER) if share == share else SHORTEST
+                    trial = cost(at.u + (share * stretch) * step)
+                    if trial.value <= at.value:
+                        stretch, short = 1.0, True
+                        break
+                    stretch = 1.0
                     if promised < tolerance:
                         converged = True
                         break
@@ -221,8 +227,8 @@ def minimise(
                 break
             gain = at.value - trial.value
             at = trial
-            good = gain > 0.25 * promised
-            stretch = min(2.0 * stretch, FARTHEST) if gain > SLOW * promised else 1.0
+            good = gain > 0.25 * promised and not short
+            stretch = min(2.0 * stretch, FARTHEST) if gain > SLOW * promised and not short else 1.0
             eased = (1.0 if refused else 0.15) if good else 2.0
             damping = max(damping * eased, LEAST_DAMPING)
             end = tolerance * (1.0 + 1e-3 * at.value)
