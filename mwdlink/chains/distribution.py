@@ -22,6 +22,8 @@ from mwdlink.quantity import readonly
 DISCRETE = 7
 MOST_CELLS = 2000
 CALIBRATIONS = ("absolute", "universal", "equivalent", "unstated")
+# equivalent masses after conversion: the chain's own, with the error of what converted them
+CONVERTED = "converted"
 
 
 @dataclass(frozen=True, eq=False)
@@ -39,7 +41,7 @@ class Distribution:
     label : str
     calibration : str
         What the molar masses are: `absolute`, `universal`, `equivalent` (to the standards'
-        polymer) or `unstated`.
+        polymer), `unstated`, or `converted` (were equivalent).
     warnings : tuple of Caution
     measured : bool
         Whether it is a table as measured, with the errors of a GPC; families and computed curves
@@ -77,7 +79,7 @@ class Distribution:
             raise InputError("molar masses must be positive and ascending")
         if np.any(w < 0) or not w.sum() > 0:
             raise InputError("the weights of a distribution must be >= 0 and not all zero")
-        if self.calibration not in CALIBRATIONS:
+        if self.calibration not in (*CALIBRATIONS, CONVERTED):
             raise InputError(
                 f"unknown calibration {self.calibration!r}.",
                 remedy="Use one of " + ", ".join(CALIBRATIONS[:3]) + ".",

@@ -12,7 +12,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from scipy.stats import norm
 
-from mwdlink.chains.distribution import CALIBRATIONS, Distribution
+from mwdlink.chains.distribution import CONVERTED, Distribution
 from mwdlink.errors import InputError
 
 RELATIVE_ERROR = 0.03
@@ -24,7 +24,13 @@ BASELINE_ERROR = 0.003
 SIGNAL = 1e-3
 """The curve supports what stands above this part of its peak [-]."""
 
-CALIBRATION_SPREAD = {"absolute": 0.01, "universal": 0.02, "equivalent": 0.05, "unstated": 0.05}
+CALIBRATION_SPREAD = {
+    "absolute": 0.01,
+    "universal": 0.02,
+    "equivalent": 0.05,
+    CONVERTED: 0.05,
+    "unstated": 0.05,
+}
 """Standard deviation of ln M by what the molar masses are [-] (assumed; 0.05 recalled)."""
 
 ROW_LENGTH = 0.25
@@ -88,7 +94,7 @@ class GpcError:
         if self.molar_mass is not None:
             factor = f"{100 * self.molar_mass:.2g} %"
         else:
-            used = [k for k in CALIBRATIONS if k in kinds] or ["absolute"]
+            used = [k for k in CALIBRATION_SPREAD if k in kinds] or ["absolute"]
             factor = " and ".join(f"{100 * CALIBRATION_SPREAD[k]:.2g} % ({k})" for k in used)
         return (
             f"{100 * self.relative:.2g} % of a row, {100 * self.baseline:.2g} % of the peak and "

@@ -11,6 +11,7 @@ import numpy as np
 from mwdlink.chains.distribution import Distribution
 from mwdlink.chains.melt import Melt
 from mwdlink.chains.polymer import Polymer
+from mwdlink.decisions.gpc_scale import as_own
 from mwdlink.errors import Caution, InputError, merge_cautions
 from mwdlink.measurement.sweep import Sweep
 from mwdlink.relaxation.validity import DILATED_TUBE_GR, struglinski_graessley
@@ -207,6 +208,8 @@ def settled(
 ) -> tuple[tuple[Component, ...], tuple[Caution, ...]]:
     """Components at one temperature, refused or warned of where the rule does not hold.
 
+    Masses equivalent to polystyrene are converted where the card can.
+
     Raises
     ------
     InputError
@@ -241,9 +244,11 @@ def settled(
             sweep, said = at_temperature(sweep, c.temperature_C, polymer, temperature_C)
             notes.extend(said)
             notes.extend(sweep.warnings)
-        if c.distribution is not None:
-            notes.extend(c.distribution.warnings)
-        out.append(replace(c, sweep=sweep))
+        distribution = c.distribution
+        if distribution is not None:
+            distribution = as_own(distribution, polymer)
+            notes.extend(distribution.warnings)
+        out.append(replace(c, sweep=sweep, distribution=distribution))
     return tuple(out), merge_cautions(notes)
 
 

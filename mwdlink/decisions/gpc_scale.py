@@ -7,9 +7,9 @@ from dataclasses import replace
 
 import numpy as np
 
-from mwdlink.chains.distribution import Distribution
+from mwdlink.chains.distribution import CONVERTED, Distribution
 from mwdlink.chains.polymer import Polymer
-from mwdlink.errors import Caution
+from mwdlink.errors import Caution, merge_cautions
 
 # polystyrene in 1,2,4-trichlorobenzene at 135 C, [eta] = K M^a in dL/g (recalled)
 STANDARD_K, STANDARD_A, STANDARD_SOLVENT = 1.21e-4, 0.707, "TCB"
@@ -22,6 +22,7 @@ def on_own_scale(
 
     Polystyrene-equivalent masses are converted by equal hydrodynamic volume,
     K_s M_s^(1+a_s) = K M^(1+a), where the card names Mark-Houwink constants in the same solvent.
+    Its calibration is `converted` then, and a second time nothing is done.
 
     Returns
     -------
@@ -59,6 +60,7 @@ def on_own_scale(
         distribution,
         molar_mass=np.array([own(float(m)) for m in distribution.molar_mass]),
         edges=np.array([own(float(m)) for m in distribution.edges]),
+        calibration=CONVERTED,
         warnings=tuple(w for w in distribution.warnings if w.code != "calibration_equivalent"),
     )
     return converted, (
@@ -69,3 +71,11 @@ def on_own_scale(
             f"a = {STANDARD_A:g}, recalled); 5 % on M is carried.",
         ),
     )
+
+
+def as_own(distribution: Distribution, polymer: Polymer) -> Distribution:
+    """The same for a prediction: what was done to equivalent masses stands in `warnings`."""
+    if distribution.calibration != "equivalent":
+        return distribution
+    found, notes = on_own_scale(distribution, polymer)
+    return replace(found, warnings=merge_cautions(found.warnings, notes))

@@ -19,6 +19,7 @@ from mwdlink.decisions.ensemble import (
     kernels_to_use,
 )
 from mwdlink.decisions.gpc_band import GpcBand, average_bands, error_asked, gpc_limits
+from mwdlink.decisions.gpc_scale import as_own
 from mwdlink.decisions.predicted import (
     Outputs,
     Recorder,
@@ -145,6 +146,7 @@ def predict(
     Parameters
     ----------
     distribution : Distribution
+        Masses equivalent to polystyrene are converted where the card can.
     polymer : Polymer
     kernels : sequence of str, optional
         Default: all the card has constants for.
@@ -182,6 +184,7 @@ def predict(
     >>> 0 < melt.outputs.values["eta0_Pa_s"] < 1e5
     True
     """
+    distribution = as_own(distribution, polymer)
     melt = polymer.melt(temperature_C)
     names = kernels_to_use(melt, kernels)
     belief = exponent_belief(melt, exponent)

@@ -15,6 +15,7 @@ import numpy as np
 
 from mwdlink.chains.distribution import Distribution
 from mwdlink.decisions.ensemble import central_kernel, draw, exponent_belief, kernels_to_use
+from mwdlink.decisions.gpc_scale import as_own
 from mwdlink.decisions.rest_result import FLOW, LEVEL, RE_ENTANGLEMENT, STEP, Rest, Wait
 from mwdlink.errors import Caution, InputError, merge_cautions
 from mwdlink.measurement.spectrum_fit import SpectrumFit, fit_spectrum
@@ -98,6 +99,7 @@ def rest_time(
                 "a distribution says nothing of time without the polymer it is of.",
                 remedy="Name a polymer or give a card.",
             )
+        source = as_own(source, polymer)
         melt = polymer.melt(temperature_C)
         spectra, warnings = _of_distribution(source, melt, kernels, exponent, rouse, members, seed)
         warnings = merge_cautions(source.warnings, warnings)
