@@ -4,12 +4,18 @@ from __future__ import annotations
 
 import os
 import shutil
+import signal
 
 import pytest
 
 # matrices here are small: more threads than one only wait for each other
 for _library in ("OPENBLAS", "OMP", "MKL"):
     os.environ.setdefault(f"{_library}_NUM_THREADS", "1")
+
+# a shell starts what runs in the background deaf to Ctrl-C, and so would be every process the tests
+# start to see what Ctrl-C does
+if signal.getsignal(signal.SIGINT) is signal.SIG_IGN:
+    signal.signal(signal.SIGINT, signal.default_int_handler)
 
 BROWSERS = ("chromium", "chromium-browser", "google-chrome")
 
