@@ -34,6 +34,16 @@ RISE = 1.0
 # of noise, melts that have either are not [chosen on made-up melts for the least sum of spread and
 # bias, docs/spectrum.md].
 CENTRE, ROUGHER, SMOOTHER = -0.25, 1.0, 0.75
+# A smoothing weight at which the noise of the data alone scatters ln H by more than this (standard
+# deviation, at the worst node that counts) has no say in the curve; how sharply it loses it. Five
+# per cent are wanted from sweep to sweep, and the average over weights varies a little too.
+REPEAT, SHARPLY = 0.045, 16
+# Where no smoothing weight within BELIEVABLE of the best log evidence repeats as well as that, the
+# limit is this factor above the best of them: the data carry no more.
+LEAST_ROOM, BELIEVABLE = 1.1, 10.0
+# A node counts where H is at least this share of |G*| at omega = 1/tau: below, H falls faster than
+# any curve can follow.
+COUNTS = 0.05
 LEVEL = 0.9
 
 
@@ -60,7 +70,7 @@ class Continuous:
     scan : ndarray of shape (q, 3)
         lambda, log evidence, chi2 of every weight tried.
     effective_parameters : float
-        Trace of the resolution, averaged over the weights [-].
+        Trace of the resolution, averaged over the weights as the curve is [-].
     """
 
     tau: np.ndarray
@@ -206,16 +216,71 @@ class _Problem:
         cost = chi2 + float(u @ (P @ u) - 2 * shift @ u + rise @ rise)
         return chi2, cost, r, J, J.T @ J, rise
 
-    def evidence(self, lam: float, cost: float, N: np.ndarray) -> tuple[float, float]:
-        """Log evidence times prior of lambda up to a constant, and effective parameters."""
+    def evidence(self, lam: float, cost: float, N: np.ndarray) -> tuple[float, float, np.ndarray]:
+        """Log evidence times prior of lambda up to a constant, effective parameters, and what the
+        noise of the data alone scatters u by at every node."""
         P = lam * self.R3 + self.R2
         M = N + P
         _, logdet = np.linalg.slogdet(M)
         _, prior = np.linalg.slogdet(P + 1e-9 * np.eye(P.shape[0]))
-        trace = float(np.trace(np.linalg.solve(M, N)))
+        inverse = np.linalg.inv(M)
+        resolution = inverse @ N
+        trace = float(np.trace(resolution))
+        # diagonal of M^-1 N M^-1, the linear answer to noise of unit size
+        scatter = np.sqrt(np.maximum(np.sum(resolution * inverse, axis=1), 0.0))
         off = np.log10(lam) - CENTRE
         off /= ROUGHER if off < 0 else SMOOTHER
-        return -0.5 * (cost + logdet - prior + off * off), trace
+        return -0.5 * (cost + logdet - prior + off * off), trace, scatter
+
+    def worst(self, omega: np.ndarray, u: np.ndarray, scatter: np.ndarray) -> float:
+        """Largest scatter of u at the nodes that count: supported, and not next to nothing."""
+        low, high = supported_range(omega)
+        up, out = np.split(self.A @ np.exp(np.clip(u, -600, 600)), 2)
+        size = np.log(np.maximum(np.hypot(up, out), 1e-300))
+        floor = np.interp(-np.log(self.tau), np.log(omega), size) + np.log(COUNTS)
+        counted = (self.tau >= low) & (self.tau <= high) & (u > floor)
+        return float(scatter[counted].max()) if counted.any() else 0.0
+
+
+def supported_range(omega: np.ndarray) -> tuple[float, float]:
+    """Relaxation times a sweep supports: exp(pi/2)/omega_max to exp(-pi/2)/omega_min.
+
+    Parameters
+    ----------
+    omega : ndarray of shape (n,)
+        [rad/s]
+
+    Returns
+    -------
+    (float, float)
+        [s]; the first is the larger one when the window is under 1.4 decades wide.
+
+    References
+    ----------
+    .. [1] Davies & Anderssen, J. Non-Newt. Fluid Mech. 73 (1997) 163 (recalled).
+    """
+    return float(np.exp(np.pi / 2) / omega[-1]), float(np.exp(-np.pi / 2) / omega[0])
+
+
+def shares_that_repeat(log_evidence: np.ndarray, worst: np.ndarray) -> np.ndarray:
+    """Shares of the smoothing weights in the curve: by evidence, as far as the curve repeats.
+
+    Parameters
+    ----------
+    log_evidence : ndarray of shape (q,)
+    worst : ndarray of shape (q,)
+        Largest scatter of ln H that the noise alone brings at each weight [-].
+
+    Returns
+    -------
+    ndarray of shape (q,)
+        Sum 1.
+    """
+    believable = log_evidence > log_evidence.max() - BELIEVABLE
+    limit = max(REPEAT, LEAST_ROOM * float(worst[believable].min()))
+    x = log_evidence - np.minimum(worst / limit, 1e3) ** SHARPLY
+    share = np.exp(x - x.max())
+    return np.asarray(share / share.sum())
 
 
 def fit_continuous(
@@ -270,6 +335,7 @@ def fit_continuous(
     problem = _Problem(omega, storage, loss, sigma_storage, sigma_loss, per_decade)
     u = problem.start()
     fits: list[tuple[float, float, float, float, np.ndarray]] = []
+    worst: list[float] = []
     for lam in SCAN if smoothing is None else np.array([smoothing]):
         try:
             u, chi2, cost, N = problem.solve(u, lam)
@@ -277,8 +343,9 @@ def fit_continuous(
             # a weight far too smooth for the data may not get there: start the next from here
             u = error.partial
             continue
-        log_evidence, trace = problem.evidence(lam, cost, N)
+        log_evidence, trace, scatter = problem.evidence(lam, cost, N)
         fits.append((float(lam), log_evidence, chi2, trace, u))
+        worst.append(problem.worst(omega, u, scatter))
     if not fits:
         raise NotConverged("The continuous spectrum did not converge at any smoothing weight.")
     scan = np.array([f[:3] for f in fits])
@@ -286,9 +353,10 @@ def fit_continuous(
     lam = fits[best][0]
     weight = np.exp(scan[:, 1] - scan[:, 1].max())
     weight /= weight.sum()
-    # averaged over the weights by their evidence: the single best one jumps from sweep to sweep
-    u = np.asarray(sum(w * f[4] for w, f in zip(weight, fits, strict=True)))
-    trace = float(sum(w * f[3] for w, f in zip(weight, fits, strict=True)))
+    # averaged over the weights: the single best one jumps from sweep to sweep
+    share = shares_that_repeat(scan[:, 1], np.array(worst))
+    u = np.asarray(sum(w * f[4] for w, f in zip(share, fits, strict=True)))
+    trace = float(sum(w * f[3] for w, f in zip(share, fits, strict=True)))
     r = (np.log(problem.A @ np.exp(u)) - problem.y) * problem.w
     chi2 = float(r @ r)
     rows = []

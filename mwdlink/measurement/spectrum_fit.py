@@ -10,7 +10,7 @@ import numpy as np
 from mwdlink.errors import Caution, InputError, merge_cautions
 from mwdlink.measurement.checks import Checks
 from mwdlink.measurement.consistency import KramersKronig, kramers_kronig
-from mwdlink.measurement.continuous import Continuous, fit_continuous
+from mwdlink.measurement.continuous import Continuous, fit_continuous, supported_range
 from mwdlink.measurement.dense import at_all_readings, averaged
 from mwdlink.measurement.modes import ModeFit, describe, parsimonious
 from mwdlink.measurement.noise import Weights, chi2_in_words, noise_of
@@ -220,26 +220,6 @@ def _interval(q: Uncertain) -> str:
     if q.low is None or q.high is None or q.status != "resolved" or q.low == q.high:
         return ""
     return f" ({q.low:.4g} to {q.high:.4g})"
-
-
-def supported_range(omega: np.ndarray) -> tuple[float, float]:
-    """Relaxation times a sweep supports: exp(pi/2)/omega_max to exp(-pi/2)/omega_min.
-
-    Parameters
-    ----------
-    omega : ndarray of shape (n,)
-        [rad/s]
-
-    Returns
-    -------
-    (float, float)
-        [s]; the first is the larger one when the window is under 1.4 decades wide.
-
-    References
-    ----------
-    .. [1] Davies & Anderssen, J. Non-Newt. Fluid Mech. 73 (1997) 163 (recalled).
-    """
-    return float(np.exp(np.pi / 2) / omega[-1]), float(np.exp(-np.pi / 2) / omega[0])
 
 
 def fit_spectrum(

@@ -91,7 +91,8 @@ def spread(
 
 
 def others() -> dict[str, Distribution]:
-    """Melts that had no part in the choice of what is known of the smoothing beforehand."""
+    """Melts that had no part in the choice of what is known of the smoothing beforehand; they had
+    one in that of the limit on the scatter."""
     make = Distribution.from_averages
     return {
         "log-normal, dispersity 1.08": make(Mw=2e5, dispersity=1.08),
@@ -100,6 +101,21 @@ def others() -> dict[str, Distribution]:
         "Schulz-Zimm, dispersity 1.4": make(Mw=1.5e5, dispersity=1.4, family="schulz-zimm"),
         "two parts, 4e4 and 3e5": Distribution.blend(
             [(make(Mw=4e4, dispersity=1.2), 0.6), (make(Mw=3e5, dispersity=1.2), 0.4)]
+        ),
+    }
+
+
+def fresh() -> dict[str, Distribution]:
+    """Melts that had no part in any choice: the limit on the scatter was set with the others."""
+    make = Distribution.from_averages
+    return {
+        "log-normal, dispersity 1.15": make(Mw=2.2e5, dispersity=1.15),
+        "Schulz-Zimm, dispersity 1.2": make(Mw=1.8e5, dispersity=1.2, family="schulz-zimm"),
+        "two parts, 6e4 and 2.5e5": Distribution.blend(
+            [(make(Mw=6e4, dispersity=1.15), 0.4), (make(Mw=2.5e5, dispersity=1.15), 0.6)]
+        ),
+        "body with 3 % at 8 times": Distribution.blend(
+            [(make(Mw=1.0e5, dispersity=2.5), 0.97), (make(Mw=8e5, dispersity=1.2), 0.03)]
         ),
     }
 
@@ -113,7 +129,8 @@ WINDOWS = (((-3, 3), 5), ((-2, 2), 5), ((-2, 2), 10))
 def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--sweeps", type=int, default=60)
-    parser.add_argument("--others", action="store_true", help="melts and a kernel not tuned on")
+    parser.add_argument("--others", action="store_true", help="other melts, another kernel")
+    parser.add_argument("--fresh", action="store_true", help="melts not tuned on, three kernels")
     asked = parser.parse_args()
     sweeps = asked.sweeps
     heads = ("melt", "kernel", "window [rad/s]", "points per decade", "nodes", "median")
@@ -123,6 +140,11 @@ def main() -> None:
     known = melts()
     if asked.others:
         known, rows = others(), [(name, "reptation") for name in others()]
+    if asked.fresh:
+        known = fresh()
+        rows = [
+            (name, kernel) for kernel in ("power-law", "exponential", "reptation") for name in known
+        ]
     for name, kernel in rows:
         for window, density in WINDOWS:
             s = spread(

@@ -12,6 +12,7 @@ import numpy as np
 import pytest
 
 from mwdlink.errors import InputError
+from mwdlink.measurement.continuous import shares_that_repeat
 from mwdlink.measurement.spectrum_fit import fit_spectrum, supported_range
 from mwdlink.measurement.sweep import Sweep
 from mwdlink.relaxation.spectrum import Spectrum
@@ -190,19 +191,49 @@ def script(name: str) -> ModuleType:
 
 
 @pytest.mark.parametrize(
-    "melt", ["two parts, 3e4 and 2e5", "narrow, dispersity 1.1", "two narrow, 5e4 and 2e5"]
+    ("melt", "kernel", "decades", "distance"),
+    [
+        ("two parts, 3e4 and 2e5", "power-law", 2, 0.05),
+        ("narrow, dispersity 1.1", "power-law", 2, 0.05),
+        ("two narrow, 5e4 and 2e5", "power-law", 2, 0.05),
+        ("two narrow, 5e4 and 2e5", "exponential", 2, 0.05),
+        # two sharp peaks in six decades: what repeats better leans more [measured: 12 %]
+        ("two narrow, 5e4 and 2e5", "exponential", 3, 0.13),
+    ],
 )
-def test_repeats_over_noise_seeds(melt: str, full: bool):
+def test_repeats_over_noise_seeds(
+    melt: str, kernel: str, decades: int, distance: float, full: bool
+):
     """Published practice is 10 % (Stadler & Bailly 2009); held here to 5 % at 3 % noise.
 
-    The spectrum must not lean for it: the mean stays within 5 % of the exact one. The whole table
-    is in docs/spectrum.md; here a window of four decades, 40 sweeps (100 with --full).
+    The spectrum must not lean for it: the mean stays near the exact one. The whole table is in
+    docs/spectrum.md; here 40 sweeps (100 with --full).
     """
     module = script("reproducibility")
-    sweeps = 100 if full else 40
-    found = module.spread(module.melts()[melt], decades=(-2.0, 2.0), sweeps=sweeps)
+    found = module.spread(
+        module.melts()[melt],
+        decades=(-decades, decades),
+        sweeps=100 if full else 40,
+        kernel=kernel,
+    )
     assert found["largest"] < 0.05
-    assert found["bias"] < 0.05
+    assert found["bias"] < distance
+
+
+def test_shares_of_smoothing_weights():
+    """Derived: evidence alone where all repeat; those that do not have no say; and where none does,
+    the best of the believable ones, not the smoothest of all, has it."""
+    evidence = np.array([-30.0, -1.0, 0.0, -1.0])
+    plain = np.exp(evidence) / np.exp(evidence).sum()
+    np.testing.assert_allclose(
+        shares_that_repeat(evidence, np.full(4, 0.02)), plain, rtol=1e-3, atol=1e-12
+    )
+    np.testing.assert_allclose(shares_that_repeat(evidence, np.zeros(4)), plain, rtol=1e-9)
+    tilted = shares_that_repeat(evidence, np.array([0.01, 0.03, 0.06, 0.09]))
+    assert tilted[1] > 0.99
+    noisy = shares_that_repeat(evidence, np.array([0.1, 0.2, 0.3, 0.4]))
+    assert noisy[1] > 0.99 and noisy[0] < 1e-6
+    assert noisy.sum() == pytest.approx(1.0)
 
 
 def test_intervals_hold_the_truth(full: bool):
