@@ -70,15 +70,19 @@ def crossovers(curves: Curves) -> tuple[np.ndarray, np.ndarray]:
     gap = np.log(curves.storage / curves.loss)
     up = (gap[:, :-1] < 0) & (gap[:, 1:] >= 0)
     has = up.any(axis=1)
-    i = np.clip(np.argmax(up, axis=1), 1, gap.shape[1] - 3)
+    cell = np.argmax(up, axis=1)
+    i = np.clip(cell, 1, gap.shape[1] - 3)
     row = np.arange(len(curves))
     g = np.stack([gap[row, i + j] for j in (-1, 0, 1, 2)], axis=1)
-    # the zero of the cubic through four points: the secant's guess, then Newton
-    u = 1.0 + g[:, 1] / np.where(g[:, 1] == g[:, 2], 1.0, g[:, 1] - g[:, 2])
+    # the zero of the cubic through four points: the secant's guess, then Newton, both within the
+    # cell of the crossing, which at either end of the curve is not the middle one of the three
+    start = 1.0 + (cell - i)
+    a, b = (gap[row, np.minimum(cell + j, gap.shape[1] - 1)] for j in (0, 1))
+    u = start + a / np.where(a == b, 1.0, a - b)
     for _ in range(4):
         c, d = _lagrange(u)
         value, slope = np.sum(c * g, axis=1), np.sum(d * g, axis=1)
-        u = np.clip(u - value / np.where(np.abs(slope) < 1e-12, 1.0, slope), 0.9, 2.1)
+        u = np.clip(u - value / np.where(np.abs(slope) < 1e-12, 1.0, slope), start - 0.1, start + 1.1)
     c, _ = _lagrange(u)
     x = np.log(curves.omega)
     h = x[1] - x[0]

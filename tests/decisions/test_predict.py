@@ -269,3 +269,17 @@ def test_what_is_out_of_reach_is_null():
     assert np.isnan(values["crossover_omega_rad_per_s"][0])
     assert np.isnan(values["MFR_g_per_10min@2.16"][0])
     assert np.isnan(values["viscosity_Pa_s@0.1"][0])
+
+
+@pytest.mark.parametrize("cell", [0, 1, 5, 9, 10])
+def test_a_crossover_is_found_in_the_first_and_the_last_cell_too(cell):
+    """G'/G'' = omega/omega_x crosses at omega_x, wherever that lies (derived)."""
+    from mwdlink.decisions.properties import crossovers
+
+    omega = np.geomspace(1.0, 1e3, 12)
+    at = omega[cell] * (omega[1] / omega[0]) ** 0.6
+    loss = 1e3 * np.ones((1, 12))
+    one = np.ones(1)
+    found, level = crossovers(Curves(omega, loss * omega / at, loss, one, one))
+    assert found[0] == pytest.approx(at, rel=1e-6)
+    assert level[0] == pytest.approx(1e3, rel=1e-6)
