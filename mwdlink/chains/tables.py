@@ -182,7 +182,7 @@ def _from_differential(
     mass = v * weight
     area = float(mass.sum())
     if not area > 0:
-        raise InputError("the distribution holds no weight (all values are zero)")
+        raise InputError("the distribution holds no weight (all values are zero).")
     if kind in ("dW/dlog10M", "dW/dlnM", "dW/dM"):
         _judge_area(area, kind, notes)
     _judge_ends(mass, notes)

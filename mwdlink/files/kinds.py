@@ -23,6 +23,11 @@ def no_kind(pickers: list[Picker], kind: str, accepted: str) -> InputError:
     """The error for a file without a table of a kind: what is missing, and what it is instead."""
     best = max(pickers, key=lambda p: len(p.found) + len(p.chosen))
     other = next((k for k, test in tests().items() if k != kind and test(best)), None)
+    if kind == "table" and other is None:
+        # the kind of which most is there says what is missing
+        near = max(_NEEDED, key=lambda k: _present(best, k))
+        if _present(best, near):
+            kind, accepted = near, ACCEPTED[near]
     error = best.missing(_first_missing(best, kind), accepted)
     if other is not None and kind != "table":
         return InputError(
@@ -33,6 +38,11 @@ def no_kind(pickers: list[Picker], kind: str, accepted: str) -> InputError:
             remedy=error.remedy,
         )
     return error
+
+
+def _present(picker: Picker, kind: str) -> int:
+    """How many of the columns that a kind of table needs are there."""
+    return sum(any(picker.has(role) for role in group) for group in _NEEDED[kind])
 
 
 def _first_missing(picker: Picker, kind: str) -> str:

@@ -13,7 +13,7 @@ In place of a path they take a file opened by `source.open_source` with the same
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -133,23 +133,41 @@ def read_sweep(
             if s.temperature_C is not None
             and abs(s.temperature_C - temperature_C) <= same_temperature
         ]
-        sweeps = near or sweeps
+        if not near:
+            raise InputError(
+                f"none of the {len(sweeps)} sweeps in the file is at {temperature_C:g} C; they "
+                f"are {_listed(sweeps)}.",
+                path=sweeps[0].path,
+                remedy="Give the temperature of one of them, or make one curve of them with "
+                "`mwdlink master`.",
+            )
+        sweeps = near
     if len(sweeps) == 1:
         return sweeps[0]
-    listed = (
-        "; ".join(
-            f"{_celsius(s)} with {len(s)} points from row {int(np.min(s.rows))}"  # type: ignore[arg-type]
-            for s in sweeps[:6]
+    first = [int(np.min(s.rows)) for s in sweeps]  # type: ignore[arg-type]
+    if str(sweeps[0].path).lower().endswith((".xlsx", ".xlsm")) and len(set(first)) < len(first):
+        # a row that comes twice is of two sheets
+        remedy = "Name the sheet with --sheet, or make one curve of them with `mwdlink master`."
+    else:
+        remedy = (
+            "Give the temperature of the one wanted, leave the others' rows out with --omit, "
+            "or make one curve of them with `mwdlink master`."
         )
-        + ("; ..." if len(sweeps) > 6 else "")
-    )
+    at = "" if temperature_C is None else f" at {temperature_C:g} C"
     raise InputError(
-        f"the file holds {len(sweeps)} sweeps ({listed}).",
+        f"the file holds {len(sweeps)} sweeps{at} ({_listed(sweeps)}).",
         path=sweeps[0].path,
-        row=int(np.min(sweeps[1].rows)),  # type: ignore[arg-type]
-        remedy="Give the temperature of the one wanted, leave the others' rows out with --omit, "
-        "or make one curve of them with `mwdlink master`.",
+        row=first[1],
+        remedy=remedy,
     )
+
+
+def _listed(sweeps: Sequence[Sweep]) -> str:
+    shown = "; ".join(
+        f"{_celsius(s)} with {len(s)} points from row {int(np.min(s.rows))}"  # type: ignore[arg-type]
+        for s in sweeps[:6]
+    )
+    return shown + ("; ..." if len(sweeps) > 6 else "")
 
 
 def _celsius(sweep: Sweep) -> str:

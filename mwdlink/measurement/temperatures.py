@@ -32,7 +32,8 @@ def group_temperatures(
             raise InputError(
                 f"the sweep {s.label or s.path or ''!r} has no temperature.",
                 path=s.path,
-                remedy="Give a column T [C], or state the temperature when reading the file.",
+                remedy="Give a column T [C], or a line 'Temperature: 190 C' above the table (in "
+                "Python, temperature_C when it is read).",
             )
         found.append((s.temperature_C, s))
     found.sort(key=lambda pair: pair[0])

@@ -594,3 +594,23 @@ def test_the_tables_shown_on_the_page_are_read(write: Write) -> None:
     assert np.allclose(plain.omega, foreign.omega, rtol=1e-4)
     assert np.allclose(plain.storage, foreign.storage) and np.allclose(plain.loss, foreign.loss)
     assert foreign.temperature_C == 190
+
+
+def test_what_is_missing_from_half_a_table_is_named(write: Write) -> None:
+    """A sweep without G' lacks G', not the frequency that stands there (derived)."""
+    with pytest.raises(InputError, match="no column for G' was found") as caught:
+        find_kind(write("omega [rad/s],G'' [Pa]\n0.1,1\n1,2\n10,3\n"))
+    assert caught.value.remedy is not None and "dW/dlog10M" not in caught.value.remedy
+    with pytest.raises(InputError, match="no column for dW/dlog10M"):
+        find_kind(write("M [g/mol],x\n1000,1\n10000,2\n"))
+
+
+def test_a_temperature_that_no_sweep_has_is_said(write: Write) -> None:
+    """Of sweeps at 150 and 170 C none is at 180 C (derived)."""
+    text = "T [C],omega [rad/s],G' [Pa],G'' [Pa]\n" + "".join(
+        f"{t},{w},{10 * w},{100 * w}\n" for t in (150, 170) for w in (0.1, 1, 10)
+    )
+    path = write(text)
+    assert read_sweep(path, temperature_C=170).temperature_C == 170
+    with pytest.raises(InputError, match="none of the 2 sweeps in the file is at 180 C"):
+        read_sweep(path, temperature_C=180)

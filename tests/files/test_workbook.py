@@ -119,3 +119,14 @@ def test_an_archive_that_unpacks_to_too_much_is_refused(
     path.write_bytes(stream.getvalue())
     with pytest.raises(InputError, match="unpacks to 3 MB"):
         read_any(path)
+
+
+@EXCEL
+def test_the_same_rows_of_two_sheets_ask_for_the_sheet(tmp_path: Path) -> None:
+    """Two sheets with a sweep each at one temperature: --sheet parts them, --omit cannot."""
+    path = tmp_path / "run.xlsx"
+    path.write_bytes(workbook(First=REPORT, Second=REPORT))
+    with pytest.raises(InputError, match="2 sweeps") as caught:
+        read_sweep(path, temperature_C=190.0)
+    assert caught.value.remedy is not None and "--sheet" in caught.value.remedy
+    assert read_sweep(path, sheet="Second").storage[0] == 10e3
