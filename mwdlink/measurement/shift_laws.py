@@ -15,6 +15,11 @@ LN10 = float(np.log(10.0))
 # Set points are kept to about this between steps [K] (common practice): it enters the fit of the
 # laws, not the shifts themselves.
 TEMPERATURE_ERROR = 0.1
+# What a second constant must take off chi2. Arrhenius is the WLF law of c2 = the reference in
+# kelvin, so chance alone takes off this much in one melt of a hundred (chi2 of one degree of
+# freedom). An information criterion asks for ln n only, which is nothing for the two or three
+# shifts of a usual test.
+SECOND_CONSTANT = 6.63
 LEVEL = 0.9
 
 
@@ -35,7 +40,7 @@ class LawFit:
     chi2_per_point : float or None
         Over the degrees of freedom; None when there are none.
     score : float
-        chi2 + constants x ln(shifts): lower is better.
+        chi2 + constants x 6.63 (or ln(shifts), if that is more): lower is better.
     members : ndarray of shape (m, q)
         Constants of the perturbed fits.
     """
@@ -264,7 +269,7 @@ def _law(
         constants,
         float(np.sqrt(np.mean(r**2))),
         chi2 / freedom if freedom > 0 else None,
-        chi2 + best.size * float(np.log(others.size)),
+        chi2 + best.size * max(SECOND_CONSTANT, float(np.log(others.size))),
         readonly(samples),
     )
 

@@ -69,3 +69,16 @@ def test_two_temperatures_give_arrhenius_only():
     laws, _ = fit_laws(np.array([170.0, 190.0]), y, np.diag([0, 1e-6]), 0, 170.0, members=10)
     assert set(laws) == {"arrhenius"}
     assert laws["arrhenius"].chi2_per_point is None
+
+
+def test_three_noisy_shifts_of_an_arrhenius_melt_stay_arrhenius():
+    """Derived: of 200 melts 2 may be called WLF (1 %); more than 8 has a chance below 1e-3."""
+    rng = np.random.default_rng(4)
+    t = np.array([160.0, 190.0, 220.0])
+    sigma = np.array([3e-3, 0.0, 3e-3])
+    called = 0
+    for _ in range(200):
+        y = polyethylene(t, 190.0) + sigma * rng.standard_normal(3)
+        laws, _ = fit_laws(t, y, np.diag(sigma**2), 1, 190.0, members=0)
+        called += preferred(laws).kind == "wlf"
+    assert called <= 8
