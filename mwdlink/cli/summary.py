@@ -174,6 +174,8 @@ def _entry(entry: Any, band: Any, key: str) -> Iterator[Row]:
         name, unit = _name_and_unit(key_of_name)
         head = f"{number(entry[key_of_name])} {unit}"
         head = f"M {head}" if name == "M" else head
+    else:
+        head = _name_and_unit(key)[0]
     if isinstance(entry.get("text"), str):  # its own sentence says it all
         name = str(entry.get("name") or entry.get("code") or "").replace("_", " ")
         state = f"{entry['state']}: " if isinstance(entry.get("state"), str) else ""

@@ -161,8 +161,8 @@ class Blend(Result):
             f"{100 * f:.4g} % {n}" for n, f in zip(self.names, self.fractions, strict=True)
         )
         eta0 = self.outputs.bands.get("eta0_Pa_s", self.outputs.values.get("eta0_Pa_s"))
-        bound = isinstance(eta0, Uncertain) and eta0.status == "lower_bound"
-        least = "at least " if bound else ""
+        # a bound without an interval (no members) is one all the same
+        least = "" if self.route == "distributions" or self.computed.terminal else "at least "
         text = f"{recipe} has a zero-shear viscosity of {least}{quoted(eta0, 'Pa s')}"
         text += f" at {self.melt.temperature_C:g} C."
         if self.all_met is not None:

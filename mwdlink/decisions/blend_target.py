@@ -263,9 +263,9 @@ def find_fractions(
         The remaining components, for words.
     """
     good = np.isfinite(values) & (values > 0)
-    wanted, name = float(target.wanted or 0.0), target.key
+    wanted = float(target.wanted or 0.0)
     if not np.any(good):
-        reason = f"{name} cannot be predicted at any fraction (out of reach of the curves)."
+        reason = "it cannot be predicted at any fraction (out of reach of the curves)."
         return TargetFound(target, component, (), (), None, reason)
     low, high = float(values[good].min()), float(values[good].max())
     centres = roots_along(phi, values, wanted)

@@ -139,7 +139,7 @@ def find_range(
     """Fractions over which a property lies in the range wanted; see `find_fractions`."""
     good = np.isfinite(values) & (values > 0)
     if not np.any(good):
-        reason = f"{target.key} cannot be predicted at any fraction (out of reach of the curves)."
+        reason = "it cannot be predicted at any fraction (out of reach of the curves)."
         return TargetFound(target, component, (), (), None, reason)
     reach = (float(values[good].min()), float(values[good].max()))
     windows = within(target, phi, values)
@@ -220,7 +220,8 @@ def _together(found: Sequence[TargetFound], phi: np.ndarray, members: Members) -
         both = [(max(a[0], b[0]), min(a[1], b[1])) for a in stretches for b in _spans(f)]
         stretches = [(low, high) for low, high in both if low <= high]
     if not stretches:
-        own = "; ".join(f.words().rstrip(".") for f in found)
+        each = [f.words().rstrip(".") for f in found]
+        own = "; ".join(words[:1].lower() + words[1:] for words in each)
         return AllMet(component, (), (), f"None meets all: {own}.")
     ranged = all(f.target.wanted is None for f in found)
     drawn = [members[1].get(f.target.key) for f in found]

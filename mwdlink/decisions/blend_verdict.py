@@ -82,7 +82,7 @@ def verdict_of(
         )
         out.append(_common_cause(blends, odd, plain))
     if error.trusted and judged:
-        spans = " and ".join(f"from {low:.2g} to {high:.2g}" for low, high in error.trusted)
+        spans = " and ".join(f"from {low:.3g} to {high:.3g}" for low, high in error.trusted)
         out.append(
             f"The rule may be trusted {spans} rad/s "
             f"(error at most {trusted:.2g} decades in each decade of frequency)"
@@ -112,8 +112,9 @@ def verdict_of(
 def _odd_ones(odd: Sequence[CheckedBlend]) -> str:
     parts = []
     for b in odd:
-        # the component that is furthest off names the error
-        name = max(b.weighed, key=lambda n: abs((b.recovered[n].value or 0.0) - b.weighed[n]))
+        # the component that is furthest off names the error; of two that share it, the first
+        off = {n: abs((b.recovered[n].value or 0.0) - b.weighed[n]) for n in b.weighed}
+        name = next(n for n in off if off[n] >= max(off.values()) - 1e-6)
         u = b.recovered[name]
         span = ""
         if u.low is not None and u.high is not None:

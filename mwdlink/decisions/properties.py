@@ -82,7 +82,8 @@ def crossovers(curves: Curves) -> tuple[np.ndarray, np.ndarray]:
     for _ in range(4):
         c, d = _lagrange(u)
         value, slope = np.sum(c * g, axis=1), np.sum(d * g, axis=1)
-        u = np.clip(u - value / np.where(np.abs(slope) < 1e-12, 1.0, slope), start - 0.1, start + 1.1)
+        step = value / np.where(np.abs(slope) < 1e-12, 1.0, slope)
+        u = np.clip(u - step, start - 0.1, start + 1.1)
     c, _ = _lagrange(u)
     x = np.log(curves.omega)
     h = x[1] - x[0]

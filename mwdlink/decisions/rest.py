@@ -259,13 +259,13 @@ def _decays(
     notes = [RE_ENTANGLEMENT]
     if not USUAL_TIMES[0] <= central.mean_time <= USUAL_TIMES[1]:
         text = (
-            f"The mean relaxation time of {central.mean_time:.2g} s lies outside the 1e-3 to 1e3 s "
+            f"The mean relaxation time of {central.mean_time:.3g} s lies outside the 1e-3 to 1e3 s "
             "usual for melts in practice: check temperature, units and molar mass."
         )
         notes.append(Caution("relaxation_time_unusual", text))
     if any(w.time.status == "lower_bound" for w in waits):
         text = (
-            f"The window speaks for times up to about {reaches:.2g} s only: waiting times beyond "
+            f"The window speaks for times up to about {reaches:.3g} s only: waiting times beyond "
             "are lower bounds."
         )
         notes.append(Caution("window_too_short", text))

@@ -149,7 +149,7 @@ class Rest(Result):
         out = [RE_ENTANGLEMENT.text]
         if any(w.time.status == "lower_bound" for w in self.waits):
             out.append(
-                f"The sweep speaks for times up to about {self.reaches:.2g} s; longer waits are "
+                f"The sweep speaks for times up to about {self.reaches:.3g} s; longer waits are "
                 "lower bounds. A sweep to lower frequency, or a master curve, would tell."
             )
         if self.reaches is None:
@@ -173,4 +173,5 @@ def _span(q: Uncertain) -> str:
 def _seconds(t: float) -> str:
     if t >= 5400:
         return f"{t / 3600:.3g} h"
-    return f"{t / 60:.3g} min" if t >= 180 else f"{t:.2g} s"
+    # three digits from 100 on: two would be written 1.2e+02
+    return f"{t / 60:.3g} min" if t >= 180 else f"{t:.{3 if t >= 99.5 else 2}g} s"

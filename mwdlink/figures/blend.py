@@ -142,7 +142,7 @@ def plot_property(
         `wanted` (in the column's unit) and `fractions` (uncertain quantities); or `range` {low,
         high} and `windows` [{low, high}], the fractions over which it is kept.
     fraction : float, optional
-        The fraction asked for, marked.
+        The fraction of the blend whose curves are shown, marked.
     """
     ax = style.new_axes(ax, height=74.0)
     x_header = fraction_header(table)
@@ -237,7 +237,7 @@ def plot_property(
             linewidth=0.9,
             linestyle=(0, (1.2, 1.2)),
             zorder=1,
-            label=f"asked for: {short(100 * fraction)} %",
+            label=f"this blend: {short(100 * fraction)} %",
         )
     if min(ys) > 0 and max(ys) / min(ys) > 3:
         style.log_axis(ax.yaxis)

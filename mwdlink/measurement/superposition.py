@@ -106,7 +106,7 @@ class Superposition:
         if self.bands:
             worst = max(self.bands, key=lambda b: b.residual / b.limit)
             text += (
-                f", most between {worst.low:.2g} and {worst.high:.2g} rad/s "
+                f", most between {worst.low:.3g} and {worst.high:.3g} rad/s "
                 f"({100 * worst.residual:.1f} %, {100 * worst.limit:.1f} % would be in order)"
             )
         text += "."

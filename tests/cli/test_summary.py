@@ -42,6 +42,7 @@ RECORD: dict[str, Any] = {
             "fraction_high": 0.8,
         }
     ],
+    "target": {"windows": [{"low": 0.2, "high": 0.4}]},
     "rest": [{"residual": 0.01, "after": "steady flow", "time_s": uncertain(30.0, 25, 40)}],
     "advice": ["Measure down to 0.001 rad/s.", "Give the temperature."],
     "verdict": "consistent",
@@ -70,6 +71,7 @@ def test_what_it_says() -> None:
         "M 5.00e5 g/mol fraction 3.00 wt% 2.00 to 4.00",
         "power-law chi2 per point 1.00, admissible yes",
         "M 60000 g/mol fraction 70.0 wt% 60.0 to 80.0",
+        "windows low 0.200, high 0.400",
         "steady flow residual 0.0100, time 30.0 s (25.0 to 40.0)",
         "- Measure down to 0.001 rad/s.",
         "Verdict: consistent",

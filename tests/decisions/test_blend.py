@@ -208,6 +208,8 @@ def test_components_short_of_terminal_flow_give_lower_bounds(by_both):
         Distribution.blend([(A, 0.7), (B, 0.3)]), MELT, Model("reptation", 2.0)
     ).zero_shear_viscosity
     assert eta0.status == "lower_bound" and eta0.value < true * 1.03
+    quick = blend(by_both.components, [0.7, 0.3], HDPE, members=0)
+    assert "at least" in by_both.answer() and "at least" in quick.answer()
 
 
 # -- the result -----------------------------------------------------------------------------------

@@ -93,7 +93,7 @@ def test_several_targets_are_met_where_their_stretches_overlap():
     assert f.value == pytest.approx((f.low + f.high) / 2) and met.shares[0] == 1.0
     found, met = both("eta0_Pa_s=20:50", "Je0_per_Pa=1.2")
     assert met.fractions == () and met.reason.startswith("None meets all")
-    assert "A steady compliance of 1.2 1/Pa is met at 20 %" in met.reason
+    assert "a steady compliance of 1.2 1/Pa is met at 20 %" in met.reason
     found, met = both("eta0_Pa_s=20:50", "Je0_per_Pa=1.32")
     own = found[1].fractions[0]
     assert met.fractions[0].low == pytest.approx(max(own.low, np.log10(2)), abs=1e-3)
@@ -208,3 +208,13 @@ def test_what_the_sweeps_do_not_reach_is_no_answer():
     assert np.isnan(m.values["MFR_g_per_10min@2.16"][at])
     assert r.targets[0].fractions == ()
     assert "lower bound" in r.targets[1].reason
+
+
+def test_targets_that_exclude_each_other_read_as_one_sentence():
+    """Each with where it is met, in the middle of a sentence (derived); no key in words."""
+    none = blend([A, B], None, HDPE, target=["eta0_Pa_s=1e4", "viscosity_Pa_s@1=2e4:"], members=0)
+    assert none.all_met is not None and not none.all_met.fractions
+    said = none.all_met.reason
+    assert said.startswith("None meets all: a zero-shear viscosity") and "; a viscosity at" in said
+    far = blend([A, B], None, HDPE, target="viscosity_Pa_s@1e9=1", members=0)
+    assert "viscosity_Pa_s@" not in far.answer()

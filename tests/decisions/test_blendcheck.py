@@ -65,6 +65,9 @@ def test_a_mislabelled_bag_shows_and_only_that_one(mislabelled):
     assert mislabelled.trust.disagreeing == ("A75",)
     for rival in ("weighing", "mixing", "degradation"):
         assert rival in mislabelled.verdict
+    # both components are off by the same; the first is named, whatever the last digits say
+    assert mislabelled.verdict.startswith("A75 does not agree: 75 % A weighed")
+    assert "e+" not in mislabelled.verdict
 
 
 def test_the_ranking_puts_the_true_rule_first(checked):

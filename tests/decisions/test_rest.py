@@ -104,6 +104,18 @@ def test_window_too_short_gives_lower_bounds():
     assert "at least" in found.answer()
 
 
+def test_a_hundred_seconds_are_written_so():
+    """As a person would write them, between the two digits below and the minutes above."""
+    from mwdlink.decisions.rest_result import _seconds
+
+    assert [_seconds(t) for t in (0.123, 99.7, 131.2, 240.0)] == [
+        "0.12 s",
+        "99.7 s",
+        "131 s",
+        "4 min",
+    ]
+
+
 def test_another_temperature():
     """Derived: times go with a_T of the card; without a card the temperature is refused."""
     s = sweep(-2.5)
