@@ -48,7 +48,8 @@ def on_own_scale(
                 "gpc_scale_equivalent",
                 "The GPC's molar masses are equivalent to its standards, and the card has no "
                 f"Mark-Houwink constants in {STANDARD_SOLVENT} to convert them: they were used as "
-                "they are, within 5 %. The answer is only as good as that.",
+                "they are. The 5 % carried are the scatter of a calibration and not the factor "
+                "between the two scales, which may be two (recalled) and is not in the intervals.",
             ),
         )
 

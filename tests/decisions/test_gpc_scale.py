@@ -77,3 +77,5 @@ def test_a_card_that_cannot_says_so() -> None:
     result = predict(d, card, members=0)
     assert result.distribution.molar_mass == pytest.approx(d.molar_mass)
     assert "gpc_scale_equivalent" in codes(result)
+    said = next(w.text for w in result.warnings if w.code == "gpc_scale_equivalent")
+    assert "not the factor" in said
