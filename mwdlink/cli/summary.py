@@ -123,6 +123,10 @@ def _rows(key: str, value: Any, band: Any, prefix: str = "") -> Iterator[Row]:
     name, unit = _name_and_unit(key)
     label = f"{prefix}{name}"
     if _uncertain(value):
+        if value.get("status") == "upper_bound" and value.get("low") == 0 and value.get("high"):
+            # from zero up: the upper end is what is known
+            yield label, f"less than {_with_unit(value['high'], key, unit)}", ""
+            return
         bound = _BOUNDS.get(value.get("status"), "")
         yield label, bound + _with_unit(value.get("value"), key, unit), _interval(value, key)
     elif isinstance(value, Mapping):
@@ -174,6 +178,8 @@ def _entry(entry: Any, band: Any, key: str) -> Iterator[Row]:
         name, unit = _name_and_unit(key_of_name)
         head = f"{number(entry[key_of_name])} {unit}"
         head = f"M {head}" if name == "M" else head
+        ends = _interval(_folded(entry)[key_of_name], key_of_name)
+        head += f" ({ends})" if ends else ""
     else:
         head = _name_and_unit(key)[0]
     if isinstance(entry.get("text"), str):  # its own sentence says it all
@@ -253,6 +259,8 @@ def _interval(u: Any, key: str) -> str:
 
 
 def _name_and_unit(key: str) -> tuple[str, str]:
+    if key == "at_edge":
+        return "outside the window", ""
     if _is_share(key):
         return key.replace("_", " "), "wt%"
     for ending, unit in _UNITS:

@@ -110,6 +110,7 @@ def invert(
         If no kernel's fit converged; carries the best Inversion so far as `partial`.
     """
     _check(sweep, members, above, method, choose, level)
+    _check_smoothing(method, choose, smoothing)
     if want:
         check_wanted(want)
     temperature, notes = _temperature(sweep, polymer, temperature_C)
@@ -254,6 +255,20 @@ def _check(
         raise InputError("the level of the intervals must lie between 0 and 1")
 
 
+def _check_smoothing(method: str, choose: str, smoothing: float | None) -> None:
+    """Refuse what the method would pass over without a word."""
+    if choose != "evidence" and method != "tikhonov":
+        raise InputError(
+            f"the choice {choose!r} is tikhonov's; {method} does not use it.",
+            remedy="Give --method tikhonov too, or leave --choose out.",
+        )
+    if smoothing is not None and method not in ("smooth", "tikhonov"):
+        raise InputError(
+            f"{method} has no smoothing to fix.",
+            remedy="Leave --smoothing out, or use --method smooth or tikhonov.",
+        )
+
+
 def _temperature(
     sweep: Any, polymer: Polymer, asked: float | None
 ) -> tuple[float, tuple[Caution, ...]]:
@@ -307,6 +322,14 @@ def _run_kernel(task: tuple[Any, ...]) -> Branch | MwdlinkError:
         return method_branch(build, kernel, prior, method, choose, smoothing)
     except MwdlinkError as error:
         return error
+    except np.linalg.LinAlgError:
+        if smoothing is None:
+            raise
+        # so strong that the data's part drowns in the rounding of the smoothing's
+        return InputError(
+            f"with a smoothing of {smoothing:g} the equations cannot be solved.",
+            remedy="Give a smaller one; what the evidence chooses is mostly 0.01 to 100.",
+        )
 
 
 def _run_members(job: tuple[Any, ...]) -> Members:

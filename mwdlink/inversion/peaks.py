@@ -42,7 +42,7 @@ class Peak:
     height : float
         dW/dlog10 M at the maximum [-].
     persistence : float
-        Share of the members that show it [-]; 1 without members.
+        Share of the members that show it [-]; NaN (in JSON null) without members.
     at_edge : bool
         Whether it lies where the data do not resolve molar mass (outside the window).
     """
@@ -131,7 +131,7 @@ def find_peaks(
     if members is None or members.shape[0] == 0:
         alone = [float(_weight(central[None], t, step, lump)[0]) for t in tops]
         return [
-            _peak(x, central, t, f, None, None, 1.0, window, level)
+            _peak(x, central, t, f, None, None, float("nan"), window, level)
             for t, f in zip(tops, alone, strict=True)
         ]
     share = np.ones(len(members)) if weights is None else np.asarray(weights, dtype=float)

@@ -30,7 +30,10 @@ RECORD: dict[str, Any] = {
         "terminal": {"eta0_Pa_s": uncertain(7100, 6000, 9000, "lower_bound")},
         "melt_flow": [{"MFR_g_per_10min": uncertain(1.1, 0.9, 1.3)}],
     },
-    "above": [{"M_g_per_mol": 5e5, "fraction": uncertain(0.03, 0.02, 0.04)}],
+    "above": [
+        {"M_g_per_mol": 5e5, "fraction": uncertain(0.03, 0.02, 0.04)},
+        {"M_g_per_mol": 5e7, "fraction": uncertain(0.001, 0.0, 0.02, "upper_bound")},
+    ],
     "kernels": [{"kernel": "power-law", "chi2_per_point": 1.0, "admissible": True}],
     "peaks": [
         {
@@ -70,7 +73,8 @@ def test_what_it_says() -> None:
         "eta at 0.1 rad/s 6000 Pa s",
         "M 5.00e5 g/mol fraction 3.00 wt% 2.00 to 4.00",
         "power-law chi2 per point 1.00, admissible yes",
-        "M 60000 g/mol fraction 70.0 wt% 60.0 to 80.0",
+        "M 5.00e7 g/mol fraction less than 2.00 wt%",
+        "M 60000 g/mol (40000 to 70000) fraction 70.0 wt% 60.0 to 80.0",
         "windows low 0.200, high 0.400",
         "steady flow residual 0.0100, time 30.0 s (25.0 to 40.0)",
         "- Measure down to 0.001 rad/s.",

@@ -71,6 +71,7 @@ def test_weight_beyond_the_nodes_belongs_to_the_outermost_peaks():
     assert high.fraction == pytest.approx(0.7, abs=0.003)
     (one,) = find_peaks(NODES, None, 0.7 * bell(5.5, 0.2))
     assert one.fraction == pytest.approx(1.0)
+    assert one.to_dict()["persistence"] is None  # nothing was drawn that could return
 
 
 def test_a_rise_to_the_end_of_the_nodes_is_flagged():
