@@ -106,11 +106,12 @@ class CrossCheck:
                 floor, ceiling = span[0] * np.exp(low), span[1] * np.exp(high)
                 too_high = value > ceiling and weight_above < 0.01
                 if value < floor or too_high:
+                    own = " to ".join(dict.fromkeys(f"{s:.3g}" for s in span))
                     out.append(
                         Caution(
                             "cross_check_disagrees",
-                            f"{name} by the {way} is {value:.3g} g/mol; the fit's "
-                            f"{span[0]:.3g} to {span[1]:.3g} g/mol and the known bias of that way "
+                            f"{name} by the {way} is {value:.3g} g/mol; the fit's {own} g/mol "
+                            "and the known bias of that way "
                             f"allow {floor:.3g} to {ceiling:.3g}. Look at the fit, the noise and "
                             "the ends of the sweep.",
                         )

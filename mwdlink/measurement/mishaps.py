@@ -277,6 +277,10 @@ def _end_proposal(
         named = ", ".join(map(str, rows))
         points = f"points at the {end} end ({span}; rows {named}) depart"
     size = float(np.mean(deviation))
+    if abs(size) >= 0.5 * float(np.mean(np.abs(deviation))):
+        amount = f"{100 * size:+.0f} % on average"
+    else:  # to both sides: a mean would say that there is nothing
+        amount = f"up to {100 * float(deviation.flat[np.argmax(np.abs(deviation))]):+.0f} %"
     if end == "upper":
         cause = (
             "as torque or strain overload, slip or edge fracture do"
@@ -288,7 +292,7 @@ def _end_proposal(
         cause = "as readings near the torque floor, drift or unfinished loading do"
         code = "torque_floor_points"
     text = (
-        f"The {points} from the spectrum of all the others by {100 * size:+.0f} % on average, "
+        f"The {points} from the spectrum of all the others by {amount}, "
         f"{cause}. Consider leaving out what is marked here, and its neighbours if they lean the "
         "same way; nothing was left out."
     )

@@ -273,8 +273,10 @@ def chi2_in_words(chi2_per_point: float, degrees_of_freedom: int, source: str) -
     if chi2_per_point < low:
         if source == "estimated":
             return (
-                f"The misfit is only {size:.2f} times {origin}: the curve is smoother than the "
-                "floor of 1 % that is assumed in any case. Intervals are wide rather than narrow."
+                f"The misfit is only {size:.2f} times {origin}: either the curve is smoother than "
+                "the floor of 1 % that is assumed in any case, or the scatter was estimated too "
+                "large, as it is where the two moduli do not belong together. Intervals are wide "
+                "rather than narrow."
             )
         return (
             f"The misfit is only {size:.2f} times {origin} (chi2 per point {chi2_per_point:.2g}, "

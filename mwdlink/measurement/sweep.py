@@ -19,6 +19,8 @@ from mwdlink.quantity import readonly
 # Abscissae closer than this (relative) are one point: unit conversion and printed digits differ
 # by less, two set points of an instrument by far more.
 SAME_POINT = 1e-9
+# repeated readings further apart than this ratio are no repeats of one thing (common practice)
+REPEATS_DIFFER = 1.2
 
 CurveType = TypeVar("CurveType", bound="_Curve")
 
@@ -272,6 +274,20 @@ def _merge(
         f"{int(new.size - start.size)} repeated points in {what} ({shown}) were merged "
         "by their mean."
     )
+    # the abscissa is the first column; the readings are what may differ
+    apart = [
+        np.maximum.reduceat(v, start) / np.maximum(np.minimum.reduceat(v, start), 1e-300)
+        for name, v in columns.items()
+        if name not in sigmas and name != next(iter(columns))
+    ]
+    ratio = np.max(apart, axis=0) if apart else np.ones(start.size)
+    if ratio.max() > REPEATS_DIFFER:
+        worst = int(np.argmax(ratio))
+        at = columns[next(iter(columns))][start[worst]]
+        text += (
+            f" They differ by up to {100 * (ratio[worst] - 1):.3g} % (at {at:g}): a change of the "
+            "sample or a bad reading lies in the mean; leave the wrong one out by its row."
+        )
     return out, (None if rows is None else rows[start]), Caution("points_merged", text)
 
 

@@ -86,6 +86,8 @@ def test_noisy_data_stay_within_the_bias_that_is_allowed(kernel):
             return 0.97 * x, 1.03 * x
 
         assert check.cautions(span(d.Mw), span(d.Mz)) == ()
+        (alone, *_) = check.cautions((1.4 * d.Mw, 1.4 * d.Mw), None)
+        assert f"the fit's {1.4 * d.Mw:.3g} g/mol" in alone.text  # without members no interval
         said = check.cautions(span(1.4 * d.Mw), None)
         assert said and all(c.code == "cross_check_disagrees" for c in said)
 

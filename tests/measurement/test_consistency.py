@@ -142,6 +142,17 @@ def test_overload_and_torque_floor_are_proposed_by_row():
     assert len(floor) == 1 and 2 in floor[0].rows and max(floor[0].rows) <= 5
 
 
+def test_an_end_that_departs_to_both_sides_gives_its_largest_departure():
+    """Derived: +50 % and -48 % are -1 % or +1 % in the mean, which would say nothing."""
+    from mwdlink.measurement.mishaps import _end_proposal
+
+    s, cut = sweep(), np.array([0, 1])
+    both = _end_proposal("lower", (2, 3), s, cut, np.array([[0.5, -0.48], [0.5, -0.5]]))
+    assert "by up to +50 %," in both.text
+    one = _end_proposal("lower", (2, 3), s, cut, np.array([[0.5, 0.4], [0.2, 0.3]]))
+    assert "by +35 % on average," in one.text
+
+
 def test_torque_column():
     """Recalled: below 0.1 uN m most rotational rheometers are unsure."""
     s = sweep()

@@ -25,6 +25,9 @@ def test_sorted_and_merged_by_the_mean_and_said() -> None:
     assert s.loss.tolist() == [5, 7, 4]
     assert s.rows is not None and s.rows.tolist() == [11, 12, 10]
     assert [w.code for w in s.warnings] == ["points_sorted", "points_merged"]
+    assert "up to 66.7 % (at 2)" in s.warnings[1].text  # 5 over 3
+    near = Sweep.from_arrays([1.0, 2.0, 2.0], [1, 2, 2.1], [4, 5, 5])
+    assert "differ" not in near.warnings[0].text
 
 
 def test_relative_errors_of_merged_points_fall_as_independent_readings() -> None:
