@@ -54,6 +54,7 @@ _NAMES = (
 # entries of a list that are shown
 MOST = 8
 
+_OF_UNIT = ("claimed", "expected")
 _BOUNDS = {"lower_bound": "at least ", "upper_bound": "at most "}
 
 
@@ -188,7 +189,10 @@ def _entry(entry: Any, band: Any, key: str) -> Iterator[Row]:
         yield name, f"{state}{entry['text']}", ""
         return
     rest = {k: v for k, v in _folded(entry).items() if k != key_of_name and v is not None}
+    unit = rest.pop("unit", None)  # of the numbers whose keys do not name one
     rows = [row for k, v in rest.items() for row in _rows(k, v, _part(band, k), _outer(k, v))]
+    if unit:
+        rows = [(w, f"{t} {unit}" if w in _OF_UNIT else t, b) for w, t, b in rows]
     if len(rows) == 1 and not isinstance(rest[next(iter(rest))], str):
         yield f"{head} {rows[0][0]}".strip(), *rows[0][1:]
         return

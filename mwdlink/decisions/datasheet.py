@@ -16,7 +16,7 @@ from mwdlink.decisions.datasheet_fit import Expected, claim_sigma, expect, model
 from mwdlink.decisions.datasheet_model import SheetModel, sheet_model
 from mwdlink.decisions.datasheet_result import DataSheet, Judged
 from mwdlink.decisions.datasheet_search import MOST, Finding, find, follows
-from mwdlink.decisions.datasheet_words import explain, verdict_of
+from mwdlink.decisions.datasheet_words import explain, unit_of, verdict_of
 from mwdlink.errors import Caution, InputError, merge_cautions
 from mwdlink.quantity import Uncertain, quantiles
 from mwdlink.relaxation.kernels import get_kernel
@@ -231,7 +231,9 @@ def _judged(claims: Sequence[Claim], left_out: Sequence[Expected]) -> tuple[Judg
         mean, spread = left_out[i].mean_and_spread(i)
         if not np.isfinite(mean):
             nothing = Uncertain(None, None, None, LEVEL, "assumed")
-            out.append(Judged(c.quantity, c.value, c.tolerance, nothing, None, "cannot judge"))
+            out.append(
+                Judged(c.quantity, c.value, c.tolerance, nothing, None, "cannot judge", unit_of(c))
+            )
             continue
         spread = float(np.hypot(spread, model[i]))
         z = float((np.log(c.value) - mean) / np.hypot(own[i], spread))
@@ -250,6 +252,7 @@ def _judged(claims: Sequence[Claim], left_out: Sequence[Expected]) -> tuple[Judg
                 _interval(left_out[i], i, mean, spread, model[i], undetermined),
                 z,
                 verdict,
+                unit_of(c),
             )
         )
     return tuple(out)

@@ -27,6 +27,8 @@ class Judged:
         (ln claimed - ln expected) over both uncertainties together.
     verdict : str
         `consistent`, `strained`, `inconsistent` or `cannot judge`.
+    unit : str
+        Of `claimed` and `expected`; empty for a ratio.
     """
 
     quantity: str
@@ -35,11 +37,13 @@ class Judged:
     expected: Uncertain
     z: float | None
     verdict: str
+    unit: str = ""
 
     def to_dict(self) -> dict[str, Any]:
         return {
             "quantity": self.quantity,
             "claimed": self.claimed,
+            "unit": self.unit,
             "tolerance": self.tolerance,
             "expected": self.expected,
             "z": self.z,
@@ -102,6 +106,7 @@ class DataSheet(Result):
                 {
                     "quantity": [c.quantity for c in self.claims],
                     "claimed": [c.claimed for c in self.claims],
+                    "unit": [c.unit or "-" for c in self.claims],
                     "tolerance [-]": [c.tolerance for c in self.claims],
                     "expected": [c.expected.value for c in self.claims],
                     "expected low": [c.expected.low for c in self.claims],

@@ -418,3 +418,12 @@ def test_targets_over_many() -> None:
     plain, hits = STUDY.study(range(1000, 1200), [4.0])
     assert len(plain["alarms"]) <= 10
     assert np.mean([r["named"] for r in hits[4.0]]) >= 0.8
+
+
+def test_every_claim_carries_its_unit(clean: object) -> None:
+    """Interface: the number and its unit stand together; a ratio has none."""
+    table = clean.tables()["claims.csv"]  # type: ignore[attr-defined]
+    units = dict(zip(table["quantity"], table["unit"], strict=True))
+    assert units["Mw_g_per_mol"] == "g/mol"
+    assert all(u == "g/10 min" for q, u in units.items() if q.startswith("melt_flow"))
+    assert [c.unit for c in clean.claims if c.quantity == "dispersity"] in ([], [""])  # type: ignore[attr-defined]
