@@ -357,6 +357,21 @@ def builtin_names() -> tuple[str, ...]:
     return tuple(sorted(name for name in names if name != TEMPLATE))
 
 
+def need_polymer(polymer: Any) -> None:
+    """Refuse what is no polymer, a name above all, with what to do.
+
+    Raises
+    ------
+    InputError
+    """
+    if not isinstance(polymer, Polymer):
+        what = repr(polymer) if isinstance(polymer, str) else type(polymer).__name__
+        raise InputError(
+            f"a polymer is needed, not {what}.",
+            remedy='Read it from a name or a card: mwdlink.read_polymer("hdpe").',
+        )
+
+
 @lru_cache(maxsize=32)
 def builtin(name: str) -> Polymer:
     """A card that ships with the package.

@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 
 from mwdlink.chains.melt import Melt
-from mwdlink.chains.polymer import Polymer
+from mwdlink.chains.polymer import Polymer, need_polymer
 from mwdlink.decisions.blend_compute import Settings, compute
 from mwdlink.decisions.blend_result import Blend
 from mwdlink.decisions.blend_target import Target, parse_target
@@ -91,6 +91,7 @@ def blend(
     parts = as_components(components)
     if len(parts) < 2:
         raise InputError("a blend needs at least two components.")
+    need_polymer(polymer)
     if fractions is None:
         fractions = np.full(len(parts), 1.0 / len(parts))
     phi = check_fractions(fractions, len(parts))

@@ -10,7 +10,7 @@ import numpy as np
 
 from mwdlink.chains.distribution import Distribution
 from mwdlink.chains.melt import Melt
-from mwdlink.chains.polymer import Polymer
+from mwdlink.chains.polymer import Polymer, need_polymer
 from mwdlink.decisions.ensemble import (
     ExponentBelief,
     central_kernel,
@@ -175,7 +175,7 @@ def predict(
     ModelError
         Unknown kernel, exponent out of range, temperature out of the shift law's reach.
     InputError
-        Frequencies that are not positive and ascending.
+        Frequencies that are not positive and ascending; no distribution, no polymer.
 
     Examples
     --------
@@ -184,6 +184,9 @@ def predict(
     >>> 0 < melt.outputs.values["eta0_Pa_s"] < 1e5
     True
     """
+    need_polymer(polymer)
+    if not isinstance(distribution, Distribution):
+        raise InputError(f"predict needs a distribution, not {type(distribution).__name__}.")
     distribution = as_own(distribution, polymer)
     melt = polymer.melt(temperature_C)
     names = kernels_to_use(melt, kernels)

@@ -14,6 +14,7 @@ from typing import Any
 import numpy as np
 
 from mwdlink.chains.distribution import Distribution
+from mwdlink.chains.polymer import need_polymer
 from mwdlink.decisions.ensemble import central_kernel, draw, exponent_belief, kernels_to_use
 from mwdlink.decisions.gpc_scale import as_own
 from mwdlink.decisions.rest_result import FLOW, LEVEL, RE_ENTANGLEMENT, STEP, Rest, Wait
@@ -99,6 +100,7 @@ def rest_time(
                 "a distribution says nothing of time without the polymer it is of.",
                 remedy="Name a polymer or give a card.",
             )
+        need_polymer(polymer)
         source = as_own(source, polymer)
         melt = polymer.melt(temperature_C)
         spectra, warnings = _of_distribution(source, melt, kernels, exponent, rouse, members, seed)

@@ -88,7 +88,8 @@ def read_segments(
     values, rows = picker.read(needed, positive=positive, omit_unreadable=omit_unreadable)
     if rows.size < MIN_POINTS:
         raise InputError(
-            f"{rows.size} points are too few for a sweep; it needs at least {MIN_POINTS}.",
+            f"{rows.size} {'point is' if rows.size == 1 else 'points are'} too few for a sweep; "
+            f"it needs at least {MIN_POINTS}.",
             path=picker.source.path,
             row=int(rows[0]) if rows.size else picker.block.header_row,
             remedy="Give the whole sweep.",

@@ -457,7 +457,8 @@ def _curve(
     )
     if len(curve) < MIN_POINTS:
         raise InputError(
-            f"{len(curve)} points are too few for a curve; it needs at least {MIN_POINTS}.",
+            f"{len(curve)} {'point is' if len(curve) == 1 else 'points are'} too few for a curve; "
+            f"it needs at least {MIN_POINTS}.",
             remedy="Give the whole curve.",
             **place,
         )

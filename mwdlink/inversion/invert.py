@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 
 from mwdlink.chains.melt import Melt
-from mwdlink.chains.polymer import Polymer
+from mwdlink.chains.polymer import Polymer, need_polymer
 from mwdlink.errors import Caution, InputError, MwdlinkError, NotConverged, merge_cautions
 from mwdlink.inversion.advice import check_wanted
 from mwdlink.inversion.assemble import assemble
@@ -111,6 +111,7 @@ def invert(
     """
     _check(sweep, members, above, method, choose, level)
     _check_smoothing(method, choose, smoothing)
+    need_polymer(polymer)
     if want:
         check_wanted(want)
     temperature, notes = _temperature(sweep, polymer, temperature_C)

@@ -283,3 +283,25 @@ def test_a_crossover_is_found_in_the_first_and_the_last_cell_too(cell):
     found, level = crossovers(Curves(omega, loss * omega / at, loss, one, one))
     assert found[0] == pytest.approx(at, rel=1e-6)
     assert level[0] == pytest.approx(1e3, rel=1e-6)
+
+
+def test_what_is_no_polymer_or_distribution_is_refused_with_what_to_do():
+    """House rule: errors say what to do; a name is no polymer yet."""
+    from mwdlink.decisions.blend import blend
+    from mwdlink.decisions.rest import rest_time
+    from mwdlink.inversion.invert import invert
+    from mwdlink.measurement.sweep import Sweep
+
+    omega = np.geomspace(0.1, 100, 8)
+    sweep = Sweep(omega, 10 * omega, 20 * omega)
+    for call in (
+        lambda: predict(A, "hdpe", members=0),
+        lambda: blend([A, B], [0.5, 0.5], "hdpe", members=0),
+        lambda: rest_time(A, "hdpe", members=0),
+        lambda: invert(sweep, "hdpe", members=0),
+    ):
+        with pytest.raises(InputError, match="not 'hdpe'") as caught:
+            call()
+        assert "read_polymer" in caught.value.remedy
+    with pytest.raises(InputError, match="needs a distribution, not Sweep"):
+        predict(sweep, HDPE, members=0)

@@ -614,3 +614,8 @@ def test_a_temperature_that_no_sweep_has_is_said(write: Write) -> None:
     assert read_sweep(path, temperature_C=170).temperature_C == 170
     with pytest.raises(InputError, match="none of the 2 sweeps in the file is at 180 C"):
         read_sweep(path, temperature_C=180)
+
+
+def test_one_point_is_too_few_in_the_singular(write: Write) -> None:
+    with pytest.raises(InputError, match="1 point is too few"):
+        read_sweep(write("omega [rad/s],G' [Pa],G'' [Pa]\n0.1,10,100\n"))
