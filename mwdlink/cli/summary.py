@@ -49,6 +49,7 @@ _NAMES = (
     "load_kg",
     "M_g_per_mol",
     "temperature_C",
+    "path",
 )
 
 # entries of a list that are shown

@@ -29,8 +29,11 @@ def by_temperature(table: DataFrame) -> dict[str, DataFrame]:
         return {"all": table}
     values = np.asarray(table[header], dtype=float)
     out = {}
-    for t in sorted(set(values[np.isfinite(values)].tolist())):
-        out[f"{t:g} °C"] = table[values == t]
+    steps = sorted(set(values[np.isfinite(values)].tolist()))
+    # a tenth of a degree, as instruments show it, unless steps lie closer
+    digits = 1 if len({round(t, 1) for t in steps}) == len(steps) else 6
+    for t in steps:
+        out[f"{round(t, digits):g} °C"] = table[values == t]
     return out
 
 
@@ -213,8 +216,8 @@ def describe_shifts(table: DataFrame, shift: Mapping[str, Any] | None = None) ->
         return ""
     k, m = int(np.nanargmin(temperature)), int(np.nanargmax(temperature))
     text = (
-        f"From {number(shifts[k])} at {temperature[k]:g} °C to {number(shifts[m])} at "
-        f"{temperature[m]:g} °C."
+        f"From {number(shifts[k])} at {temperature[k]:.4g} °C to {number(shifts[m])} at "
+        f"{temperature[m]:.4g} °C."
     )
     if shift:
         if value_of(shift.get("energy_kJ_per_mol")) is not None:

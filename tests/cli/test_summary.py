@@ -46,6 +46,7 @@ RECORD: dict[str, Any] = {
         }
     ],
     "claims": [{"quantity": "melt_flow 2.16 kg 190 C", "claimed": 1.1, "unit": "g/10 min"}],
+    "failed": [{"path": "lots/a.csv", "lot": "a", "reason": "Too few points."}],
     "target": {"windows": [{"low": 0.2, "high": 0.4}]},
     "rest": [{"residual": 0.01, "after": "steady flow", "time_s": uncertain(30.0, 25, 40)}],
     "advice": ["Measure down to 0.001 rad/s.", "Give the temperature."],
@@ -77,6 +78,7 @@ def test_what_it_says() -> None:
         "M 5.00e7 g/mol fraction less than 2.00 wt%",
         "M 60000 g/mol (40000 to 70000) fraction 70.0 wt% 60.0 to 80.0",
         "melt_flow 2.16 kg 190 C claimed 1.10 g/10 min",
+        "lots/a.csv a, Too few points.",
         "windows low 0.200, high 0.400",
         "steady flow residual 0.0100, time 30.0 s (25.0 to 40.0)",
         "- Measure down to 0.001 rad/s.",

@@ -267,3 +267,13 @@ def test_outlying_lot_is_named(drawn):
     """Derived: the made-up lot outside its limits stands on the picture and in the words."""
     assert "lot 018" in [w for w, _ in shown_texts(drawn["batch"]["trend-mw"].figure)]
     assert "lot 018" in drawn["batch"]["trend-mw"].description
+
+
+def test_measured_temperatures_are_labelled_to_a_tenth():
+    """As instruments show them; closer steps keep their digits (derived)."""
+    from mwdlink.figures.master import by_temperature
+
+    table = pd.DataFrame({"T [C]": [160.0113, 160.0113, 189.985]})
+    assert list(by_temperature(table)) == ["160 °C", "190 °C"]
+    close = pd.DataFrame({"T [C]": [190.01, 190.02]})
+    assert list(by_temperature(close)) == ["190.01 °C", "190.02 °C"]
