@@ -97,7 +97,7 @@ def test_data_of_every_kernel_read_by_default(kernel):
     card = exact_card(0.0, fluctuation_molar_mass_g_per_mol=1.2e4)
     chains = families.lognormal(1.3e5, 3.0)
     sweep = _one(chains, 3, Model(kernel), card=card)
-    r = invert(sweep, CARD, members=120, noise=0.03)
+    r = invert(sweep, card, members=120, noise=0.03)
     u = r.averages["Mw_g_per_mol"]
     assert u.low <= chains.Mw <= u.high
     row = next(k for k in r.kernels if k["kernel"] == kernel)
@@ -141,7 +141,7 @@ def test_a_range_of_the_plateau_modulus_takes_part():
     card = builtin("pp-isotactic")
     rng = np.random.default_rng(1)
     sweep = measured(families.lognormal(3e5, 4.0), card, Model(), rng)
-    r = invert(sweep, CARD, kernels=["power-law"], exponent=2.0, members=120, noise=0.03)
+    r = invert(sweep, card, kernels=["power-law"], exponent=2.0, members=120, noise=0.03)
     factors = set(np.round(r.members["plateau modulus factor [-]"], 2))
     assert factors == {0.9, 1.0, 1.1}
     assert r.outside["below"].budget["card"] > 0.0
