@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -13,7 +14,13 @@ from mwdlink.chains.polymer import Polymer
 from mwdlink.errors import Caution, merge_cautions
 from mwdlink.inversion import closed_form
 from mwdlink.inversion.advice import advise
-from mwdlink.inversion.ensemble import Branch, ExponentPrior, Members, prior_weights
+from mwdlink.inversion.ensemble import (
+    Branch,
+    ExponentPrior,
+    Members,
+    prior_weights,
+    unpulled,
+)
 from mwdlink.inversion.inversion_result import Inversion
 from mwdlink.inversion.peaks import find_peaks
 from mwdlink.inversion.pool import Pool, make_pool
@@ -72,6 +79,9 @@ def assemble(
     draws = PRIOR_DRAWS if pool is not None else 1
     prior = Cells.make(centre.problem.window.edges, prior_weights(centre, draws, prior_seed))
     averages = _averages(single, pool, prior, low, high, level)
+    if pool is not None:
+        key = "Mw_within_window_g_per_mol"
+        averages[key] = _longer(averages[key], _pull(used, pool, low, high))
     outside = {
         "above": _fraction(centre, single, pool, prior, high, level),
         "below": _below(single, pool, prior, low, level),
@@ -192,6 +202,27 @@ def _averages(
     value = float(single.mean_within(low, high)[0])
     out["Mw_within_window_g_per_mol"] = _uncertain(value, inside, level, state, pool)
     return out
+
+
+def _pull(used: Sequence[Branch], pool: Pool, low: float, high: float) -> float:
+    """What smoothing takes from Mw within the window, to first order, mean over members [g/mol]."""
+    counts = np.bincount(pool.branch, minlength=len(used))
+    total = 0.0
+    for branch, count in zip(used, counts, strict=True):
+        if branch.build is None and count:
+            before, after, shares = unpulled(branch)
+            edges = branch.problem.window.edges
+            taken = Cells.make(edges, after).mean_within(low, high)
+            taken = taken - Cells.make(edges, before).mean_within(low, high)
+            total += float(count) * float(np.nansum(shares * taken))
+    return total / max(int(counts.sum()), 1)
+
+
+def _longer(u: Uncertain, pull: float) -> Uncertain:
+    """An interval longer by the pull of smoothing, on its side: members cannot know of it."""
+    if u.low is None or u.high is None:
+        return u
+    return replace(u, low=u.low + min(pull, 0.0), high=u.high + max(pull, 0.0))
 
 
 def _fraction(

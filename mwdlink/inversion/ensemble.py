@@ -37,6 +37,10 @@ REJECT = 25.0
 # among members lambda leans this much (in ln of the evidence per half decade) to the free side:
 # smoothing also biases what it chooses, in two-peak melts most; docs/accuracy.md has the covers
 LEAN = 0.6
+# where the pull of smoothing is asked, a lambda with less than this of the largest share is left
+# out, and no weight moves by more than a factor of e (where data are silent a first-order step is
+# long and means nothing)
+LEAST_SHARE, FARTHEST_BACK = 0.02, 1.0
 # a mean of the exponent that moves by less than this share of its spread is not worth another scan
 UNMOVED = 0.15
 # the fit may narrow the exponent's prior to half its spread at most
@@ -298,6 +302,38 @@ def leaning(found: Scan) -> np.ndarray:
     x = found.log_evidence - LEAN * np.log(found.smoothing) / np.log(10.0) * 2.0
     p = np.exp(x - x.max())
     return p / p.sum()
+
+
+def unpulled(branch: Branch) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """The fits of a branch as they are and with the pull of smoothing undone, and their shares.
+
+    At a minimum the data's gradient balances the roughness's, lambda T'T u; without the latter the
+    first step would be H^-1 lambda T'T u. Nothing for a log-normal melt; for sharp peaks the part
+    of the bias that the fit itself betrays.
+
+    Parameters
+    ----------
+    branch : Branch
+        Of the smooth method.
+
+    Returns
+    -------
+    before, after : ndarray of shape (k, n + 2)
+        Weights at every lambda that has a say among members.
+    shares : ndarray of shape (k,)
+        Of those lambdas; sum 1.
+    """
+    shares = leaning(branch.scan)
+    held = np.flatnonzero(shares > LEAST_SHARE * shares.max())
+    rough = branch.problem.prior.rough
+    before, after = [], []
+    for i in held:
+        fit = branch.scan.fits[i]
+        lhs = fit.hessian + 1e-9 * np.eye(fit.u.size)
+        step = np.linalg.solve(lhs, fit.smoothing * (rough @ fit.u))
+        before.append(fit.w)
+        after.append(weights(fit.u + np.clip(step, -FARTHEST_BACK, FARTHEST_BACK)))
+    return np.array(before), np.array(after), shares[held] / shares[held].sum()
 
 
 def _survival_of(branch: Branch, exponent: np.ndarray) -> np.ndarray:
