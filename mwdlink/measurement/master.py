@@ -10,6 +10,7 @@ import numpy as np
 
 from mwdlink.errors import Caution, InputError, merge_cautions
 from mwdlink.measurement.master_notes import law_text, master_cautions
+from mwdlink.measurement.odd_shifts import misses, shift_cautions
 from mwdlink.measurement.shift_laws import LawFit, fit_laws, preferred
 from mwdlink.measurement.shifts import Curve, ShiftFit, fit_shifts
 from mwdlink.measurement.superposition import Superposition, judge
@@ -237,10 +238,13 @@ class Master(Result):
     # -- words --------------------------------------------------------------------------------
     def answer(self) -> str:
         T = [s.temperature_C for s in self.steps]
+        if misses(self.law):
+            law = f"no law follows the shifts (missed by {self.law.residual_decades:.2g} decades)"
+        else:
+            law = f"the shifts follow {law_text(self.law)}"
         return (
             f"{len(T)} temperatures from {T[0]:.4g} to {T[-1]:.4g} C make one master curve at "
-            f"{self.reference_C:.4g} C; the shifts follow {law_text(self.law)}. "
-            f"{self.superposition.text()}"
+            f"{self.reference_C:.4g} C; {law}. {self.superposition.text()}"
         )
 
     def paragraph(self) -> str:
@@ -374,6 +378,7 @@ def make_master(
         notes_noise,
         master_cautions(T, reference_C, same_temperature, steps, vertical, fixed, free, free_scale,
                   verdict, polymer),
+        shift_cautions(T, y, law),
     )  # fmt: skip
     return Master(float(reference_C), steps, vertical, laws, law, verdict, fit, None, warnings)
 

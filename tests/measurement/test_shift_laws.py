@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 
 from mwdlink.chains.shift import arrhenius_factor, rereference_wlf, wlf_factor
+from mwdlink.measurement.odd_shifts import shift_cautions
 from mwdlink.measurement.shift_laws import fit_laws, preferred
 
 T = np.array([130.0, 150.0, 165.0, 180.0, 200.0, 230.0])
@@ -82,3 +83,35 @@ def test_three_noisy_shifts_of_an_arrhenius_melt_stay_arrhenius():
         laws, _ = fit_laws(t, y, np.diag(sigma**2), 1, 190.0, members=0)
         called += preferred(laws).kind == "wlf"
     assert called <= 8
+
+
+def _odd(t, y):
+    laws, _ = fit_laws(t, y, np.diag(np.where(y == 0.0, 0.0, 1e-5)), 2, t[2], members=0)
+    return shift_cautions(t, y, preferred(laws))
+
+
+def test_shifts_of_real_laws_are_not_odd():
+    """Published laws: polyethylene by Arrhenius, polystyrene by WLF; nothing to say."""
+    t = np.array([150.0, 165.0, 180.0, 200.0, 220.0])
+    assert _odd(t, polyethylene(t)) == ()
+    assert _odd(t, polystyrene(t)) == ()
+
+
+def test_a_step_in_hertz_is_named():
+    """Derived: its frequencies are too high by 2 pi, so its a_T is too low by as much."""
+    t = np.array([150.0, 165.0, 180.0, 200.0, 220.0])
+    y = polyethylene(t)
+    y[3] -= np.log10(2 * np.pi)
+    (said,) = _odd(t, y)
+    assert said.code == "shifts_odd" and "No law goes through" in said.text
+    assert "the step at 200 C" in said.text and "6.28 shorter" in said.text
+    assert "about 2 pi" in said.text and "From 200 to 220 C the shift factor rises" in said.text
+
+
+def test_shifts_that_rise_are_told_with_two_temperatures_too():
+    """Derived: two exchanged labels; no law is missed by one shift, but it has the wrong sign."""
+    t = np.array([170.0, 190.0])
+    y = -polyethylene([170.0, 190.0], 170.0)
+    laws, _ = fit_laws(t, y, np.diag([0, 1e-6]), 0, 170.0, members=0)
+    (said,) = shift_cautions(t, y, preferred(laws))
+    assert "rises" in said.text and "No law" not in said.text
