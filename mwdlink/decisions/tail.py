@@ -20,6 +20,7 @@ from mwdlink.decisions.tail_interval import (
     unresolved,
     widened,
 )
+from mwdlink.decisions.tail_limit import detection_limit
 from mwdlink.decisions.tail_result import Tail
 from mwdlink.decisions.tail_tables import budget, distribution_table, fit_table, gpc_table
 from mwdlink.errors import Caution, InputError, NotConverged, merge_cautions
@@ -27,7 +28,6 @@ from mwdlink.inversion import joint
 from mwdlink.inversion.invert import exponent_prior
 from mwdlink.inversion.joint_ensemble import HEARD, Joint, infer, settle, weight_beyond
 from mwdlink.inversion.joint_explain import weigh
-from mwdlink.inversion.joint_limit import detection_limit
 from mwdlink.inversion.window import SUPPORT
 from mwdlink.measurement.noise import noise_of
 from mwdlink.measurement.sweep import Sweep

@@ -28,7 +28,8 @@ class Tail(Result):
     excess : Uncertain
         What of it is beyond the smooth continuation of the GPC's curve [-].
     detection_limit : float or None
-        Smallest excess that nine in ten such pairs of data would show [-].
+        Smallest tail that nine in ten such pairs of data would show [-]; None where none up to
+        5 wt% would.
     time_law_factor : Uncertain
         Factor on the card's relaxation times that the pair asks for [-].
     exponent, gpc_factor, modulus_factor : Uncertain
@@ -83,6 +84,19 @@ class Tail(Result):
         """Whether a tail was found: the excess's low end is above zero."""
         return self.excess.low is not None and self.excess.low > 0
 
+    @property
+    def at_most(self) -> float | None:
+        """Weight beyond M that would not have been missed [-].
+
+        The interval's high end, or the GPC's continuation and the smallest tail that would have
+        shown where that is more: what is said to be absent is never less than what could be missed.
+        """
+        high = self.fraction.high
+        if high is None or self.fraction.value is None or self.detection_limit is None:
+            return high
+        continued = self.fraction.value - (self.excess.value or 0.0)
+        return max(high, continued + self.detection_limit)
+
     def payload(self) -> dict[str, Any]:
         return {
             "tail": {
@@ -90,6 +104,7 @@ class Tail(Result):
                 "fraction": self.fraction,
                 "excess": self.excess,
                 "detection_limit": self.detection_limit,
+                "at_most": self.at_most,
                 "found": self.found,
                 "gpc_high_g_per_mol": self.gpc_range[1],
             },
@@ -126,7 +141,12 @@ class Tail(Result):
 
     def answer(self) -> str:
         text = tail_words.answer(
-            self.found, self.beyond, self.fraction, self.excess, self.detection_limit
+            self.found,
+            self.beyond,
+            self.fraction,
+            self.excess,
+            self.detection_limit,
+            self.at_most,
         )
         codes = {w.code for w in self.warnings}
         if self.fraction.status == "resolved":

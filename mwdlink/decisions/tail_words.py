@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Collection, Sequence
-from typing import Any
 
 from mwdlink.inversion.joint_explain import Explanation
 from mwdlink.quantity import Uncertain
@@ -38,7 +37,14 @@ def mass(m: float) -> str:
     return f"{m:.3g} g/mol"
 
 
-def answer(found: bool, beyond: float, fraction: Uncertain, excess: Uncertain, limit: Any) -> str:
+def answer(
+    found: bool,
+    beyond: float,
+    fraction: Uncertain,
+    excess: Uncertain,
+    limit: float | None,
+    at_most: float | None,
+) -> str:
     """The answer in one sentence."""
     if found:
         return (
@@ -46,11 +52,13 @@ def answer(found: bool, beyond: float, fraction: Uncertain, excess: Uncertain, l
             f"GPC curve's own continuation, {span(fraction)} in all."
         )
     text = (
-        f"No tail found: less than {percent(fraction.high)} wt% lies beyond {mass(beyond)}, "
+        f"No tail found: less than {percent(at_most)} wt% lies beyond {mass(beyond)}, "
         f"and what lies there ({percent(fraction.value)} wt%) is what the GPC's curve goes on to"
     )
     if limit is not None:
         text += f"; these data would show a tail from about {percent(limit)} wt%"
+    else:
+        text += "; no small tail would stand out from that reliably"
     return text + "."
 
 

@@ -19,7 +19,7 @@ from types import ModuleType
 import numpy as np
 
 from mwdlink.decisions.tail import find_tail
-from mwdlink.inversion.joint_limit import TAIL_DISPERSITY, TAIL_RATIO
+from mwdlink.decisions.tail_limit import TAIL_DISPERSITY, TAIL_RATIO
 
 
 def _study() -> ModuleType:
@@ -49,13 +49,14 @@ def power(
     -------
     dict
         `limit` : median detection limit [wt%]; `none` : pairs for which no limit is stated;
-        `found` : share found for each of `sizes` [-].
+        `found` : share found for each of `sizes` [-]; `missed` : number of those not found, of all
+        sizes, and `held` : of them, those whose answer "less than" is true.
     """
     beyond = STUDY.EXCLUSION
     shape = (TAIL_RATIO * beyond, TAIL_DISPERSITY)
     limits: list[float] = []
     found: list[list[bool]] = [[] for _ in sizes]
-    none = 0
+    none = missed = held = 0
     for seed in range(first, first + pairs):
         made = {"kinds": STUDY.BODIES, "omega": (low, 1e3), "noise": noise, "tail_shape": shape}
         asked = {"beyond": beyond, "noise": noise, "kernels": ("power-law",)}
@@ -66,12 +67,17 @@ def power(
             continue
         limits.append(limit)
         for size, hits in zip(sizes, found, strict=True):
-            _, gpc, sweep, _ = STUDY.made(seed, tail=size * limit, **made)
-            hits.append(find_tail(gpc, sweep, "hdpe", members=members, **asked).found)
+            true, gpc, sweep, _ = STUDY.made(seed, tail=size * limit, **made)
+            r = find_tail(gpc, sweep, "hdpe", members=members, **asked)
+            hits.append(r.found)
+            missed += not r.found
+            held += not r.found and r.at_most >= true.weight_above(beyond)
     return {
         "limit": 100.0 * float(np.median(limits)) if limits else None,
         "none": none,
         "found": [float(np.mean(h)) if h else None for h in found],
+        "missed": missed,
+        "held": held,
     }
 
 
@@ -81,13 +87,17 @@ def main() -> None:
     parser.add_argument("--members", type=int, default=60)
     parser.add_argument("--first", type=int, default=0, help="seed of the first pair")
     a = parser.parse_args()
-    print("| noise | lowest frequency rad/s | limit wt% | found at the limit | at half of it |")
-    print("|---|---|---|---|---|", flush=True)
+    print(
+        "| noise | lowest frequency rad/s | limit wt% | no limit | found at the limit | "
+        "at half of it | 'less than' true where none was found |\n|---|---|---|---|---|---|---|",
+        flush=True,
+    )
     for noise, low in SETTINGS:
         r = power(a.pairs, noise, low, a.members, first=a.first)
         at, half = r["found"]  # type: ignore[misc]
         print(
-            f"| {100 * noise:.0f} % | {low:g} | {r['limit']:.2f} | {at:.2f} | {half:.2f} |",
+            f"| {100 * noise:.0f} % | {low:g} | {r['limit']:.2f} | {r['none']} | {at:.2f} | "
+            f"{half:.2f} | {r['held']} of {r['missed']} |",
             flush=True,
         )
 

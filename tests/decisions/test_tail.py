@@ -16,10 +16,12 @@ from mwdlink.chains.polymer import builtin
 from mwdlink.decisions.gpc_scale import STANDARD_A, STANDARD_K, on_own_scale
 from mwdlink.decisions.tail import find_tail
 from mwdlink.decisions.tail_interval import uncertain
+from mwdlink.decisions.tail_limit import copy_with, low_ends
 from mwdlink.decisions.tail_result import Tail
+from mwdlink.decisions.tail_words import percent
 from mwdlink.errors import InputError
 from mwdlink.inversion import joint, joint_fit
-from mwdlink.inversion.joint_ensemble import settle, weight_beyond
+from mwdlink.inversion.joint_ensemble import infer, settle, weight_beyond
 from mwdlink.inversion.joint_explain import LEAST_BRANCHING, NAMES
 from mwdlink.measurement.sweep import Sweep
 from mwdlink.relaxation.melt_response import Relaxation
@@ -263,17 +265,51 @@ def test_interval_reaches_as_far_as_all_kernels() -> None:
 def test_detection_limit_has_the_power_it_claims() -> None:
     """Eight pairs with a tail of exactly the limit: nearly all found; of half of it, few."""
     r = POWER.power(8, 0.03, 1e-2, members=30, first=100)
-    assert r["none"] == 0
+    assert r["none"] <= 1
     at, half = r["found"]
     assert at >= 0.75 and half <= 0.5
+    # what a "no tail found" rules out is not below what it may have missed
+    assert r["held"] == r["missed"]
+
+
+def test_copies_give_back_their_tail() -> None:
+    """The copy without noise gives back the tail that was put in, and larger ones show more."""
+    _, gpc, sweep, _ = STUDY.made(2, tail=0.0)
+    sigma = np.full(2 * len(sweep), 0.03)
+    melt = builtin("hdpe").melt(190.0)
+    setting = settle(gpc, sweep.omega, sweep.storage, sweep.loss, sigma, melt, ("power-law",))
+    found = infer(setting, ("power-law",), 0, 0)
+    x = setting.x
+    shape = np.exp(-0.5 * ((x - np.log10(2.4e6)) / 0.2) ** 2)
+    shape /= shape.sum()
+    median = []
+    for size in (0.005, 0.01, 0.02):
+        copy = copy_with(found.kernels[0], found.alone, shape, size)
+        wanted = weight_beyond(x, (1 - size) * found.alone.w + size * shape, BEYOND)
+        assert weight_beyond(x, copy.free.best.w, BEYOND) == pytest.approx(wanted, rel=0.1)
+        median.append(np.median(low_ends(copy, BEYOND, 0.9)))
+    assert median[0] < median[1] < median[2]
+
+
+def test_what_is_ruled_out_covers_what_would_be_missed(
+    without: tuple[Distribution, Tail],
+) -> None:
+    """Continuation and detection limit, where that is more than the interval's end (derived)."""
+    _, r = without
+    continued = r.fraction.value - r.excess.value
+    assert r.at_most == pytest.approx(max(r.fraction.high, continued + r.detection_limit))
+    assert f"less than {percent(r.at_most)} wt%" in r.answer()
+    assert r.payload()["tail"]["at_most"] == r.at_most
+    unlimited = replace(r, detection_limit=None)
+    assert unlimited.at_most == r.fraction.high and "reliably" in unlimited.answer()
 
 
 @pytest.mark.full
 def test_power_of_the_limit_over_many() -> None:
-    """Claimed is nine in ten; no setting may fall below seven, and half the limit shows less."""
+    """Claimed is nine in ten: 0.9 less two of its standard deviations over 40 pairs each."""
     for noise, low in POWER.SETTINGS:
         at, half = POWER.power(40, noise, low, 40, first=400)["found"]
-        assert at >= 0.7 and half <= 0.5, (noise, low)
+        assert at >= 0.8 and half <= 0.5, (noise, low)
 
 
 @pytest.mark.full
