@@ -20,7 +20,7 @@ from mwdlink.decisions.components import Component, Validity
 from mwdlink.decisions.ensemble import ExponentBelief
 from mwdlink.decisions.gpc_band import gpc_limits
 from mwdlink.decisions.predict import band_words, model_payload
-from mwdlink.decisions.predicted import Outputs, frames, quoted
+from mwdlink.decisions.predicted import FLOW_RESTS_ON, Outputs, frames, quoted
 from mwdlink.decisions.trust import Trust
 from mwdlink.errors import Caution
 from mwdlink.quantity import Uncertain
@@ -214,6 +214,7 @@ class Blend(Result):
                 "The components' sweeps do not reach terminal flow: zero-shear viscosity and "
                 "compliance of the blend are lower bounds, the melt flow rate may be unknown."
             )
+        out.append(FLOW_RESTS_ON)
         if self.distribution is not None:
             own = [c.distribution for c in self.components]
             c = self.computed

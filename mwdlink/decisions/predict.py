@@ -21,6 +21,7 @@ from mwdlink.decisions.ensemble import (
 from mwdlink.decisions.gpc_band import GpcBand, average_bands, error_asked, gpc_limits
 from mwdlink.decisions.gpc_scale import as_own
 from mwdlink.decisions.predicted import (
+    FLOW_RESTS_ON,
     Outputs,
     Recorder,
     bands_of,
@@ -118,8 +119,7 @@ class Prediction(Result):
         return (
             *gpc_limits([self.distribution], self.gpc),
             "Long-chain branching, fillers and second phases are not in the model.",
-            "Steady flow and melt flow rate rest on the Cox-Merz rule; the central melt flow rate "
-            "has no entrance correction, its band takes up to a fifth of the load as lost there.",
+            FLOW_RESTS_ON,
         )
 
 

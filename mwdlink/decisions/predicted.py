@@ -16,6 +16,12 @@ from mwdlink.relaxation.spectrum import Spectrum
 
 Band = tuple[np.ndarray, np.ndarray]
 
+FLOW_RESTS_ON = (
+    "Steady flow and melt flow rate rest on the Cox-Merz rule; the central melt flow rate has no "
+    "entrance correction, its band takes up to a fifth of the load as lost there."
+)
+"""What every predicted flow takes for granted; why a melt flow rate may lie at its band's end."""
+
 
 @dataclass(frozen=True)
 class Outputs:

@@ -209,6 +209,7 @@ def test_components_short_of_terminal_flow_give_lower_bounds(by_both):
     ).zero_shear_viscosity
     assert eta0.status == "lower_bound" and eta0.value < true * 1.03
     quick = blend(by_both.components, [0.7, 0.3], HDPE, members=0)
+    assert any("entrance" in s for s in by_both.cannot_say())
     assert "at least" in by_both.answer() and "at least" in quick.answer()
 
 
