@@ -51,6 +51,26 @@ class PolymerName(click.ParamType):
         return [CompletionItem(n) for n in found] or [CompletionItem(incomplete, type="file")]
 
 
+class Members(click.IntRange):
+    """How many members: none, or as many as the ends of a 90 % interval need."""
+
+    LEAST = 20
+
+    def __init__(self) -> None:
+        super().__init__(0, 100_000)
+
+    def convert(self, value: Any, param: Any, ctx: Any) -> int:
+        number = int(super().convert(value, param, ctx))
+        if 0 < number < self.LEAST:
+            self.fail(
+                f"{number} members are too few for an interval of 90 %: give 0 for none, or "
+                f"{self.LEAST} or more.",
+                param,
+                ctx,
+            )
+        return number
+
+
 class Number(click.ParamType):
     """A finite number within limits, optionally with a percent sign."""
 
@@ -252,10 +272,10 @@ smoothing_option = click.option(
 )
 members_option = click.option(
     "--members",
-    type=click.IntRange(0, 100_000),
+    type=Members(),
     default=200,
     show_default=True,
-    help="Ensemble members behind the intervals; 0: no intervals.",
+    help="Ensemble members behind the intervals, 20 or more; 0: no intervals.",
 )
 seed_option = click.option(
     "--seed", type=click.IntRange(0), default=0, show_default=True, help="Of the random draws."

@@ -118,7 +118,7 @@ def run(inputs: Path, monkeypatch: pytest.MonkeyPatch) -> Iterator[Callable[...,
 
 # command line -> tables of the interface, keys of the interface
 WRITTEN = {
-    "predict gpc.csv --polymer hdpe --members 4": (
+    "predict gpc.csv --polymer hdpe --members 20": (
         "sweep.csv spectrum.csv relaxation.csv flow.csv distribution.csv",
         "averages terminal crossover melt_flow indices bands",
     ),
@@ -126,7 +126,7 @@ WRITTEN = {
         "distribution.csv fit.csv smoothing.csv",
         "averages window outside_window above fit kernels cross_check peaks advice",
     ),
-    "blend gpc.csv b.csv --fractions 70,30 --polymer hdpe --members 4": (
+    "blend gpc.csv b.csv --fractions 70,30 --polymer hdpe --members 20": (
         "sweep.csv spectrum.csv relaxation.csv flow.csv distribution.csv fractions.csv",
         "averages terminal crossover melt_flow indices bands blend target",
     ),
@@ -143,12 +143,12 @@ WRITTEN = {
         "residuals.csv",
         "viscosity network exponent",
     ),
-    "rest gpc.csv --polymer hdpe --members 4 --residual 1%": ("rest.csv", "rest"),
-    "spectrum sweep.csv --members 4": (
+    "rest gpc.csv --polymer hdpe --members 20 --residual 1%": ("rest.csv", "rest"),
+    "spectrum sweep.csv --members 20": (
         "spectrum.csv continuous.csv fit.csv",
         "terminal supported consistency",
     ),
-    "master all.csv --reference 190 --members 4": (
+    "master all.csv --reference 190 --members 20": (
         "master.csv shifts.csv",
         "reference_C shift superposition branching",
     ),
@@ -201,7 +201,7 @@ def test_trust_is_carried_on(
     no_pictures(monkeypatch)
     run("blendcheck study.toml --quiet", "--out", str(tmp_path / "check"))
     trust = tmp_path / "check" / "trust.toml"
-    line = "blend study.toml --fractions 0.6,0.4 --members 4 --json --quiet --trust"
+    line = "blend study.toml --fractions 0.6,0.4 --members 20 --json --quiet --trust"
     record = json.loads(run(line, str(trust)).stdout)
     paths = [i["path"] for i in record["inputs"]]
     assert "study.toml" in paths and str(trust) in paths and "b-sweep.csv" in paths
@@ -223,7 +223,7 @@ def test_own_card_is_used(
 
 def test_same_input_same_bytes(run: Callable[..., Result], tmp_path: Path) -> None:
     """Interface: a second run, in place of the first, gives the same bytes in every file."""
-    line = f"spectrum sweep.csv --members 4 --out {tmp_path / 'out'}"
+    line = f"spectrum sweep.csv --members 20 --out {tmp_path / 'out'}"
     run(line)
     before = {p: p.read_bytes() for p in (tmp_path / "out").rglob("*") if p.is_file()}
     run(line, "--replace")

@@ -14,6 +14,7 @@ from mwdlink.cli import options
 def test_values() -> None:
     """Interface: forms of the common options."""
     assert options.Exponent().convert("2.1", None, None) == 2.1
+    assert [options.Members().convert(n, None, None) for n in ("0", "20")] == [0, 20]
     assert options.Exponent().convert("1.8:2.3", None, None) == (1.8, 2.3)
     assert options.Rows().convert("3,17-19", None, None) == {3, 17, 18, 19}
     assert options.Pair().convert("lot = 7=8", None, None) == ("lot", "7=8")
@@ -38,6 +39,8 @@ def test_values() -> None:
         (options.Number("R", 0, 1), "0"),
         (options.Number("R", 0, 1), "inf"),
         (options.TEMPERATURE, "-300"),
+        (options.Members(), "5"),
+        (options.Members(), "-1"),
     ],
 )
 def test_refused(kind: Any, text: str) -> None:
