@@ -228,6 +228,7 @@ def calibrate(
         if first.free[i] and first.spread[i] > NARROWED * PRIOR[i]:
             kept[name] = "the data hardly narrow what was known before"
     again = [n not in kept for n in NAMES]
+    whole = first
     if again != free:
         first = _converged(fit(samples, melt, centre, rouse, start, again, pivot))
     others = [fit(samples, melt, k, rouse, start, again, pivot) for k in order[1:]]
@@ -253,8 +254,11 @@ def calibrate(
                 )
             )
     spread = _spread(first, admissible)
+    # what is said of a constant holds what those that were kept leave open; the card does not: it
+    # is used with the kept ones, whose own spread comes with them
+    said_of = np.where(first.free, np.maximum(spread, _spread(whole, admissible)), spread)
     viscosity, network, exponent = _quantities(
-        first, spread, melt, study.polymer, pivot, kept, samples
+        first, said_of, melt, study.polymer, pivot, kept, samples
     )
     card = fitted_card(study, first, spread, melt, pivot, kept, samples, masses)
     said = {_WORDS[k]: v for k, v in kept.items()}

@@ -205,3 +205,21 @@ def test_intervals_hold_the_truth_with_gpc_errors():
         ):
             inside.append(u.low <= true <= u.high)
     assert np.mean(inside) > 0.85
+
+
+def test_what_is_kept_stays_open_in_the_others_intervals():
+    """The bags of the example alone, made with the card's law and an exponent of 2.1: they do not
+    tell the mixing exponent, and the law's level is no better known than that leaves it."""
+    from pathlib import Path
+
+    from mwdlink.files.study import read_study
+
+    bags = read_study(Path(__file__).parents[2] / "examples" / "weighed-bags" / "study.toml")
+    r = calibrate(replace(bags, components=tuple(replace(c, sweep=None) for c in bags.components)))
+    assert "mixing exponent" in r.kept
+    level = r.viscosity["eta0_at_pivot_Pa_s"]
+    true = HDPE.melt(190.0).zero_shear_law(r.viscosity["pivot_g_per_mol"])
+    assert level.low < true < level.high
+    # the card is used with an exponent that is spread again: its own scatter stays what it was
+    scatter = r.card["viscosity"]["scatter_decades"]
+    assert scatter < np.log10(level.high / level.low) / 2
