@@ -24,6 +24,7 @@ def read_one(
     *,
     temperature_C: float | None = None,
     calibration: str = "unstated",
+    where: str = "",
 ) -> Any:
     """The table of a file, if it is of one of the kinds.
 
@@ -38,6 +39,8 @@ def read_one(
         [C] Of a measurement whose table does not say.
     calibration : str
         Of a distribution.
+    where : str
+        Which of several inputs it is, for the message (" first").
 
     Raises
     ------
@@ -53,7 +56,7 @@ def read_one(
         raise InputError(
             f"the table is a {kind}.",
             path=str(path),
-            remedy=f"This command takes a {' or a '.join(kinds)}.",
+            remedy=f"This command takes a {' or a '.join(kinds)}{where}.",
         )
     reader, extra = _READERS[kind]
     value = {"calibration": calibration, "temperature_C": temperature_C}[extra]

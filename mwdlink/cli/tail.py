@@ -110,8 +110,15 @@ def command(
 
     card = read_polymer(polymer)
     first, second = _shared_out(reading)
-    gpc = read_one(distribution, ["distribution"], first, calibration=calibration or "unstated")
-    data = read_one(sweep, ["sweep"], second, temperature_C=temperature)
+    order = " first and a sweep second"
+    gpc = read_one(
+        distribution,
+        ["distribution"],
+        first,
+        calibration=calibration or "unstated",
+        where=order,
+    )
+    data = read_one(sweep, ["sweep"], second, temperature_C=temperature, where=" second")
     with working("Fitting GPC and sweep together", output):
         result = find_tail(
             gpc,

@@ -346,3 +346,11 @@ def test_enforced_check_ends_with_4(run: Callable[..., Result], inputs: Path) ->
     line = "spectrum inconsistent.csv --members 0 --noise 2%"
     assert "Kramers" in run(f"{line} --enforce", status=4).stderr
     run(line)
+
+
+def test_exchanged_inputs_of_tail_are_told_their_order(inputs: Path) -> None:
+    """Interface: status 3 with what to do; the distribution comes first."""
+    names = [str(inputs / n) for n in ("sweep.csv", "gpc.csv")]
+    done = CliRunner().invoke(main, ["tail", *names, "--polymer", "hdpe"])
+    assert done.exit_code == 3
+    assert "takes a distribution first and a sweep second" in " ".join(done.stderr.split())
