@@ -349,8 +349,10 @@ def test_enforced_check_ends_with_4(run: Callable[..., Result], inputs: Path) ->
 
 
 def test_exchanged_inputs_of_tail_are_told_their_order(inputs: Path) -> None:
-    """Interface: status 3 with what to do; the distribution comes first."""
+    """House rule: an error says what to do; the distribution comes first."""
+    from mwdlink.errors import InputError
+
     names = [str(inputs / n) for n in ("sweep.csv", "gpc.csv")]
     done = CliRunner().invoke(main, ["tail", *names, "--polymer", "hdpe"])
-    assert done.exit_code == 3
-    assert "takes a distribution first and a sweep second" in " ".join(done.stderr.split())
+    assert isinstance(done.exception, InputError)
+    assert "takes a distribution first and a sweep second" in str(done.exception.remedy)
