@@ -619,3 +619,19 @@ def test_a_temperature_that_no_sweep_has_is_said(write: Write) -> None:
 def test_one_point_is_too_few_in_the_singular(write: Write) -> None:
     with pytest.raises(InputError, match="1 point is too few"):
         read_sweep(write("omega [rad/s],G' [Pa],G'' [Pa]\n0.1,10,100\n"))
+
+
+@pytest.mark.parametrize(("share", "cut"), [(0.14, True), (0.05, True), (0.005, False)])
+def test_a_gpc_curve_that_ends_high_is_said_to_be_cut(
+    write: Write, share: float, cut: bool
+) -> None:
+    """Derived: what ends at a column's limit lacks its longest chains. The last row counts by its
+    height, not by its cell, which is half as wide."""
+    x = np.linspace(3, 6, 61)
+    w = np.exp(-((x - 5) ** 2) / 2 * (2 * math.log(1 / share)))
+    rows = "\n".join(f"{10**a:.6g},{b:.6g}" for a, b in zip(x, w, strict=True))
+    d = read_distribution(write(f"M [g/mol],dW/dlog10M\n{rows}\n"), calibration="absolute")
+    assert ("cut_at_high_end" in codes(d)) is cut
+    if cut:
+        said = next(v.text for v in d.warnings if v.code == "cut_at_high_end")
+        assert f"{100 * share:.0f} %" in said and "too low" in said
