@@ -71,6 +71,10 @@ class Continuous:
         lambda, log evidence, chi2 of every weight tried.
     effective_parameters : float
         Trace of the resolution, averaged over the weights as the curve is [-].
+    scatter : ndarray of shape (n,)
+        Standard deviation of ln H to expect from one such sweep to the next [-].
+    counted : ndarray of bool, shape (n,)
+        Nodes whose scatter counts: inside the supported range, and H not next to nothing there.
     """
 
     tau: np.ndarray
@@ -85,6 +89,8 @@ class Continuous:
     smoothing: float
     scan: np.ndarray
     effective_parameters: float
+    scatter: np.ndarray
+    counted: np.ndarray
 
     @property
     def step(self) -> float:
@@ -232,14 +238,13 @@ class _Problem:
         off /= ROUGHER if off < 0 else SMOOTHER
         return -0.5 * (cost + logdet - prior + off * off), trace, scatter
 
-    def worst(self, omega: np.ndarray, u: np.ndarray, scatter: np.ndarray) -> float:
-        """Largest scatter of u at the nodes that count: supported, and not next to nothing."""
+    def counted(self, omega: np.ndarray, u: np.ndarray) -> np.ndarray:
+        """The nodes that count: supported, and not next to nothing."""
         low, high = supported_range(omega)
         up, out = np.split(self.A @ np.exp(np.clip(u, -600, 600)), 2)
         size = np.log(np.maximum(np.hypot(up, out), 1e-300))
         floor = np.interp(-np.log(self.tau), np.log(omega), size) + np.log(COUNTS)
-        counted = (self.tau >= low) & (self.tau <= high) & (u > floor)
-        return float(scatter[counted].max()) if counted.any() else 0.0
+        return np.asarray((self.tau >= low) & (self.tau <= high) & (u > floor))
 
 
 def supported_range(omega: np.ndarray) -> tuple[float, float]:
@@ -334,7 +339,7 @@ def fit_continuous(
     """
     problem = _Problem(omega, storage, loss, sigma_storage, sigma_loss, per_decade)
     u = problem.start()
-    fits: list[tuple[float, float, float, float, np.ndarray]] = []
+    fits: list[tuple[float, float, float, float, np.ndarray, np.ndarray]] = []
     worst: list[float] = []
     for lam in SCAN if smoothing is None else np.array([smoothing]):
         try:
@@ -344,8 +349,8 @@ def fit_continuous(
             u = error.partial
             continue
         log_evidence, trace, scatter = problem.evidence(lam, cost, N)
-        fits.append((float(lam), log_evidence, chi2, trace, u))
-        worst.append(problem.worst(omega, u, scatter))
+        fits.append((float(lam), log_evidence, chi2, trace, u, scatter))
+        worst.append(float(np.max(scatter, where=problem.counted(omega, u), initial=0.0)))
     if not fits:
         raise NotConverged("The continuous spectrum did not converge at any smoothing weight.")
     scan = np.array([f[:3] for f in fits])
@@ -357,6 +362,9 @@ def fit_continuous(
     share = shares_that_repeat(scan[:, 1], np.array(worst))
     u = np.asarray(sum(w * f[4] for w, f in zip(share, fits, strict=True)))
     trace = float(sum(w * f[3] for w, f in zip(share, fits, strict=True)))
+    # noise at each weight, and the weights' own differences, as their shares change with the noise
+    spread = sum(w * (f[5] ** 2 + (f[4] - u) ** 2) for w, f in zip(share, fits, strict=True))
+    scatter = np.sqrt(np.asarray(spread))
     r = (np.log(problem.A @ np.exp(u)) - problem.y) * problem.w
     chi2 = float(r @ r)
     rows = []
@@ -402,4 +410,6 @@ def fit_continuous(
         float(lam),
         readonly(scan),
         trace,
+        readonly(scatter),
+        problem.counted(omega, u),
     )

@@ -21,6 +21,10 @@ from mwdlink.quantity import Uncertain
 from mwdlink.relaxation.spectrum import Spectrum
 from mwdlink.result import Result
 
+# how well a spectrum should repeat from sweep to sweep, one standard deviation of ln H; twice that
+# is published practice (Stadler & Bailly, Rheol. Acta 48 (2009) 33, published)
+WANTED_SCATTER = 0.05
+
 
 @dataclass(frozen=True)
 class SpectrumFit(Result):
@@ -134,6 +138,7 @@ class SpectrumFit(Result):
                 "H low [Pa]": c.low,
                 "H high [Pa]": c.high,
                 "supported": self.supported_mask.astype(int),
+                "scatter [-]": c.scatter,
             }
         )
         fit = {
@@ -335,6 +340,17 @@ def _cautions(
             "relaxation spectrum is supported by the data."
         )
         out.append(Caution("window_too_narrow", text))
+    if c.counted.any():
+        k = int(np.argmax(np.where(c.counted, c.scatter, 0.0)))
+        if c.scatter[k] > WANTED_SCATTER:
+            text = (
+                f"From one sweep like this to the next the spectrum moves by "
+                f"{100 * c.scatter[k]:.2g} % (one standard deviation) near {c.tau[k]:.2g} s: the "
+                "data carry its height there no better. "
+                f"{100 * WANTED_SCATTER:.0f} % take {(c.scatter[k] / WANTED_SCATTER) ** 2:.1f} "
+                "times as many points per decade, or less noise."
+            )
+            out.append(Caution("spectrum_scatters", text))
     if smoothing is None and c.scan.shape[0] > 1:
         k = int(np.argmax(c.scan[:, 1]))
         # the smooth end only says that a log-normal spectrum fits: nothing to warn of
