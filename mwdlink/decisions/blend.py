@@ -23,6 +23,7 @@ from mwdlink.decisions.components import (
 from mwdlink.decisions.gpc_band import error_asked
 from mwdlink.decisions.trust import Trust
 from mwdlink.errors import Caution, InputError, merge_cautions
+from mwdlink.relaxation.mixing import exponent_cautions
 
 
 def blend(
@@ -127,6 +128,7 @@ def blend(
         fractions_without_filler(ready, phi),
         valid.warnings,
         c.warnings,
+        exponent_cautions(c.belief.centre),
         _trust_cautions(trust, ready, melt, settings.route),
     )
     return Blend(

@@ -35,7 +35,7 @@ from mwdlink.decisions.response import Bank, inner_frequencies
 from mwdlink.errors import Caution, InputError, merge_cautions
 from mwdlink.quantity import Uncertain, finite
 from mwdlink.relaxation.melt_response import Relaxation
-from mwdlink.relaxation.mixing import Model
+from mwdlink.relaxation.mixing import Model, exponent_cautions
 from mwdlink.relaxation.operator import log_grid
 from mwdlink.relaxation.spectrum import Spectrum
 from mwdlink.relaxation.validity import frequency_cautions
@@ -231,6 +231,7 @@ def predict(
     warnings = merge_cautions(
         polymer.warnings,
         relaxation.warnings,
+        exponent_cautions(belief.centre),
         frequency_cautions(float(w[-1]), melt),
         narrow_cautions(spectrum),
     )

@@ -74,7 +74,8 @@ def open_source(
         encoding = "workbook"
     else:
         text = decode(data, name)
-        total = text.text.count("\n") + 1
+        # what follows the last line's end is no line
+        total = text.text.removesuffix("\n").count("\n") + 1
         layout = read_layout(text.text, name, omit=left_out, named=named)
         encoding, notes = text.encoding, text.notes
     if left_out:
@@ -86,8 +87,9 @@ def open_source(
                 row=beyond[0],
                 remedy="Rows are counted as a text editor does, from 1, comments included.",
             )
+        counted = "1 row" if len(left_out) == 1 else f"{len(left_out)} rows"
         note = Caution(
-            "rows_left_out", f"Left out as asked: {rows_text(left_out)} ({len(left_out)} rows)."
+            "rows_left_out", f"Left out as asked: {rows_text(left_out)} ({counted})."
         )
         notes = (*notes, note)
     return Source(name, digest, encoding, layout, (*notes, *layout.notes))

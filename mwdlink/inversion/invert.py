@@ -33,7 +33,7 @@ from mwdlink.measurement.checks import slips
 from mwdlink.measurement.noise import chi2_in_words, noise_of
 from mwdlink.measurement.sweep import FlowCurve, RelaxationCurve, Sweep
 from mwdlink.relaxation.kernels import KERNEL_NAMES, available_kernels, get_kernel
-from mwdlink.relaxation.mixing import Model
+from mwdlink.relaxation.mixing import Model, exponent_cautions
 
 DEFAULT_EXPONENT, DEFAULT_SPREAD = 2.0, 0.2
 LEAST_POINTS = 5
@@ -186,7 +186,9 @@ def invert(
         choose=choose,
         want=want,
         level=level,
-        notes=merge_cautions(sweep.warnings, melt.warnings, notes),
+        notes=merge_cautions(
+            sweep.warnings, melt.warnings, notes, exponent_cautions(prior.mean)
+        ),
     )
     if not result.fit["converged"]:
         raise NotConverged(

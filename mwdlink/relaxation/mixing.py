@@ -16,7 +16,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from mwdlink.chains.melt import Melt
-from mwdlink.errors import ModelError
+from mwdlink.errors import Caution, ModelError
 from mwdlink.relaxation.kernels import DEFAULT_KERNEL, get_kernel
 from mwdlink.relaxation.lattice import (
     POINTS,
@@ -65,6 +65,23 @@ class Model:
             raise ModelError(f"the mixing exponent must be >= 1, not {self.exponent!r}")
         if self.exponent > 8.0:
             raise ModelError(f"a mixing exponent of {self.exponent:g} is beyond any use (limit 8)")
+
+
+# the highest exponent anybody fitted, with another kernel than those here: Maier et al., J. Rheol.
+# 42 (1998) 1153 (recalled)
+HIGHEST_FITTED = 3.84
+
+
+def exponent_cautions(exponent: float) -> tuple[Caution, ...]:
+    """What is to be said of an exponent that somebody chose."""
+    if exponent <= HIGHEST_FITTED:
+        return ()
+    text = (
+        f"A mixing exponent of {exponent:g} is higher than any fitted to linear melts (2 to 2.25 "
+        f"with kernels like these, {HIGHEST_FITTED:g} with another; recalled): molar masses and "
+        "times that rest on it are far off."
+    )
+    return (Caution("exponent_unusual", text),)
 
 
 def relaxation_times(molar_mass: np.ndarray, melt: Melt, model: Model) -> np.ndarray:

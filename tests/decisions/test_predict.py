@@ -305,3 +305,10 @@ def test_what_is_no_polymer_or_distribution_is_refused_with_what_to_do():
         assert "read_polymer" in caught.value.remedy
     with pytest.raises(InputError, match="needs a distribution, not Sweep"):
         predict(sweep, HDPE, members=0)
+
+
+def test_an_exponent_nobody_fitted_is_said() -> None:
+    """Beyond the 3.84 of Maier et al., J. Rheol. 42 (1998) 1153 (recalled), with a caution."""
+    for exponent, said in ((2.25, False), (5.0, True)):
+        result = predict(A, HDPE, exponent=exponent, members=0)
+        assert ("exponent_unusual" in {c.code for c in result.warnings}) == said
