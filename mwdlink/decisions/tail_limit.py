@@ -82,7 +82,10 @@ def detection_limit(
 
 
 def _crossing(margin: Callable[[float], float]) -> float | None:
-    """Weight at which a rising function of it crosses zero."""
+    """Weight at which a function of it comes above zero; None where no weight is enough.
+
+    Very large tails need not show better than middling ones: they lift the GPC's continuation.
+    """
     at, value = FIRST, margin(FIRST)
     step = STRIDE if value < 0 else 1.0 / STRIDE
     while True:

@@ -16,7 +16,7 @@ from mwdlink.chains.polymer import builtin
 from mwdlink.decisions.gpc_scale import STANDARD_A, STANDARD_K, on_own_scale
 from mwdlink.decisions.tail import find_tail
 from mwdlink.decisions.tail_interval import uncertain
-from mwdlink.decisions.tail_limit import copy_with, low_ends
+from mwdlink.decisions.tail_limit import _crossing, copy_with, low_ends
 from mwdlink.decisions.tail_result import Tail
 from mwdlink.decisions.tail_words import percent
 from mwdlink.errors import InputError
@@ -270,6 +270,15 @@ def test_detection_limit_has_the_power_it_claims() -> None:
     assert at >= 0.75 and half <= 0.5
     # what a "no tail found" rules out is not below what it may have missed
     assert r["held"] == r["missed"]
+
+
+def test_crossing_by_hand() -> None:
+    """The zero of a line, near the smallest and largest weights too; none where there is none."""
+    for zero in (2e-5, 3e-4, 2e-3, 0.03):
+        assert _crossing(lambda f, zero=zero: f - zero) == pytest.approx(zero, rel=1e-6)
+        assert _crossing(lambda f, zero=zero: np.log(f / zero)) == pytest.approx(zero, rel=2e-3)
+    assert _crossing(lambda f: -1.0) is None
+    assert _crossing(lambda f: 1.0) < 2e-5
 
 
 def test_copies_give_back_their_tail() -> None:
