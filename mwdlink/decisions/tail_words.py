@@ -68,7 +68,10 @@ def reservation(codes: Collection[str]) -> str:
         return "Assumed, not measured: the data speak for another kernel than the one asked for."
     if "priors_strained" in codes:
         return "Assumed, not measured: GPC and sweep do not agree within what is known of them."
-    return "Assumed, not measured: the sweep does not reach that far."
+    return (
+        "Assumed, not measured: chains of that length are slower than the sweep, which sees them as "
+        "stress that has not relaxed but not how long they are."
+    )
 
 
 def advice(
