@@ -69,8 +69,8 @@ def reservation(codes: Collection[str]) -> str:
     if "priors_strained" in codes:
         return "Assumed, not measured: GPC and sweep do not agree within what is known of them."
     return (
-        "Assumed, not measured: chains of that length are slower than the sweep, which sees them as "
-        "stress that has not relaxed but not how long they are."
+        "Assumed, not measured: chains of that length are slower than the sweep, which sees them "
+        "as stress that has not relaxed but not how long they are."
     )
 
 
