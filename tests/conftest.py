@@ -39,6 +39,16 @@ def pytest_collection_modifyitems(config: pytest.Config, items: list[pytest.Item
             item.add_marker(pytest.mark.skip(reason="no Chromium on the path"))
 
 
+def pytest_configure(config: pytest.Config) -> None:
+    """Properties are tried on the same cases in every run, and on new ones with --full."""
+    try:
+        from hypothesis import settings
+    except ImportError:
+        return
+    settings.register_profile("the same", derandomize=not config.getoption("--full"))
+    settings.load_profile("the same")
+
+
 @pytest.fixture(scope="session")
 def full(request: pytest.FixtureRequest) -> bool:
     """True when the long tests were asked for: timings are asserted only then."""

@@ -94,7 +94,7 @@ class Relaxation:
         reach = REACH_LONG * 10.0 ** -np.floor(np.log10(low) + 1e-9)
         shortest = min(
             REACH_SHORT * 10.0 ** -np.ceil(np.log10(high) - 1e-9),
-            1e-6 * (self._time_of_share(0.5) or longest),
+            1e-6 * self._median_time(),
         )
         key = (shortest, min(longest, reach))
         if key not in self._kept:
@@ -115,6 +115,13 @@ class Relaxation:
         weight = np.cumsum(np.where(held, d.mass, 0.0)[::-1])[::-1]
         found = np.flatnonzero(held & (weight > share))
         return float(self.times[found[-1]]) if found.size else None
+
+    def _median_time(self) -> float:
+        """Kernel time [s] that half of the network's own weight exceeds (it has some)."""
+        d = self.distribution
+        held = np.where(in_network(d.molar_mass, self.melt, self.model), d.mass, 0.0)
+        weight = np.cumsum(held[::-1])[::-1]
+        return float(self.times[np.flatnonzero(weight >= 0.5 * weight[0])[-1]])
 
     @cached_property
     def _kept(self) -> dict[tuple[float, float], tuple[np.ndarray, np.ndarray]]:
@@ -154,7 +161,7 @@ class Relaxation:
         zero = first = 0.0
         longest = self._time_of_share(0.0)
         if longest is not None:
-            low = 1e-10 * (self._time_of_share(0.5) or longest)
+            low = 1e-10 * self._median_time()
             t = log_grid(low, 80.0 * longest, 10)
             step = np.log(t[1] / t[0])
             g = self.network_modulus(t)

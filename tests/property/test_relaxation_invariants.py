@@ -5,7 +5,8 @@ from __future__ import annotations
 import dataclasses
 
 import numpy as np
-from hypothesis import given, settings
+import pytest
+from hypothesis import example, given, settings
 from hypothesis import strategies as st
 
 from mwdlink.chains import families
@@ -25,6 +26,7 @@ quick = settings(max_examples=10, deadline=None)
 
 
 @quick
+@example(10.0**3.5, 6.0, Model("reptation", 3.0, True), 2.0)
 @given(masses, spreads, models, st.floats(0.1, 10.0))
 def test_time_factor_moves_frequencies(mass: float, spread: float, model: Model, f: float) -> None:
     """All times multiplied by f: the same moduli at frequencies divided by f, eta0 times f."""
@@ -35,6 +37,18 @@ def test_time_factor_moves_frequencies(mass: float, spread: float, model: Model,
         np.testing.assert_allclose(a, b, rtol=1e-4, atol=1e-9 * MELT.plateau_modulus)
     ratio = there.zero_shear_viscosity / here.zero_shear_viscosity
     np.testing.assert_allclose(ratio, f, rtol=1e-6)
+
+
+@pytest.mark.parametrize("mass", [10.0**3.5, 1e5])
+@pytest.mark.parametrize("rouse", [True, False])
+@pytest.mark.parametrize("kernel", KERNEL_NAMES)
+def test_viscosity_is_the_limit_of_the_loss_modulus(kernel: str, rouse: bool, mass: float) -> None:
+    """G''/omega far below 1/mean time is eta0; also where most chains are too short to entangle."""
+    r = Relaxation(families.lognormal(mass, 6.0, points=60), MELT, Model(kernel, 2.0, rouse))
+    omega = 1e-3 / r.mean_time
+    loss = r.moduli(np.array([omega]))[1][0]
+    # a broad melt approaches it slowly: 2e-4 short of it there
+    np.testing.assert_allclose(loss / omega, r.zero_shear_viscosity, rtol=1e-3)
 
 
 @quick
