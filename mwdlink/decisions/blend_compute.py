@@ -214,7 +214,7 @@ def compute(components: Sequence[Component], phi: np.ndarray, melt: Melt, s: Set
             r = route.member(i, shares[i])
             recorder.member(r, None if offsets is None else offset_of(offsets, i))
             samples.append(moved(reached(r.curves(inner), terminal), offsets, i))
-        status = {} if terminal else dict.fromkeys(_TERMINAL, "lower_bound")
+        status = {} if terminal else dict.fromkeys(TERMINAL, "lower_bound")
         if s.route == "sweeps" and measured is not None:
             marks = noise_marks(measured, len(draws))
             extra = {"noise": np.hstack([marks, *extra.values()])}
@@ -235,7 +235,7 @@ def compute(components: Sequence[Component], phi: np.ndarray, melt: Melt, s: Set
         s.targets, [c.name for c in components], phi, first, m.values, (sample_first, sampled)
     )
     if not terminal:
-        targets = tuple(bound_said(t) if t.target.name in _TERMINAL else t for t in targets)
+        targets = tuple(bound_said(t) if t.target.name in TERMINAL else t for t in targets)
     averages = {}
     if known:
         averages = {k: float(v[0]) for k, v in exact_averages(components, phi[None, :]).items()}
@@ -285,7 +285,7 @@ def compute(components: Sequence[Component], phi: np.ndarray, melt: Melt, s: Set
     )
 
 
-_TERMINAL = ("eta0_Pa_s", "Je0_per_Pa", "mean_time_s")
+TERMINAL = ("eta0_Pa_s", "Je0_per_Pa", "mean_time_s")
 
 
 def _belief(melt: Melt, s: Settings) -> ExponentBelief:

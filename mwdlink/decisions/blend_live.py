@@ -6,6 +6,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from mwdlink.decisions.blend_compute import TERMINAL
 from mwdlink.decisions.blend_routes import along, column_of
 from mwdlink.quantity import to_plain
 
@@ -76,6 +77,8 @@ def _band(blend: Blend, asked: np.ndarray, omega: np.ndarray) -> dict[str, Any]:
 
 def _properties(blend: Blend) -> list[dict[str, Any]]:
     m = blend.map
+    # of sweeps that do not reach terminal flow these are lower bounds, and never shown without it
+    bounds = () if blend.route == "distributions" or blend.computed.terminal else TERMINAL
     step = slice(None, None, 2)
     rows = []
     order = sorted(m.values, key=lambda k: (k != "eta0_Pa_s", not k.startswith("MFR")))
@@ -91,6 +94,7 @@ def _properties(blend: Blend) -> list[dict[str, Any]]:
             "kind": "grid",
             "fraction": m.first[step],
             "value": v[step],
+            "at_least": key in bounds,
         }
         low, high = m.low.get(key), m.high.get(key)
         if low is not None and high is not None and np.all(np.isfinite(low + high)):

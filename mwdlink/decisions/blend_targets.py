@@ -239,7 +239,8 @@ def _together(found: Sequence[TargetFound], phi: np.ndarray, members: Members) -
         out.append(Uncertain(middle, low, high, level=LEVEL))
         shares.append(None if share is None else float(np.interp(middle, phi, share)))
     listed = " and ".join(f"{100 * u.low:.3g} to {100 * u.high:.3g} %" for u in out)  # type: ignore[operator]
-    reason = f"All {len(found)} targets are met at {listed} of {component}."
+    which = "Both" if len(found) == 2 else f"All {len(found)}"
+    reason = f"{which} targets are met at {listed} of {component}."
     if not ranged:
         reason += (
             " That is where the 90 % intervals of the fractions overlap: at one fraction all "

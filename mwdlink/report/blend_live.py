@@ -27,6 +27,7 @@ logarithms.
 A property has `key`, `label`, `unit` and a `kind`:
 
 - `"grid"` (the default): `fraction` (k), `value` (k), and `low`, `high` (k) where known;
+  `at_least` true where the values are lower bounds;
 - `"quadratic"`: `first`, `second`, `cross`, as for the curves (eta0 for exponent 2);
 - `"compliance"`: `first`, `second`, `cross` of lim G'/omega^2 and `eta0`, a mapping of the same
   three of eta0: Je0 is the one over the square of the other;
@@ -149,6 +150,8 @@ def check(data: Mapping[str, Any]) -> dict[str, Any]:
     plain.setdefault("properties", [])
     for p in plain["properties"]:
         p["label"] = property_words(str(p.get("label", p.get("key"))))
+        if p.get("at_least"):
+            p["label"] += ", at least"
     return plain  # type: ignore[no-any-return]
 
 

@@ -247,6 +247,17 @@ def test_averages_are_those_of_the_blended_distribution(by_distributions):
     assert 1 / a["Mn_g_per_mol"] == pytest.approx(0.7 / A.Mn + 0.3 / B.Mn, rel=1e-6)
 
 
+def test_live_data_says_what_is_a_bound() -> None:
+    """Sweeps that stop short of terminal flow: eta0 is at least so much beside the slider too."""
+    wide, short = np.geomspace(1e-4, 1e2, 31), np.geomspace(1.0, 1e3, 16)
+    for omega, bound in ((wide, False), (short, True)):
+        rng = np.random.default_rng(3)
+        parts = [sweep(d, Model(), rng, omega=omega) for d in (A, B)]
+        data = check(blend(parts, (0.5, 0.5), HDPE, members=0).live_data())
+        label = next(p["label"] for p in data["properties"] if p["key"] == "eta0_Pa_s")
+        assert label.endswith(", at least") == bound
+
+
 def test_live_data_is_accepted_by_the_page(by_distributions, by_both):
     """Compared with the page's own check of its data, and the quadratic form with the curve."""
     for result in (by_distributions, by_both):

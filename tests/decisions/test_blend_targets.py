@@ -123,7 +123,7 @@ def test_targets_of_a_blend():
     f = d["target"]["fractions"][0]
     assert met["low"] == pytest.approx(max(low, f["low"]))
     assert met["high"] == pytest.approx(min(high, f["high"]))
-    assert "All 2 targets" in two.answer()
+    assert "Both targets" in two.answer()
     ranged = blend([A, B], None, HDPE, target="viscosity_Pa_s@1=4e3:7e3", **more)
     assert "target" not in check(ranged.live_data())
     assert "is met at" in ranged.answer()
