@@ -95,19 +95,23 @@ def _add_moduli(shelf: Shelf, source: str, data: pd.DataFrame | None = None) -> 
     )
 
 
+def _add_relaxation(shelf: Shelf, table: pd.DataFrame) -> None:
+    shelf.add(
+        "relaxation",
+        "Relaxation modulus",
+        table,
+        lambda: decay.plot_relaxation(table, level=level_of(shelf.record)),
+        lambda: decay.describe_relaxation(table),
+    )
+
+
 def add_fit(shelf: Shelf, source: str = "fit.csv") -> None:
     table = shelf.table(source)
     if table is None:
         return
     _add_moduli(shelf, source)
     if find(table, *decay.TIME) is not None:
-        shelf.add(
-            "relaxation",
-            "Relaxation modulus",
-            table,
-            lambda: decay.plot_relaxation(table, level=level_of(shelf.record)),
-            lambda: decay.describe_relaxation(table),
-        )
+        _add_relaxation(shelf, table)
     if find(table, *flow.RATE) is not None:
         shelf.add(
             "flow",
@@ -163,13 +167,7 @@ def add_curves(shelf: Shelf) -> None:
     add_spectrum(shelf)
     table = shelf.table("relaxation.csv")
     if table is not None:
-        shelf.add(
-            "relaxation",
-            "Relaxation modulus",
-            table,
-            lambda: decay.plot_relaxation(table, level=level_of(shelf.record)),
-            lambda: decay.describe_relaxation(table),
-        )
+        _add_relaxation(shelf, table)
 
 
 def add_choices(shelf: Shelf) -> None:

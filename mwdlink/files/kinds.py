@@ -1,12 +1,14 @@
-"""Which kind of table a block is, and what to say when it is none."""
+"""Which kind of table a block is, which block is meant, and what to say when it is none."""
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
+from typing import Any
 
-from mwdlink.errors import InputError
+from mwdlink.errors import Caution, InputError
 from mwdlink.files import gpc, sweeps
 from mwdlink.files.columns import Picker
+from mwdlink.files.source import Source
 
 ACCEPTED = {
     "distribution": "M [g/mol], log10 M or ln M, with one of dW/dlog10M, dW/dlnM, dW/dM, "
@@ -91,3 +93,53 @@ def tests() -> dict[str, Callable[[Picker], bool]]:
         "flow curve": is_flow,
         "spectrum": is_spectrum,
     }
+
+
+def pickers_of(
+    source: Source, columns: Mapping[str, Any] | None, decimal: str | None
+) -> list[Picker]:
+    """One picker a block; blocks without a column the user named are passed over if others have."""
+    out: list[Picker] = []
+    first: InputError | None = None
+    for block in source.layout.blocks:
+        try:
+            out.append(Picker(source, block, columns, decimal))
+        except InputError as error:
+            first = first or error
+    if not out:
+        raise first or InputError("no table was found.", path=source.path)
+    return out
+
+
+def choose(pickers: list[Picker], suited: list[Picker], block: int | None, kind: str) -> Picker:
+    if block is not None:
+        if not 1 <= block <= len(pickers):
+            raise InputError(
+                f"there is no block {block}; the file has {len(pickers)}.",
+                path=pickers[0].source.path,
+                remedy="Blocks are counted from 1.",
+            )
+        return pickers[block - 1]
+    if not suited:
+        raise no_kind(pickers, kind, ACCEPTED[kind])
+    if len(suited) > 1:
+        rows = [p.block.rows[0] for p in suited]
+        raise InputError(
+            f"the file holds {len(suited)} tables of a {kind}, from rows "
+            f"{', '.join(map(str, rows[:6]))}.",
+            path=suited[0].source.path,
+            row=rows[1],
+            remedy="Keep one of them in the file, or leave the others' rows out with --omit.",
+        )
+    suited[0].notes += left_aside(pickers, suited, kind)
+    return suited[0]
+
+
+def left_aside(pickers: list[Picker], used: list[Picker], kind: str) -> tuple[Caution, ...]:
+    """What is said of the tables of a file that were not read."""
+    rest = [p for p in pickers if not any(p is q for q in used)]
+    if not rest or not used:
+        return ()
+    rows = ", ".join(str(p.block.header_row or p.block.rows[0]) for p in rest[:6])
+    text = f"{len(rest)} further tables of the file (row {rows}) are no {kind}: left aside."
+    return (Caution("tables_left_aside", text),)

@@ -22,10 +22,13 @@ from mwdlink.errors import Caution, InputError, merge_cautions
 from mwdlink.files.columns import Picker
 from mwdlink.files.kinds import (
     ACCEPTED,
+    choose,
     is_flow,
     is_relaxation,
     is_spectrum,
+    left_aside,
     no_kind,
+    pickers_of,
     strength_role,
     tests,
 )
@@ -73,8 +76,8 @@ def read_distribution(
     from mwdlink.files import gpc
 
     source = open_source(path, columns=columns, omit=omit, sheet=sheet)
-    pickers = _pickers(source, columns, decimal)
-    picker = _choose(pickers, [p for p in pickers if gpc.is_distribution(p)], block,
+    pickers = pickers_of(source, columns, decimal)
+    picker = choose(pickers, [p for p in pickers if gpc.is_distribution(p)], block,
                      "distribution")  # fmt: skip
     label = source.label if label is None else label
     found = gpc.read(picker, omit_unreadable=omit_unreadable, calibration=calibration, label=label)
@@ -198,11 +201,11 @@ def read_sweeps(
     from mwdlink.files import sweeps as make
 
     source = open_source(path, columns=columns, omit=omit, sheet=sheet)
-    pickers = _pickers(source, columns, decimal)
+    pickers = pickers_of(source, columns, decimal)
     suited = [p for p in pickers if make.is_sweep(p)]
     if block is not None or not suited:
-        suited = [_choose(pickers, suited, block, "sweep")]
-    aside = _left_aside(pickers, suited, "sweep")
+        suited = [choose(pickers, suited, block, "sweep")]
+    aside = left_aside(pickers, suited, "sweep")
     segments = []
     for picker in suited:
         segments += make.read_segments(
@@ -240,8 +243,8 @@ def read_relaxation(
 ) -> RelaxationCurve:
     """A relaxation modulus from a table with `t [s]` and `G [Pa]`."""
     source = open_source(path, columns=columns, omit=omit, sheet=sheet)
-    pickers = _pickers(source, columns, decimal)
-    picker = _choose(pickers, [p for p in pickers if is_relaxation(p)], block, "relaxation curve")
+    pickers = pickers_of(source, columns, decimal)
+    picker = choose(pickers, [p for p in pickers if is_relaxation(p)], block, "relaxation curve")
     return _curve(  # type: ignore[return-value]
         RelaxationCurve, picker, ("t", "G"), source, omit_unreadable, temperature_C, label
     )
@@ -261,8 +264,8 @@ def read_flow_curve(
 ) -> FlowCurve:
     """A steady flow curve from a table with `rate [1/s]` and `eta [Pa s]`."""
     source = open_source(path, columns=columns, omit=omit, sheet=sheet)
-    pickers = _pickers(source, columns, decimal)
-    picker = _choose(pickers, [p for p in pickers if is_flow(p)], block, "flow curve")
+    pickers = pickers_of(source, columns, decimal)
+    picker = choose(pickers, [p for p in pickers if is_flow(p)], block, "flow curve")
     return _curve(  # type: ignore[return-value]
         FlowCurve, picker, ("rate", "eta"), source, omit_unreadable, temperature_C, label
     )
@@ -282,8 +285,8 @@ def read_spectrum(
     from mwdlink.relaxation.spectrum import Spectrum
 
     source = open_source(path, columns=columns, omit=omit, sheet=sheet)
-    pickers = _pickers(source, columns, decimal)
-    picker = _choose(pickers, [p for p in pickers if is_spectrum(p)], block, "spectrum")
+    pickers = pickers_of(source, columns, decimal)
+    picker = choose(pickers, [p for p in pickers if is_spectrum(p)], block, "spectrum")
     strength = strength_role(picker)
     needed = [picker.need("tau", ACCEPTED["spectrum"]),
               picker.need(strength, ACCEPTED["spectrum"])]  # fmt: skip
@@ -341,61 +344,11 @@ def find_kind(
         "distribution", "sweep", "relaxation curve", "flow curve" or "spectrum".
     """
     source = open_source(path, columns=columns, omit=omit, sheet=sheet)
-    pickers = _pickers(source, columns, None)
+    pickers = pickers_of(source, columns, None)
     for kind, test in tests().items():
         if any(test(p) for p in pickers):
             return kind
     raise no_kind(pickers, "table", " | ".join(f"{k}: {v}" for k, v in ACCEPTED.items()))
-
-
-def _pickers(
-    source: Source, columns: Mapping[str, Any] | None, decimal: str | None
-) -> list[Picker]:
-    """One picker a block; blocks without a column the user named are passed over if others have."""
-    out: list[Picker] = []
-    first: InputError | None = None
-    for block in source.layout.blocks:
-        try:
-            out.append(Picker(source, block, columns, decimal))
-        except InputError as error:
-            first = first or error
-    if not out:
-        raise first or InputError("no table was found.", path=source.path)
-    return out
-
-
-def _choose(pickers: list[Picker], suited: list[Picker], block: int | None, kind: str) -> Picker:
-    if block is not None:
-        if not 1 <= block <= len(pickers):
-            raise InputError(
-                f"there is no block {block}; the file has {len(pickers)}.",
-                path=pickers[0].source.path,
-                remedy="Blocks are counted from 1.",
-            )
-        return pickers[block - 1]
-    if not suited:
-        raise no_kind(pickers, kind, ACCEPTED[kind])
-    if len(suited) > 1:
-        rows = [p.block.rows[0] for p in suited]
-        raise InputError(
-            f"the file holds {len(suited)} tables of a {kind}, from rows "
-            f"{', '.join(map(str, rows[:6]))}.",
-            path=suited[0].source.path,
-            row=rows[1],
-            remedy="Keep one of them in the file, or leave the others' rows out with --omit.",
-        )
-    suited[0].notes += _left_aside(pickers, suited, kind)
-    return suited[0]
-
-
-def _left_aside(pickers: list[Picker], used: list[Picker], kind: str) -> tuple[Caution, ...]:
-    """What is said of the tables of a file that were not read."""
-    rest = [p for p in pickers if not any(p is q for q in used)]
-    if not rest or not used:
-        return ()
-    rows = ", ".join(str(p.block.header_row or p.block.rows[0]) for p in rest[:6])
-    text = f"{len(rest)} further tables of the file (row {rows}) are no {kind}: left aside."
-    return (Caution("tables_left_aside", text),)
 
 
 _READERS: dict[str, Callable[..., Any]] = {
